@@ -1,0 +1,1 @@
+"""Numbers in, numbers out: the weighted-sum stage on NumPy alone."""
