@@ -158,15 +158,21 @@ class Network:
             cell.feedback_capacitance,
         )  # fmt: skip
 
-    def noise_gains(self, resistances=None):
+    def _leg_resistances(self, source_resistances):
+        """Source resistance by leg source: the given ones, then nothing for upstream outputs."""
+        given = np.asarray(source_resistances, dtype=float)
+        return np.concatenate([given, np.zeros((*given.shape[:-1], self.cell_count))], axis=-1)
+
+    def noise_gains(self, resistances=None, source_resistances=None):
         """Ideal noise gain 1 + r_f (Σ 1/(r + r_s) + 1/r_g) of each cell at DC, shape (..., cells) [V/V]."""
         r = self.resistances if resistances is None else np.asarray(resistances, dtype=float)
+        leg_rs = self._leg_rs if source_resistances is None else self._leg_resistances(source_resistances)
         gains = []
         for c in self.cells:
-            g = (1.0 / (r[..., c.minus_parts] + self._leg_rs[c.minus_sources])).sum(axis=-1)
+            g = (1.0 / (r[..., c.minus_parts] + leg_rs[..., c.minus_sources])).sum(axis=-1)
             if c.minus_ground >= 0:
                 g = g + 1.0 / r[..., c.minus_ground]
-            gains.append(1.0 + r[..., c.feedback] * g if c.feedback >= 0 else np.full(r.shape[:-1], np.inf))
+            gains.append(1.0 + r[..., c.feedback] * g if c.feedback >= 0 else np.full(g.shape, np.inf))
         return np.stack(gains, axis=-1)
 
 
@@ -258,11 +264,7 @@ def solve(
     design, amp = net.design, net.design.op_amp
     sources = np.asarray(sources)
     r = net.resistances if resistances is None else np.asarray(resistances, dtype=float)
-    if source_resistances is None:
-        leg_rs = net._leg_rs
-    else:
-        given = np.asarray(source_resistances, dtype=float)
-        leg_rs = np.concatenate([given, np.zeros((*given.shape[:-1], net.cell_count))], axis=-1)
+    leg_rs = net._leg_rs if source_resistances is None else net._leg_resistances(source_resistances)
     if gain is None:
         gain = amp.open_loop_gain if s is None else open_loop_gain(design, s)
     a_ol = np.asarray(gain)
@@ -479,6 +481,16 @@ def _of_cell(x, k):
     """A limit that is either one number for all cells or (..., cells)."""
     x = np.asarray(x)
     return x[..., k] if x.ndim else x
+
+
+def within_limits(net: Network, sol: Solution, limits: Limits) -> np.ndarray:
+    """Where a linear solution asks nothing past a limit of any output, shape (..., columns)."""
+    o, i = sol.output, sol.current
+    high, low = (np.asarray(x)[..., None] if np.ndim(x) else x for x in (limits.high, limits.low))
+    tol = 1e-12 * (np.abs(high) + np.abs(low) + 1.0)
+    drop = limits.dropout_resistance
+    fits = (o <= high - drop * np.maximum(i, 0.0) + tol) & (o >= low - drop * np.minimum(i, 0.0) - tol)
+    return (fits & (np.abs(i) <= limits.current * (1 + 1e-12))).all(axis=-2)
 
 
 class Clipped(NamedTuple):
