@@ -68,6 +68,7 @@ def shown(value: object, most: int = 48) -> str:
             text = repr(value)
         except ValueError:  # an int of more digits than Python prints
             return "a whole number of thousands of digits"
+        text = text.removesuffix(".0")
         return text if len(text) <= most else text[: most - 1] + "…"
     if isinstance(value, dict):
         return f"an object of {len(value)} keys" if len(value) != 1 else "an object of 1 key"

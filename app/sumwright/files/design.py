@@ -171,7 +171,7 @@ def read_design(source: os.PathLike | str | bytes | dict) -> Design:
 
 
 def _design(document: Any) -> Design:
-    top = _object(document, "", _TOP, "The design")
+    top = _object(document, "", _TOP, "the design")
     if top["format"] != FORMAT:
         raise _bad("format", top["format"], f'must be "{FORMAT}"')
     title = _text(top["title"], "title", MOST_TITLE, empty=True)
@@ -388,16 +388,21 @@ def _object(value: Any, path: str, keys: dict[str, bool], what: str = "") -> dic
     """`value` as an object with these keys; those marked True must be there."""
     what = what or path
     if not isinstance(value, dict):
-        raise InvalidDesign(f"{what} holds {shown(value)}, but it must be an object with keys.", path)
+        raise InvalidDesign(
+            f"{what[0].upper() + what[1:] if not path else path} holds {shown(value)}, but it must be an object with keys.",
+            path,
+        )
     prefix = f"{path}." if path else ""
     for key in getattr(value, "twice", ()):
-        raise InvalidDesign(f"{prefix}{_path_part(key)} stands twice in {what}; it may stand once.", prefix + key)
+        raise InvalidDesign(
+            f"{prefix}{_path_part(key)} stands twice in {what}; it may stand once.", prefix + _path_part(key)
+        )
     for key in value:
         if key not in keys:
             raise InvalidDesign(
                 f"{prefix}{_path_part(key)} is not a key of {what}, and it holds {shown(value[key])}; "
                 f"the keys are {', '.join(keys)}.",
-                f"{prefix}{key}",
+                prefix + _path_part(key),
             )
     for key, needed in keys.items():
         if needed and key not in value:
@@ -423,7 +428,8 @@ def _number(value: Any, key: str, rule: _Number) -> Any:
     try:
         number = parse_quantity(value, rule.unit)
     except InvalidQuantity:
-        raise _bad(key, value, _allowed(rule)) from None
+        example = "" if isinstance(value, int | float) and not isinstance(value, bool) else ' (as 4700 or "4k7")'
+        raise _bad(key, value, _allowed(rule) + example) from None
     if (
         (rule.least is not None and number < rule.least)
         or (rule.above is not None and number <= rule.above)
@@ -444,7 +450,7 @@ def _allowed(rule: _Number) -> str:
             parts.append(f"{word} {bound:g}")
     if rule.null:
         parts.append("or null")
-    return ", ".join(parts) + " (4700, or 4k7 as text)"
+    return ", ".join(parts)
 
 
 def _text(value: Any, key: str, most: int, empty: bool = False) -> str:

@@ -49,8 +49,11 @@ def load(text: str, error: type[SumwrightError]) -> Any:
     except json.JSONDecodeError as problem:
         if not text.strip():
             raise error("The text is empty; a JSON object is wanted.") from None
-        if problem.pos >= len(text.rstrip()):
-            raise error(f"The JSON text is cut short: it ends at line {problem.lineno} with something open.") from None
+        # A text that breaks off in mid-string reaches the end too: a line end inside one is another error.
+        if problem.pos >= len(text.rstrip()) or problem.msg.startswith("Unterminated"):
+            raise error(
+                f"The JSON text is cut short: it ends with what begins at line {problem.lineno} still open."
+            ) from None
         found = shown(text[problem.pos : problem.pos + 12])
         raise error(
             f"The JSON text cannot be read at line {problem.lineno}, column {problem.colno}, at {found}: {problem.msg}."
