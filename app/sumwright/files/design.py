@@ -389,7 +389,7 @@ def _object(value: Any, path: str, keys: dict[str, bool], what: str = "") -> dic
     what = what or path
     if not isinstance(value, dict):
         raise InvalidDesign(
-            f"{what[0].upper() + what[1:] if not path else path} holds {shown(value)}, but it must be an object with keys.",
+            f"{path or what[0].upper() + what[1:]} holds {shown(value)}, but it must be an object with keys.",
             path,
         )
     prefix = f"{path}." if path else ""
