@@ -16,7 +16,7 @@ from .nodes import Network, Solution
 from .stage import Design, replace
 
 # Answers that depend on the design but not on where the signals are just now.
-_OF_THE_STAGE = ("linear", "headroom", "cable_out", "ac", "noise", "power", "_corner_errors")
+_OF_THE_STAGE = ("linear", "headroom", "cable_out", "ac", "noise", "power")
 
 
 class Analysis:
@@ -104,33 +104,27 @@ class Analysis:
     @cached_property
     def errors(self):
         """{"present" | "highest" | "lowest": error budget}, without Monte Carlo."""
-        from .budget import error_budget
+        from .budget import error_budgets
 
-        return {"present": error_budget(self, "present"), **self._corner_errors}
-
-    @cached_property
-    def _corner_errors(self):
-        from .budget import error_budget
-
-        return {point: error_budget(self, point) for point in ("highest", "lowest")}
+        return error_budgets(self.design, net=self.net)
 
     @cached_property
     def ac(self):
         from .response import response
 
-        return response(self)
+        return response(self.design, net=self.net)
 
     @cached_property
     def noise(self):
         from .noise import noise
 
-        return noise(self)
+        return noise(self.design, net=self.net)
 
     @cached_property
     def power(self):
         from .heat import heat
 
-        return heat(self)
+        return heat(self.design, net=self.net)
 
     @cached_property
     def checks(self):
