@@ -1,0 +1,380 @@
+"""Monte Carlo: many boards built and solved, every quantity drawn at once.
+
+Boards are drawn in blocks of a fixed size, each from its own stream, so a seed
+gives the same boards whatever the number of threads, and fewer boards are the
+first of more. A block stays in a core's cache; NumPy releases the interpreter
+while it computes, so blocks run on all cores.
+
+Each board is solved exactly (closed-form node equations, limits of the output out
+of play). One thing alone is held: what a later cell draws from an earlier output is
+taken at its nominal, since it acts behind the loop gain (below a nanovolt).
+
+Sources: JCGM 101:2008, 6.4.2 (rectangular limits), 7.5 and 7.7 (mean, standard
+deviation, shortest coverage interval).
+"""
+
+from __future__ import annotations
+
+import os
+from concurrent.futures import ThreadPoolExecutor
+from typing import NamedTuple
+
+import numpy as np
+
+from . import nodes
+from .budget import POINTS, extreme_corners, network_of, supply_error, temperature_span
+from .operating_point import ideal_output
+from .stage import REFERENCE
+
+BLOCK = 4096  # boards that share a stream and a core's cache
+_OP_AMP_DRAWS = 6
+
+
+class MonteCarlo(NamedTuple):
+    """Statistics of the boards at one point; volts relative to the ideal output."""
+
+    draws: int
+    seed: int
+    mean: float
+    standard_deviation: float
+    low_95: float  # shortest interval that holds 95 %
+    high_95: float
+    yield_: float | None  # share within the wanted accuracy; None where none is wanted
+
+
+class Boards(NamedTuple):
+    """Errors (points, draws) [V] of the drawn boards, in the order drawn."""
+
+    points: tuple[str, ...]
+    errors: np.ndarray
+
+
+def shortest_interval(values, coverage: float = 0.95, *, is_sorted: bool = False) -> tuple[float, float]:
+    """Shortest interval that holds `coverage` of the values.
+
+    Source: JCGM 101:2008, 7.7.2: of the intervals from y(r) to y(r + q), q the
+    integer part of coverage·M + 1/2, the shortest. With q = M the whole range.
+    """
+    y = np.asarray(values, dtype=float)
+    y = y if is_sorted else np.sort(y)
+    m = len(y)
+    q = min(int(coverage * m + 0.5), m - 1)
+    if q <= 0:
+        return float(y[0]), float(y[-1])
+    width = y[q:] - y[: m - q]
+    r = int(width.argmin())
+    return float(y[r]), float(y[r + q])
+
+
+def statistics(errors, seed: int, accuracy: float | None) -> MonteCarlo:
+    """Mean, standard deviation, shortest 95 % interval and yield of `errors` (draws,) [V]; sorts a copy."""
+    return _statistics(np.array(errors, dtype=float), seed, accuracy)
+
+
+def _statistics(errors, seed, accuracy):
+    """As `statistics`, sorting `errors` in place."""
+    draws = len(errors)
+    mean = float(errors.mean())
+    sd = float(np.sqrt(((errors - mean) ** 2).sum() / (draws - 1))) if draws > 1 else 0.0
+    errors.sort()
+    low, high = shortest_interval(errors, is_sorted=True)
+    share = None
+    if accuracy is not None:
+        inside = np.searchsorted(errors, accuracy, side="right") - np.searchsorted(errors, -accuracy, side="left")
+        share = float(inside) / draws
+    return MonteCarlo(draws, seed, mean, sd, low, high, share)
+
+
+def monte_carlo(stage, draws: int, seed: int = 0, *, points=POINTS, progress=None) -> dict[str, MonteCarlo]:
+    """Draw boards and say how far off they are.
+
+    Parameters
+    ----------
+    stage : Design or Analysis
+    draws : int
+        Boards, at least 1.
+    seed : int
+        Not negative.
+    points : sequence of str, optional
+        Of `present`, `highest`, `lowest`; the same boards at each.
+    progress : callable, optional
+        Called with the boards done; returning False stops (fewer boards count).
+
+    Returns
+    -------
+    dict of str to MonteCarlo
+
+    Raises
+    ------
+    InvalidQuantity
+        For draws below 1 or a negative seed.
+    """
+    drawn = draw_boards(stage, draws, seed, points=points, progress=progress)
+    accuracy = network_of(stage).design.target.accuracy
+    with ThreadPoolExecutor(_threads()) as pool:
+        stats = pool.map(lambda row: _statistics(row, seed, accuracy), drawn.errors)
+        return dict(zip(drawn.points, stats, strict=True))
+
+
+def draw_boards(stage, draws: int, seed: int = 0, *, points=POINTS, first: int = 0, progress=None) -> Boards:
+    """The boards themselves: errors relative to the ideal output.
+
+    Parameters
+    ----------
+    first : int, optional
+        Boards to pass over, a multiple of `BLOCK`: to go on where an earlier call ended.
+
+    Other parameters as in `monte_carlo`.
+    """
+    from ..errors import InvalidQuantity
+
+    if draws < 1 or draws != int(draws):
+        raise InvalidQuantity(f"draws must be a whole number of boards, at least 1; it is {draws}.")
+    if seed < 0:
+        raise InvalidQuantity(f"seed must be a whole number, not negative; it is {seed}.")
+    if first % BLOCK:
+        raise InvalidQuantity(f"first must be a multiple of {BLOCK} boards; it is {first}.")
+    points = tuple(points)
+    net = network_of(stage)
+    recipe = _Recipe(net, points)
+    draws = int(draws)
+    errors = np.empty((len(points), draws))
+    blocks = range((draws + BLOCK - 1) // BLOCK)
+
+    def run(share):
+        """Every thread takes each n-th block, with its own scratch memory."""
+        work = recipe.scratch()
+        for b in share:
+            stop = min(draws, (b + 1) * BLOCK)
+            out = recipe.block(work, seed, first // BLOCK + b)
+            errors[:, b * BLOCK : stop] = out[:, : stop - b * BLOCK]
+
+    threads = _threads()
+    if progress is None and len(blocks) > 1 and threads > 1:
+        with ThreadPoolExecutor(threads) as pool:
+            list(pool.map(run, [blocks[i::threads] for i in range(threads)]))
+        return Boards(points, errors)
+    step = 8
+    with ThreadPoolExecutor(threads) if threads > 1 and len(blocks) > 1 else _Here() as pool:
+        for at in range(0, len(blocks), step * threads):
+            part = blocks[at : at + step * threads]
+            list(pool.map(run, [part[i::threads] for i in range(threads)]))
+            done = min(draws, (part[-1] + 1) * BLOCK)
+            if progress is not None and progress(done) is False:
+                return Boards(points, errors[:, :done])
+    return Boards(points, errors)
+
+
+class _Here:
+    """A pool of no threads: small jobs run where they are."""
+
+    def __enter__(self):
+        return self
+
+    def __exit__(self, *_):
+        return None
+
+    @staticmethod
+    def map(function, items):
+        return map(function, items)
+
+
+def _threads():
+    try:
+        return max(1, len(os.sched_getaffinity(0)))
+    except AttributeError:  # not on every system
+        return os.cpu_count() or 1
+
+
+class _Recipe:
+    """All numbers that turn a block of uniform draws into errors at the points."""
+
+    def __init__(self, net, points):
+        design, amp, kind = net.design, net.design.op_amp, net.design.resistor
+        self.net = net
+        corners = extreme_corners(net, nodes.solve(net, np.eye(net.signal_count + 1)).output[-1])
+        x = np.stack([corners[p] for p in points])  # (points, sources)
+        self.ideals = ideal_output(design, x[:, : net.signal_count])[:, None]
+        self.x = x
+        span = temperature_span(design)
+        self.ambient = span.low, span.high - span.low
+        fitted = np.isfinite(net.resistances) & (net.resistances > 0)
+        self.order = np.flatnonzero(fitted)
+        self.r0 = net.resistances[self.order][:, None]
+        self.row = {int(part): i for i, part in enumerate(self.order)}
+        self.tolerance, self.tcr = kind.tolerance, kind.temperature_coefficient
+        self.limits = (
+            amp.offset_voltage, amp.offset_drift, amp.bias_current, amp.offset_current, 1.0 / amp.cmrr, supply_error(design),
+        )  # fmt: skip
+        self.mid = 0.5 * (design.supply.high + design.supply.low)
+        reference = design.reference
+        self.reference = reference.tolerance if reference is not None else 0.0
+        nominal = nodes.solve(net, x.T)
+        self.nominal = nominal  # of every node, (cells, points)
+        self.resistors = len(self.order)
+        # rows of a block: tolerance and TCR of each resistor, six a cell, reference, temperature
+        self.quantities = 2 * self.resistors + _OP_AMP_DRAWS * net.cell_count + 2
+
+    def scratch(self):
+        n_leg = max((len(c.minus_parts) + len(c.plus_parts) for c in self.net.cells), default=0)
+        p = len(self.x)
+        return {
+            "u": np.empty((self.quantities, BLOCK)), "g": np.empty((n_leg, BLOCK)),
+            "p": [np.empty((p, BLOCK)) for _ in range(3)], "v": [np.empty(BLOCK) for _ in range(8)],
+        }  # fmt: skip
+
+    def block(self, work, seed, number):
+        """Errors (points, BLOCK) [V] of one block of boards."""
+        rng = np.random.Generator(np.random.SFC64(np.random.SeedSequence(seed, spawn_key=(number,))))
+        u = work["u"]
+        rng.random(out=u)
+        n = self.resistors
+        r, hot = u[:n], u[n : 2 * n]
+        delta = u[-1]
+        delta *= self.ambient[1]
+        delta += self.ambient[0]
+        # r0 (1 + tolerance) (1 + coefficient ΔT), each factor drawn within its limits
+        hot -= 0.5
+        hot *= delta
+        hot *= 2 * self.tcr
+        hot += 1.0
+        r *= 2 * self.tolerance * self.r0
+        r += (1.0 - self.tolerance) * self.r0
+        r *= hot
+        rest = u[2 * n : -1]
+        rest *= 2.0
+        rest -= 1.0
+        volts = rest[-1]
+        volts *= self.reference
+        volts += 1.0  # the reference, relative
+        outs: list[np.ndarray] = []
+        for k in range(self.net.cell_count):
+            outs.append(self._cell(work, k, r, rest[_OP_AMP_DRAWS * k : _OP_AMP_DRAWS * (k + 1)], delta, volts, outs))
+        return outs[-1] - self.ideals
+
+    def _cell(self, work, k, r, draws, delta, volts, outs):
+        net, amp = self.net, self.net.design.op_amp
+        c, n = net.cells[k], net.signal_count
+        vos, drift, bias, offset, cmrr, psrr = draws
+        limits = self.limits
+        drift *= delta
+        e = vos * limits[0]
+        e += drift * limits[1]
+        e += psrr * limits[5]
+        cm = cmrr * limits[4]
+        bias = bias * limits[2]
+        half = offset * (0.5 * limits[3])
+
+        total_m, drive_m = self._node(work, 0, c.minus_parts, c.minus_sources, r, volts, outs)
+        if c.minus_ground >= 0:
+            total_m += 1.0 / r[self.row[c.minus_ground]]
+        drive_m -= bias
+        drive_m += half
+        g_f = 1.0 / r[self.row[c.feedback]] if c.feedback >= 0 else np.zeros(BLOCK)
+        total_m += g_f
+        y_in = net.y_in
+        if c.tied == -1:
+            total_p, plus = self._node(work, 1, c.plus_parts, c.plus_sources, r, volts, outs)
+            if c.plus_ground >= 0:
+                total_p += 1.0 / r[self.row[c.plus_ground]]
+            plus -= bias
+            plus -= half
+            inv_p = 1.0 / total_p
+            plus *= inv_p
+            inv_p *= y_in
+            inv_p += 1.0  # 1 + y_in / G+
+            pull = inv_p
+        else:
+            plus = work["p"][1]
+            if c.tied == -2:
+                plus[:] = 0.0
+            elif c.tied > n:
+                plus[:] = outs[c.tied - n - 1]
+            else:
+                plus[:] = self.x[:, c.tied][:, None]
+                if c.tied == n:
+                    plus *= volts
+            pull = 1.0
+        # what the + pin holds over the - pin at infinite gain: V+ + (V+ - mid)/CMRR + e
+        pin = plus * cm
+        pin += plus
+        e -= cm * self.mid
+        pin += e
+        # d = V+ - V- pins: v_o (1 + r_o G_o) = A d + r_o (g_f m + i), m = pin - pull d
+        a, r_o = amp.open_loop_gain, amp.output_resistance
+        g_o = g_f.copy()
+        load, drawn = self._load(k, r)
+        g_o += load
+        stiff = g_f * r_o
+        stiff *= pull
+        np.subtract(a, stiff, out=stiff)
+        kappa = total_m * pull
+        kappa += y_in
+        kappa /= stiff  # how far the - node strays per volt of output, times conductance
+        stray = kappa * r_o
+        top = stray * g_f
+        top += total_m
+        out = pin
+        out *= top
+        out -= drive_m
+        if drawn is not None:
+            out += drawn * stray
+        g_o *= r_o
+        g_o += 1.0
+        g_o *= kappa
+        g_o += g_f
+        out /= g_o
+        return out.copy() if k < net.cell_count - 1 else out
+
+    def _node(self, work, slot, parts, sources, r, volts, outs):
+        """Total conductance (BLOCK,) and driven current (points, BLOCK) of the legs into one node."""
+        net, n = self.net, self.net.signal_count
+        total, drive = work["v"][slot], work["p"][slot]
+        total[:] = 0.0
+        drive[:] = 0.0
+        live = [(int(i), int(s)) for i, s in zip(parts, sources, strict=True) if np.isfinite(net.resistances[i])]
+        g = work["g"][: len(live)]
+        for j, (i, s) in enumerate(live):
+            if i in self.row:
+                np.add(r[self.row[i]], net._leg_rs[s], out=g[j])
+            else:  # a leg of 0 ohm behind a source resistance
+                g[j] = net._leg_rs[s]
+        np.reciprocal(g, out=g)
+        plain = [j for j, (_, s) in enumerate(live) if s < n]
+        if plain:
+            if plain == list(range(len(plain))):
+                rows = g[: len(plain)]
+            else:
+                rows = g[plain]
+            np.dot(self.x[:, [live[j][1] for j in plain]], rows, out=drive)
+        if len(live):
+            np.add.reduce(g, axis=0, out=total)
+        for j, (_, s) in enumerate(live):
+            if s == n:
+                for q, v in enumerate(self.x[:, n]):
+                    drive[q] += v * g[j] * volts
+            elif s > n:
+                drive += outs[s - n - 1] * g[j]
+        return total, drive
+
+    def _load(self, k, r):
+        """Conductance at the output beside the feedback, and the current later cells feed back into it."""
+        net, n = self.net, self.net.signal_count
+        load = net.load_conductance if k == net.cell_count - 1 else 0.0
+        drawn = None
+        for q in range(k + 1, net.cell_count):
+            c = net.cells[q]
+            for parts, sources, node in (
+                (c.minus_parts, c.minus_sources, self.nominal.minus),
+                (c.plus_parts, c.plus_sources, self.nominal.plus),
+            ):
+                for i, s in zip(parts, sources, strict=True):
+                    if s == n + 1 + k and int(i) in self.row:
+                        g = 1.0 / r[self.row[int(i)]]
+                        load = load + g
+                        term = node[q][:, None] * g
+                        drawn = term if drawn is None else drawn + term
+        return load, drawn
+
+
+__all__ = ["BLOCK", "REFERENCE", "Boards", "MonteCarlo", "draw_boards", "monte_carlo", "shortest_interval", "statistics"]

@@ -1,0 +1,174 @@
+"""Noise at the stage's output, by term: density, and RMS over a band.
+
+Each source of noise is a unit injection into a node or in series with a + input;
+four injections a cell carry every term. Sources: Nyquist, Phys. Rev. 32 (1928):
+4kTR; uncorrelated powers add; 1/f noise as e²(f) = e²(1 + f_c/f).
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from . import nodes
+from .budget import network_of
+from .statespace import poles
+
+BOLTZMANN = 1.380649e-23  # J/K, exact in the SI since 2019
+ZERO_CELSIUS = 273.15  # K
+
+
+class NoiseTerm(NamedTuple):
+    name: str
+    kind: str  # op amp voltage, op amp current, resistor, source
+    density_1khz: float  # V/√Hz at the output
+    rms: float  # V over the band, at the output
+
+
+class Noise(NamedTuple):
+    """Output noise; RMS over `band` [Hz]."""
+
+    density_1khz: float  # V/√Hz
+    rms: float  # V
+    band: tuple[float, float]
+    terms: tuple[NoiseTerm, ...]
+
+
+class Spectrum(NamedTuple):
+    """Output noise density: frequencies (f,) [Hz], terms (terms, f) and total (f,) [V/√Hz]."""
+
+    frequencies: np.ndarray
+    names: tuple[str, ...]
+    kinds: tuple[str, ...]
+    terms: np.ndarray
+    total: np.ndarray
+
+
+def spectrum(stage, frequencies) -> Spectrum:
+    """Output noise density of every term at `frequencies` [Hz], at the nominal ambient."""
+    net = network_of(stage)
+    f = np.asarray(frequencies, dtype=float)
+    names, kinds, power = _powers(net, f)
+    return Spectrum(f, names, kinds, np.sqrt(power), np.sqrt(power.sum(axis=0)))
+
+
+def noise(stage, *, band=None) -> Noise:
+    """Output noise over a band, by term.
+
+    Parameters
+    ----------
+    stage : Design or Analysis
+    band : (float, float), optional
+        Instead of the design's `noise_band` [Hz].
+
+    Returns
+    -------
+    Noise
+
+    Notes
+    -----
+    Integrated in log f by Gauss-Legendre panels of at most half a decade, split
+    where the response turns, so the 1/f part and a resonance are both followed.
+    """
+    net = network_of(stage)
+    low, high = net.design.noise_band if band is None else band
+    f, weight = _quadrature(low, high, _corners(net))
+    names, kinds, power = _powers(net, np.append(f, 1e3))
+    rms = np.sqrt(power[:, :-1] @ weight)
+    at_1k = power[:, -1]
+    terms = tuple(
+        NoiseTerm(n, k, float(d), float(r)) for n, k, d, r in zip(names, kinds, np.sqrt(at_1k), rms, strict=True)
+    )
+    return Noise(float(np.sqrt(at_1k.sum())), float(np.sqrt((rms**2).sum())), (float(low), float(high)), terms)
+
+
+def _powers(net, f):
+    """Names, kinds and output power densities (terms, f) [V²/Hz]."""
+    design = net.design
+    amp = design.op_amp
+    cells = net.cell_count
+    width = 4 * cells
+    error, into_m, into_p, into_o = (np.zeros((cells, width)) for _ in range(4))
+    for k in range(cells):
+        error[k, 4 * k] = into_m[k, 4 * k + 1] = into_p[k, 4 * k + 2] = into_o[k, 4 * k + 3] = 1.0
+    sol = nodes.solve(
+        net, np.zeros((net.signal_count + 1, width)), s=2j * np.pi * f,
+        error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
+    )  # fmt: skip
+    h = sol.output[..., -1, :].T.reshape(cells, 4, -1)  # to the output from e, m, p, o
+    h2 = h.real**2 + h.imag**2
+
+    names: list[str] = []
+    kinds: list[str] = []
+    rows: list[np.ndarray] = []
+    e2 = amp.noise_voltage**2 * (1.0 + amp.noise_voltage_corner / f)
+    i2 = amp.noise_current**2 * (1.0 + amp.noise_current_corner / f)
+
+    def add(name, kind, power):
+        names.append(name)
+        kinds.append(kind)
+        rows.append(power)
+
+    for k in range(cells):
+        suffix = f", cell {k + 1}" if cells > 1 else ""
+        add(f"op amp voltage{suffix}", "op amp voltage", e2 * h2[k, 0])
+        add(f"op amp current into −{suffix}", "op amp current", i2 * h2[k, 1])
+        add(f"op amp current into +{suffix}", "op amp current", i2 * h2[k, 2])
+    four_kt = 4.0 * BOLTZMANN * (design.ambient.nominal + ZERO_CELSIUS)
+    ups = {f"cell {j + 1}": j for j in range(cells)}
+    rs_of = {s.name: net.source_resistances[i] for i, s in enumerate(design.signals)}
+    rs_of["reference"] = net.source_resistances[-1]
+    for part, r in zip(net.parts, net.resistances, strict=True):
+        if not np.isfinite(r):
+            continue
+        k = part.cell
+        rs = float(rs_of.get(part.source, 0.0)) if part.source else 0.0
+        if r + rs <= 0:
+            continue
+        node = h[k, 2] if part.kind.startswith("plus") else h[k, 1]
+        if part.kind == "feedback":
+            node = node - h[k, 3]
+        elif part.source in ups:
+            node = node - h[ups[part.source], 3]
+        t2 = (node.real**2 + node.imag**2) / (r + rs) ** 2
+        add(part.name, "resistor", four_kt * r * t2)
+        if rs > 0:
+            add(f"{part.source} source resistance" + _where(part, cells), "source", four_kt * rs * t2)
+    return tuple(names), tuple(kinds), np.array(rows)
+
+
+def _where(part, cells):
+    return f", cell {part.cell + 1}" if part.source == "reference" and cells > 1 else ""
+
+
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(8)
+
+
+def _quadrature(low, high, corners):
+    """Frequencies and weights for ∫ S(f) df from `low` to `high`, panels in log f."""
+    a, b = np.log(low), np.log(high)
+    inner = np.log(corners[(corners > low) & (corners < high)]) if len(corners) else np.zeros(0)
+    edges = np.unique(np.concatenate([[a, b], inner]))
+    fine = []
+    for p, q in zip(edges[:-1], edges[1:], strict=True):
+        n = max(1, int(np.ceil((q - p) / 1.2)))
+        fine.append(p + (q - p) * np.arange(n) / n)
+    fine = np.append(np.concatenate(fine), b)
+    half = 0.5 * np.diff(fine)
+    x = (fine[:-1] + half)[:, None] + half[:, None] * _NODES
+    f = np.exp(x)
+    return f.ravel(), (half[:, None] * _WEIGHTS * f).ravel()
+
+
+def _corners(net):
+    """Where the response turns sharply [Hz]: around each resonant closed-loop pole."""
+    p = poles(net)
+    p = p[p.imag > 0]
+    if len(p) == 0:
+        return np.zeros(0)
+    f0 = np.abs(p) / (2 * np.pi)
+    damping = np.clip(np.abs(p.real) / np.abs(p), 1e-4, 1.0)
+    spread = np.array([-8.0, -2.5, -0.8, 0.0, 0.8, 2.5, 8.0])
+    near = f0[:, None] * np.exp(spread * np.minimum(damping, 0.4)[:, None])
+    return np.unique(near[damping < 0.8])

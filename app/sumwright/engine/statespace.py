@@ -1,0 +1,207 @@
+"""The stage as ordinary differential equations, one set for each state of its outputs.
+
+The node equations with capacitances, C dy/dt + G y = inputs, are reduced to as
+many states as there are independent capacitor voltages (nodes without one follow
+algebraically), and each op amp adds its one or two poles. A cell whose op amp
+slews or whose output is at a limit no longer listens to its inputs, so its first
+pole leaves the states and becomes an input that runs along a straight line.
+
+Source: Kirchhoff's current law; the op amp as in model of its data sheet
+(A0, gain-bandwidth, second pole), slewing where the first pole is driven.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+
+from .nodes import Network
+
+# What a cell's op amp is doing. The sign is the side.
+LINEAR = 0
+SLEW = 1
+SWING = 2  # output at the voltage limit
+CURRENT = 3  # output at the current limit
+
+_LEAST_OUTPUT_RESISTANCE = 0.01  # ohm: an ideal output still needs a branch to write the equation of
+_LEAST_TIE_RESISTANCE = 1.0  # ohm, of a + pin tied straight to a source: far below anything it could load
+
+
+class StateSpace(NamedTuple):
+    """dx/dt = a x + b w;  y = c x + d w.
+
+    x: capacitor coordinates, then the op amp states in `first` and `second`.
+    w: sources (n + 1), the constant 1, then one input a cell: the first op amp
+    state where it is not in x. y: for each cell m, p, o, then the output current
+    of each cell (3 cells + cells rows).
+    """
+
+    a: np.ndarray
+    b: np.ndarray
+    c: np.ndarray
+    d: np.ndarray
+    capacitor: np.ndarray  # (capacitor states, nodes): coordinates from node voltages
+    first: tuple[int, ...]  # index of each cell's first op amp state in x, -1 where frozen
+    second: tuple[int, ...]  # of its second, -1 where there is none or it is frozen
+    minus: np.ndarray  # row of y for each cell's node
+    plus: np.ndarray
+    output: np.ndarray
+    current: np.ndarray
+
+
+def state_space(net: Network, modes=None, limits=None) -> StateSpace:
+    """Equations of the chain with each cell's op amp in the given mode.
+
+    Parameters
+    ----------
+    net : Network
+    modes : (cells,) int, optional
+        LINEAR (default), ±SLEW, ±SWING, ±CURRENT.
+    limits : Limits, optional
+        Needed where a mode is a limit of the output.
+    """
+    cells, n = net.cell_count, net.signal_count
+    modes = (0,) * cells if modes is None else tuple(modes)
+    amp, design = net.design.op_amp, net.design
+    r_out = max(amp.output_resistance, _LEAST_OUTPUT_RESISTANCE)
+    nodes = 3 * cells
+    inputs = n + 2 + cells
+    gmat, cmat = np.zeros((nodes, nodes)), np.zeros((nodes, nodes))
+    drive = np.zeros((nodes, inputs))  # from w
+    inner = np.zeros((nodes, cells))  # from each op amp's internal voltage
+    branch = np.zeros(cells)  # conductance of the output branch
+    r = net.resistances
+
+    def between(i, j, g, c=0.0):
+        """A conductance and capacitance between node i and node j (None = ground)."""
+        for mat, value in ((gmat, g), (cmat, c)):
+            if value:
+                mat[i, i] += value
+                if j is not None:
+                    mat[j, j] += value
+                    mat[i, j] -= value
+                    mat[j, i] -= value
+
+    def leg(node, source, resistance):
+        g = 1.0 / resistance
+        if source <= n:
+            gmat[node, node] += g
+            drive[node, source] += g
+        else:
+            between(node, 3 * (source - n - 1) + 2, g)
+
+    for k, c in enumerate(net.cells):
+        m, p, o = 3 * k, 3 * k + 1, 3 * k + 2
+        for i, s in zip(c.minus_parts, c.minus_sources, strict=True):
+            leg(m, int(s), r[i] + net._leg_rs[s])
+        if c.minus_ground >= 0:
+            between(m, None, 1.0 / r[c.minus_ground])
+        if c.feedback >= 0:
+            between(m, o, 1.0 / r[c.feedback], c.capacitance)
+        for i, s in zip(c.plus_parts, c.plus_sources, strict=True):
+            leg(p, int(s), max(r[i] + net._leg_rs[s], _LEAST_TIE_RESISTANCE))
+        if c.plus_ground >= 0:
+            between(p, None, 1.0 / r[c.plus_ground])
+        if c.tied == -2:
+            between(p, None, 1.0 / _LEAST_TIE_RESISTANCE)
+        between(m, p, net.y_in, amp.differential_capacitance)
+        between(m, None, 0.0, amp.common_mode_capacitance + design.stray_capacitance)
+        between(p, None, 0.0, amp.common_mode_capacitance)
+        if k == cells - 1:
+            between(o, None, net.load_conductance, design.load.capacitance)
+        mode = modes[k]
+        if abs(mode) in (LINEAR, SLEW):
+            branch[k] = 1.0 / r_out
+            inner[o, k] = branch[k]
+        elif abs(mode) == SWING:
+            branch[k] = 1.0 / max(amp.dropout_resistance, _LEAST_OUTPUT_RESISTANCE)
+            drive[o, n + 1] += branch[k] * (limits.high if mode > 0 else limits.low)
+        else:
+            drive[o, n + 1] += math.copysign(limits.current, mode)
+        gmat[o, o] += branch[k]
+
+    # y = q a + z b with a the capacitor coordinates, b what follows algebraically
+    value, vector = np.linalg.eigh(cmat)
+    real = value > 1e-12 * max(value[-1], 1e-30)
+    q, z = vector[:, real], vector[:, ~real]
+    inv = np.linalg.inv(z.T @ gmat @ z) @ z.T if z.shape[1] else np.zeros((0, nodes))
+    y_a = q - z @ (inv @ gmat @ q)  # y from capacitor coordinates
+    y_in = z @ inv  # y from injected currents
+    n_cap = q.shape[1]
+
+    states = n_cap
+    first, second = [], []
+    for mode in modes:
+        free = mode == LINEAR
+        has_second = amp.second_pole is not None and abs(mode) in (LINEAR, SLEW)
+        first.append(states if free else -1)
+        states += free
+        second.append(states if has_second else -1)
+        states += has_second
+
+    # internal voltages as functions of x and w
+    v_x, v_w = np.zeros((cells, states)), np.zeros((cells, inputs))
+    for k, mode in enumerate(modes):
+        if second[k] >= 0:
+            v_x[k, second[k]] = 1.0
+        elif first[k] >= 0:
+            v_x[k, first[k]] = 1.0
+        elif abs(mode) == SLEW:
+            v_w[k, n + 2 + k] = 1.0
+    inj_x, inj_w = inner @ v_x, drive + inner @ v_w
+    c = np.zeros((nodes + cells, states))
+    c[:nodes, :n_cap] = y_a
+    c[:nodes] += y_in @ inj_x
+    d = np.zeros((nodes + cells, inputs))
+    d[:nodes] = y_in @ inj_w
+    a, b = np.zeros((states, states)), np.zeros((states, inputs))
+    if n_cap:
+        inv_c = 1.0 / value[real]
+        a[:n_cap] = inv_c[:, None] * (q.T @ (inj_x - gmat @ c[:nodes]))
+        b[:n_cap] = inv_c[:, None] * (q.T @ (inj_w - gmat @ d[:nodes]))
+    w1 = 2 * math.pi * amp.gain_bandwidth / amp.open_loop_gain
+    for k in range(cells):
+        m, p, o = 3 * k, 3 * k + 1, 3 * k + 2
+        if first[k] >= 0:
+            a[first[k]] = w1 * amp.open_loop_gain * (c[p] - c[m])
+            a[first[k], first[k]] -= w1
+            b[first[k]] = w1 * amp.open_loop_gain * (d[p] - d[m])
+        if second[k] >= 0:
+            w2 = 2 * math.pi * amp.second_pole
+            a[second[k], second[k]] -= w2
+            if first[k] >= 0:
+                a[second[k], first[k]] += w2
+            else:
+                b[second[k], n + 2 + k] += w2
+        row = nodes + k
+        if abs(modes[k]) == CURRENT:
+            d[row, n + 1] = math.copysign(limits.current, modes[k])
+        else:
+            c[row] = branch[k] * (v_x[k] - c[o])
+            d[row] = branch[k] * (v_w[k] - d[o])
+            if abs(modes[k]) == SWING:
+                d[row, n + 1] += branch[k] * (limits.high if modes[k] > 0 else limits.low)
+    base = 3 * np.arange(cells)
+    return StateSpace(
+        a, b, c, d, q.T, tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
+    )  # fmt: skip
+
+
+def linear_space(net: Network) -> StateSpace:
+    """`state_space` with every op amp linear, kept with the network."""
+    known = getattr(net, "_linear_space", None)
+    if known is None:
+        known = state_space(net)
+        net._linear_space = known
+    return known
+
+
+def poles(net: Network) -> np.ndarray:
+    """Poles of the closed stage [rad/s], complex, every op amp linear."""
+    known = getattr(net, "_poles", None)
+    if known is None:
+        known = np.linalg.eigvals(linear_space(net).a).astype(complex)
+        net._poles = known
+    return known
