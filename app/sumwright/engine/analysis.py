@@ -16,7 +16,7 @@ from .nodes import Network, Solution
 from .stage import Design, replace
 
 # Answers that depend on the design but not on where the signals are just now.
-_OF_THE_STAGE = ("linear", "headroom", "cable_out", "ac", "noise", "power")
+_OF_THE_STAGE = ("linear", "headroom", "cable_out", "ac", "noise", "power", "error_influences", "stage_checks")
 
 
 class Analysis:
@@ -106,25 +106,39 @@ class Analysis:
         """{"present" | "highest" | "lowest": error budget}, without Monte Carlo."""
         from .budget import error_budgets
 
-        return error_budgets(self.design, net=self.net)
+        return error_budgets(self)
+
+    @cached_property
+    def error_influences(self):
+        """`budget.influences`: every quantity at its limits, before the values are known."""
+        from .budget import influences
+
+        return influences(self.net)
 
     @cached_property
     def ac(self):
         from .response import response
 
-        return response(self.design, net=self.net)
+        return response(self)
 
     @cached_property
     def noise(self):
         from .noise import noise
 
-        return noise(self.design, net=self.net)
+        return noise(self)
 
     @cached_property
     def power(self):
         from .heat import heat
 
-        return heat(self.design, net=self.net)
+        return heat(self)
+
+    @cached_property
+    def stage_checks(self):
+        """The checks that stay as they are while signals move within their ranges."""
+        from .checks import stage_checks
+
+        return stage_checks(self)
 
     @cached_property
     def checks(self):

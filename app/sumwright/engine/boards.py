@@ -26,7 +26,7 @@ from .budget import POINTS, extreme_corners, network_of, supply_error, temperatu
 from .operating_point import ideal_output
 from .stage import REFERENCE
 
-BLOCK = 4096  # boards that share a stream and a core's cache
+BLOCK = 8000  # boards that share a stream and a core's cache; not a power of two, whose rows would share cache sets
 _OP_AMP_DRAWS = 6
 
 
@@ -75,7 +75,8 @@ def _statistics(errors, seed, accuracy):
     """As `statistics`, sorting `errors` in place."""
     draws = len(errors)
     mean = float(errors.mean())
-    sd = float(np.sqrt(((errors - mean) ** 2).sum() / (draws - 1))) if draws > 1 else 0.0
+    squares = sum(_squares(errors[at : at + BLOCK], mean) for at in range(0, draws, BLOCK))
+    sd = float(np.sqrt(squares / (draws - 1))) if draws > 1 else 0.0
     errors.sort()
     low, high = shortest_interval(errors, is_sorted=True)
     share = None
@@ -83,6 +84,11 @@ def _statistics(errors, seed, accuracy):
         inside = np.searchsorted(errors, accuracy, side="right") - np.searchsorted(errors, -accuracy, side="left")
         share = float(inside) / draws
     return MonteCarlo(draws, seed, mean, sd, low, high, share)
+
+
+def _squares(part, mean):
+    part = part - mean
+    return float(part @ part)
 
 
 def monte_carlo(stage, draws: int, seed: int = 0, *, points=POINTS, progress=None) -> dict[str, MonteCarlo]:
@@ -206,6 +212,7 @@ class _Recipe:
         self.limits = (
             amp.offset_voltage, amp.offset_drift, amp.bias_current, amp.offset_current, 1.0 / amp.cmrr, supply_error(design),
         )  # fmt: skip
+        self.limits = np.array(self.limits)[:, None]
         self.mid = 0.5 * (design.supply.high + design.supply.low)
         reference = design.reference
         self.reference = reference.tolerance if reference is not None else 0.0
@@ -220,7 +227,7 @@ class _Recipe:
         p = len(self.x)
         return {
             "u": np.empty((self.quantities, BLOCK)), "g": np.empty((n_leg, BLOCK)),
-            "p": [np.empty((p, BLOCK)) for _ in range(3)], "v": [np.empty(BLOCK) for _ in range(8)],
+            "p": [np.empty((p + 1, BLOCK)) for _ in range(2)],
         }  # fmt: skip
 
     def block(self, work, seed, number):
@@ -234,42 +241,42 @@ class _Recipe:
         delta *= self.ambient[1]
         delta += self.ambient[0]
         # r0 (1 + tolerance) (1 + coefficient ΔT), each factor drawn within its limits
-        hot -= 0.5
-        hot *= delta
-        hot *= 2 * self.tcr
-        hot += 1.0
+        swing = delta * (2 * self.tcr)
+        hot *= swing
+        swing *= -0.5
+        swing += 1.0
+        hot += swing
         r *= 2 * self.tolerance * self.r0
         r += (1.0 - self.tolerance) * self.r0
         r *= hot
         rest = u[2 * n : -1]
-        rest *= 2.0
-        rest -= 1.0
         volts = rest[-1]
-        volts *= self.reference
-        volts += 1.0  # the reference, relative
+        volts *= 2 * self.reference
+        volts += 1.0 - self.reference  # the reference, relative
         outs: list[np.ndarray] = []
         for k in range(self.net.cell_count):
             outs.append(self._cell(work, k, r, rest[_OP_AMP_DRAWS * k : _OP_AMP_DRAWS * (k + 1)], delta, volts, outs))
-        return outs[-1] - self.ideals
+        out = outs[-1]
+        out -= self.ideals
+        return out
 
     def _cell(self, work, k, r, draws, delta, volts, outs):
         net, amp = self.net, self.net.design.op_amp
         c, n = net.cells[k], net.signal_count
-        vos, drift, bias, offset, cmrr, psrr = draws
-        limits = self.limits
+        draws *= 2.0 * self.limits  # drawn from 0 to 1, meant from -limit to +limit
+        draws -= self.limits
+        e, drift, into_minus, half, cm, psrr = draws
         drift *= delta
-        e = vos * limits[0]
-        e += drift * limits[1]
-        e += psrr * limits[5]
-        cm = cmrr * limits[4]
-        bias = bias * limits[2]
-        half = offset * (0.5 * limits[3])
+        e += drift
+        e += psrr
+        half *= 0.5
+        into_plus = into_minus + half
+        into_minus -= half
 
         total_m, drive_m = self._node(work, 0, c.minus_parts, c.minus_sources, r, volts, outs)
         if c.minus_ground >= 0:
             total_m += 1.0 / r[self.row[c.minus_ground]]
-        drive_m -= bias
-        drive_m += half
+        drive_m -= into_minus
         g_f = 1.0 / r[self.row[c.feedback]] if c.feedback >= 0 else np.zeros(BLOCK)
         total_m += g_f
         y_in = net.y_in
@@ -277,15 +284,14 @@ class _Recipe:
             total_p, plus = self._node(work, 1, c.plus_parts, c.plus_sources, r, volts, outs)
             if c.plus_ground >= 0:
                 total_p += 1.0 / r[self.row[c.plus_ground]]
-            plus -= bias
-            plus -= half
+            plus -= into_plus
             inv_p = 1.0 / total_p
             plus *= inv_p
             inv_p *= y_in
             inv_p += 1.0  # 1 + y_in / G+
             pull = inv_p
         else:
-            plus = work["p"][1]
+            plus = work["p"][1][1:]
             if c.tied == -2:
                 plus[:] = 0.0
             elif c.tied > n:
@@ -296,9 +302,13 @@ class _Recipe:
                     plus *= volts
             pull = 1.0
         # what the + pin holds over the - pin at infinite gain: V+ + (V+ - mid)/CMRR + e
-        pin = plus * cm
-        pin += plus
-        e -= cm * self.mid
+        pin = plus
+        if self.mid:
+            e += cm * (e - self.mid)
+        else:
+            e += cm * e
+        cm += 1.0
+        pin *= cm
         pin += e
         # d = V+ - V- pins: v_o (1 + r_o G_o) = A d + r_o (g_f m + i), m = pin - pull d
         a, r_o = amp.open_loop_gain, amp.output_resistance
@@ -323,15 +333,13 @@ class _Recipe:
         g_o += 1.0
         g_o *= kappa
         g_o += g_f
-        out /= g_o
+        np.reciprocal(g_o, out=g_o)
+        out *= g_o
         return out.copy() if k < net.cell_count - 1 else out
 
     def _node(self, work, slot, parts, sources, r, volts, outs):
         """Total conductance (BLOCK,) and driven current (points, BLOCK) of the legs into one node."""
         net, n = self.net, self.net.signal_count
-        total, drive = work["v"][slot], work["p"][slot]
-        total[:] = 0.0
-        drive[:] = 0.0
         live = [(int(i), int(s)) for i, s in zip(parts, sources, strict=True) if np.isfinite(net.resistances[i])]
         g = work["g"][: len(live)]
         for j, (i, s) in enumerate(live):
@@ -346,9 +354,17 @@ class _Recipe:
                 rows = g[: len(plain)]
             else:
                 rows = g[plain]
-            np.dot(self.x[:, [live[j][1] for j in plain]], rows, out=drive)
-        if len(live):
-            np.add.reduce(g, axis=0, out=total)
+            # one small matrix product: a row of ones sums the conductances, the points' voltages drive
+            which = [live[j][1] for j in plain]
+            both = np.dot(np.vstack([np.ones(len(plain)), self.x[:, which]]), rows, out=work["p"][slot])
+            total, drive = both[0], both[1:]
+        else:
+            total, drive = work["p"][slot][0], work["p"][slot][1:]
+            total[:] = 0.0
+            drive[:] = 0.0
+        for j, (_, s) in enumerate(live):
+            if s >= n:
+                total += g[j]
         for j, (_, s) in enumerate(live):
             if s == n:
                 for q, v in enumerate(self.x[:, n]):
@@ -377,4 +393,13 @@ class _Recipe:
         return load, drawn
 
 
-__all__ = ["BLOCK", "REFERENCE", "Boards", "MonteCarlo", "draw_boards", "monte_carlo", "shortest_interval", "statistics"]
+__all__ = [
+    "BLOCK",
+    "REFERENCE",
+    "Boards",
+    "MonteCarlo",
+    "draw_boards",
+    "monte_carlo",
+    "shortest_interval",
+    "statistics",
+]

@@ -178,7 +178,14 @@ def influences(net: nodes.Network) -> Influences:
         into_m[k, bias] = into_p[k, bias] = -1.0
         into_m[k, offset], into_p[k, offset] = 0.5, -0.5
     sol = nodes.solve(
-        net, drive, resistances=trial, gain=gain, source_resistances=rs, error=error, into_minus=into_m, into_plus=into_p
+        net,
+        drive,
+        resistances=trial,
+        gain=gain,
+        source_resistances=rs,
+        error=error,
+        into_minus=into_m,
+        into_plus=into_p,
     )
     out = sol.output[:, -1]
     uses_reference = design.reference is not None and any(p.source == REFERENCE for p in net.parts)
@@ -244,7 +251,7 @@ def error_budgets(stage, points=POINTS) -> dict[str, Budget]:
     and the load.
     """
     net = network_of(stage)
-    known = getattr(stage, "error_influences", None)
+    known = getattr(stage, "error_influences", None)  # an analysis keeps them from move to move
     inf = influences(net) if known is None else known
     design, amp, kind = net.design, net.design.op_amp, net.design.resistor
     n = net.signal_count

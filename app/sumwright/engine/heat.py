@@ -74,9 +74,7 @@ def heat(stage) -> Heat:
         r = net.resistances[i]
         node = sol.minus[part.cell] if part.kind in ("minus", "minus_ground", "feedback") else sol.plus[part.cell]
         if part.kind in ("minus", "plus"):
-            ids, sources = (
-                (c.minus_parts, c.minus_sources) if part.kind == "minus" else (c.plus_parts, c.plus_sources)
-            )
+            ids, sources = (c.minus_parts, c.minus_sources) if part.kind == "minus" else (c.plus_parts, c.plus_sources)
             source = int(sources[list(ids).index(i)])
             end = np.eye(n + 1)[source] if source <= n else sol.output[source - n - 1]
             total = r + net._leg_rs[source]
