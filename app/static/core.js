@@ -1,0 +1,171 @@
+// The sheet in the browser: takes frames from the wire, hands each part its share, turns the folds.
+
+import {el, setAttr, setText, setClass} from './dom.js'
+import {Line} from './wire.js'
+import {Blank, settle} from './blanks.js'
+import {THIN, fixed} from './format.js'
+import * as strips from './strips.js'
+import * as stage from './stage.js'
+import * as plate from './plate.js'
+import * as margins from './margins.js'
+import * as drawer from './drawer.js'
+import * as commands from './commands.js'
+
+const start = JSON.parse(document.getElementById('start').textContent)
+const state = {}
+const folds = new Map() // key -> {node, mounted}
+const PARTS = [strips, stage, plate, margins, drawer, commands]
+const NEW = {key: 'new', title: ''}
+
+const line = new Line(apply, silent)
+
+// What every module of the sheet is given.
+export const sheet = {
+  state,
+  line,
+  act(act, newest = null) { line.act(act, newest) },
+  // a message to the open fold's own view
+  fold(message, newest = null) { line.act({do: 'fold', fold: state.open, message}, newest) },
+  // the element that holds a Bokeh figure of a fold: append it where the figure shall be
+  figure(key, slot) { return document.querySelector(`[data-slot="${key}_${slot}"]`) },
+  note,
+  open: turn,
+  redraw() { draw(true) },
+}
+
+// ---------------------------------------------------------------- frames
+
+function apply(frame, fields = new Set()) {
+  const notes = settleLater(frame, fields)
+  for (const [key, value] of Object.entries(frame)) {
+    if (!['seq', 'refusals', 'heard', 'note', 'folds', 'fold'].includes(key)) state[key] = value
+  }
+  if (frame.fold) (state.shown ??= {})[frame.fold.key] = frame.fold
+  draw(false)
+  for (const one of settle(fields, frame.refusals ?? [])) note(one.text, one.field, {bad: true, refusal: one.refusal})
+  if (frame.note) note(frame.note.text, 'server', {bad: frame.note.bad})
+  for (const reply of frame.heard ?? []) heard(reply)
+  notes()
+}
+
+// a sentence of the sheet's own stays until the next thing is done
+function settleLater(frame, fields) {
+  return () => { if (frame.seq && fields.size === 0 && noted.field === null && Date.now() - noted.at > 1500) note(null, null) }
+}
+
+function heard(reply) {
+  if (reply.fold) folds.get(reply.fold)?.mounted?.heard?.(reply.reply)
+  for (const part of [...PARTS, ...(folds.get('new')?.mounted ? [folds.get('new').mounted] : [])]) part.heard?.(reply)
+}
+
+function draw(resized) {
+  if (!state.signals) return
+  const theme = state.theme ?? 'light'
+  if (document.documentElement.dataset.theme !== theme) document.documentElement.dataset.theme = theme
+  title.set(state.title)
+  if (document.title !== `${state.title} · Sumwright`) document.title = `${state.title} · Sumwright`
+  for (const part of PARTS) part.update?.(state, resized)
+  const fold = folds.get(state.open)
+  const shown = state.shown?.[state.open]
+  if (fold?.mounted && shown) {
+    setText(fold.refused, shown.refused ?? state.problem ?? '')
+    if (shown.shown) fold.mounted.update(shown.shown, state, resized)
+  }
+  setText(tail.value, `${fixed(state.stage.output)}${THIN}V`)
+  setClass(tail.value, 'red', state.stage.clipped !== 'no')
+}
+
+// ---------------------------------------------------------------- the line under the strips
+
+const noted = {field: null, at: 0}
+const noteText = el('span', {})
+const noteActs = el('span', {class: 'acts'})
+export const noteLine = el('p', {id: 'note', class: 'note-line', role: 'alert'}, noteText, noteActs)
+
+export function note(text, field = null, {bad = false, refusal = null} = {}) {
+  if (!text) {
+    if (field !== null && noted.field !== null && field !== noted.field) return
+    noted.field = null
+    setText(noteText, '')
+    noteActs.replaceChildren()
+    setClass(document.body, 'noted', false)
+    return
+  }
+  noted.field = field
+  noted.at = Date.now()
+  setText(noteText, text)
+  setClass(noteLine, 'err', bad)
+  setClass(document.body, 'noted', true)
+  noteActs.replaceChildren(...(refusal?.able ?? []).map(way => el('button', {
+    class: 'act', text: `take ${way}`,
+    onclick: () => { const again = {...refusal.act, arrangement: way}; note(null, field); line.act(again) },
+  })))
+}
+
+function silent(lost) {
+  if (lost && !state.lost) state.lost = new Date()
+  if (!lost) state.lost = null
+  commands.saved(state)
+}
+
+// ---------------------------------------------------------------- folds
+
+const tail = {node: el('span', {class: 'tail soft'}), value: el('b', {class: 'n'})}
+tail.node.append(el('i', {class: 'serif', text: 'out'}), ' = ', tail.value)
+const title = new Blank(sheet, {
+  field: 'title', label: 'Title of the sheet', send: text => ({do: 'title', text}), cls: 'title',
+})
+{ const there = document.getElementById('title'); title.node.id = 'title'; there.replaceWith(title.node) }
+
+async function turn(key) {
+  const known = [...start.folds, NEW].find(f => f.key === key)
+  if (!known) key = start.folds[0]?.key
+  if (!key) return
+  state.open = key
+  document.body.dataset.fold = key
+  for (const a of document.querySelectorAll('#crease a')) setAttr(a, 'aria-current', a.hash === '#' + key ? 'page' : null)
+  if (!folds.has(key)) {
+    const refused = el('p', {class: 'err refused', role: 'status'})
+    const body = el('div', {})
+    const node = el('section', {class: 'fold', id: `f-${key}`, 'aria-label': known?.title || 'New sheet'}, refused, body)
+    folds.set(key, {node, refused})
+    document.getElementById('folds').append(node)
+    const module = await import(key === 'new' ? './new.js' : `./folds/${key}.js`)
+    if (module.styles) {
+      const href = new URL(`./folds/${key}.css`, import.meta.url).href
+      await new Promise(done => document.head.append(el('link', {rel: 'stylesheet', href, onload: done, onerror: done})))
+    }
+    folds.get(key).mounted = module.mount(body, sheet)
+  }
+  for (const [k, f] of folds) f.node.hidden = k !== key
+  if (key !== 'new') line.act({do: 'turn', fold: key})
+  draw(true)
+}
+
+function mountFolds() {
+  document.getElementById('crease').append(
+    ...start.folds.map(f => el('a', {href: '#' + f.key, text: f.title})), noteLine, tail.node)
+  addEventListener('hashchange', () => turn(location.hash.slice(1)))
+}
+
+// ---------------------------------------------------------------- keys
+
+document.addEventListener('keydown', e => {
+  if (!(e.ctrlKey || e.metaKey) || e.altKey || e.key.toLowerCase() !== 'z') return
+  const typing = e.target.matches?.('input.blank, textarea') && e.target.value !== e.target.defaultValue && e.target.dataset.dirty
+  if (typing) return
+  e.preventDefault()
+  line.act({do: e.shiftKey ? 'redo' : 'undo'})
+})
+
+let soon = 0
+addEventListener('resize', () => { cancelAnimationFrame(soon); soon = requestAnimationFrame(() => draw(true)) })
+
+// ---------------------------------------------------------------- begin
+
+for (const part of PARTS) part.mount?.(sheet)
+mountFolds()
+apply(start)
+turn(location.hash.slice(1) || start.folds[0]?.key)
+document.fonts?.ready.then(() => draw(true))
+window.sumwright = sheet

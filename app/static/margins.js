@@ -1,0 +1,2 @@
+export function mount() {}
+export function update() {}

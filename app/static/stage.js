@@ -1,0 +1,3 @@
+export function mount() {}
+export function update() {}
+export function saved() {}

@@ -1,0 +1,62 @@
+// The wire's other end: acts go up a few at a time, one frame comes back for them.
+// While a frame is under way the newest value of each slider waits; a lost answer frees the wire after a while.
+
+const PATIENCE = 4000 // ms
+
+export class Line {
+  constructor(apply, silent) {
+    this.apply = apply
+    this.silent = silent
+    this.queue = []
+    this.seq = 0
+    this.shown = 0
+    this.busy = false
+    this.wire = null
+    this.fields = new Set()
+    const join = () => {
+      if (this.wire) return
+      this.wire = window.sumwrightWire
+      this.wire.listen(text => this.heard(JSON.parse(text)))
+      this.pump()
+    }
+    if (window.sumwrightWire) join()
+    else document.addEventListener('sumwright:wire', join, {once: true})
+  }
+
+  // `newest` names what only the newest act matters of: a slider under the hand.
+  act(act, newest = null) {
+    const last = this.queue[this.queue.length - 1]
+    if (newest && last && last.newest === newest) last.act = act
+    else this.queue.push({act, newest})
+    this.pump()
+  }
+
+  pump() {
+    if (!this.wire || this.busy || !this.queue.length) return
+    this.busy = true
+    this.seq += 1
+    const acts = this.queue.splice(0, 64).map(q => q.act)
+    this.fields = new Set(acts.map(a => a.field).filter(Boolean))
+    this.wire.send(JSON.stringify({seq: this.seq, acts}))
+    this.timer = setTimeout(() => { this.silent(true); this.free(this.seq) }, PATIENCE)
+  }
+
+  heard(frame) {
+    this.silent(false)
+    this.apply(frame, frame.seq === this.seq ? this.fields : new Set())
+    if (!frame.seq || frame.seq !== this.seq) return
+    clearTimeout(this.timer)
+    // the frame counts as shown when what it changed, the figures too, has been painted
+    const painted = () => setTimeout(() => this.free(frame.seq), 0)
+    if (document.hidden) painted()
+    else requestAnimationFrame(painted)
+  }
+
+  free(seq) {
+    clearTimeout(this.timer)
+    this.busy = false
+    this.shown = seq
+    document.dispatchEvent(new CustomEvent('sumwright:shown', {detail: seq}))
+    this.pump()
+  }
+}

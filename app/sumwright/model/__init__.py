@@ -1,0 +1,1 @@
+"""Param, no Panel: what a person chooses, and what follows from it."""

@@ -1,0 +1,92 @@
+"""The design a first visit lands on: an invented scenario, finished and alive."""
+
+from __future__ import annotations
+
+from sumwright.engine.stage import (
+    Ambient,
+    Cell,
+    Design,
+    Leg,
+    Load,
+    OpAmp,
+    Reference,
+    ResistorKind,
+    Signal,
+    Supply,
+    Target,
+)
+
+
+def op_amp() -> OpAmp:
+    """A generic JFET-input op amp; invented representative figures, of no maker's part."""
+    return OpAmp(
+        name="generic JFET input, 3 MHz",
+        open_loop_gain=2e5,
+        gain_bandwidth=3e6,
+        second_pole=8e6,
+        slew_rate=13e6,
+        input_resistance=1e12,
+        differential_capacitance=3e-12,
+        common_mode_capacitance=3e-12,
+        output_resistance=120.0,
+        offset_voltage=1e-3,
+        offset_drift=5e-6,
+        bias_current=2e-10,
+        offset_current=5e-11,
+        cmrr=2e4,
+        psrr=2e4,
+        noise_voltage=18e-9,
+        noise_voltage_corner=50.0,
+        noise_current=1e-14,
+        noise_current_corner=0.0,
+        dropout_high=1.5,
+        dropout_low=1.5,
+        dropout_resistance=20.0,
+        common_mode_high=1.0,
+        common_mode_low=1.0,
+        output_current=20e-3,
+        supply_least=8.0,
+        supply_most=36.0,
+        supply_current=1.4e-3,
+        thermal_resistance=None,
+        junction_most=None,
+        per_package=1,
+    )
+
+
+def design() -> Design:
+    """Four load cells under the corners of a grain hopper and a tare wheel, summed for a 0 to 5 V logger."""
+    return Design(
+        title="Grain hopper, four corners",
+        signals=(
+            Signal("tare", -0.18, 0.0, 2.5, 0.42, 100.0, 10.0),
+            Signal("north", 0.14, 0.0, 10.0, 7.6, 100.0, 10.0),
+            Signal("east", 0.10, 0.0, 10.0, 8.5, 100.0, 10.0),
+            Signal("south", 0.09, 0.0, 10.0, 9.9, 100.0, 10.0),
+            Signal("west", 0.11, 0.0, 10.0, 9.7, 100.0, 10.0),
+        ),
+        target=Target(offset=0.5, low=0.0, high=5.0, accuracy=0.04, noise=1e-3, bandwidth=100.0),
+        reference=Reference(2.5, 0.0, 0.002),
+        supply=Supply(6.0, -6.0, 0.05),
+        load=Load(1e4, 1e-10),
+        ambient=Ambient(25.0, -10.0, 50.0),
+        resistor=ResistorKind("E96", 0.001, 25e-6, 0.125, 1e3, 1e6),
+        op_amp=op_amp(),
+        stray_capacitance=5e-12,
+        noise_band=(0.1, 1e5),
+        cells=(
+            Cell(
+                minus=(Leg("tare", 93.1e3),),
+                plus=(
+                    Leg("north", 121e3),
+                    Leg("east", 169e3),
+                    Leg("south", 187e3),
+                    Leg("west", 154e3),
+                    Leg("reference", 84.5e3),
+                ),
+                plus_ground=30.9e3,
+                feedback=16.9e3,
+                feedback_capacitance=4.7e-12,
+            ),
+        ),
+    )

@@ -1,0 +1,259 @@
+"""The page: the only module that knows both the model and the views.
+
+One `Page` a session. The browser sends acts, a few at a time; the page lets the
+workbench do them, and answers with one frame: everything on the sheet that may
+have moved, as plain data. The browser acknowledges a frame by sending its next
+acts, so a fast hand never gets ahead of the picture.
+"""
+
+from __future__ import annotations
+
+import importlib
+import importlib.util
+import logging
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import panel as pn
+
+from sumwright.errors import CannotRealise, NotAllowed, SumwrightError
+from sumwright.jobs import Jobs
+from sumwright.model import acts, demo
+from sumwright.model.workbench import Workbench
+from sumwright.views import margins, plate, signals, stage
+from sumwright.views.fold import Context, Fold
+from sumwright.views.wire import Wire, packed
+
+log = logging.getLogger(__name__)
+
+# The folds, in the order of the work. One whose module is not installed is not listed.
+FOLDS = ("curves", "choices", "budget", "response", "bench", "log")
+
+ACTS_MOST = 64  # in one message
+_TEMPLATE = Path(__file__).parent / "views" / "sheet.html"
+
+
+def fold_classes() -> dict[str, type[Fold]]:
+    """The fold classes there are, by key."""
+    found = {}
+    for key in FOLDS:
+        name = f"sumwright.views.{key}"
+        if importlib.util.find_spec(name):
+            found[key] = getattr(importlib.import_module(name), key.capitalize())
+    return found
+
+
+class Page:
+    """One session: a workbench, the wire, and the folds opened so far.
+
+    Parameters
+    ----------
+    workbench : Workbench, optional
+        Default: the demonstration.
+    may : callable, optional
+        `may(action)` raises NotAllowed when the person must not; default: anyone may.
+    """
+
+    def __init__(self, workbench: Workbench | None = None, may: Callable[[str], None] | None = None):
+        self.workbench = workbench or Workbench(demo.design())
+        self.may = may or (lambda action: None)
+        self.jobs = Jobs()
+        self.extras: dict[str, Any] = {}
+        self.saved: dict[str, Any] = {"state": "none"}
+        self.wire = Wire(receive=self.receive)
+        self.classes = fold_classes()
+        self.slots = {
+            f"{key}_{slot}": pn.Row(margin=0, sizing_mode="stretch_both")
+            for key, cls in self.classes.items()
+            for slot in cls.slots
+        }
+        self.folds: dict[str, Fold] = {}
+        self.open = ""
+        self._doc: Any = None
+        self._note: dict[str, Any] | None = None
+        self.turn_to(next(iter(self.classes), ""))
+
+    # ------------------------------------------------------------ folds
+
+    def turn_to(self, key: str) -> None:
+        """Open a fold; only the open one is kept up to date."""
+        if key not in self.classes:
+            return
+        self.open = key
+        if key in self.folds:
+            return
+        fold = self.folds[key] = self.classes[key](
+            Context(self.workbench, self.jobs, self.refresh, self.refresh_sheet, self.say, self._may, self.extras)
+        )
+        for slot, figure in fold.figures().items():
+            self.slots[f"{key}_{slot}"].objects = [pn.pane.Bokeh(figure, margin=0)]
+
+    def _may(self, action: str) -> None:
+        self.may(action)
+
+    # ------------------------------------------------------------ frames
+
+    def frame(self) -> dict[str, Any]:
+        """Everything on the sheet that may have moved."""
+        bench = self.workbench
+        shown: dict[str, Any] = {
+            "title": bench.title,
+            "theme": bench.theme,
+            "undo": bool(bench.history.past),
+            "redo": bool(bench.history.future),
+            "saved": self.saved,
+            "problem": bench.problem,
+            "signals": signals.show(bench),
+            "stage": stage.show(bench),
+            "plate": plate.show(bench),
+            "margins": margins.show(bench),
+        }
+        if fold := self.folds.get(self.open):
+            shown["fold"] = {"key": self.open, **self._shown(fold)}
+        return shown
+
+    def _shown(self, fold: Fold) -> dict[str, Any]:
+        try:
+            return {"shown": fold.show()}
+        except SumwrightError as error:
+            return {"refused": str(error)}
+
+    def refresh(self) -> None:
+        """Send what the open fold shows, of the server's own accord."""
+        self._later(lambda: self._send({"fold": {"key": self.open, **self._shown(self.folds[self.open])}}))
+
+    def refresh_sheet(self) -> None:
+        """Send a whole frame, of the server's own accord."""
+        self._later(lambda: self._send(self.frame()))
+
+    def say(self, text: str, bad: bool = False) -> None:
+        """One sentence in the line under the strips."""
+        self._later(lambda: self._send({"note": {"text": text, "bad": bad}}))
+
+    def say_saved(self, **state: Any) -> None:
+        """What stands beside the title: `state` is none, saving, saved, unsaved or changed; `at`, `by` with it."""
+        self.saved = state
+        self._later(lambda: self._send({"saved": state}))
+
+    def _send(self, payload: dict[str, Any]) -> None:
+        with pn.io.hold():
+            self.wire.send(payload)
+
+    def _later(self, send: Callable[[], None]) -> None:
+        """Send inside the session's lock; nothing if the session is not there (yet, or any more)."""
+        doc = self._doc
+        if doc is not None and doc.session_context is not None:
+            doc.add_next_tick_callback(send)
+
+    # ------------------------------------------------------------ messages
+
+    def receive(self, message: dict[str, Any]) -> None:
+        """Do what the browser asks, and answer with one frame."""
+        asked = message.get("acts")
+        asked = asked[:ACTS_MOST] if isinstance(asked, list) else []
+        answer: dict[str, Any] = {"seq": message.get("seq") if isinstance(message.get("seq"), int) else 0}
+        refusals, heard = [], []
+        with pn.io.hold():
+            for act in asked:
+                if not isinstance(act, dict):
+                    continue
+                try:
+                    reply = self._do(act)
+                except SumwrightError as error:
+                    refusals.append(_refusal(act, error))
+                else:
+                    if reply is not None:
+                        heard.append({"do": act.get("do"), **reply})
+            answer.update(self.frame())
+            if refusals:
+                answer["refusals"] = refusals
+            if heard:
+                answer["heard"] = heard
+            self.wire.send(answer)
+
+    def _do(self, act: dict[str, Any]) -> dict[str, Any] | None:
+        name = act.get("do")
+        if name == "turn":
+            self.turn_to(str(act.get("fold")))
+            return None
+        if name == "fold":
+            key = str(act.get("fold"))
+            if key not in self.folds:
+                return None
+            self.may(f"fold {key}")
+            message = act.get("message")
+            reply = self.folds[key].handle(message if isinstance(message, dict) else {})
+            return None if reply is None else {"fold": key, "reply": reply}
+        if name not in acts.ACTS:
+            return None
+        if name not in acts.FREE:
+            self.may(name)
+        return acts.ACTS[name](self.workbench, act)
+
+    # ------------------------------------------------------------ the document
+
+    def template(self) -> pn.Template:
+        """The document, with the first frame in it, so that the sheet is drawn before the session answers."""
+        page = pn.Template(_TEMPLATE.read_text(encoding="utf-8"))
+        page.add_panel("wire", self.wire)
+        for name, row in self.slots.items():
+            page.add_panel(name, row)
+        page.add_variable("slots", list(self.slots))
+        page.add_variable("static", _static_place())
+        page.add_variable("sheet_theme", self.workbench.theme)
+        start = {"folds": [{"key": k, "title": c.title or k.capitalize()} for k, c in self.classes.items()]}
+        start.update(self.frame())
+        page.add_variable("start", _for_script(start))
+        return page
+
+    def servable(self) -> pn.Template:
+        """Put the page in the present session's document."""
+        self._doc = pn.state.curdoc
+        page = self.template()
+        if self._doc is not None and self._doc.session_context is not None:
+            pn.state.on_session_destroyed(lambda context: self.close())
+        return page.servable(title=f"{self.workbench.title} · Sumwright")
+
+    def close(self) -> None:
+        """The session is over: stop its jobs and break what would keep it in memory."""
+        self.jobs.close()
+        for fold in self.folds.values():
+            fold.close()
+        self.folds.clear()
+        self.slots.clear()
+        self.wire.receive = None
+        self._doc = None
+
+
+def _refusal(act: dict[str, Any], error: SumwrightError) -> dict[str, Any]:
+    """One refused act as the browser gets it: its field keeps what was typed, the sentence stands beside it."""
+    refused: dict[str, Any] = {"do": act.get("do"), "field": act.get("field"), "text": str(error)}
+    if isinstance(error, CannotRealise) and act.get("do") in acts.RETAKEN:
+        refused["able"] = list(error.able)
+        refused["act"] = {k: v for k, v in act.items() if isinstance(v, str | int | float | bool)}
+    if isinstance(error, NotAllowed):
+        refused["not_allowed"] = True
+    return refused
+
+
+def _for_script(payload: dict[str, Any]) -> str:
+    """JSON that may stand in a script element: no `<` closes it early."""
+    return packed(payload).replace("<", "\\u003c").replace("\u2028", "\\u2028").replace("\u2029", "\\u2029")
+
+
+def _static_place() -> str:
+    """Where `static/` is, relative to the document, so that any prefix works."""
+    context = pn.state.curdoc.session_context if pn.state.curdoc is not None else None
+    path = getattr(getattr(context, "request", None), "path", "/app") or "/app"
+    if path.endswith("/"):
+        return "static"
+    return f"{path.rsplit('/', 1)[-1] or 'app'}/static"
+
+
+def build_page() -> Page:
+    """The page of a new session."""
+    return Page()
+
+
+__all__ = ["FOLDS", "Page", "build_page", "fold_classes"]

@@ -1,0 +1,1 @@
+"""What the sheet shows: one module a part of the drawing, one a fold; none knows the model."""

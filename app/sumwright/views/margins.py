@@ -1,0 +1,19 @@
+"""The margin column: every check, tightest first, as a gauge with its reason."""
+
+from __future__ import annotations
+
+from typing import Any
+
+
+def show(bench: Any) -> list[dict[str, Any]]:
+    """Every check as plain data; `ratio` is its margin in parts of its allowance."""
+    shown = []
+    for check in bench.analysis.checks:
+        ratio = None
+        if check.margin is not None and check.allowance:
+            ratio = check.margin / abs(check.allowance)
+        shown.append({
+            "key": check.key, "title": check.title, "status": check.status, "margin": check.margin, "unit": check.unit,
+            "ratio": ratio, "why": check.why, "advice": check.advice,
+        })  # fmt: skip
+    return shown
