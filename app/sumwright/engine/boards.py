@@ -350,10 +350,7 @@ class _Recipe:
         np.reciprocal(g, out=g)
         plain = [j for j, (_, s) in enumerate(live) if s < n]
         if plain:
-            if plain == list(range(len(plain))):
-                rows = g[: len(plain)]
-            else:
-                rows = g[plain]
+            rows = g[: len(plain)] if plain == list(range(len(plain))) else g[plain]
             # one small matrix product: a row of ones sums the conductances, the points' voltages drive
             which = [live[j][1] for j in plain]
             both = np.dot(np.vstack([np.ones(len(plain)), self.x[:, which]]), rows, out=work["p"][slot])

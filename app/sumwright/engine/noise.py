@@ -7,6 +7,7 @@ four injections a cell carry every term. Sources: Nyquist, Phys. Rev. 32 (1928):
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import NamedTuple
 
 import numpy as np
@@ -151,7 +152,7 @@ def _quadrature(low, high, corners):
     inner = np.log(corners[(corners > low) & (corners < high)]) if len(corners) else np.zeros(0)
     edges = np.unique(np.concatenate([[a, b], inner]))
     fine = []
-    for p, q in zip(edges[:-1], edges[1:], strict=True):
+    for p, q in pairwise(edges):
         n = max(1, int(np.ceil((q - p) / 1.2)))
         fine.append(p + (q - p) * np.arange(n) / n)
     fine = np.append(np.concatenate(fine), b)

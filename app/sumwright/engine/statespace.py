@@ -6,7 +6,7 @@ algebraically), and each op amp adds its one or two poles. A cell whose op amp
 slews or whose output is at a limit no longer listens to its inputs, so its first
 pole leaves the states and becomes an input that runs along a straight line.
 
-Source: Kirchhoff's current law; the op amp as in model of its data sheet
+Source: Kirchhoff's current law; the op amp as in its data sheet
 (A0, gain-bandwidth, second pole), slewing where the first pole is driven.
 """
 
@@ -17,13 +17,14 @@ from typing import NamedTuple
 
 import numpy as np
 
-from .nodes import Network
+from .nodes import Limits, Network
 
 # What a cell's op amp is doing. The sign is the side.
 LINEAR = 0
 SLEW = 1
-SWING = 2  # output at the voltage limit
+SWING = 2  # output at the voltage limit, current flowing the way that costs dropout
 CURRENT = 3  # output at the current limit
+SWING_IDLE = 4  # output at the voltage limit, current flowing the other way
 
 _LEAST_OUTPUT_RESISTANCE = 0.01  # ohm: an ideal output still needs a branch to write the equation of
 _LEAST_TIE_RESISTANCE = 1.0  # ohm, of a + pin tied straight to a source: far below anything it could load
@@ -51,14 +52,14 @@ class StateSpace(NamedTuple):
     current: np.ndarray
 
 
-def state_space(net: Network, modes=None, limits=None) -> StateSpace:
+def state_space(net: Network, modes=None, limits: Limits | None = None) -> StateSpace:
     """Equations of the chain with each cell's op amp in the given mode.
 
     Parameters
     ----------
     net : Network
     modes : (cells,) int, optional
-        LINEAR (default), ±SLEW, ±SWING, ±CURRENT.
+        LINEAR (default), ±SLEW, ±SWING, ±SWING_IDLE, ±CURRENT.
     limits : Limits, optional
         Needed where a mode is a limit of the output.
     """
@@ -115,8 +116,9 @@ def state_space(net: Network, modes=None, limits=None) -> StateSpace:
         if abs(mode) in (LINEAR, SLEW):
             branch[k] = 1.0 / r_out
             inner[o, k] = branch[k]
-        elif abs(mode) == SWING:
-            branch[k] = 1.0 / max(amp.dropout_resistance, _LEAST_OUTPUT_RESISTANCE)
+        elif abs(mode) in (SWING, SWING_IDLE):
+            least = _LEAST_OUTPUT_RESISTANCE
+            branch[k] = 1.0 / (max(amp.dropout_resistance, least) if abs(mode) == SWING else least)
             drive[o, n + 1] += branch[k] * (limits.high if mode > 0 else limits.low)
         else:
             drive[o, n + 1] += math.copysign(limits.current, mode)
@@ -132,7 +134,8 @@ def state_space(net: Network, modes=None, limits=None) -> StateSpace:
     n_cap = q.shape[1]
 
     states = n_cap
-    first, second = [], []
+    first: list[int] = []
+    second: list[int] = []
     for mode in modes:
         free = mode == LINEAR
         has_second = amp.second_pole is not None and abs(mode) in (LINEAR, SLEW)
@@ -181,7 +184,7 @@ def state_space(net: Network, modes=None, limits=None) -> StateSpace:
         else:
             c[row] = branch[k] * (v_x[k] - c[o])
             d[row] = branch[k] * (v_w[k] - d[o])
-            if abs(modes[k]) == SWING:
+            if abs(modes[k]) in (SWING, SWING_IDLE):
                 d[row, n + 1] += branch[k] * (limits.high if modes[k] > 0 else limits.low)
     base = 3 * np.arange(cells)
     return StateSpace(
@@ -191,17 +194,15 @@ def state_space(net: Network, modes=None, limits=None) -> StateSpace:
 
 def linear_space(net: Network) -> StateSpace:
     """`state_space` with every op amp linear, kept with the network."""
-    known = getattr(net, "_linear_space", None)
+    known = net.__dict__.get("_linear_space")
     if known is None:
-        known = state_space(net)
-        net._linear_space = known
+        known = net.__dict__["_linear_space"] = state_space(net)
     return known
 
 
 def poles(net: Network) -> np.ndarray:
     """Poles of the closed stage [rad/s], complex, every op amp linear."""
-    known = getattr(net, "_poles", None)
+    known = net.__dict__.get("_poles")
     if known is None:
-        known = np.linalg.eigvals(linear_space(net).a).astype(complex)
-        net._poles = known
+        known = net.__dict__["_poles"] = np.linalg.eigvals(linear_space(net).a).astype(complex)
     return known
