@@ -1,0 +1,152 @@
+"""Where a stage could hurt somebody or destroy itself, in words that belong beside the numbers.
+
+These are the usual cautions, not a safety assessment: local codes and licensed
+practice decide. Sources: 60 V DC and 30 V AC RMS, the usual limits of extra-low
+voltage in normal conditions (IEC 61010-1 and IEC 62368-1, from memory); surfaces
+above 60 °C (burn thresholds of ISO 13732-1, from memory); film resistors at 155 °C
+when they take their rating at 70 °C ambient, as the derating line says; 5 mA
+through the protection of an input, common practice where a data sheet is silent.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+from .heat import FULL_POWER_TO, NO_POWER_AT, resistor_rating
+from .nodes import Network
+
+DC_LIMIT = 60.0  # V
+AC_LIMIT = 30.0  # V RMS
+HOT_SURFACE = 60.0  # degC
+PROTECTION_CURRENT = 5e-3  # A
+
+
+class Caution(NamedTuple):
+    """One caution; `present` is True where this design gives the reason, False where it holds of any."""
+
+    key: str  # voltage, burn, unpowered, short, rails, use
+    title: str
+    text: str
+    present: bool
+
+
+def cautions(analysis) -> tuple[Caution, ...]:
+    """Every caution that goes with a design, those it gives reason for first.
+
+    Parameters
+    ----------
+    analysis : Analysis
+
+    Returns
+    -------
+    tuple of Caution
+    """
+    found = [*_voltage(analysis.design), *_heat(analysis), *_unpowered(analysis.design), _short(analysis)]
+    found += [
+        Caution(
+            "rails", "Rails",
+            "Check the rails' polarity and value at the socket before the op amp goes in: a reversed or missing rail destroys it.",
+            False,
+        ),
+        Caution(
+            "use", "Use",
+            "Not for protection, medical or other uses where a wrong sum can hurt somebody, without independent means.", False,
+        ),
+    ]  # fmt: skip
+    return tuple(sorted(found, key=lambda c: not c.present))
+
+
+def _voltage(design) -> list[Caution]:
+    over = []
+    s = design.supply
+    total = (s.high - s.low) * (1 + s.tolerance)
+    if max(total, abs(s.high), abs(s.low)) > DC_LIMIT:
+        over.append(f"{total:.3g} V between the rails")
+    for x in design.signals:
+        peak = max(abs(x.low), abs(x.high))
+        rms = (x.high - x.low) / 2 / math.sqrt(2) if x.frequency > 0 else 0.0
+        if peak > DC_LIMIT:
+            over.append(f"'{x.name}' reaches {peak:.3g} V")
+        elif rms > AC_LIMIT:
+            over.append(f"'{x.name}' is {rms:.3g} V RMS as a sine over its range")
+    if not over:
+        return []
+    return [
+        Caution(
+            "voltage", "Hazardous voltage",
+            f"{'; '.join(over)}: past 60 V DC or 30 V AC RMS, the usual limits of extra-low voltage. Guard live parts and "
+            "discharge capacitors before touching; the local code decides, and the work belongs to licensed practice.",
+            True,
+        )
+    ]  # fmt: skip
+
+
+def _heat(analysis) -> list[Caution]:
+    design, power = analysis.design, analysis.power
+    hot = []
+    rise = (NO_POWER_AT - FULL_POWER_TO) / design.resistor.power  # K/W of a film at its rating
+    rating = resistor_rating(design)
+    for r in power.resistors:
+        surface = design.ambient.high + rise * r.dissipation_most
+        if r.dissipation_most > 0.5 * rating:
+            hot.append(
+                f"the {r.name} takes {_watts(r.dissipation_most)} of the {_watts(rating)} it may at {design.ambient.high:g} °C"
+            )
+        elif surface > HOT_SURFACE and r.dissipation_most > 0:
+            hot.append(f"the {r.name} may reach {surface:.0f} °C")
+    for a in power.op_amps:
+        if a.junction is not None and a.junction > HOT_SURFACE:
+            hot.append(f"the op amp of {a.name} may reach {a.junction:.0f} °C inside")
+    if not hot:
+        return []
+    most = 4
+    more = f"; and {len(hot) - most} more" if len(hot) > most else ""
+    return [
+        Caution("burn", "Hot parts", f"At worst {'; '.join(hot[:most])}{more}. Let them cool before touching.", True)
+    ]
+
+
+def _watts(power: float) -> str:
+    return f"{power * 1e3:.3g} mW" if power < 1 else f"{power:.3g} W"
+
+
+def _unpowered(design) -> list[Caution]:
+    """Signals that push more current into a dead op amp than its input protection should carry."""
+    net = Network(design)
+    strong = []
+    for part in net.parts:
+        if part.source not in design.signal_names or part.kind not in ("minus", "plus"):
+            continue
+        x = design.signal(part.source)
+        ohm = part.resistance + x.source_resistance
+        peak = max(abs(x.low), abs(x.high))
+        current = math.inf if ohm == 0 else peak / ohm
+        if peak and current > PROTECTION_CURRENT:
+            strong.append(
+                f"'{x.name}' pushes {current * 1e3:.3g} mA" if ohm else f"'{x.name}' has no resistor in series"
+            )
+    if strong:
+        text = f"With the rails off, {', '.join(strong)} into the op amp's input protection; switch the rails on first and off last."
+        return [Caution("unpowered", "Signals without rails", text, True)]
+    return [
+        Caution(
+            "unpowered", "Signals without rails",
+            "Switch the rails on before the signals and off after them: a driven input of an unpowered op amp conducts through its protection.",
+            False,
+        )
+    ]  # fmt: skip
+
+
+def _short(analysis) -> Caution:
+    design, amp = analysis.design, analysis.design.op_amp
+    watts = max(abs(design.supply.high), abs(design.supply.low)) * amp.output_current
+    text = f"Into a short the output stage takes {_watts(watts)}"
+    junction = None if amp.thermal_resistance is None else design.ambient.high + amp.thermal_resistance * watts
+    over = junction is not None and amp.junction_most is not None and junction > amp.junction_most
+    if over:
+        text += f", which would bring the junction to {junction:.0f} °C, past its {amp.junction_most:.0f} °C"
+    return Caution("short", "Output into a short", text + ". Find the short before the next try.", over)
+
+
+__all__ = ["AC_LIMIT", "DC_LIMIT", "HOT_SURFACE", "PROTECTION_CURRENT", "Caution", "cautions"]

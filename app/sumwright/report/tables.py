@@ -1,0 +1,161 @@
+"""A table as data: raw numbers in SI units, and how a person reads them.
+
+One table serves the document, the CSV file and the Markdown summary, so that none
+of them can say another number than the engine found.
+"""
+
+from __future__ import annotations
+
+import csv
+import io
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from sumwright.quantity import MINUS, THIN, format_fixed, format_percent, format_quantity, format_resistor
+
+from .axes import prefix_of
+
+_FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n")
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column.
+
+    `form` says how it is read: `text`; `fixed` with `decimals` in the base unit;
+    `scaled`, one SI prefix for the whole column so that the points align;
+    `figures`, each with its own prefix; `resistor`, as parts are marked; `percent`,
+    of a fraction.
+    """
+
+    title: str
+    unit: str = ""
+    form: str = "text"
+    decimals: int = 3
+    sign: bool = False
+
+    @property
+    def numeric(self) -> bool:
+        return self.form != "text"
+
+
+@dataclass(frozen=True)
+class Table:
+    """Rows of raw values under `columns`; None is what does not exist."""
+
+    key: str
+    title: str
+    columns: tuple[Column, ...]
+    rows: tuple[tuple[Any, ...], ...]
+    note: str = ""
+    marked: frozenset[int] = field(default_factory=frozenset)  # rows that fall short
+
+    @property
+    def heads(self) -> list[str]:
+        """Column heads with the unit their numbers are in."""
+        heads = []
+        for j, c in enumerate(self.columns):
+            unit = c.unit
+            if c.form == "scaled":
+                unit = prefix_of(self._numbers(j))[1] + c.unit
+            elif c.form == "percent":
+                unit = "%"
+            elif c.form in ("figures", "resistor"):
+                unit = ""
+            heads.append(f"{c.title}, {unit}" if unit and c.title else c.title or unit)
+        return heads
+
+    @property
+    def cells(self) -> list[list[str]]:
+        """Every cell as it is read."""
+        forms = [self._writer(j) for j in range(len(self.columns))]
+        return [[write(value) for write, value in zip(forms, row, strict=True)] for row in self.rows]
+
+    def _numbers(self, j: int) -> list[float]:
+        return [float(r[j]) for r in self.rows if isinstance(r[j], int | float | np.number) and math.isfinite(r[j])]
+
+    def _writer(self, j: int):
+        c = self.columns[j]
+        if c.form == "fixed":
+            return lambda v: format_fixed(v, "", c.decimals, sign=c.sign)
+        if c.form == "scaled":
+            factor = prefix_of(self._numbers(j))[0]
+            places = scaled_decimals(self._numbers(j), factor, c.decimals)
+            return lambda v: format_fixed(None if v is None else v / factor, "", places, sign=c.sign)
+        if c.form == "figures":
+            return lambda v: format_quantity(v, c.unit, c.decimals, sign=c.sign)
+        if c.form == "resistor":
+            return lambda v: "" if v is None else format_resistor(v)
+        if c.form == "percent":
+            return lambda v: format_percent(v, c.decimals, sign=c.sign).removesuffix(f"{THIN}%")
+        return lambda v: "" if v is None else str(v)
+
+
+def scaled_decimals(numbers: Sequence[float], factor: float, figures: int) -> int:
+    """Decimals that give the largest of `numbers` that many significant figures."""
+    most = max((abs(v) for v in numbers), default=0.0) / factor
+    if most == 0:
+        return 0
+    return max(0, figures - 1 - math.floor(math.log10(most) + 1e-9))
+
+
+# Files ------------------------------------------------------------------------------------------
+
+
+def csv_text(table: Table) -> str:
+    """The table as CSV: UTF-8, SI base units in the head, numbers as numbers, texts that no spreadsheet runs."""
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\r\n")
+    writer.writerow([safe_cell(_csv_head(c)) for c in table.columns])
+    for row in table.rows:
+        writer.writerow([_csv_value(v) for v in row])
+    return out.getvalue()
+
+
+def _csv_head(c: Column) -> str:
+    unit = "ohm" if c.form == "resistor" else "1" if c.form == "percent" else c.unit.replace("Ω", "ohm")
+    return f"{c.title} [{unit}]" if unit and c.form != "text" else c.title
+
+
+def _csv_value(value: Any) -> str:
+    if value is None:
+        return ""
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, int | float | np.number):
+        number = float(value)
+        return repr(int(number)) if number.is_integer() and abs(number) < 1e15 else repr(number)
+    return safe_cell(str(value))
+
+
+def safe_cell(text: str) -> str:
+    """A text that no spreadsheet takes for a formula: one that could be gets an apostrophe before it.
+
+    Source: OWASP, CSV Injection (from memory): cells that begin with = + - @, tab,
+    carriage return or line feed.
+    """
+    return "'" + text if text.startswith(_FORMULA_STARTS) else text
+
+
+def markdown(table: Table) -> str:
+    """The table in Markdown; nothing in a cell can end it or become markup."""
+    lines = [
+        "| " + " | ".join(_md(h) for h in table.heads) + " |",
+        "|" + "|".join("---:" if c.numeric else ":---" for c in table.columns) + "|",
+    ]
+    lines += ["| " + " | ".join(_md(cell) for cell in row) + " |" for row in table.cells]
+    return "\n".join(lines)
+
+
+def _md(text: str) -> str:
+    flat = " ".join(text.split())
+    for c in "\\`*_[]<>|#~&":
+        flat = flat.replace(c, "\\" + c)
+    return flat
+
+
+__all__ = ["MINUS", "Column", "Table", "csv_text", "markdown", "safe_cell", "scaled_decimals"]

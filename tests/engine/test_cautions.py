@@ -1,0 +1,62 @@
+"""The usual cautions appear where their limit is passed, and not a hair below it."""
+
+import dataclasses
+
+import pytest
+from sumwright.engine.analysis import Analysis
+from sumwright.engine.cautions import cautions
+from sumwright.engine.stage import Ambient, ResistorKind, Signal, Supply
+from support.stages import one_cell, op_amp
+
+
+def stage(low=-1.0, high=1.0, frequency=0.0, leg=1e4, rails=12.0, **parts):
+    d = one_cell({"a": 0.5}, minus={"a": leg}, feedback=1e4, plus_ground=0.0, amp=op_amp())
+    return dataclasses.replace(
+        d, signals=(Signal("a", -1.0, low, high, 0.0, 0.0, frequency),), supply=Supply(rails, -rails), **parts
+    )
+
+
+def keys(design):
+    return {c.key for c in cautions(Analysis(design)) if c.present}
+
+
+# IEC 61010-1 and IEC 62368-1 (from memory): 60 V DC, 30 V RMS are the limits in normal conditions.
+@pytest.mark.parametrize(
+    ("parts", "said"),
+    [
+        ({"high": 60.0, "leg": 1e6}, False),
+        ({"high": 60.5, "leg": 1e6}, True),
+        ({"low": -60.5, "leg": 1e6}, True),
+        ({"rails": 30.0}, False),
+        ({"rails": 30.1}, True),
+        ({"low": -42.4, "high": 42.4, "frequency": 50.0, "leg": 1e6}, False),  # 30 V RMS is 42.4 V peak
+        ({"low": -42.5, "high": 42.5, "frequency": 50.0, "leg": 1e6}, True),
+    ],
+)
+def test_voltage_past_extra_low_voltage_is_said(parts, said):
+    assert ("voltage" in keys(stage(**parts))) is said
+
+
+def test_a_part_past_half_its_rating_is_said_to_be_hot():
+    # 10 V over 10k is 10 mW; it may take 20 mW, so exactly half is not yet past it.
+    cold = Ambient(25.0, 25.0, 25.0)
+    for rating, said in ((0.0199, True), (0.0201, False)):
+        d = stage(low=-1.0, high=10.0, ambient=cold, resistor=ResistorKind(power=rating))
+        burns = [c for c in cautions(Analysis(d)) if c.key == "burn"]
+        text = burns[0].text if burns else ""
+        assert ("takes" in text) is said
+
+
+def test_strong_signals_into_a_dead_stage_are_named():
+    assert "unpowered" in keys(stage(high=10.0, leg=1.9e3))
+    assert "unpowered" not in keys(stage(high=10.0, leg=2.1e3))
+
+
+def test_the_general_cautions_always_stand():
+    said = {c.key for c in cautions(Analysis(stage()))}
+    assert {"rails", "use", "short", "unpowered"} <= said
+
+
+def test_those_with_a_reason_come_first():
+    order = [c.present for c in cautions(Analysis(stage(rails=40.0)))]
+    assert order == sorted(order, reverse=True) and order[0]
