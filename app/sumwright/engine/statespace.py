@@ -26,8 +26,8 @@ SWING = 2  # output at the voltage limit, current flowing the way that costs dro
 CURRENT = 3  # output at the current limit
 SWING_IDLE = 4  # output at the voltage limit, current flowing the other way
 
-_LEAST_OUTPUT_RESISTANCE = 0.01  # ohm: an ideal output still needs a branch to write the equation of
-_LEAST_TIE_RESISTANCE = 1.0  # ohm, of a + pin tied straight to a source: far below anything it could load
+_LEAST_OUTPUT_RESISTANCE = 1e-4  # ohm: an ideal output still needs a branch to write the equation of
+_LEAST_TIE_RESISTANCE = 1e-3  # ohm, of a + pin tied straight to a source: far below anything it could load
 
 
 class StateSpace(NamedTuple):
@@ -43,7 +43,7 @@ class StateSpace(NamedTuple):
     b: np.ndarray
     c: np.ndarray
     d: np.ndarray
-    capacitor: np.ndarray  # (capacitor states, nodes): coordinates from node voltages
+    capacitor: np.ndarray  # (capacitor states, 3 cells): coordinates from m, p, o of each cell
     first: tuple[int, ...]  # index of each cell's first op amp state in x, -1 where frozen
     second: tuple[int, ...]  # of its second, -1 where there is none or it is frozen
     minus: np.ndarray  # row of y for each cell's node
@@ -74,6 +74,7 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
     inner = np.zeros((nodes, cells))  # from each op amp's internal voltage
     branch = np.zeros(cells)  # conductance of the output branch
     r = net.resistances
+    same = np.eye(nodes)  # all nodes from the free ones: a + pin tied to ground or to an output is not free
 
     def between(i, j, g, c=0.0):
         """A conductance and capacitance between node i and node j (None = ground)."""
@@ -102,11 +103,14 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
         if c.feedback >= 0:
             between(m, o, 1.0 / r[c.feedback], c.capacitance)
         for i, s in zip(c.plus_parts, c.plus_sources, strict=True):
-            leg(p, int(s), max(r[i] + net._leg_rs[s], _LEAST_TIE_RESISTANCE))
+            if c.tied <= n:
+                leg(p, int(s), max(r[i] + net._leg_rs[s], _LEAST_TIE_RESISTANCE))
         if c.plus_ground >= 0:
             between(p, None, 1.0 / r[c.plus_ground])
         if c.tied == -2:
-            between(p, None, 1.0 / _LEAST_TIE_RESISTANCE)
+            same[p, p] = 0.0
+        elif c.tied > n:
+            same[p, p], same[p, 3 * (c.tied - n - 1) + 2] = 0.0, 1.0
         between(m, p, net.y_in, amp.differential_capacitance)
         between(m, None, 0.0, amp.common_mode_capacitance + design.stray_capacitance)
         between(p, None, 0.0, amp.common_mode_capacitance)
@@ -124,11 +128,15 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
             drive[o, n + 1] += math.copysign(limits.current, mode)
         gmat[o, o] += branch[k]
 
+    same = same[:, same.any(axis=0)]
+    gmat, cmat = same.T @ gmat @ same, same.T @ cmat @ same
+    drive, inner = same.T @ drive, same.T @ inner
+
     # y = q a + z b with a the capacitor coordinates, b what follows algebraically
     value, vector = np.linalg.eigh(cmat)
     real = value > 1e-12 * max(value[-1], 1e-30)
     q, z = vector[:, real], vector[:, ~real]
-    inv = np.linalg.inv(z.T @ gmat @ z) @ z.T if z.shape[1] else np.zeros((0, nodes))
+    inv = np.linalg.inv(z.T @ gmat @ z) @ z.T if z.shape[1] else np.zeros((0, len(gmat)))
     y_a = q - z @ (inv @ gmat @ q)  # y from capacitor coordinates
     y_in = z @ inv  # y from injected currents
     n_cap = q.shape[1]
@@ -154,16 +162,17 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
         elif abs(mode) == SLEW:
             v_w[k, n + 2 + k] = 1.0
     inj_x, inj_w = inner @ v_x, drive + inner @ v_w
+    free_x, free_w = y_in @ inj_x, y_in @ inj_w
+    free_x[:, :n_cap] += y_a
     c = np.zeros((nodes + cells, states))
-    c[:nodes, :n_cap] = y_a
-    c[:nodes] += y_in @ inj_x
+    c[:nodes] = same @ free_x
     d = np.zeros((nodes + cells, inputs))
-    d[:nodes] = y_in @ inj_w
+    d[:nodes] = same @ free_w
     a, b = np.zeros((states, states)), np.zeros((states, inputs))
     if n_cap:
         inv_c = 1.0 / value[real]
-        a[:n_cap] = inv_c[:, None] * (q.T @ (inj_x - gmat @ c[:nodes]))
-        b[:n_cap] = inv_c[:, None] * (q.T @ (inj_w - gmat @ d[:nodes]))
+        a[:n_cap] = inv_c[:, None] * (q.T @ (inj_x - gmat @ free_x))
+        b[:n_cap] = inv_c[:, None] * (q.T @ (inj_w - gmat @ free_w))
     w1 = 2 * math.pi * amp.gain_bandwidth / amp.open_loop_gain
     for k in range(cells):
         m, p, o = 3 * k, 3 * k + 1, 3 * k + 2
@@ -188,7 +197,7 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
                 d[row, n + 1] += branch[k] * (limits.high if modes[k] > 0 else limits.low)
     base = 3 * np.arange(cells)
     return StateSpace(
-        a, b, c, d, q.T, tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
+        a, b, c, d, q.T @ np.linalg.pinv(same), tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
     )  # fmt: skip
 
 
