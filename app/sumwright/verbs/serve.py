@@ -1,0 +1,109 @@
+"""`sumwright serve`: the sheet for one person or a lab, with everything set right before the first visit."""
+
+from __future__ import annotations
+
+import argparse
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import sumwright
+from sumwright.errors import SumwrightError
+from sumwright.notebook.settings import Settings, read_settings
+from sumwright.verbs.common import whole
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("--address", metavar="ADDRESS", help="address to listen on (127.0.0.1)")
+    parser.add_argument("--port", metavar="PORT", help="port to listen on (5006)")
+    parser.add_argument("--processes", metavar="N", help="server processes (1)")
+    parser.add_argument("--show", action="store_true", help="open the sheet in this machine's browser")
+    parser.add_argument("--check", action="store_true", help="check the settings and the store, then end")
+
+
+def run(args: argparse.Namespace) -> int:
+    ours = read_settings()
+    if args.address is not None:
+        ours = replace(ours, address=args.address)
+    if args.port is not None:
+        ours = replace(ours, port=whole(args.port, "--port", 1, 65535))
+    if args.processes is not None:
+        ours = replace(ours, processes=whole(args.processes, "--processes", 1, 64))
+    ours.check_serving()
+    if args.check:
+        return _check(ours)
+    return serve(ours, show=args.show)
+
+
+def app_folder() -> Path:
+    """The folder that is served: beside the package in a checkout, or where it was installed with it."""
+    package = Path(sumwright.__file__).parent
+    for folder in (package.parent, package / "served"):
+        if (folder / "main.py").is_file() and (folder / "static").is_dir():
+            return folder
+    raise SumwrightError(
+        f"The served folder (main.py and static) is neither {package.parent} nor {package / 'served'}; serve from a checkout."
+    )
+
+
+def _check(ours: Settings) -> int:
+    from sumwright.notebook.store import Store
+
+    store = Store(ours.store_url)
+    store.ready()
+    print(
+        f"Settings and store are good: {store.place}, sign-in {ours.sign_in}, http://{ours.address}:{ours.port}{ours.prefix}/"
+    )
+    store.close()
+    return 0
+
+
+def serve(ours: Settings, *, show: bool = False) -> int:
+    """Serve until stopped."""
+    from panel.command.serve import Serve
+    from panel.config import config
+
+    from sumwright.notebook import logs, settings, sign_in, web
+
+    settings.use(ours)
+    secret = ours.cookie_secret()
+    logs.set_up(ours.log, ours.log_level)
+    web.guard()
+    config.cookie_secret = secret
+
+    class Ours(Serve):
+        """Panel's own way to serve, with our people at the door."""
+
+        def customize_kwargs(self, args: argparse.Namespace, server_kwargs: dict[str, Any]) -> dict[str, Any]:
+            kwargs = super().customize_kwargs(args, server_kwargs)
+            kwargs.update(secret_key=secret.encode(), sign_sessions=True)
+            if ours.sign_in == "password":
+                kwargs["auth_provider"] = sign_in.SignIn(ours)
+            return kwargs
+
+    _refuse_unset_oauth(ours, config)
+    parser = argparse.ArgumentParser(prog="sumwright serve")
+    command = Ours(parser)
+    folder = str(app_folder())
+    words = [folder, "--address", ours.address, "--port", str(ours.port), "--num-procs", str(ours.processes)]
+    words += ["--session-token-expiration", "300", "--enable-xsrf-cookies", "--log-level", ours.log_level]
+    words += ["--cookie-path", f"{ours.prefix}/", "--oauth-expiry-days", str(ours.session_hours / 24)]
+    if ours.prefix:
+        words += ["--prefix", ours.prefix]
+    if ours.proxy:
+        words += ["--use-xheaders"]
+    if show:
+        words += ["--show"]
+    for origin in ours.ensure_reachable_by():
+        words += ["--allow-websocket-origin", origin]
+    command.invoke(parser.parse_args(words))
+    return 0
+
+
+def _refuse_unset_oauth(ours: Settings, config: Any) -> None:
+    if ours.sign_in == "oauth" and not config.oauth_provider:
+        raise SumwrightError(
+            "sign_in is 'oauth' and PANEL_OAUTH_PROVIDER is not set; set Panel's PANEL_OAUTH_* variables."
+        )
+    if ours.sign_in != "oauth" and config.oauth_provider:
+        raise SumwrightError(f"PANEL_OAUTH_PROVIDER is set and sign_in is {ours.sign_in!r}; set sign_in to oauth.")
