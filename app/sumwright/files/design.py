@@ -435,10 +435,10 @@ def _number(value: Any, key: str, rule: _Number) -> Any:
         or (rule.above is not None and number <= rule.above)
         or (rule.most is not None and number > rule.most)
         or (rule.below is not None and number >= rule.below)
-        or abs(number) > LARGEST
-        or 0 < abs(number) < SMALLEST
     ):
         raise _bad(key, value, _allowed(rule))
+    if number and not SMALLEST <= abs(number) <= LARGEST:
+        raise _bad(key, value, f"must be 0 or of {SMALLEST:g} to {LARGEST:g} in size")
     return number
 
 

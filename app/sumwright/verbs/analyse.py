@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import argparse
 
+import numpy as np
+
 from sumwright.engine.analysis import Analysis
 from sumwright.errors import SumwrightError
 from sumwright.files.results import POINTS, to_json
@@ -27,8 +29,10 @@ def run(args: argparse.Namespace) -> int:
         raise SumwrightError("--seed is given without --draws; it says where the draws start.")
     seed = 0 if args.seed is None else whole(args.seed, "--seed", 0, 2**63 - 1)
     analysis = Analysis(load_design(args.design))
-    drawn = None if draws is None else _draw(analysis, draws, seed)
-    document = to_json(analysis, drawn)
+    # A stage without feedback has no ideal output; what comes out infinite is written as null.
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        drawn = None if draws is None else _draw(analysis, draws, seed)
+        document = to_json(analysis, drawn)
     if args.json:
         print_json(document)
     else:
