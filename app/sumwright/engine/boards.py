@@ -15,6 +15,7 @@ deviation, shortest coverage interval).
 
 from __future__ import annotations
 
+import math
 import os
 from concurrent.futures import ThreadPoolExecutor
 from typing import NamedTuple
@@ -24,7 +25,6 @@ import numpy as np
 from . import nodes
 from .budget import POINTS, extreme_corners, network_of, supply_error, temperature_span
 from .operating_point import ideal_output
-from .stage import REFERENCE
 
 BLOCK = 8000  # boards that share a stream and a core's cache; not a power of two, whose rows would share cache sets
 _OP_AMP_DRAWS = 6
@@ -64,6 +64,20 @@ def shortest_interval(values, coverage: float = 0.95, *, is_sorted: bool = False
     width = y[q:] - y[: m - q]
     r = int(width.argmin())
     return float(y[r]), float(y[r + q])
+
+
+def first_order_holds(budget, drawn: MonteCarlo) -> bool:
+    """Whether the first-order 95 % interval is good to two digits, judged by the boards.
+
+    Source: JCGM 101:2008, 8.1: the ends of the normal interval, shift ± 1.96 u, and of
+    the drawn one may differ by half a unit of the second digit of u.
+    """
+    u = budget.combined
+    if u == 0:
+        return drawn.standard_deviation == 0
+    tolerance = 0.5 * 10.0 ** (math.floor(math.log10(u) + 1e-12) - 1)
+    low, high = budget.shift - 1.959964 * u, budget.shift + 1.959964 * u
+    return max(abs(low - drawn.low_95), abs(high - drawn.high_95)) <= tolerance
 
 
 def statistics(errors, seed: int, accuracy: float | None) -> MonteCarlo:
@@ -388,15 +402,3 @@ class _Recipe:
                         term = node[q][:, None] * g
                         drawn = term if drawn is None else drawn + term
         return load, drawn
-
-
-__all__ = [
-    "BLOCK",
-    "REFERENCE",
-    "Boards",
-    "MonteCarlo",
-    "draw_boards",
-    "monte_carlo",
-    "shortest_interval",
-    "statistics",
-]

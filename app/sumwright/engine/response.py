@@ -83,11 +83,12 @@ class _Transfer:
     def __init__(self, a, b, c, d):
         self.a, self.b, self.c, self.d = a, b, c, d
         self._eye = np.eye(len(a))
-        poles_, vectors = np.linalg.eig(a)
-        # near-coincident poles make the modes useless; elimination does not mind them
         self._modes = None
-        if np.linalg.cond(vectors) < 1e7:
-            self._modes = poles_, c @ vectors, np.linalg.solve(vectors, b)
+        if len(a):
+            poles_, vectors = np.linalg.eig(a)
+            # near-coincident poles make the modes useless; elimination does not mind them
+            if np.linalg.cond(vectors) < 1e7:
+                self._modes = poles_, c @ vectors, np.linalg.solve(vectors, b)
 
     def curves(self, f):
         """All entries over frequency, (outputs, inputs, f)."""
