@@ -30,7 +30,9 @@ VERBS = (
     Verb("analyse", "sumwright.verbs.analyse", "everything the design does: DC, headroom, errors, AC, noise, heat"),
     Verb("realise", "sumwright.verbs.realise", "resistors that can be bought, or are in the drawer, best set first"),
     Verb("serve", "sumwright.verbs.serve", "the sheet in a browser, for one person or a lab"),
-    Verb("notebook", "sumwright.verbs.notebook", "list, verify, export, import, archive, back up and restore notebooks"),
+    Verb(
+        "notebook", "sumwright.verbs.notebook", "list, verify, export, import, archive, back up and restore notebooks"
+    ),
     Verb("people", "sumwright.verbs.people", "who may sign in to a server, and as what"),
 )
 
