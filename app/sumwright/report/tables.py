@@ -11,11 +11,11 @@ import io
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 
-from sumwright.quantity import MINUS, THIN, format_fixed, format_percent, format_quantity, format_resistor
+from sumwright.quantity import THIN, format_fixed, format_percent, format_quantity, format_resistor
 
 from .axes import prefix_of
 
@@ -28,8 +28,9 @@ class Column:
 
     `form` says how it is read: `text`; `fixed` with `decimals` in the base unit;
     `scaled`, one SI prefix for the whole column so that the points align;
-    `figures`, each with its own prefix; `resistor`, as parts are marked; `percent`,
-    of a fraction.
+    `figures`, each with its own prefix; `resistor`, as parts are marked; `percent`, of a
+    fraction, with `decimals`; `measured`, each with its own unit. What is `only_file`
+    stands in files and not in documents.
     """
 
     title: str
@@ -37,10 +38,18 @@ class Column:
     form: str = "text"
     decimals: int = 3
     sign: bool = False
+    only_file: bool = False
 
     @property
     def numeric(self) -> bool:
         return self.form != "text"
+
+
+class Measured(NamedTuple):
+    """A number with a unit of its own."""
+
+    value: float | None
+    unit: str
 
 
 @dataclass(frozen=True)
@@ -55,16 +64,22 @@ class Table:
     marked: frozenset[int] = field(default_factory=frozenset)  # rows that fall short
 
     @property
+    def shown(self) -> list[int]:
+        """The columns a document shows."""
+        return [j for j, c in enumerate(self.columns) if not c.only_file]
+
+    @property
     def heads(self) -> list[str]:
         """Column heads with the unit their numbers are in."""
         heads = []
-        for j, c in enumerate(self.columns):
+        for j in self.shown:
+            c = self.columns[j]
             unit = c.unit
             if c.form == "scaled":
                 unit = prefix_of(self._numbers(j))[1] + c.unit
             elif c.form == "percent":
                 unit = "%"
-            elif c.form in ("figures", "resistor"):
+            elif c.form in ("figures", "resistor", "measured"):
                 unit = ""
             heads.append(f"{c.title}, {unit}" if unit and c.title else c.title or unit)
         return heads
@@ -72,8 +87,13 @@ class Table:
     @property
     def cells(self) -> list[list[str]]:
         """Every cell as it is read."""
-        forms = [self._writer(j) for j in range(len(self.columns))]
-        return [[write(value) for write, value in zip(forms, row, strict=True)] for row in self.rows]
+        forms = [(j, self._writer(j)) for j in self.shown]
+        return [[write(row[j]) for j, write in forms] for row in self.rows]
+
+    @property
+    def numeric(self) -> list[bool]:
+        """Which shown columns hold numbers."""
+        return [self.columns[j].numeric for j in self.shown]
 
     def _numbers(self, j: int) -> list[float]:
         return [float(r[j]) for r in self.rows if isinstance(r[j], int | float | np.number) and math.isfinite(r[j])]
@@ -91,7 +111,9 @@ class Table:
         if c.form == "resistor":
             return lambda v: "" if v is None else format_resistor(v)
         if c.form == "percent":
-            return lambda v: format_percent(v, c.decimals, sign=c.sign).removesuffix(f"{THIN}%")
+            return lambda v: format_fixed(None if v is None else v * 100, "", c.decimals, sign=c.sign)
+        if c.form == "measured":
+            return lambda v: measure(v.value, v.unit, c.sign)
         return lambda v: "" if v is None else str(v)
 
 
@@ -101,6 +123,19 @@ def scaled_decimals(numbers: Sequence[float], factor: float, figures: int) -> in
     if most == 0:
         return 0
     return max(0, figures - 1 - math.floor(math.log10(most) + 1e-9))
+
+
+def measure(value: float | None, unit: str, sign: bool = False) -> str:
+    """A number with its own unit, as the margins have it."""
+    if value is None:
+        return "–"
+    if unit == "%":
+        return format_percent(value / 100, 3, sign=sign)
+    if unit in ("°", "°C", "K"):
+        return format_fixed(value, "", 1, sign=sign) + (unit if unit == "°" else f"{THIN}{unit}")
+    if unit == "V" and abs(value) >= 0.02:
+        return format_fixed(value, "V", 3, sign=sign)
+    return format_quantity(value, unit, 3, sign=sign)
 
 
 # Files ------------------------------------------------------------------------------------------
@@ -122,6 +157,8 @@ def _csv_head(c: Column) -> str:
 
 
 def _csv_value(value: Any) -> str:
+    if isinstance(value, Measured):
+        value = value.value
     if value is None:
         return ""
     if isinstance(value, bool):
@@ -145,7 +182,7 @@ def markdown(table: Table) -> str:
     """The table in Markdown; nothing in a cell can end it or become markup."""
     lines = [
         "| " + " | ".join(_md(h) for h in table.heads) + " |",
-        "|" + "|".join("---:" if c.numeric else ":---" for c in table.columns) + "|",
+        "|" + "|".join("---:" if n else ":---" for n in table.numeric) + "|",
     ]
     lines += ["| " + " | ".join(_md(cell) for cell in row) + " |" for row in table.cells]
     return "\n".join(lines)
@@ -158,4 +195,4 @@ def _md(text: str) -> str:
     return flat
 
 
-__all__ = ["MINUS", "Column", "Table", "csv_text", "markdown", "safe_cell", "scaled_decimals"]
+__all__ = ["Column", "Measured", "Table", "csv_text", "markdown", "measure", "safe_cell", "scaled_decimals"]
