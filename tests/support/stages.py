@@ -93,7 +93,7 @@ def random_chain(rng, cells=None, count=None, *, span=1.0, load=2e3, **figures):
     )  # fmt: skip
 
 
-def dense_solution(design, values, s=0.0, error=None, into_minus=None, into_plus=None):
+def dense_solution(design, values, s=0.0, error=None, into_minus=None, into_plus=None, into_output=None):
     """The same stage by plain modified nodal analysis: one row a node and an op amp branch, one dense solve.
 
     Written from Kirchhoff's laws alone and sharing nothing with the engine; (cells, 4) of m, p, o, i.
@@ -160,4 +160,5 @@ def dense_solution(design, values, s=0.0, error=None, into_minus=None, into_plus
         matrix[i, o] -= 1
         matrix[i, i] -= amp.output_resistance
         right[i] -= a_ol * e
+        right[o] += into_output[k] if into_output is not None else 0
     return np.linalg.solve(matrix, right).reshape(count, 4)
