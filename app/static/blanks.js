@@ -32,7 +32,7 @@ export class Blank {
     const text = this.node.value.trim()
     if (text === this.good || text === this.waiting) { if (text === this.good) this.accept(); return }
     if (this.refused && text === this.badText) return
-    this.waiting = text
+    this.waiting = this.sent = text
     this.sheet.act({...this.send(text), field: this.field})
   }
 

@@ -10,11 +10,12 @@ import * as plate from './plate.js'
 import * as margins from './margins.js'
 import * as drawer from './drawer.js'
 import * as commands from './commands.js'
+import * as place from './place.js'
 
 const start = JSON.parse(document.getElementById('start').textContent)
 const state = {}
 const folds = new Map() // key -> {node, mounted}
-const PARTS = [strips, stage, plate, margins, drawer, commands]
+const PARTS = [strips, stage, plate, margins, drawer, commands, place]
 const NEW = {key: 'new', title: ''}
 
 const line = new Line(apply, silent)
@@ -42,7 +43,8 @@ function apply(frame, fields = new Set()) {
   }
   if (frame.fold) (state.shown ??= {})[frame.fold.key] = frame.fold
   draw(false)
-  for (const one of settle(fields, frame.refusals ?? [])) note(one.text, one.field, {bad: true, refusal: one.refusal})
+  for (const one of settle(fields, frame.refusals ?? [])) if (one.field === 'sum' && state.open === 'new') folds.get('new').mounted?.refused(one.text)
+  else note(one.text, one.field, {bad: true, refusal: one.refusal})
   if (frame.note) note(frame.note.text, 'server', {bad: frame.note.bad})
   for (const reply of frame.heard ?? []) heard(reply)
   notes()
@@ -70,7 +72,7 @@ function draw(resized) {
   if (fold?.mounted && shown) {
     setText(fold.refused, shown.refused ?? state.problem ?? '')
     if (shown.shown) fold.mounted.update(shown.shown, state, resized)
-  }
+  } else if (state.open === 'new') fold?.mounted?.update(null, state, resized)
   setText(tail.value, `${fixed(state.stage.output)}${THIN}V`)
   setClass(tail.value, 'red', state.stage.clipped !== 'no')
 }

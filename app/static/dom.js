@@ -37,7 +37,7 @@ export function setClass(node, name, on) {
 export function keyed(parent, keys, make, store = (parent.__keyed ??= new Map())) {
   const wanted = new Set(keys)
   for (const [key, item] of store) {
-    if (!wanted.has(key)) { item.node.remove(); store.delete(key) }
+    if (!wanted.has(key)) { item.node.remove(); item.drop?.(); store.delete(key) }
   }
   let before = null
   for (const key of keys) {

@@ -1,3 +1,85 @@
-export function mount() {}
-export function update() {}
-export function saved() {}
+// The plate: what the stage is built from and around, beside the drawing where there is room for it.
+
+import {el, setAttr, setClass, setText} from './dom.js'
+import {Blank} from './blanks.js'
+import {THIN} from './format.js'
+import {placed} from './stage.js'
+import {openDrawer} from './drawer.js'
+
+let sheet, box
+const blanks = {}
+const words = {}
+
+const figure = (group, name, label, unit, cls = '') => {
+  const blank = blanks[`${group} ${name}`] = new Blank(sheet, {
+    field: `plate ${group} ${name}`, label, unit, cls, send: text => ({do: 'figure', group, figure: name, text}),
+  })
+  return blank.node
+}
+
+export function mount(theSheet) {
+  sheet = theSheet
+  const word = (name, drawer, label) => (words[name] = el('button', {class: 'act', 'aria-label': label, onclick: () => openDrawer(drawer)}))
+  const ways = words.ways = el('select', {class: 'blank ways', 'aria-label': 'Arrangement', onchange: () => sheet.act({do: 'arrange', arrangement: ways.value, field: 'arrangement'})})
+  const symbols = words.symbols = ['IEC 60617', 'IEEE 315'].map(name => el('button', {text: name, onclick: () => sheet.act({do: 'symbols', symbols: name})}))
+  box = el('dl', {class: 'plate', id: 'plate'},
+    ...pair('stage', ways),
+    ...pair('rails', figure('supply', 'high', 'plus rail', 'V'), `${THIN}V `, figure('supply', 'low', 'minus rail', 'V'), `${THIN}V `, word('tolerance', 'surroundings', 'rails, ambient and what is asked of the output')),
+    ...pair('load', figure('load', 'resistance', 'load resistance', 'Ω'), `${THIN}Ω `, el('span', {class: 'soft', text: '∥ '}), figure('load', 'capacitance', 'load capacitance', 'F'), `${THIN}F`),
+    ...pair('op amp', word('op_amp', 'op amp', 'op amp, every figure')),
+    ...pair('resistors', word('resistor', 'resistors', 'resistors, series and limits')),
+    ...pair('target', word('target', 'surroundings', 'target window, accuracy, noise and bandwidth')),
+    ...pair('symbols', el('span', {class: 'seg', role: 'group', 'aria-label': 'Resistor symbols'}, ...symbols)))
+  document.querySelector('.work').append(box)
+}
+
+const pair = (name, ...children) => [el('dt', {text: name}), el('dd', {}, ...children)]
+
+export function update(state) {
+  const p = state.plate, s = state.stage
+  if (!p) return
+  blanks['supply high'].set(p.supply.high); blanks['supply low'].set(p.supply.low)
+  setText(words.tolerance, `±${p.supply.tolerance}`)
+  blanks['load resistance'].set(p.load.resistance); blanks['load capacitance'].set(p.load.capacitance)
+  setAttr(blanks['load resistance'].node, 'placeholder', 'none')
+  setText(words.op_amp, p.op_amp.name.length > 24 ? p.op_amp.name.slice(0, 23) + '…' : p.op_amp.name)
+  setText(words.resistor, `${p.resistor.series}  ${p.resistor.tolerance}  ${p.resistor.temperature_coefficient}${THIN}ppm/K`)
+  const t = p.target
+  setText(words.target, t.low || t.high ? `${t.low || '…'} to ${t.high || '…'}${THIN}V${t.accuracy ? ` ±${t.accuracy}${THIN}V` : ''}` : 'no window given')
+  fillWays(s)
+  for (const button of words.symbols) setAttr(button, 'aria-pressed', String(button.textContent === s.symbols))
+  stand()
+}
+
+function fillWays(s) {
+  const key = JSON.stringify([s.arrangements, s.able, s.arrangement])
+  if (words.ways.dataset.key !== key) {
+    words.ways.dataset.key = key
+    const ways = s.arrangements.map(way => el('option', {value: way, text: way + (s.able.includes(way) ? '' : ', cannot make these weights')}))
+    if (!s.arrangement) ways.unshift(el('option', {value: '', text: 'of its own', disabled: true}))
+    words.ways.replaceChildren(...ways)
+  }
+  if (document.activeElement !== words.ways && words.ways.value !== (s.arrangement ?? '')) words.ways.value = s.arrangement ?? ''
+}
+
+function place(left, top) {
+  if (box.style.left !== left) box.style.left = left
+  if (box.style.top !== top) box.style.top = top
+}
+
+// beside the drawing if it fits there, else across the foot of the drawing
+function stand() {
+  if (!placed || !box.parentNode.clientWidth) return
+  const strip = document.getElementById('strips').clientWidth
+  const {left, top, bottom, above} = placed.free
+  const width = placed.width - left
+  const need = box.classList.contains('flat') ? box.__size : (box.__size = [box.scrollWidth, box.offsetHeight])
+  const [w, h] = need ?? [250, 150]
+  let at
+  if (w <= width + 4 && h <= bottom - top) at = {left: strip + left, top: bottom - h}
+  else if (w <= width + 4 && h <= above - 4) at = {left: strip + left, top: 4}
+  setClass(box, 'flat', !at)
+  place(at ? `${at.left}px` : '0px', `${at ? at.top : bottom + 6}px`)
+  const room = at ? 0 : box.offsetHeight + 4
+  if (box.__room !== room) { box.__room = room; box.parentNode.style.marginBottom = `${room}px` }
+}

@@ -8,6 +8,7 @@ acts, so a fast hand never gets ahead of the picture.
 
 from __future__ import annotations
 
+import html
 import importlib
 import importlib.util
 import logging
@@ -21,6 +22,7 @@ from sumwright.errors import CannotRealise, NotAllowed, SumwrightError
 from sumwright.jobs import Jobs
 from sumwright.model import acts, demo
 from sumwright.model.workbench import Workbench
+from sumwright.sitting import Sitting, begin
 from sumwright.views import margins, plate, signals, stage
 from sumwright.views.fold import Context, Fold
 from sumwright.views.wire import Wire, packed
@@ -31,6 +33,7 @@ log = logging.getLogger(__name__)
 FOLDS = ("curves", "choices", "budget", "response", "bench", "log")
 
 ACTS_MOST = 64  # in one message
+LOOK_AROUND = 4000  # ms between looks at what others did to the sheet
 _TEMPLATE = Path(__file__).parent / "views" / "sheet.html"
 
 
@@ -56,7 +59,7 @@ class Page:
     """
 
     def __init__(self, workbench: Workbench | None = None, may: Callable[[str], None] | None = None):
-        self.workbench = workbench or Workbench(demo.design())
+        self.workbench = workbench or Workbench(demo.design(), on="north")
         self.may = may or (lambda action: None)
         self.jobs = Jobs()
         self.extras: dict[str, Any] = {}
@@ -72,6 +75,7 @@ class Page:
         self.open = ""
         self._doc: Any = None
         self._note: dict[str, Any] | None = None
+        self.sitting: Sitting | None = None
         self.turn_to(next(iter(self.classes), ""))
 
     # ------------------------------------------------------------ folds
@@ -103,6 +107,7 @@ class Page:
             "undo": bool(bench.history.past),
             "redo": bool(bench.history.future),
             "saved": self.saved,
+            "place": self.extras.get("place", {}),
             "problem": bench.problem,
             "signals": signals.show(bench),
             "stage": stage.show(bench),
@@ -126,6 +131,16 @@ class Page:
     def refresh_sheet(self) -> None:
         """Send a whole frame, of the server's own accord."""
         self._later(lambda: self._send(self.frame()))
+
+    def later(self, act: Callable[[], None]) -> None:
+        """Do something inside the session's lock, from whatever thread; nothing if the session is over."""
+        self._later(act)
+
+    def sit(self, sitting: Sitting) -> None:
+        """Keep the sheet in the notebook: saved without being asked, shared, with its log."""
+        self.sitting = sitting
+        self.extras["sitting"] = sitting
+        sitting.attach(self)
 
     def say(self, text: str, bad: bool = False) -> None:
         """One sentence in the line under the strips."""
@@ -204,6 +219,8 @@ class Page:
         page.add_variable("sheet_theme", self.workbench.theme)
         start = {"folds": [{"key": k, "title": c.title or k.capitalize()} for k, c in self.classes.items()]}
         start.update(self.frame())
+        if self.sitting is not None and self.sitting.problem:
+            start["note"] = {"text": self.sitting.problem, "bad": True}
         page.add_variable("start", _for_script(start))
         return page
 
@@ -213,11 +230,16 @@ class Page:
         page = self.template()
         if self._doc is not None and self._doc.session_context is not None:
             pn.state.on_session_destroyed(lambda context: self.close())
+            if self.sitting is not None:
+                self._doc.add_periodic_callback(self.sitting.look_around, LOOK_AROUND)
         return page.servable(title=f"{self.workbench.title} · Sumwright")
 
     def close(self) -> None:
         """The session is over: stop its jobs and break what would keep it in memory."""
         self.jobs.close()
+        if self.sitting is not None:
+            self.sitting.close()
+        self.extras.clear()
         for fold in self.folds.values():
             fold.close()
         self.folds.clear()
@@ -251,9 +273,26 @@ def _static_place() -> str:
     return f"{path.rsplit('/', 1)[-1] or 'app'}/static"
 
 
-def build_page() -> Page:
-    """The page of a new session."""
-    return Page()
+class Refused:
+    """The document of somebody who is signed in and has no place here: one sentence."""
+
+    def __init__(self, sentence: str):
+        self.sentence = sentence
+
+    def servable(self) -> Any:
+        return pn.pane.HTML(f"<p>{html.escape(self.sentence)}</p>").servable(title="Sumwright")
 
 
-__all__ = ["FOLDS", "Page", "build_page", "fold_classes"]
+def build_page() -> Page | Refused:
+    """The page of a new session: the sheet that the link names, or the demonstration."""
+    try:
+        sitting = begin(pn.state.user, pn.state.session_args)
+        sitting.may("read")
+    except SumwrightError as error:
+        return Refused(str(error))
+    page = Page(sitting.workbench, sitting.may)
+    page.sit(sitting)
+    return page
+
+
+__all__ = ["FOLDS", "Page", "Refused", "build_page", "fold_classes"]

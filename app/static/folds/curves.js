@@ -1,1 +1,191 @@
-export function mount(node, sheet) { return {update(shown, state) { node.textContent = JSON.stringify(shown) }} }
+// Curves: three pictures on one ruler. Contributions and headroom are SVG; the transfer curves are a Bokeh figure
+// whose frame is set on the same volts, so the rail, the window and the output are single lines through all three.
+
+import {el, svg, setAttr, setText, Pool, px} from '../dom.js'
+import {THIN, fixed, signed} from '../format.js'
+import {style, markerAttributes} from '../marks.js'
+
+const SIDE = 14 // px of the figure left and right of its frame, for the outermost tick labels
+
+export function mount(node, sheet) {
+  const under = svg('svg', {role: 'img', 'aria-label': 'Contributions, transfer curves and headroom on one voltage ruler', class: 'under'})
+  const over = svg('svg', {'aria-hidden': 'true', class: 'over'})
+  const slot = sheet.figure('curves', 'transfer')
+  const whole = el('button', {class: 'act whole', text: 'whole range', hidden: true, onclick: () => sheet.fold({do: 'whole'})})
+  const key = el('ul', {class: 'clips'}, el('li', {class: 'key-head'}, el('span'), el('span'), el('span', {class: 'key-at', text: 'clips'})))
+  const table = el('p', {class: 'vh', role: 'note'})
+  node.className = 'curves'
+  node.append(under, slot, over, key, whole, table)
+  const below = new Pool(under), above = new Pool(over)
+  let figure = null, frame = ''
+
+  // the figure's own size follows the page's; its data come from the server
+  function fitFigure(x, y, width, height, bottom) {
+    figure ??= window.Bokeh?.documents?.map(d => d.get_model_by_name('transfer')).find(Boolean) ?? null
+    if (!figure) { setTimeout(() => sheet.redraw(), 150); return }
+    const wanted = [x, y, width, height, bottom].map(Math.round).join()
+    slot.style.transform = `translate(${Math.round(x - SIDE)}px,${Math.round(y)}px)`
+    if (wanted === frame) return
+    frame = wanted
+    const size = `${px('--t-1')}px`
+    figure.setv({
+      width: Math.round(width) + 2 * SIDE, height: Math.round(height + bottom),
+      min_border_left: SIDE, min_border_right: SIDE, min_border_top: 0, min_border_bottom: Math.round(bottom),
+      frame_width: Math.round(width), frame_height: Math.round(height),
+    })
+    for (const axis of figure.below) axis.major_label_text_font_size = size
+  }
+
+  function update(shown) {
+    const W = node.clientWidth
+    if (!W) return
+    const k = px('--t-1') / 14
+    const top0 = node.getBoundingClientRect().top + scrollY
+    const H = Math.max(236, Math.min(560, innerHeight - top0 - 8))
+    node.style.height = `${H}px`
+    const narrow = W < 800
+    const pt = 24 * k, pb = 30 * k, y1 = Math.round(H - pb), y0 = Math.round(pt)
+    const Y = v => y1 - (v - shown.low) / (shown.high - shown.low) * (y1 - y0)
+    const clamp = v => Math.max(y0, Math.min(y1, Y(v)))
+    const L = 32 * k, R = W - 98 * k, gap = 26 * k
+    const w1 = (R - L) * (narrow ? .33 : .29), w3 = (R - L) * (narrow ? .27 : .23)
+    const a = [L, L + w1], b = [Math.round(L + w1 + gap), Math.round(R - w3 - gap)], c = [R - w3, R]
+    const p = below
+    for (const s of [under, over]) { setAttr(s, 'width', W); setAttr(s, 'height', H) }
+    p.start(); above.start()
+
+    // the window the target asks for, edged in ink
+    const inside = shown.lines.filter(l => l.kind === 'window').map(l => l.value)
+    if (inside.length === 2) p.put('rect', {x: L, y: Y(inside[0]), width: R - L, height: Y(inside[1]) - Y(inside[0]), fill: 'var(--raised)'})
+
+    // the ruler
+    const decimals = Math.max(0, -Math.floor(Math.log10(Math.abs(shown.ticks[1] - shown.ticks[0] || 1)) + 1e-9))
+    for (const v of shown.ticks) {
+      p.path(`M${L} ${Y(v)}H${R}`, {class: 'grid'})
+      if (Math.abs(Y(v) - Y(shown.output)) > 15 * k) p.text(L - 8, Y(v) + 5, fixed(v, decimals), {class: 'soft', 'text-anchor': 'end'})
+    }
+    p.path(`M${L} ${y1}V${y0}`, {class: 'axis'})
+    let last = -99
+    for (const line of shown.lines) {
+      const y = Y(line.value)
+      p.path(`M${L} ${y}H${R + 5}`, {class: `ruled ${line.kind}`})
+      const at = Math.max(y + 5, last + 15 * k)
+      last = at
+      p.text(R + 10, at, line.kind, {class: 'soft'})
+      p.text(W, at, fixed(line.value, 2), {'text-anchor': 'end'})
+    }
+
+    // what each adds, climbing to the output
+    const parts = shown.contributions
+    p.text(a[0], 12 * k, 'Contributions', {class: 'cap'})
+    const wide = (a[1] - a[0] - 6) / Math.max(parts.length, 3)
+    let sum = 0
+    parts.forEach((part, i) => {
+      const s = style(part.style), x = a[0] + 6 + i * wide
+      const from = clamp(sum), to = clamp(sum + part.volts)
+      p.put('rect', {x: x + wide * .14, y: Math.min(from, to), width: wide * .72, height: Math.max(1.5, Math.abs(from - to)), fill: s.colour, class: 'move'})
+      p.path(`M${x + wide * .14} ${to}H${x + wide * (i < parts.length - 1 ? 1.86 : 1)}`, {class: 'axis inked'})
+      if (wide > 32 * k) p.text(x + wide / 2, Math.min(Math.max(from, to) + 15 * k, y1 + 14 * k), signed(part.volts, 2), {'text-anchor': 'middle', class: 'halo'})
+      if (part.style !== null && part.name.length * 6.6 * k > wide + 4) p.path(markerAttributes(s, x + wide / 2, y1 + 12 * k).d, {...markerAttributes(s, x + wide / 2, y1 + 12 * k)})
+      else p.text(x + wide / 2, y1 + 18 * k, part.style === null ? 'ref' : part.name, {'text-anchor': 'middle', class: 'soft'})
+      sum += part.volts
+    })
+
+    // transfer curves: the caption and the present output here, the curves in the figure
+    p.text(b[0], 12 * k, narrow ? 'Output against each signal' : 'Output against each signal, the others where they are', {class: 'cap'})
+    p.path(`M${b[0]} ${y1}V${y0}`, {class: 'axis'})
+    p.path(`M${b[0]} ${Y(shown.output)}H${b[1]}`, {class: 'present'})
+    fitFigure(b[0], y0, b[1] - b[0], y1 - y0, pb)
+
+    // headroom
+    p.text(c[0], 12 * k, narrow ? 'Headroom' : 'Headroom, all corners', {class: 'cap'})
+    beams(p, shown.beams, c, Y, clamp, y1, k)
+
+    // the present output, tied to the ruler
+    const red = shown.clipped !== 'no'
+    p.put('rect', {x: 0, y: Y(shown.output) - 10 * k, width: L - 5, height: 20 * k, fill: 'var(--paper)'})
+    p.path(`M${L} ${Y(shown.output)}l-6 -4v8z`, {class: 'tip'})
+    p.text(L - 8, Y(shown.output) + 5, fixed(shown.output, 2), {'text-anchor': 'end', class: red ? 'node red' : 'node'})
+    p.end()
+
+    marks(shown, b, Y, k)
+    above.end()
+    legend(shown, b, Y, y0, y1, k)
+    whole.hidden = true
+    setText(table, `The output is ${fixed(shown.output)} volts. ` + shown.clips.map(q => `${q.name}: ${clipWords(q)}.`).join(' '))
+  }
+
+  // where the signal under the hand meets the limit
+  function marks(shown, b, Y, k) {
+    const q = shown.clips.find(x => x.name === shown.on && x.at !== null)
+    if (!q || q.cell !== null) return
+    const [x0, x1] = shown.x
+    const x = b[0] + (q.at - x0) / (x1 - x0) * (b[1] - b[0])
+    const y = q.side === 'high' ? Y(q.y) - 14 * k : Y(q.y) + 24 * k
+    above.text(Math.max(b[0] + 18, Math.min(b[1] - 18, x)), y, 'clips', {'text-anchor': 'middle', class: 'node red halo'})
+  }
+
+  const clipWords = q => q.out ? 'cable out' : q.at === null ? 'not in its range'
+    : `at ${fixed(q.at, 2)}${THIN}V${q.side === 'low' ? ', low' : ''}${q.cell !== null ? `, cell ${q.cell + 1}` : ''}`
+
+  // the key stands in the emptier half of the picture
+  const items = []
+  function legend(shown, b, Y, y0, y1, k) {
+    const n = shown.clips.length
+    while (items.length < n) {
+      const mark = svg('svg', {width: 24, height: 14, 'aria-hidden': 'true'}, svg('path'), svg('path'))
+      const name = el('span', {class: 'key-name'}), at = el('span', {class: 'key-at'})
+      const node = el('li', {}, mark, name, at)
+      items.push({node, mark, name, at})
+      key.append(node)
+    }
+    while (items.length > n) items.pop().node.remove()
+    shown.clips.forEach((q, i) => {
+      const item = items[i], s = style(q.style)
+      setAttr(item.mark.children[0], 'd', 'M0 7H24'); setAttr(item.mark.children[0], 'stroke', s.colour); setAttr(item.mark.children[0], 'stroke-width', 2.4); setAttr(item.mark.children[0], 'stroke-dasharray', s.dash || null)
+      for (const [name, value] of Object.entries(markerAttributes(s, 12, 7))) setAttr(item.mark.children[1], name, value)
+      setText(item.name, q.name)
+      setText(item.at, clipWords(q))
+      const state = `${q.name === shown.on ? 'on ' : ''}${q.at !== null && !q.out ? 'hit' : ''}`
+      setAttr(item.node, 'class', state)
+    })
+    const rows = Math.ceil(n / (n > 6 ? 2 : 1))
+    setAttr(key, 'class', n > 6 ? 'clips two-columns' : 'clips')
+    const high = (rows + 1) * 16 * k
+    const room = [Y(shown.output) - y0, y1 - Y(shown.output)]
+    const low = room[1] > room[0] || room[1] > high + 40 * k && shown.output > (shown.low + shown.high) / 2
+    const top = low ? y1 - high - 6 : y0 + 26 * k
+    const left = Math.max(b[0] + 8, b[1] - (n > 6 ? 380 : 232) * k)
+    key.style.transform = `translate(${Math.round(left)}px,${Math.round(top)}px)`
+    key.hidden = n > 12 || b[1] - b[0] < 220
+  }
+
+  function beams(p, list, [c0, c1], Y, clamp, y1, k) {
+    const n = list.length, step = (c1 - c0) / n
+    list.forEach((beam, i) => {
+      const x = c0 + step * (i + (n > 2 ? .3 : i === 0 ? .3 : .42))
+      const right = i > 0 || n > 2
+      const bad = {high: beam.high > beam.limit_high, low: beam.low < beam.limit_low}
+      const top = bad.high ? clamp(Math.max(beam.limit_high, beam.low)) : clamp(beam.high), base = bad.low ? clamp(Math.min(beam.limit_low, beam.high)) : clamp(beam.low)
+      p.path(`M${x} ${base}V${top}`, {class: 'beam'})
+      for (const [end, wrong] of [[beam.high, bad.high], [beam.low, bad.low]]) p.path(`M${x - 7} ${clamp(end)}h14`, {class: wrong ? 'beam wrong' : 'beam'})
+      if (bad.high) p.path(`M${x} ${top}V${clamp(beam.high)}`, {class: 'past'})
+      if (bad.low) p.path(`M${x} ${base}V${clamp(beam.low)}`, {class: 'past'})
+      for (const limit of [beam.limit_high, beam.limit_low]) if (Y(limit) >= 0 && Y(limit) <= y1 + 4) p.path(`M${x - 18} ${Y(limit)}h36`, {class: 'limit'})
+      p.put('circle', {cx: x, cy: clamp(beam.now), r: 4.2, class: 'now'})
+      const close = Math.abs(clamp(beam.high) - clamp(beam.low)) < 20 * k
+      if (n <= 2 || step > 58 * k) {
+        p.text(x + 13, clamp(beam.high) + (bad.high ? -5 : close ? -6 : 9), fixed(beam.high), {class: bad.high ? 'node red halo' : 'halo'})
+        if (!close || beam.high - beam.low > 5e-4) p.text(x + 13, clamp(beam.low) + (close ? 16 : bad.low ? 14 : 1), fixed(beam.low), {class: bad.low ? 'node red halo' : 'halo'})
+        if (n <= 2 && Y(beam.limit_high) > 0) p.text(right ? x + 21 : x - 21, right && !bad.high ? Math.min(Y(beam.limit_high) + 5, clamp(beam.high) - 8) : Y(beam.limit_high) + 5, fixed(beam.limit_high), {'text-anchor': right ? 'start' : 'end', class: 'soft halo'})
+      } else {
+        p.text(x, clamp(beam.high) - 6, fixed(beam.high, 2), {'text-anchor': 'middle', class: bad.high ? 'node red halo' : 'halo'})
+        p.text(x, clamp(beam.low) + 15, fixed(beam.low, 2), {'text-anchor': 'middle', class: bad.low ? 'node red halo' : 'halo'})
+      }
+      const label = n > 2 && step < 62 * k ? beam.label.replace('output', 'out').replace('inputs', 'in') : beam.label
+      p.text(x, y1 + 18 * k, label, {'text-anchor': 'middle', class: 'soft'})
+    })
+  }
+
+  return {update}
+}

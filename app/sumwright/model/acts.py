@@ -13,6 +13,7 @@ from dataclasses import replace
 from typing import Any
 
 from sumwright import fields
+from sumwright.engine.catalogue import catalogue
 from sumwright.engine.stage import ARRANGEMENTS, Design
 from sumwright.files.design import design_document, read_design, write_design
 from sumwright.model import edits, sums
@@ -138,6 +139,11 @@ def move(bench: Workbench, message: dict) -> None:
     bench.edit(edits.moved, _signal(bench, message), fields.whole(message, "places", -64, 64))
 
 
+def order(bench: Workbench, message: dict) -> None:
+    """The signals in another order."""
+    bench.edit(edits.in_order, fields.texts(message, "names"))
+
+
 def plug(bench: Workbench, message: dict) -> None:
     """A cable is pulled out or put in."""
     bench.plug(_signal(bench, message), fields.truth(message, "out"))
@@ -229,9 +235,7 @@ def band(bench: Workbench, message: dict) -> None:
 
 def amplifier(bench: Workbench, message: dict) -> None:
     """An op amp is taken from the list of generic classes."""
-    from sumwright.model.amplifiers import op_amps
-
-    known = op_amps()
+    known = {e.op_amp.name: e.op_amp for e in catalogue()}
     chosen = fields.one_of(message, "op_amp", known)
     bench.edit(lambda d: checked(replace(d, op_amp=known[chosen])))
 
@@ -301,7 +305,7 @@ def draw_sum(bench: Workbench, message: dict) -> dict:
 
 ACTS: dict[str, Callable[[Workbench, dict], dict | None]] = {
     "value": value, "let_go": let_go, "signal": signal, "weight": weight, "offset": offset, "name": name, "add": add,
-    "remove": remove, "move": move, "plug": plug, "on": on, "part": part, "capacitor": capacitor, "arrange": arrange,
+    "remove": remove, "move": move, "order": order, "plug": plug, "on": on, "part": part, "capacitor": capacitor, "arrange": arrange,
     "follow": follow, "figure": figure, "series": series, "stray": stray, "band": band, "amplifier": amplifier,
     "title": title, "symbols": symbols, "theme": theme, "undo": undo, "redo": redo, "open": open_file,
     "save": save_file, "read_sum": read_sum, "draw_sum": draw_sum,

@@ -177,6 +177,11 @@ def ruler(design, dc, head) -> tuple[float, float, list[float]]:
     top = min(top, 1.5 * max(design.supply.high, 0.1))
     bottom = max(bottom, 1.5 * min(design.supply.low, -0.1))
     span = max(top - bottom, 1e-3)
+    # the limits are part of the picture where they are near
+    for c in head.cells:
+        top = max([top] + [v for v in (c.limit_high, c.common_mode_limit_high) if v <= max(high) + 0.5 * span])
+        bottom = min([bottom] + [v for v in (c.limit_low, c.common_mode_limit_low) if v >= min(low) - 0.25 * span])
+    span = top - bottom
     if design.supply.high <= top + 0.35 * span:
         top = max(top, design.supply.high)
     if design.supply.low >= bottom - 0.12 * span:

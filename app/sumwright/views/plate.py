@@ -5,6 +5,7 @@ from __future__ import annotations
 from functools import lru_cache
 from typing import Any
 
+from sumwright.engine.catalogue import catalogue, find
 from sumwright.files.design import SERIES
 from sumwright.quantity import format_exact, format_fixed, format_percent
 
@@ -52,11 +53,23 @@ def _shown(supply, load, op_amp, resistor, ambient, target, reference, stray, ba
         "reference": None if reference is None else
         {"voltage": format_fixed(reference.voltage), "source_resistance": _exact(reference.source_resistance),
          "tolerance": format_percent(reference.tolerance, 3)},
-        "op_amp": {"name": op_amp.name, "dropout": format_fixed(op_amp.dropout_high, "", 2), "groups": [
+        "op_amp": {"name": op_amp.name, "dropout": format_fixed(op_amp.dropout_high, "", 2), "classes": _classes(), "note": _note(op_amp.name), "groups": [
             [group, [[figure, word, unit, _exact(getattr(op_amp, figure))] for figure, word, unit in rows]]
             for group, rows in OP_AMP]},
         "stray": _exact(stray), "band": [_exact(band[0]), _exact(band[1])], "series": list(SERIES),
     }  # fmt: skip
+
+
+@lru_cache(maxsize=1)
+def _classes() -> list[list[str]]:
+    """The op amps there are to choose from, by name, and what each is: a class or a type."""
+    return [[e.name, f"{e.name}, {e.kind}" if e.kind != "own" else e.name] for e in catalogue()]
+
+
+def _note(name: str) -> str:
+    """Where its figures are from, in a few words."""
+    entry = find(name)
+    return entry.note if entry else "Figures of your own."
 
 
 def _exact(value) -> str:
