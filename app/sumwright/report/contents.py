@@ -16,8 +16,8 @@ from .tables import Column, Measured, Table
 
 POINTS = ("present", "highest", "lowest")
 _MATRIX_MOST = 7  # signals that fit side by side on paper
-VOLTS = {"unit": "V", "form": "fixed", "decimals": 3}
-WEIGHT = {"unit": "", "form": "fixed", "decimals": 4, "sign": True}
+VOLTS: dict[str, Any] = {"unit": "V", "form": "fixed", "decimals": 3}
+WEIGHT: dict[str, Any] = {"unit": "", "form": "fixed", "decimals": 4, "sign": True}
 
 # What each figure of an op amp means, in the order a data sheet has them.
 OP_AMP_FIGURES = (
@@ -303,7 +303,7 @@ def error_summary(analysis: Analysis, drawn: dict[str, Any] | None = None) -> Ta
             m = drawn[point]
             row += [m.mean, m.standard_deviation, m.low_95, m.high_95, m.yield_]
         rows.append(tuple(row))
-    scaled = {"unit": "V", "form": "scaled", "decimals": 4}
+    scaled: dict[str, Any] = {"unit": "V", "form": "scaled", "decimals": 4}
     columns = [
         Column("at", "", "text"), Column("ideal output", **VOLTS), Column("known shift", sign=True, **scaled), Column("95 % ±", **scaled),
         Column("worst case ±", **scaled),

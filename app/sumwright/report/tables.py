@@ -181,18 +181,29 @@ def safe_cell(text: str) -> str:
 def markdown(table: Table) -> str:
     """The table in Markdown; nothing in a cell can end it or become markup."""
     lines = [
-        "| " + " | ".join(_md(h) for h in table.heads) + " |",
+        "| " + " | ".join(plain_markdown(h) for h in table.heads) + " |",
         "|" + "|".join("---:" if n else ":---" for n in table.numeric) + "|",
     ]
-    lines += ["| " + " | ".join(_md(cell) for cell in row) + " |" for row in table.cells]
+    lines += ["| " + " | ".join(plain_markdown(cell) for cell in row) + " |" for row in table.cells]
     return "\n".join(lines)
 
 
-def _md(text: str) -> str:
+def plain_markdown(text: str) -> str:
+    """A text that Markdown shows as it is."""
     flat = " ".join(text.split())
     for c in "\\`*_[]<>|#~&":
         flat = flat.replace(c, "\\" + c)
     return flat
 
 
-__all__ = ["Column", "Measured", "Table", "csv_text", "markdown", "measure", "safe_cell", "scaled_decimals"]
+__all__ = [
+    "Column",
+    "Measured",
+    "Table",
+    "csv_text",
+    "markdown",
+    "measure",
+    "plain_markdown",
+    "safe_cell",
+    "scaled_decimals",
+]
