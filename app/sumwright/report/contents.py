@@ -126,8 +126,8 @@ def parts(analysis: Analysis) -> Table:
         Column("dissipates at most", "W", "scaled"), Column("may", "W", "scaled"),
     )  # fmt: skip
     if not any(names.capacitors):
-        columns = (*columns[:3], *columns[4:])
         rows = [(*r[:3], *r[4:]) for r in rows]
+        return Table("parts", "Values", (*columns[:3], *columns[4:]), tuple(rows))
     return Table("parts", "Values", columns, tuple(rows))
 
 
@@ -437,14 +437,14 @@ def cables(analysis: Analysis) -> Table:
             moved = [0.0 if j == i else abs(float(out.open_weights[i, j] - now[j])) for j in range(len(names))]
             j = max(range(len(names)), key=moved.__getitem__)
             rows.append((name, names[j], float(now[j]), float(out.open_weights[i, j]), float(out.open_offset[i])))
-        columns = (
+        most = (
             Column("cable out"),
             Column("changes most"),
             Column("from", **WEIGHT),
             Column("to", **WEIGHT),
             Column("offset", **VOLTS),
         )
-        return Table("cables", title, columns, tuple(rows))
+        return Table("cables", title, most, tuple(rows))
     for i, name in enumerate(out.names):
         w = [None if j == i else float(out.open_weights[i, j]) for j in range(len(names))]
         rows.append((name, *w, float(out.open_offset[i])))

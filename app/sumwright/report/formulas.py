@@ -130,7 +130,7 @@ class _Derivation:
         self.h: dict[int, float | None] = {self.count - 1: 1.0}
         for k in range(self.count - 2, -1, -1):
             paths = self._paths(cell_name(k))
-            self.h[k] = None if any(p is None for _, _, p in paths) else sum(p for _, _, p in paths)
+            self.h[k] = _total([p for _, _, p in paths])
             out.append(
                 Line(
                     f"H{self._at(k)}", cell_name(k), " + ".join(a for a, _, _ in paths) or "0",
@@ -143,7 +143,7 @@ class _Derivation:
                 if source != REFERENCE:
                     out.append(Line("w", source, "0", "feeds no leg", 0.0, ""))
                 continue
-            whole = None if any(p is None for _, _, p in paths) else sum(p for _, _, p in paths)
+            whole = _total([p for _, _, p in paths])
             out.append(
                 Line("w", source, " + ".join(a for a, _, _ in paths), " + ".join(b for _, b, _ in paths), whole, "")
             )
@@ -183,6 +183,12 @@ class _Derivation:
             f"{format_fixed(ng, '', 5)}·(1/{value})/{format_quantity(self.s[k], 'S', 5)}{further_numbers}",
             ng / r / self.s[k] * h,
         )
+
+
+def _total(values: list[float | None]) -> float | None:
+    """Their sum, or None where one does not exist."""
+    known = [v for v in values if v is not None]
+    return sum(known) if len(known) == len(values) else None
 
 
 __all__ = ["Line", "derivation"]
