@@ -1,5 +1,6 @@
 """`sumwright realise`: the document, the table, the refusals."""
 
+import csv
 import json
 
 import pytest
@@ -119,3 +120,15 @@ def test_a_realised_design_may_be_realised_again(design, capsys, tmp_path):
     status, second, _ = run(capsys, str(tmp_path / "again.json"), "--json")
     assert status == 0 and json.loads(second)["choices"][0] == json.loads(out)["choices"][0]
     assert replace(again, cells=()) == d
+
+
+def test_the_bill_of_the_best_choice(design, capsys, tmp_path):
+    _, path = design
+    bill = tmp_path / "bill.csv"
+    status, out, _ = run(capsys, path, "--bill", str(bill), "--json")
+    assert status == 0
+    best = json.loads(out)["choices"][0]
+    rows = list(csv.DictReader(bill.read_text().splitlines()))
+    assert sum(int(r["count"]) for r in rows if r["part"] == "resistor") == best["resistor_count"]
+    status, out, err = run(capsys, path, "--bill", str(tmp_path / "no" / "such" / "place.csv"))
+    assert (status, out) == (2, "") and "cannot be written" in err

@@ -268,7 +268,8 @@ def arrangement_of(cells: tuple[Cell, ...]) -> str | None:
     if len(cells) != 2:
         return None
     first, last = cells
-    if first.plus or last.plus or not first.minus:
+    # The reference may lift the non-inverting nodes (single supply); a signal there makes it another stage.
+    if any(leg.source != REFERENCE for leg in (*first.plus, *last.plus)) or not first.minus:
         return None
     inner = [leg for leg in last.minus if leg.source == cell_name(0)]
     if len(inner) != 1:

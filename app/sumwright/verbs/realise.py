@@ -10,8 +10,10 @@ from sumwright.engine.realise.choices import Choice, Realisation, realise
 from sumwright.engine.realise.drawer import to_buy
 from sumwright.engine.stage import ARRANGEMENTS, Design, cell_name, replace
 from sumwright.errors import SumwrightError
+from sumwright.files.bill import bill_csv
 from sumwright.files.design import design_document
 from sumwright.files.drawer import read_drawer
+from sumwright.files.text import write_whole
 from sumwright.quantity import format_fixed, format_percent, format_quantity, format_resistor, parse_quantity
 from sumwright.verbs.common import add_design, add_json, load_design, plain, print_json, table
 
@@ -40,6 +42,9 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         metavar="ERROR",
         help="with --stock: say what to buy to get under this worst weight error, as 0.2%%",
     )
+    parser.add_argument(
+        "--bill", metavar="FILE", type=Path, help="write the bill of materials of the best choice (CSV)"
+    )
     add_json(parser)
 
 
@@ -63,6 +68,8 @@ def run(args: argparse.Namespace) -> int:
     document = to_json(design, result)
     if goal is not None:
         document["buy"] = [p._asdict() for p in to_buy(design, result, drawer, goal)]
+    if args.bill is not None:
+        write_whole(args.bill, bill_csv(replace(design, cells=result.choices[0].cells)))
     if args.json:
         print_json(document)
     else:

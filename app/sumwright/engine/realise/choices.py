@@ -20,6 +20,7 @@ import numpy as np
 from sumwright.engine.arrangement import USUAL_LEG, able, check_able, ideal_weights, wanted_weights
 from sumwright.engine.realise.best_set import Outcome, Watch, search
 from sumwright.engine.realise.preferred import values_within
+from sumwright.engine.realise.single_supply import biased_cells, is_single
 from sumwright.engine.stage import ARRANGEMENTS, REFERENCE, Cell, Design, cell_name
 from sumwright.errors import CannotRealise
 
@@ -53,6 +54,7 @@ class Choice:
     different_values: int
     least_input_resistance: float  # ohm, the least that any signal's source sees
     noise_density: float  # V/sqrt(Hz) at the output, white part
+    inner_gain: float = 1.0  # V/V, size of the gain from the first cell's output to the stage's; 1 with one cell
     parts: tuple[Pair, ...] = ()
     merits: tuple[str, ...] = ()  # why it is shown
 
@@ -65,6 +67,8 @@ class Choice:
             self.different_values,
             round(math.log(self.noise_density) / math.log(1.25)),
             -round(math.log(min(max(self.least_input_resistance, 1e-3), 1e12)) / math.log(1.6)),
+            # A first cell that takes more of the gain than the output shows runs out of headroom first.
+            -round(math.log(min(self.inner_gain, 1.0)) / math.log(1.6)),
         )
 
 
@@ -111,7 +115,7 @@ def assess(design: Design, arrangement: str, cells: tuple[Cell, ...], parts: tup
     if parts:
         different |= {r for p in parts for r in (p.first, p.second)}
         different -= {_resistance_at(cells, p.place) for p in parts}
-    density, gains, inputs = _small_signal(design, cells)
+    density, gains, inputs, inner = _small_signal(design, cells)
     return Choice(
         arrangement=arrangement,
         cells=cells,
@@ -125,6 +129,7 @@ def assess(design: Design, arrangement: str, cells: tuple[Cell, ...], parts: tup
         different_values=len(different),
         least_input_resistance=min(inputs.values(), default=math.inf),
         noise_density=density,
+        inner_gain=abs(inner),
         parts=parts,
     )
 
@@ -151,8 +156,8 @@ def places(cells) -> list[tuple[str, float]]:
     return out
 
 
-def _small_signal(design: Design, cells) -> tuple[float, list[float], dict[str, float]]:
-    """White output noise [V/sqrt(Hz)], noise gain of each cell, and the resistance each signal's source sees.
+def _small_signal(design: Design, cells) -> tuple[float, list[float], dict[str, float], float]:
+    """White output noise [V/sqrt(Hz)], noise gain of each cell, the resistance each signal's source sees, and the first cell's gain to the output.
 
     Notes
     -----
@@ -190,7 +195,7 @@ def _small_signal(design: Design, cells) -> tuple[float, list[float], dict[str, 
         square += four_kt * (cell.feedback + cell.feedback**2 * siemens + gain**2 * plus_ohm)
         squares.append(square * through[k] ** 2)
         gains.append(gain)
-    return math.sqrt(sum(squares)), gains[::-1], inputs
+    return math.sqrt(sum(squares)), gains[::-1], inputs, through[0]
 
 
 def best_choices(
@@ -331,6 +336,9 @@ def realise(
             parts = with_pairs(design, name, found, values)
             found += list(parts)
         choices += best_choices(design, name, found, shown=1 if again else SHOWN, parts=parts)
+        if drawer is None and not again and is_single(design):
+            lifted = best_choices(design, name, biased_cells(design, name, values), shown=1)
+            choices += [_with_merits(c, ("lifted for the single supply",)) for c in lifted]
         bounds[name], proved[name] = outcome.bound, outcome.whole
     if not choices:
         raise CannotRealise(" ".join(notes) or "No set of values was found.", able(design))
