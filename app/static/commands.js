@@ -1,6 +1,7 @@
 // The title strip: what stands saved, and the commands of the sheet.
 
 import {el, setAttr, setClass, setText} from './dom.js'
+import {clock} from './place.js'
 
 let sheet, undo, redo, dark, file
 const FILE_MOST = 2_000_000
@@ -62,11 +63,13 @@ export function saved(state) {
   const node = document.getElementById('saved')
   const s = state.saved ?? {}
   const words = {
-    none: '', saving: 'saving…', saved: `saved ${s.at ?? ''}`, unsaved: `not saved since ${s.at ?? ''}${s.why ? ', ' + s.why : ''}`,
-    changed: `changed elsewhere${s.at ? ' at ' + s.at : ''}${s.by ? ' by ' + s.by : ''}.`,
+    none: '', saving: 'saving…', saved: `saved ${clock(s.at)}`, unsaved: `not saved since ${clock(s.at)}${s.again ? `, trying again in ${s.again}\u2009s` : ''}`,
+    reader: 'not kept: you look as a reader',
+    changed: `changed elsewhere${s.at ? ' at ' + clock(s.at) : ''}${s.by ? ' by ' + s.by : ''}.`,
   }
   const lost = state.lost ? `no answer from the server since ${state.lost.toTimeString().slice(0, 8)}, trying again` : ''
   setText(node, lost || (words[s.state] ?? ''))
   setClass(node, 'bad', lost || s.state === 'unsaved' || s.state === 'changed')
+  setAttr(node, 'title', s.why || null)
   setAttr(node, 'data-state', s.state)
 }

@@ -2,12 +2,14 @@
 
 import {el} from './dom.js'
 
-let sheet
+let sheet, compare
 
 export function mount(theSheet) {
   sheet = theSheet
   const copy = el('button', {class: 'act', text: 'Copy link', title: 'A link to this sheet, as it is at work', onclick: () => copied(link())})
   document.getElementById('commands').append(copy)
+  compare = el('button', {class: 'act', text: 'Compare', title: 'Theirs, yours, or both side by side', hidden: true, onclick: () => { location.hash = 'log' }})
+  document.getElementById('saved').after(compare)
 }
 
 // The address of a sheet, of one of its folds, or of one entry of the log.
@@ -34,6 +36,7 @@ export async function copied(href) {
 }
 
 export function update(state) {
+  compare.hidden = state.saved?.state !== 'changed'
   const place = state.place
   if (!place?.notebook) return
   const here = new URLSearchParams(location.search)

@@ -21,7 +21,7 @@ export function mount(node, sheet) {
 
   // ---------------------------------------------------------------- writing
 
-  const text = el('textarea', {class: 'blank-note', rows: 3, 'aria-label': 'Text of the entry, Markdown', spellcheck: 'true', maxlength: 100000})
+  const text = el('textarea', {class: 'blank-note', rows: 3, 'aria-label': 'Text of the entry, Markdown', placeholder: 'write a note, or a decision and its reason; Ctrl+Enter writes it', spellcheck: 'true', maxlength: 100000})
   const kinds = ['note', 'decision'].map(k => el('button', {class: 'act', text: k === 'note' ? 'Note' : 'Decision', onclick: () => { kind = k; correcting = null; sayKind(); text.focus() }}))
   const what = el('span', {class: 'soft', role: 'status'})
   const write = el('button', {class: 'act strong', text: 'Write it', onclick: () => {

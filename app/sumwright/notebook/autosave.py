@@ -109,6 +109,18 @@ class Autosave:
                 self._tell(Mark("saved", theirs.saved_at))
             return theirs
 
+    @property
+    def clean(self) -> bool:
+        """Whether nothing is waiting to be saved."""
+        with self._lock:
+            return self._pending is None and not self._busy
+
+    def follow(self, revision: int, at: str) -> None:
+        """The page shows what somebody else saved: go on from there."""
+        with self._lock:
+            self.revision = revision
+            self._tell(Mark("saved", at))
+
     def now(self) -> None:
         """Try at once instead of waiting for the next turn."""
         with self._lock:

@@ -24,14 +24,18 @@ class Desk:
 
     Parameters
     ----------
-    store : Store
-        Where the notebooks are.
+    store : Store or callable
+        Where the notebooks are; a callable gives the store, or raises StoreError while it cannot be reached.
     who : callable
         Gives the person as they are now; NotAllowed when there is nobody any more.
     """
 
-    def __init__(self, store: Store, who: Callable[[], Person]):
-        self._store, self._who = store, who
+    def __init__(self, store: Store | Callable[[], Store], who: Callable[[], Person]):
+        self._where, self._who = store, who
+
+    @property
+    def _store(self) -> Store:
+        return self._where if isinstance(self._where, Store) else self._where()
 
     @property
     def person(self) -> Person:

@@ -1,0 +1,389 @@
+"""A session's place in the notebook: which sheet is open, saved without being asked, and what others did meanwhile.
+
+It knows the workbench and the desk, and nothing of how either is drawn. Everything that asks the store runs beside
+the server's thread; what comes of it is told back inside the session.
+"""
+
+from __future__ import annotations
+
+import logging
+import re
+import threading
+import weakref
+from collections.abc import Callable, Mapping
+from concurrent.futures import ThreadPoolExecutor
+from typing import Any
+
+from sumwright.errors import NotAllowed, SumwrightError
+from sumwright.files.design import design_document, read_design
+from sumwright.files.results import to_json
+from sumwright.model import demo
+from sumwright.model.edits import FOLLOW
+from sumwright.model.history import Snapshot as Step
+from sumwright.model.workbench import SYMBOLS, Workbench
+from sumwright.notebook.autosave import Autosave, Mark, Snapshot
+from sumwright.notebook.compare import key_results
+from sumwright.notebook.desk import Desk
+from sumwright.notebook.settings import settings
+from sumwright.notebook.shelf import the_store
+from sumwright.notebook.sign_in import who_for
+from sumwright.notebook.store import Sheet
+from sumwright.notebook.text import InvalidNotebookFile, canonical, read_json
+
+log = logging.getLogger("sumwright.sitting")
+
+STATE_FORMAT = "sumwright-sheet/1"
+STEPS_MOST = 100  # undo steps kept through a reload
+_WATCHED = ("design", "unplugged", "follow", "symbols")
+_ID = re.compile(r"[a-z2-7]{16}")
+
+_beside = ThreadPoolExecutor(4, thread_name_prefix="notebook")
+
+
+class Sitting:
+    """What one open page has to do with the notebook.
+
+    Parameters
+    ----------
+    desk : Desk
+        The person at the store.
+    notebook, sheet : str and int, optional
+        What the link names; without them the demonstration is shown, and becomes a notebook at its first change.
+    """
+
+    def __init__(self, desk: Desk, notebook: str = "", sheet: int = 1):
+        self.desk = desk
+        self.key = ""
+        self.number = 1
+        self.problem = ""  # why the sheet that was asked for is not shown
+        self.autosave: Autosave | None = None
+        self._page: Any = lambda: None
+        self._quiet = False
+        self._told = ""
+        self._making = threading.Lock()
+        self._spelled: dict[int, tuple[Step, str]] = {}
+        self._stored_steps: tuple[int, ...] | None = None
+        found = None
+        if notebook:
+            try:
+                if not _ID.fullmatch(notebook):
+                    raise InvalidNotebookFile(f"The link names the notebook {notebook[:40]!r}, which is none.")
+                found = desk.sheet(notebook, sheet)
+                self.workbench = self._workbench(found)
+            except SumwrightError as error:
+                self.problem, found = (
+                    f"{error} This is the demonstration; nothing you do here changes that notebook.",
+                    None,
+                )
+        if found is None:
+            self.workbench = Workbench(demo.design(), on="north")
+        else:
+            self.key, self.number = found.notebook, found.number
+        self._saved_at = found.saved_at if found else ""
+        self._revision = found.revision if found else 0
+
+    # ------------------------------------------------------------ the page
+
+    def attach(self, page: Any) -> None:
+        """Save from now on what changes on the page's workbench, and tell the page how that goes."""
+        self._page = weakref.ref(page)
+        self.workbench.param.watch(self._changed, list(_WATCHED))
+        self._begin_saving(self._revision, self._saved_at)
+        page.extras["place"] = self.place
+        if self.key:
+            self._tell(Mark("saved", self._saved_at))
+
+    @property
+    def place(self) -> dict[str, Any]:
+        """What the address of the page says."""
+        return {"notebook": self.key, "sheet": self.number} if self.key else {}
+
+    def may(self, action: str) -> None:
+        """The page's gate: everybody who is let in may move things on their own screen; nobody else may.
+
+        What reaches the store passes the desk, act by act, whatever this lets through.
+        """
+        self.desk.require("read")
+
+    def aside(self, work: Callable[[], Any], then: Callable[[Any], None], refused: Callable[[str], None]) -> None:
+        """Do `work` beside the server's thread; then, in the session, `then` with its result or `refused` with one sentence."""
+
+        def run() -> None:
+            page = self._page()
+            try:
+                result = work()
+            except SumwrightError as error:
+                sentence = str(error)
+                answer = lambda: refused(sentence)  # noqa: E731 - what to call is all that differs
+            else:
+                answer = lambda: then(result)  # noqa: E731
+            if page is not None:
+                page.later(answer)
+
+        _beside.submit(run).add_done_callback(_report)
+
+    def close(self) -> None:
+        """The session is over; what is not saved yet is saved all the same."""
+        if self.autosave is not None:
+            self.autosave.close()
+        self._page = lambda: None
+
+    # ------------------------------------------------------------ saving
+
+    def _begin_saving(self, revision: int, at: str) -> None:
+        self.autosave = Autosave(self._save, revision, self._tell, saved_at=at)
+
+    def _changed(self, *_events: Any) -> None:
+        if self._quiet or self.autosave is None:
+            return
+        try:
+            may = self.desk.may("save")
+        except NotAllowed:
+            may = False
+        if may:
+            self.autosave.changed(self._snapshot)
+        elif (page := self._page()) is not None:
+            page.say_saved(state="reader", why="You look as a reader: what you move here is not kept.")
+
+    def _save(self, snapshot: Snapshot, revision: int) -> tuple[int, str]:
+        """In a thread of `Autosave`: write the sheet, or begin a notebook with it."""
+        with self._making:
+            if not self.key:
+                return 1, self._make(snapshot.state)
+        return self.desk.save(self.key, self.number, snapshot, max(revision, 1))
+
+    def begin_notebook(self) -> None:
+        """Make the notebook that the sheet as it stands goes into, if there is none yet; in a thread."""
+        with self._making:
+            if not self.key and self.autosave is not None:
+                self.autosave.follow(1, self._make(self.state()))
+
+    def _make(self, state: dict[str, Any]) -> str:
+        made = self.desk.new_notebook(self.workbench.title, state)
+        self.key, self.number = made.id, 1
+        self._stored_steps = None  # the history has yet to go there
+        if (page := self._page()) is not None:
+            page.extras["place"] = self.place
+            page.refresh_sheet()
+            page.later(self._fold_news)
+        return made.changed_at
+
+    def state(self) -> dict[str, Any]:
+        """The sheet as the store keeps it."""
+        return state_of(self.workbench)
+
+    def _snapshot(self) -> Snapshot:
+        """What is saved now; in a thread of `Autosave`. The history goes along only when it is another one."""
+        bench = self.workbench
+        past, future = list(bench.history.past)[-STEPS_MOST:], list(bench.history.future)[-STEPS_MOST:]
+        state = state_of(bench)
+        steps = tuple(id(step) for step in (*past, None, *future))
+        if steps == self._stored_steps:
+            return Snapshot(state)
+        spelled = {
+            id(step): self._spelled.get(id(step)) or (step, canonical(step_document(step))) for step in past + future
+        }
+        self._spelled, self._stored_steps = spelled, steps  # each step is kept alive here, so no id is used again
+        return Snapshot(
+            state, {"past": [spelled[id(s)][1] for s in past], "future": [spelled[id(s)][1] for s in future]}
+        )  # fmt: skip
+
+    def _tell(self, mark: Mark) -> None:
+        if mark.kind in ("unsaved", "elsewhere"):
+            self._stored_steps = None  # the store may not have what was sent: send the history again
+        page = self._page()
+        if page is None:
+            return
+        state = {"elsewhere": "changed"}.get(mark.kind, mark.kind)
+        by = mark.theirs.saved_by if mark.theirs else ""
+        page.say_saved(state=state, at=mark.at, by=by, why=mark.why, again=mark.again)
+        if mark.kind == "unsaved" and mark.why != self._told:
+            page.say(f"{mark.why} What is on the sheet is kept here and tried again.", bad=True)
+        self._told = mark.why if mark.kind == "unsaved" else ""
+        if mark.kind in ("elsewhere", "saved"):
+            page.later(self._fold_news)
+
+    def _fold_news(self) -> None:
+        page = self._page()
+        if page is not None and (fold := page.folds.get("log")) is not None:
+            fold.news()
+
+    # ------------------------------------------------------------ others
+
+    def look_around(self) -> None:
+        """Ask what others did to the sheet; called every few seconds while the page is open."""
+        autosave = self.autosave
+        if not self.key or autosave is None or not autosave.clean or autosave.mark.kind != "saved":
+            return
+        key, number, known = self.key, self.number, autosave.revision
+
+        def ask() -> Sheet | None:
+            return self.desk.sheet(key, number) if self.desk.revision(key, number)[0] != known else None
+
+        self.aside(ask, self._others, lambda sentence: None)
+
+    def _others(self, theirs: Sheet | None) -> None:
+        """Somebody else saved the sheet and nothing here waits to be saved: show theirs, and say so."""
+        autosave, page = self.autosave, self._page()
+        if (
+            theirs is None
+            or autosave is None
+            or page is None
+            or not autosave.clean
+            or theirs.revision <= autosave.revision
+        ):
+            return
+        if not self.show(theirs):
+            return
+        autosave.follow(theirs.revision, theirs.saved_at)
+        page.refresh_sheet()
+        page.say(f"{theirs.saved_by} changed this sheet; it is shown as they left it. Undo gives back what you had.")
+
+    def show(self, theirs: Sheet) -> bool:
+        """Put a stored sheet on the workbench; what was there is one undo step back."""
+        before = self.workbench.snapshot
+        try:
+            step, symbols = read_state(theirs.state)
+            past, future = read_history(theirs.history)
+        except SumwrightError as error:
+            if (page := self._page()) is not None:
+                page.say(str(error), bad=True)
+            return False
+        self._quiet = True
+        try:
+            self.workbench.replace_quietly(step)
+            self.workbench.symbols = symbols
+            self.workbench.history.past[:] = [*past, before] if before != step else past
+            self.workbench.history.future[:] = future
+        finally:
+            self._quiet = False
+        self._stored_steps = None
+        return True
+
+    def take_theirs(self) -> None:
+        """After a conflict: theirs on the sheet, mine one undo step back."""
+        self.desk.require("read")
+        autosave = self.autosave
+        if autosave is None or autosave.mark.theirs is None:
+            return
+        if self.show(autosave.mark.theirs):
+            autosave.take_theirs()
+
+    def keep_mine(self) -> None:
+        """After a conflict: theirs is set aside in the log as a frozen design, then mine is saved. In a thread."""
+        autosave = self.autosave
+        if autosave is not None and (theirs := autosave.mark.theirs) is not None:
+            self.desk.require("save")
+            self.desk.set_aside(theirs)
+            autosave.keep_mine()
+
+    # ------------------------------------------------------------ contents
+
+    def frozen(self, title: str) -> dict[str, Any]:
+        """The sheet as the content of a frozen entry: values, key results, margins."""
+        bench = self.workbench
+        if bench.problem:
+            raise InvalidNotebookFile(f"The sheet cannot be frozen while it cannot be analysed: {bench.problem}")
+        results, checks = key_results(plain(to_json(bench.analysis)))
+        return {
+            "title": title, "design": design_document(bench.design), "unplugged": list(bench.unplugged),
+            "results": results, "checks": checks,
+        }  # fmt: skip
+
+    def _workbench(self, sheet: Sheet) -> Workbench:
+        step, symbols = read_state(sheet.state)
+        past, future = read_history(sheet.history)
+        bench = Workbench(step.design, unplugged=step.unplugged, follow=step.follow, symbols=symbols)
+        bench.history.past[:], bench.history.future[:] = past, future
+        return bench
+
+
+def begin(user: str | None, arguments: Mapping[str, list[bytes]]) -> Sitting:
+    """The sitting of a new session, from who is signed in and what the link says."""
+
+    def one(name: str) -> str:
+        held = arguments.get(name) or [b""]
+        return held[0][:80].decode("utf-8", "replace")
+
+    number = one("sheet")
+    return Sitting(
+        Desk(the_store, who_for(user, settings())),
+        one("notebook"),
+        int(number) if re.fullmatch(r"[0-9]{1,6}", number) else 1,
+    )
+
+
+# ---------------------------------------------------------------- a sheet as JSON, and back
+
+
+def state_of(bench: Workbench) -> dict[str, Any]:
+    """The sheet at work as the store keeps it."""
+    return {"format": STATE_FORMAT, **step_document(bench.snapshot), "symbols": bench.symbols}
+
+
+def step_document(step: Step) -> dict[str, Any]:
+    """One state of the sheet as JSON."""
+    return {"design": design_document(step.design), "unplugged": list(step.unplugged), "follow": step.follow}
+
+
+def read_state(state: dict[str, Any]) -> tuple[Step, str]:
+    """A stored state, checked as if it came from anywhere: it may have come in a notebook file.
+
+    Raises
+    ------
+    SumwrightError
+        If it is not one, with the design's own sentence where the design is at fault.
+    """
+    if state.get("format") != STATE_FORMAT:
+        raise InvalidNotebookFile(
+            f"The format of the stored sheet is {str(state.get('format'))[:40]!r}; it must be {STATE_FORMAT!r}."
+        )
+    symbols = state.get("symbols", SYMBOLS[0])
+    if symbols not in SYMBOLS:
+        raise InvalidNotebookFile(
+            f"The symbols of the stored sheet are {str(symbols)[:40]!r}; they are one of {SYMBOLS}."
+        )
+    return read_step(state), symbols
+
+
+def read_step(held: dict[str, Any]) -> Step:
+    """One state from JSON, checked."""
+    design = read_design(held.get("design") if isinstance(held.get("design"), dict) else {})
+    unplugged, follow = held.get("unplugged", []), held.get("follow", "nearest")
+    if not isinstance(unplugged, list) or not set(map(str, unplugged)) <= set(design.signal_names):
+        raise InvalidNotebookFile("The stored sheet has cables out of signals that it does not have.")
+    if follow not in FOLLOW:
+        raise InvalidNotebookFile(
+            f"follow of the stored sheet is {str(follow)[:40]!r}; it is one of {', '.join(FOLLOW)}."
+        )
+    return Step(design, tuple(unplugged), follow)
+
+
+def read_history(history: dict[str, Any]) -> tuple[list[Step], list[Step]]:
+    """The stored undo steps. One that cannot be read ends its side: the sheet matters more than its history."""
+    sides = []
+    for side in ("past", "future"):
+        steps: list[Step] = []
+        held = history.get(side)
+        for text in reversed(held[-STEPS_MOST:] if isinstance(held, list) else []):
+            try:
+                step = read_json("An undo step", text if isinstance(text, str) else "")
+                steps.append(read_step(step if isinstance(step, dict) else {}))
+            except SumwrightError:
+                break
+        sides.append(steps[::-1])
+    return sides[0], sides[1]
+
+
+def plain(value: Any) -> Any:
+    """What is not finite as null, so that it can be kept."""
+    if isinstance(value, float):
+        return value if value - value == 0.0 else None
+    if isinstance(value, dict):
+        return {k: plain(v) for k, v in value.items()}
+    return [plain(v) for v in value] if isinstance(value, list | tuple) else value
+
+
+def _report(future: Any) -> None:
+    if (error := future.exception()) is not None:
+        log.error("work beside the server failed", exc_info=error)
