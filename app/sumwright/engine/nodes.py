@@ -22,6 +22,7 @@ Source: Kirchhoff's current law at each node.
 
 from __future__ import annotations
 
+from itertools import islice, permutations
 from typing import NamedTuple
 
 import numpy as np
@@ -33,6 +34,8 @@ LINEAR = 0
 SWING = 1  # at the voltage limit, current flowing the way that costs dropout
 SWING_IDLE = 2  # at the voltage limit, current flowing the other way
 CURRENT = 3  # at the current limit
+# Orders of the cells in which consistent limits are looked for, where the first does not find them.
+ORDERS_MOST = 24
 
 
 class Part(NamedTuple):
@@ -160,7 +163,7 @@ class Network:
 
     def _leg_resistances(self, source_resistances):
         """Source resistance by leg source: the given ones, then nothing for upstream outputs."""
-        given = np.asarray(source_resistances, dtype=float)
+        given = np.asarray(source_resistances)
         return np.concatenate([given, np.zeros((*given.shape[:-1], self.cell_count))], axis=-1)
 
     def noise_gains(self, resistances=None, source_resistances=None):
@@ -232,7 +235,7 @@ def solve(
     resistances : (..., parts) array_like, optional
         Instead of `net.resistances` [ohm]; infinity is an open part.
     source_resistances : (..., sources) array_like, optional
-        Instead of the nominal ones [ohm].
+        Instead of the nominal ones [ohm]; complex where a cable's capacitance is part of the source.
     s : (...) array_like of complex, optional
         Complex frequency [rad/s]; None is DC.
     gain : (...) array_like, optional
@@ -522,32 +525,39 @@ def solve_clipped(net: Network, sources, *, limits: Limits | None = None, state=
 
     Notes
     -----
-    Output against current is monotone for a stage with negative feedback, so
-    moving the most upstream offender to the limit it passes, and back when its
-    drive reverses, ends after a few rounds.
+    Output against current is monotone for most stages, so moving the most
+    upstream offender to the limit it passes, and back when its drive reverses,
+    ends after a few rounds. Where later cells load an earlier one with a negative
+    resistance it can go round in circles; those samples start again with another
+    cell first.
     """
     limits = nominal_limits(net.design) if limits is None else limits
     amp = net.design.op_amp
     a_ol = amp.open_loop_gain if gain is None else np.asarray(gain)
     v = np.asarray(sources, dtype=float)[..., None]
     st = np.asarray(state) if state is not None else None
-    for _ in range(10 + 8 * net.cell_count):
-        sol = solve(net, v, state=st, limits=limits, gain=gain, **circuit)
-        if st is None:
-            st = np.zeros(sol.output.shape[:-1], dtype=int)
-        nxt = next_state(net, sol, st, limits, a_ol)
-        if (nxt == st).all():
-            break
-        st = nxt
+    cells = range(net.cell_count)
+    orders = islice(permutations(cells), ORDERS_MOST) if net.cell_count > 2 else (tuple(cells), tuple(reversed(cells)))
+    for order in orders:
+        for _ in range(10 + 8 * net.cell_count):
+            sol = solve(net, v, state=st, limits=limits, gain=gain, **circuit)
+            if st is None:
+                st = np.zeros(sol.output.shape[:-1], dtype=int)
+            nxt = next_state(net, sol, st, limits, a_ol, order)
+            moving = (nxt != st).any(axis=-1, keepdims=True)
+            if not moving.any():
+                return Clipped(sol, st)
+            st = nxt
+        st = np.where(moving, LINEAR, st)
     return Clipped(sol, st)
 
 
-def next_state(net, sol, st, limits, a_ol):
-    """Where each output goes from state `st`; only the most upstream offender of a sample moves."""
+def next_state(net, sol, st, limits, a_ol, order=None):
+    """Where each output goes from state `st`; only the first offender in `order` (upstream first) of a sample moves."""
     r_out = net.design.op_amp.output_resistance
     out = np.array(np.broadcast_to(st, sol.output.shape[:-1]))
     settled = np.ones(out.shape[:-1], dtype=bool)
-    for k in range(net.cell_count):
+    for k in range(net.cell_count) if order is None else order:
         m, p, o, i = (x[..., k, 0] for x in sol)
         now = out[..., k]
         high = _of_cell(limits.high, k) - limits.dropout_resistance * np.maximum(i, 0.0)

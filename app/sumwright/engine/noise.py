@@ -36,6 +36,24 @@ class Noise(NamedTuple):
     terms: tuple[NoiseTerm, ...]
 
 
+class SignalToNoise(NamedTuple):
+    """A full-scale sine over the noise: ratio [dB], and the bits of a converter as noisy as that."""
+
+    decibels: float
+    bits: float
+
+
+def signal_to_noise(rms: float, span: float) -> SignalToNoise | None:
+    """How a sine that fills `span` [V, peak to peak] compares with noise of `rms` [V]; None without either.
+
+    Source: a perfect n-bit converter has 6.02 n + 1.76 dB (uniform quantisation noise, Bennett 1948).
+    """
+    if rms <= 0 or span <= 0:
+        return None
+    decibels = 20.0 * np.log10(span / (2.0 * np.sqrt(2.0)) / rms)
+    return SignalToNoise(float(decibels), float((decibels - 10 * np.log10(1.5)) / (20 * np.log10(2.0))))
+
+
 class Spectrum(NamedTuple):
     """Output noise density: frequencies (f,) [Hz], terms (terms, f) and total (f,) [V/√Hz]."""
 
