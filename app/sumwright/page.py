@@ -30,7 +30,7 @@ from sumwright.views.wire import Wire, packed
 log = logging.getLogger(__name__)
 
 # The folds, in the order of the work. One whose module is not installed is not listed.
-FOLDS = ("curves", "choices", "budget", "response", "bench", "log")
+FOLDS = ("curves", "choices", "budget", "response", "bench", "log", "report")
 
 ACTS_MOST = 64  # in one message
 LOOK_AROUND = 4000  # ms between looks at what others did to the sheet

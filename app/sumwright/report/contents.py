@@ -9,7 +9,8 @@ from sumwright.engine.analysis import Analysis
 from sumwright.engine.designators import designators
 from sumwright.engine.response import at_signal_frequencies
 from sumwright.engine.stage import cell_name
-from sumwright.quantity import THIN, format_fixed, format_percent, format_quantity, format_resistor
+from sumwright.files.bill import bill as bill_of
+from sumwright.quantity import THIN, format_fixed, format_percent, format_quantity
 
 from .formulas import derivation
 from .tables import Column, Measured, Table
@@ -132,49 +133,28 @@ def parts(analysis: Analysis) -> Table:
 
 
 def bill(analysis: Analysis) -> Table:
-    """Bill of materials: equal parts together."""
-    d = analysis.design
-    kind = d.resistor
-    names = designators(d, analysis.net)
-    by_value: dict[float, list[str]] = {}
-    for name, part in zip(names.resistors, analysis.net.parts, strict=True):
-        if name:
-            by_value.setdefault(part.resistance, []).append(name)
-    spec = f"{kind.series}, ±{format_percent(kind.tolerance)}, {kind.temperature_coefficient * 1e6:g}{THIN}ppm/K, {format_quantity(kind.power, 'W', 3, trim=True)} at 70 °C"
-    rows: list[tuple[Any, ...]] = [
-        (len(which), f"{format_resistor(value)} resistor", ", ".join(which), spec)
-        for value, which in sorted(by_value.items())
-    ]
-    caps: dict[float, list[str]] = {}
-    for name, cell in zip(names.capacitors, d.cells, strict=True):
-        if name:
-            caps.setdefault(cell.feedback_capacitance, []).append(name)
-    for value, which in sorted(caps.items()):
+    """Bill of materials: parts that are bought under one value together."""
+    rows: list[tuple[Any, ...]] = []
+    for line in bill_of(analysis.design):
         rows.append(
             (
-                len(which),
-                f"{format_quantity(value, 'F', 3, trim=True)} capacitor",
-                ", ".join(which),
-                "C0G or film: steady over temperature and voltage",
+                line.count,
+                f"{line.value} {line.part}" if line.part != "op amp" else line.value,
+                ", ".join(line.designators),
+                line.rating,
+                line.note,
             )
         )
-    packages = sorted({n.rstrip("ABCDEFGHIJKLMNOP") for n in names.op_amps}, key=lambda n: int(n[1:]))
-    rows.append(
-        (
-            len(packages),
-            d.op_amp.name,
-            ", ".join(packages),
-            f"{d.op_amp.per_package} amplifier{'s' if d.op_amp.per_package > 1 else ''} in a package",
-        )
+    columns: tuple[Column, ...] = (
+        Column("count", "", "fixed", 0),
+        Column("part"),
+        Column("which"),
+        Column("rating"),
+        Column("note"),
     )
-    columns = (Column("count", "", "fixed", 0), Column("part"), Column("which"), Column("kind"))
-    return Table(
-        "bill",
-        "Bill of materials",
-        columns,
-        tuple(rows),
-        "Decoupling of the rails at each package, sockets and connectors are not listed.",
-    )
+    if not any(r[-1] for r in rows):
+        columns, rows = columns[:-1], [r[:-1] for r in rows]
+    return Table("bill", "Bill of materials", columns, tuple(rows), "Sockets, connectors and the board are not listed.")
 
 
 def weights(analysis: Analysis) -> Table:

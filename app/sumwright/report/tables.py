@@ -15,11 +15,10 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
+from sumwright.files.bill import safe_cell
 from sumwright.quantity import THIN, format_fixed, format_percent, format_quantity, format_resistor
 
 from .axes import prefix_of
-
-_FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n")
 
 
 @dataclass(frozen=True)
@@ -167,15 +166,6 @@ def _csv_value(value: Any) -> str:
         number = float(value)
         return repr(int(number)) if number.is_integer() and abs(number) < 1e15 else repr(number)
     return safe_cell(str(value))
-
-
-def safe_cell(text: str) -> str:
-    """A text that no spreadsheet takes for a formula: one that could be gets an apostrophe before it.
-
-    Source: OWASP, CSV Injection (from memory): cells that begin with = + - @, tab,
-    carriage return or line feed.
-    """
-    return "'" + text if text.startswith(_FORMULA_STARTS) else text
 
 
 def markdown(table: Table) -> str:
