@@ -22,7 +22,7 @@ Source: Kirchhoff's current law at each node.
 
 from __future__ import annotations
 
-from itertools import islice, permutations
+from itertools import product
 from typing import NamedTuple
 
 import numpy as np
@@ -34,8 +34,13 @@ LINEAR = 0
 SWING = 1  # at the voltage limit, current flowing the way that costs dropout
 SWING_IDLE = 2  # at the voltage limit, current flowing the other way
 CURRENT = 3  # at the current limit
-# Orders of the cells in which consistent limits are looked for, where the first does not find them.
-ORDERS_MOST = 24
+# Chains up to this long have every combination of states tried where moving one at a time finds none: 7^4 of them.
+TRIED_CELLS = 4
+# Axes behind the leading ones, of what `solve` takes.
+_TRAILING = {
+    "resistances": 1, "source_resistances": 1, "load_conductance": 0, "common_mode": 1, "error": 2, "into_minus": 2,
+    "into_plus": 2, "into_output": 2, "internal": 2,
+}  # fmt: skip
 
 
 class Part(NamedTuple):
@@ -528,28 +533,51 @@ def solve_clipped(net: Network, sources, *, limits: Limits | None = None, state=
     Output against current is monotone for most stages, so moving the most
     upstream offender to the limit it passes, and back when its drive reverses,
     ends after a few rounds. Where later cells load an earlier one with a negative
-    resistance it can go round in circles; those samples start again with another
-    cell first.
+    resistance it can go round in circles; those samples start again from the other
+    end, and at last have every combination of limits tried.
     """
     limits = nominal_limits(net.design) if limits is None else limits
     amp = net.design.op_amp
     a_ol = amp.open_loop_gain if gain is None else np.asarray(gain)
     v = np.asarray(sources, dtype=float)[..., None]
     st = np.asarray(state) if state is not None else None
-    cells = range(net.cell_count)
-    orders = islice(permutations(cells), ORDERS_MOST) if net.cell_count > 2 else (tuple(cells), tuple(reversed(cells)))
-    for order in orders:
+    upstream_first = tuple(range(net.cell_count))
+    for order in (upstream_first, upstream_first[::-1]):
         for _ in range(10 + 8 * net.cell_count):
             sol = solve(net, v, state=st, limits=limits, gain=gain, **circuit)
             if st is None:
                 st = np.zeros(sol.output.shape[:-1], dtype=int)
             nxt = next_state(net, sol, st, limits, a_ol, order)
-            moving = (nxt != st).any(axis=-1, keepdims=True)
+            moving = (nxt != st).any(axis=-1)
             if not moving.any():
                 return Clipped(sol, st)
             st = nxt
-        st = np.where(moving, LINEAR, st)
-    return Clipped(sol, st)
+        st = np.where(moving[..., None], LINEAR, st)
+    if net.cell_count <= TRIED_CELLS:
+        st = _tried(net, v, st, moving, limits, a_ol, circuit)
+    return Clipped(solve(net, v, state=st, limits=limits, gain=gain, **circuit), st)
+
+
+def _tried(net, v, st, moving, limits, a_ol, circuit):
+    """The states `st` with those of the samples that are `moving` found by trying every one there is."""
+    lead = st.shape[:-1]
+    trials = np.array(list(product((0, 1, -1, 2, -2, 3, -3), repeat=net.cell_count)))
+
+    def at_sample(x, trailing, index):
+        x = np.asarray(x)
+        return np.broadcast_to(x, lead + x.shape[x.ndim - trailing :])[index]
+
+    st = np.array(st)
+    for index in map(tuple, np.argwhere(moving)):
+        own = {name: at_sample(x, _TRAILING[name], index) for name, x in circuit.items() if x is not None}
+        bounds = limits._replace(**{side: at_sample(getattr(limits, side), np.ndim(getattr(limits, side)) > 0, index)
+                                    for side in ("high", "low")})  # fmt: skip
+        gain = at_sample(a_ol, 0, index)
+        sol = solve(net, at_sample(v, 2, index), state=trials, limits=bounds, gain=gain, **own)
+        good = (next_state(net, sol, trials, bounds, gain) == trials).all(axis=-1)
+        if good.any():
+            st[index] = trials[good.argmax()]
+    return st
 
 
 def next_state(net, sol, st, limits, a_ol, order=None):
