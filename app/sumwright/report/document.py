@@ -217,7 +217,7 @@ def _margin(check) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def gauge(check, width: float = 126.0) -> Drawing:
+def gauge(check, width: float = 106.0) -> Drawing:
     """A margin as a bar from the zero line: right of it room, left of it short."""
     d = Drawing(width, 15, f"{check.title}: {check.status}")
     zero, end, y = 26.0, width - 2, 8.0

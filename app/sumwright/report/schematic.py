@@ -2,7 +2,7 @@
 
 One row a leg: minus legs above, plus legs below, as at the op amp. A cell stands
 left of the one it feeds, so that the wire between them runs straight; two cells
-go side by side, further ones below. What has no straight wire is joined by name.
+go side by side while they fit, further ones below. What has no straight wire is joined by name.
 
 Symbols: resistor as a rectangle (IEC 60617) or as a zigzag (IEEE 315); op amp as
 a triangle, which both accept.
@@ -23,7 +23,8 @@ from .drawing import INK, PAPER, RED, SOFT, Drawing, number, text_width
 
 SYMBOLS = {"iec": "IEC 60617", "ieee": "IEEE 315"}
 ROW = 40.0
-_PER_LINE = 2  # cells side by side
+_WIDEST = 1100.0  # px; wider than this, cells go below each other
+_NAME_MOST = 24  # characters of a source's name
 _RES, _BUS, _AMP, _WIDE, _OUT = 46.0, 150.0, 72.0, 74.0, 26.0  # along a leg: resistor, bus; op amp, its width, output
 
 
@@ -119,11 +120,11 @@ class _Sheet:
 
     # ------------------------------------------------------------ what stands where
 
-    def blocks(self) -> list[_Block]:
+    def blocks(self, per_line: int) -> list[_Block]:
         blocks = []
         for k, cell in enumerate(self.design.cells):
             c = self.net.cells[k]
-            left = cell_name(k - 1) if k % _PER_LINE else ""
+            left = cell_name(k - 1) if k % per_line else ""
             minus = self._legs(c.minus_parts, left)
             if c.minus_ground >= 0:
                 minus.insert(0, _Row("ground", part=c.minus_ground))
@@ -147,11 +148,11 @@ class _Sheet:
                 row.straight = False
         return rows
 
-    def place(self, blocks: list[_Block]) -> tuple[float, float]:
+    def place(self, blocks: list[_Block], per_line: int) -> tuple[float, float]:
         """Give every block its place; returns the drawing's width and height."""
         bottom, width = 0.0, 0.0
-        for start in range(0, len(blocks), _PER_LINE):
-            line = blocks[start : start + _PER_LINE]
+        for start in range(0, len(blocks), per_line):
+            line = blocks[start : start + per_line]
             x = 0.0
             for b in line:
                 b.label = max((self._label_width(row, b.k) for row in b.rows), default=0.0)
@@ -174,7 +175,7 @@ class _Sheet:
         if row.straight:
             return 74.0
         if row.kind in ("leg", "wire"):
-            return max(text_width(row.source, bold=True), text_width(self._under(row.source), 13)) + 18.0
+            return max(text_width(_short(row.source), bold=True), text_width(self._under(row.source), 13)) + 18.0
         return 12.0
 
     def _under(self, source: str) -> str:
@@ -202,8 +203,11 @@ class _Sheet:
     # ------------------------------------------------------------ drawing it
 
     def draw(self) -> Drawing:
-        blocks = self.blocks()
-        width, height = self.place(blocks)
+        for per_line in (2, 1):
+            blocks = self.blocks(per_line)
+            width, height = self.place(blocks, per_line)
+            if width <= _WIDEST:
+                break
         self.d = Drawing(width, height, self._alt())
         for b in blocks:
             self._left_end = blocks[b.k - 1].out if b.k else 0.0
@@ -295,7 +299,7 @@ class _Sheet:
         """A source's name, what it is at, and its plug."""
         d, x = self.d, b.plug
         under = self._under(row.source)
-        d.text(x - 12, y - 2 if under else y + 5, row.source, anchor="end", bold=True)
+        d.text(x - 12, y - 2 if under else y + 5, _short(row.source), anchor="end", bold=True)
         if under:
             d.text(x - 12, y + 13, under, anchor="end", fill=SOFT, size=13)
         mark = self.hands.get(row.source)
@@ -438,6 +442,11 @@ class _Sheet:
     def _arrow(self, x: float, y: float, direction: int) -> None:
         tip = x + 5 * direction
         self.d.path(f"M{number(tip)} {number(y)}l{-10 * direction} -4.2v8.4z", fill=INK, width=0.5)
+
+
+def _short(name: str) -> str:
+    """A long name with its middle left out, since names that belong together differ at their end."""
+    return name if len(name) <= _NAME_MOST else f"{name[: _NAME_MOST - 9].rstrip()}…{name[-8:].lstrip()}"
 
 
 __all__ = ["SYMBOLS", "schematic"]
