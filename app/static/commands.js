@@ -64,7 +64,7 @@ export function saved(state) {
   const s = state.saved ?? {}
   const words = {
     none: '', saving: 'saving…', saved: `saved ${clock(s.at)}`, unsaved: `not saved since ${clock(s.at)}${s.again ? `, trying again in ${s.again}\u2009s` : ''}`,
-    reader: 'not kept: you look as a reader',
+    reader: 'not kept', // its title says why
     changed: `changed elsewhere${s.at ? ' at ' + clock(s.at) : ''}${s.by ? ' by ' + s.by : ''}.`,
   }
   const lost = state.lost ? `no answer from the server since ${state.lost.toTimeString().slice(0, 8)}, trying again` : ''

@@ -2,6 +2,7 @@
 
 import {el, setAttr, setText} from './dom.js'
 import {Blank} from './blanks.js'
+import {fixed, signed} from './format.js'
 
 let sheet, box
 let open = null // {what, fill(state), blanks}
@@ -139,7 +140,7 @@ const MAKERS = {
     }), unit]
     const nameBlank = act(blanks, {field: 'drawer name', label: 'name of the signal', cls: 'wide', take: () => name, send: text => ({do: 'name', signal: name, text})})
     const weight = act(blanks, {field: 'drawer weight', label: 'wanted weight', unit: 'V/V', take: state => (row(state)?.weight_text ?? '').replace('-', '\u2212'), send: text => ({do: 'weight', signal: name, text})})
-    const out = el('div', {class: 'cable-out note'})
+    const out = el('section', {class: 'group cable-out'})
     const body = el('div', {class: 'groups'},
       el('section', {class: 'group'}, el('h3', {text: 'name'}), nameBlank),
       group('weight', [['wanted', weight, 'V/V']]),
@@ -157,16 +158,21 @@ const MAKERS = {
         }
         setText(title, '')
         fillAll(blanks)(state)
-        cableOut(out, row(state))
+        cableOut(out, state.signals.cable_out?.name === name ? state.signals.cable_out : null)
       },
     }
   },
 }
 
 // what happens to the others when this cable is pulled, and when its source dies
-function cableOut(node, r) {
-  const text = r?.cable_out ?? ''
-  if (node.dataset.text === JSON.stringify(text)) return
-  node.dataset.text = JSON.stringify(text)
-  node.replaceChildren(...(text ? [el('h3', {text: 'cable out'}), el('p', {text: text.open}), el('p', {text: text.dead})] : []))
+function cableOut(node, found) {
+  const key = JSON.stringify(found)
+  if (node.dataset.key === key) return
+  node.dataset.key = key
+  if (!found) { node.replaceChildren(); return }
+  const line = ([name, ...values], write) => el('tr', {}, el('th', {scope: 'row', text: name}),
+    ...values.map((v, i) => el('td', {class: `r${i && Math.abs(v - values[0]) > 1e-4 * Math.max(1e-9, Math.abs(values[0])) ? ' moved' : ''}`, text: write(v)})))
+  node.replaceChildren(el('h3', {text: 'if this cable goes'}), el('table', {},
+    el('thead', {}, el('tr', {}, el('th'), el('th', {class: 'r', text: 'now'}), el('th', {class: 'r', text: 'pulled out'}), el('th', {class: 'r', text: 'source dead, 0\u2009V'}))),
+    el('tbody', {}, ...found.weights.map(w => line(w, v => signed(v, 4))), line(['offset, V', ...found.offset], v => signed(v)), line(['noise gain', ...found.noise_gain], v => fixed(v)))))
 }

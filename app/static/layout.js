@@ -21,11 +21,11 @@ export function layout({width, row, head, foot, cells, rows}) {
   for (let c = 0; c < cells.length; c++) {
     const bus = x
     const xm = bus + (many ? 6 * k : 16 * k)
-    const tri = xm + (many ? 47 * q : 60 * k)
-    const tip = tri + (many ? 46 * k : 74 * k)
-    const out = tip + (many ? 8 * q : 26 * k)
+    const tri = xm + (many ? 53 * q : 56 * k)
+    const tip = tri + (many ? 42 * k : 74 * k)
+    const out = tip + (many ? 8 * q : 23 * k)
     L.cells.push({bus, xm, tri, tip, out, half: (many ? 36 : 42) * k})
-    x = out + 48 * q
+    x = out + 44 * q
   }
   L.inner = many ? Math.max(width, L.cells[L.cells.length - 1].out + 70 * q) : width
 

@@ -87,9 +87,9 @@ function drawGauges(checks) {
   keyed(plumb, checks.map(c => c.key), makeGauge, gauges)
   if (!plumb.clientWidth) return
   const scale = px('--t-1') / 14
-  const dense = checks.length > 13 && innerHeight < 800
+  const dense = checks.length * (scale > 1.1 ? 51 : 37) > innerHeight - (scale > 1.1 ? 310 : 240)
   setClass(box, 'dense', dense)
-  const W = plumb.clientWidth - 84 * scale, z = px2(box, '--gut') + .5, H = scale > 1.1 ? 20 : dense ? 12 : 15, mid = H / 2
+  const W = plumb.clientWidth - 84 * scale, z = px2(box, '--gut') + .5, H = scale > 1.1 ? (dense ? 16 : 20) : dense ? 12 : 15, mid = H / 2
   for (const c of checks) {
     const item = gauges.get(c.key)
     setText(item.t, c.title); setText(item.w, c.status)

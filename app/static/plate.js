@@ -33,7 +33,7 @@ export function mount(theSheet) {
   document.querySelector('.work').append(box)
 }
 
-const pair = (name, ...children) => [el('dt', {text: name}), el('dd', {}, ...children)]
+const pair = (name, ...children) => [el('div', {}, el('dt', {text: name}), el('dd', {}, ...children))]
 
 export function update(state) {
   const p = state.plate, s = state.stage

@@ -54,8 +54,10 @@ function draw(L, s) {
   const ground = (x, y) => p.line(`M${x - 9} ${y}h18M${x - 5.5} ${y + 4}h11M${x - 2} ${y + 8}h4`)
   const arrow = (x, y, dir) => p.path(`M${x + 5 * dir} ${y}l${-10 * dir} -4.2v8.4z`, {class: 'tip'})
   const arrowUp = (x, y, up) => p.path(`M${x} ${y}l-4.2 ${up ? 10 : -10}h8.4z`, {class: 'tip'})
+  // under half a picoampere is the arithmetic's own grain
+  const still = i => Math.abs(i) < 5e-13
   const current = (x, y, i, anchor = 'middle') =>
-    p.text(x, y, engineering(Math.abs(i), 'A'), {class: 'soft halo', 'text-anchor': anchor})
+    p.text(x, y, still(i) ? `0${THIN}A` : engineering(Math.abs(i), 'A'), {class: 'soft halo', 'text-anchor': anchor})
   const part = (key, x, y, text, label, how = 'above') => spots.push({key, x, y, text, label, how})
 
   // the legs: each row's strip runs on into its resistor
@@ -71,7 +73,7 @@ function draw(L, s) {
       part(`${r.c}/${r.node}/${r.source}`, X.r, r.y, text, `resistor, ${r.source}`)
     }
     if (out) p.text(X.text, r.y - 6 * k, 'open', {class: 'soft', 'text-anchor': 'middle'})
-    else { current(X.text, r.y - 6 * k, i); arrow(X.arrow, r.y, i >= 0 ? 1 : -1) }
+    else { current(X.text, r.y - 6 * k, i); if (!still(i)) arrow(X.arrow, r.y, i >= 0 ? 1 : -1) }
   }
 
   s.cells.forEach((data, c) => drawCell(c, data))
@@ -109,7 +111,7 @@ function draw(L, s) {
       if (!from) continue
       const before = L.cells[from[1] - 1]
       const x0 = before.out, to = node === 'minus' ? xm : bus
-      const xr = x0 + 26 * L.q, target = node === 'minus' ? ym : yp
+      const xr = x0 + 24 * L.q, target = node === 'minus' ? ym : yp
       p.line(`M${x0} ${before.mid}H${to}V${target}`)
       body(xr, before.mid, 18 * k)
       part(`${c}/${node}/${source}`, xr, before.mid, text, `resistor, ${source} to cell ${c + 1}`)
@@ -162,8 +164,8 @@ function draw(L, s) {
     const w = tip - tri, rx = tri + w * .35, ry = half * .65
     if (last) {
       p.line(`M${rx} ${mid - ry}V${mid - half - k}M${rx - 7} ${mid - half - k}h14M${rx} ${mid + ry}V${mid + half + 4 * k}M${rx - 7} ${mid + half + 4 * k}h14`)
-      p.text(rx + 12, mid - half + 6 * k, `${signed(s.supply[0], 2)}${THIN}V`, {class: 'halo'})
-      p.text(rx + 12, mid + half + 8 * k, `${signed(s.supply[1], 2)}${THIN}V`, {class: 'halo'})
+      if (!L.many) p.text(rx + 12, mid - half + 6 * k, `${signed(s.supply[0], 2)}${THIN}V`, {class: 'halo'})
+      if (!L.many) p.text(rx + 12, mid + half + 8 * k, `${signed(s.supply[1], 2)}${THIN}V`, {class: 'halo'})
     }
     if (L.many) p.text(tri + w * .52, mid + 5 * k, String(c + 1), {class: 'soft', 'text-anchor': 'middle'})
 
@@ -173,22 +175,25 @@ function draw(L, s) {
       p.line(`M${xm} ${yf}H${out}V${mid}`)
       body(xr, yf, wide)
       p.dot(out, mid)
-      part(`${c}/feedback`, xr, yf, data.feedback, L.many ? `resistor, feedback of cell ${c + 1}` : 'resistor, feedback', 'below')
+      const over = L.many && !cell.onTop && !data.cf
+      part(`${c}/feedback`, L.many && !cell.onTop && data.cf ? xr + 18 : xr, yf, data.feedback, L.many ? `resistor, feedback of cell ${c + 1}` : 'resistor, feedback', over ? 'above' : 'below')
       if (data.cf) {
         const a = xm + Math.min(20 * k, (out - xm) * .14), b = out - Math.min(20 * k, (out - xm) * .14)
         p.line(`M${a} ${yf}V${yc}H${xr - 3}M${xr + 3} ${yc}H${b}V${yf}`)
         p.path(`M${xr - 3} ${yc - 8 * k}v${16 * k}M${xr + 3} ${yc - 8 * k}v${16 * k}`, {class: 'wire heavy'})
         p.dot(a, yf); p.dot(b, yf)
       }
-      part(`${c}/cf`, xr + 9, yc - 9 * k, data.cf, `capacitor across the feedback of cell ${c + 1}, farads`, 'right')
-      arrowUp(out, mid - (L.many ? 26 : 50) * k + (data.ifb > 0 ? 5 : -5), data.ifb <= 0)
-      current(out + 8, mid - (L.many ? 36 : 46) * k, data.ifb, 'start')
+      part(`${c}/cf`, data.cf ? xr + 9 : xr + wide + 4, data.cf ? yc - 9 * k : yf - 9 * k, data.cf, `capacitor across the feedback of cell ${c + 1}, farads`, 'right')
+      const lift = clip && last ? 18 * k : 0
+      if (!still(data.ifb)) arrowUp(out, mid - (L.many ? 26 : 50) * k - lift + (data.ifb > 0 ? 5 : -5), data.ifb <= 0)
+      current(out + 8, mid - (L.many ? 36 : 46) * k - lift, data.ifb, 'start')
     }
 
     // node voltages
     const virtual = cell.plusGround === 'tied' && !rowsP.length && !clip && data.feedback !== null
     const red = clip ? ' red' : ''
-    p.text(xm + 5 * k, ym - 6 * k, virtual && !L.many ? 'virtual ground' : `${fixed(data.vm)}${THIN}V`, {class: 'node halo' + red})
+    if (virtual && !L.many) { p.text(xm + 5 * k, ym - 21 * k, 'virtual', {class: 'node halo'}); p.text(xm + 5 * k, ym - 6 * k, 'ground', {class: 'node halo'}) }
+    else p.text(xm + (L.many ? 3 : 5) * k, ym - 6 * k, `${fixed(data.vm)}${THIN}V`, {class: 'node halo' + red})
     if (rowsP.length || cell.plusGround === 'down') p.text(L.many ? xm + 5 * k : xm - 6 * k, yp + 17 * k, `${fixed(data.vp)}${THIN}V`, {class: 'node halo'})
     if (!last) {
       p.line(`M${tip} ${mid}H${out}`)
@@ -212,8 +217,7 @@ function draw(L, s) {
     if (s.load.resistance) current(xl + 13 * k, y0 + 30 * k, s.load.i, 'start')
   }
   p.put('circle', {cx: W - 5, cy: mid, r: 4, class: 'terminal'})
-  const big = p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many ? ' less' : '')}, fixed(s.output))
-  big.__plain = true
+  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many || fixed(s.output).length > 6 ? ' less' : '')}, fixed(s.output))
   p.text(W, mid - 11 * k, 'V', {'text-anchor': 'end', class: 'halo'})
   if (clip) p.text(W, mid - (L.many ? 33 : 40) * k, `${s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped}`, {'text-anchor': 'end', class: 'node red halo'})
   p.end()

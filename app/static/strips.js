@@ -20,15 +20,15 @@ export function mount(theSheet) {
   box = document.getElementById('strips')
   mini = document.getElementById('mini')
   list = el('div', {class: 'list'})
-  follow = el('select', {class: 'blank', 'aria-label': 'When a wanted weight changes, its resistor', onchange: () => sheet.act({do: 'follow', follow: follow.value})},
-    el('option', {value: 'nearest'}), el('option', {value: 'exact', text: 'resistors: exact'}), el('option', {value: 'kept', text: 'resistors: as fitted'}))
+  follow = el('select', {class: 'blank', 'aria-label': 'Resistors follow a wanted weight', title: 'When a wanted weight changes, its resistors take the nearest value of the series, the exact value, or stay as fitted', onchange: () => sheet.act({do: 'follow', follow: follow.value})},
+    el('option', {value: 'nearest'}), el('option', {value: 'exact', text: 'exact values'}), el('option', {value: 'kept', text: 'as fitted'}))
   const reorder = el('button', {class: 'act', text: 'Reorder', 'aria-pressed': 'false', onclick: () => {
     reordering = !reordering
     setAttr(reorder, 'aria-pressed', String(reordering))
     setText(reorder, reordering ? 'Done' : 'Reorder')
     setClass(work, 'reordering', reordering)
   }})
-  foot = el('div', {class: 'foot'}, el('button', {class: 'act', text: 'Add a signal', onclick: () => sheet.act({do: 'add'})}), reorder, follow)
+  foot = el('div', {class: 'foot'}, el('button', {class: 'act', text: 'Add a signal', onclick: () => sheet.act({do: 'add'})}), reorder, el('label', {class: 'follow'}, el('span', {class: 'soft', text: 'resistors '}), follow))
   box.append(
     el('div', {class: 'cols', 'aria-hidden': 'true'}, el('span', {text: 'signal'}), el('span', {text: 'value, over its range'}), el('span'),
       el('span', {class: 'r two-lines'}, 'wanted', el('br'), el('em', {text: 'made'})), el('span', {class: 'r two-lines'}, 'share of', el('br'), 'the output'), el('span')),
@@ -134,7 +134,7 @@ export function update(state) {
   const n = shown.rows.length
   fit(n)
   writeSum(shown)
-  setText(follow.options[0], `resistors: nearest ${shown.series}`)
+  setText(follow.options[0], `nearest ${shown.series}`)
   if (follow.value !== shown.follow) follow.value = shown.follow
   if (!box.clientWidth) { drawMini(shown); return }
   keyed(list, shown.rows.map(keyOf), key => {
@@ -160,8 +160,8 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   setClass(node, 'beyond', beyond)
   setAttr(item.value.node, 'title', beyond ? `outside its range, ${fixed(r.low)} to ${fixed(r.high)} V` : null)
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u2009)/, '')}` : '')
-  item.want.set(r.reference ? `${signed(shown.offset)}` : weightText(r))
-  setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}` : signed(r.made, 4))
+  item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
+  setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : signed(r.made, 4))
   if (W) {
     const zero = W * .24, room = W - zero - 2, x = r.share / reach * room * (r.share < 0 ? Math.min(1, zero / room * .95) : 1)
     setAttr(item.zero, 'd', `M${zero} 0V${row}`)
@@ -216,6 +216,8 @@ function writeSum(shown) {
   if (shown.offset) terms.push(el('span', {class: 'term'}, el('span', {class: 'op', text: shown.offset < 0 ? '\u2212' : '+'}), `${fixed(Math.abs(shown.offset), 2)}${THIN}V`))
   sum.replaceChildren(el('i', {text: 'out'}), el('span', {class: 'op', text: '='}), ...terms.flatMap(t => [t, ' ']))
   setClass(sum, 'long', order.length > 6)
+  const longest = Math.max(...order.map(t => t[0].length), 9)
+  document.documentElement.style.setProperty('--names', `calc(${Math.min(16, longest)} * .52em + 30px)`)
 }
 
 const plainWeight = w => {

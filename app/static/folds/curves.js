@@ -86,7 +86,7 @@ export function mount(node, sheet) {
       p.put('rect', {x: x + wide * .14, y: Math.min(from, to), width: wide * .72, height: Math.max(1.5, Math.abs(from - to)), fill: s.colour, class: 'move'})
       p.path(`M${x + wide * .14} ${to}H${x + wide * (i < parts.length - 1 ? 1.86 : 1)}`, {class: 'axis inked'})
       if (wide > 32 * k) p.text(x + wide / 2, Math.min(Math.max(from, to) + 15 * k, y1 + 14 * k), signed(part.volts, 2), {'text-anchor': 'middle', class: 'halo'})
-      if (part.style !== null && part.name.length * 6.6 * k > wide + 4) p.path(markerAttributes(s, x + wide / 2, y1 + 12 * k).d, {...markerAttributes(s, x + wide / 2, y1 + 12 * k)})
+      if (part.style !== null && part.name.length * 6.6 * k > wide - 1) p.path(markerAttributes(s, x + wide / 2, y1 + 12 * k).d, {...markerAttributes(s, x + wide / 2, y1 + 12 * k)})
       else p.text(x + wide / 2, y1 + 18 * k, part.style === null ? 'ref' : part.name, {'text-anchor': 'middle', class: 'soft'})
       sum += part.volts
     })
@@ -99,7 +99,7 @@ export function mount(node, sheet) {
 
     // headroom
     p.text(c[0], 12 * k, narrow ? 'Headroom' : 'Headroom, all corners', {class: 'cap'})
-    beams(p, shown.beams, c, Y, clamp, y1, k)
+    beams(p, shown.beams, c, Y, clamp, y1, k, shown.high)
 
     // the present output, tied to the ruler
     const red = shown.clipped !== 'no'
@@ -160,7 +160,7 @@ export function mount(node, sheet) {
     key.hidden = n > 12 || b[1] - b[0] < 220
   }
 
-  function beams(p, list, [c0, c1], Y, clamp, y1, k) {
+  function beams(p, list, [c0, c1], Y, clamp, y1, k, shownHigh) {
     const n = list.length, step = (c1 - c0) / n
     list.forEach((beam, i) => {
       const x = c0 + step * (i + (n > 2 ? .3 : i === 0 ? .3 : .42))
@@ -175,12 +175,12 @@ export function mount(node, sheet) {
       p.put('circle', {cx: x, cy: clamp(beam.now), r: 4.2, class: 'now'})
       const close = Math.abs(clamp(beam.high) - clamp(beam.low)) < 20 * k
       if (n <= 2 || step > 58 * k) {
-        p.text(x + 13, clamp(beam.high) + (bad.high ? -5 : close ? -6 : 9), fixed(beam.high), {class: bad.high ? 'node red halo' : 'halo'})
+        p.text(x + 13, clamp(beam.high) + (beam.high > shownHigh ? 14 : bad.high ? -5 : close ? -6 : 9), fixed(beam.high), {class: bad.high ? 'node red halo' : 'halo'})
         if (!close || beam.high - beam.low > 5e-4) p.text(x + 13, clamp(beam.low) + (close ? 16 : bad.low ? 14 : 1), fixed(beam.low), {class: bad.low ? 'node red halo' : 'halo'})
         if (n <= 2 && Y(beam.limit_high) > 0) p.text(right ? x + 21 : x - 21, right && !bad.high ? Math.min(Y(beam.limit_high) + 5, clamp(beam.high) - 8) : Y(beam.limit_high) + 5, fixed(beam.limit_high), {'text-anchor': right ? 'start' : 'end', class: 'soft halo'})
       } else {
-        p.text(x, clamp(beam.high) - 6, fixed(beam.high, 2), {'text-anchor': 'middle', class: bad.high ? 'node red halo' : 'halo'})
-        p.text(x, clamp(beam.low) + 15, fixed(beam.low, 2), {'text-anchor': 'middle', class: bad.low ? 'node red halo' : 'halo'})
+        p.text(beam.high > shownHigh ? x + 24 : x, clamp(beam.high) + (beam.high > shownHigh ? 12 : -6), fixed(beam.high, 2), {'text-anchor': 'middle', class: bad.high ? 'node red halo' : 'halo'})
+        if (!close) p.text(x, clamp(beam.low) + 15, fixed(beam.low, 2), {'text-anchor': 'middle', class: bad.low ? 'node red halo' : 'halo'})
       }
       const label = n > 2 && step < 62 * k ? beam.label.replace('output', 'out').replace('inputs', 'in') : beam.label
       p.text(x, y1 + 18 * k, label, {'text-anchor': 'middle', class: 'soft'})

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from sumwright.engine.catalogue import find
 from sumwright.engine.stage import (
     Ambient,
     Cell,
@@ -18,40 +19,10 @@ from sumwright.engine.stage import (
 
 
 def op_amp() -> OpAmp:
-    """A generic JFET-input op amp; invented representative figures, of no maker's part."""
-    return OpAmp(
-        name="generic JFET input, 3 MHz",
-        open_loop_gain=2e5,
-        gain_bandwidth=3e6,
-        second_pole=8e6,
-        slew_rate=13e6,
-        input_resistance=1e12,
-        differential_capacitance=3e-12,
-        common_mode_capacitance=3e-12,
-        output_resistance=120.0,
-        offset_voltage=1e-3,
-        offset_drift=5e-6,
-        bias_current=2e-10,
-        offset_current=5e-11,
-        cmrr=2e4,
-        psrr=2e4,
-        noise_voltage=18e-9,
-        noise_voltage_corner=50.0,
-        noise_current=1e-14,
-        noise_current_corner=0.0,
-        dropout_high=1.5,
-        dropout_low=1.5,
-        dropout_resistance=20.0,
-        common_mode_high=1.0,
-        common_mode_low=1.0,
-        output_current=20e-3,
-        supply_least=8.0,
-        supply_most=36.0,
-        supply_current=1.4e-3,
-        thermal_resistance=None,
-        junction_most=None,
-        per_package=1,
-    )
+    """The generic JFET-input class of the list that comes with the project."""
+    entry = find("JFET input, 3 MHz")
+    assert entry is not None, "the list of op amps has lost the demonstration's class"
+    return entry.op_amp
 
 
 def design() -> Design:

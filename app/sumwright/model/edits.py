@@ -17,7 +17,7 @@ from typing import Any
 
 import numpy as np
 
-from sumwright.engine.arrangement import able, arrangement_of, exact_cells
+from sumwright.engine.arrangement import able, arrangement_of, exact_cells, wanted_weights
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import REFERENCE, Cell, Design, Leg, Reference, Signal, cell_name
 from sumwright.errors import CannotRealise, InvalidDesign, InvalidQuantity
@@ -258,13 +258,74 @@ def refit(old: Design, new: Design, follow: str, must: tuple[str, ...] = ()) -> 
             return replace(new, cells=_with_leg(old, new, must[0]))
         return replace(new, cells=_without(old.cells, gone))
     recipe = exact_cells(new, arrangement, feedback=old.cells[-1].feedback)
-    if follow != "exact":
-        recipe = _scaled(recipe, old.cells, new)
-    fitted = recipe if follow == "exact" else rounded(new, recipe)
-    keep = set() if follow == "exact" else _unchanged(old, new)
-    if follow == "kept":
-        keep = set(old.signal_names) | {REFERENCE}
+    if follow == "exact":
+        return replace(new, cells=_with_capacitors(recipe, old.cells))
+    keep = set(old.signal_names) | {REFERENCE} if follow == "kept" else _unchanged(old, new)
+    if len(recipe) == 1 and len(old.cells) == 1 and recipe[0].plus:
+        cell = _single(old, new, keep, follow)
+        return replace(new, cells=(cell,))
+    fitted = rounded(new, _scaled(recipe, old.cells, new))
     return replace(new, cells=tuple(_merged(a, b, keep, follow) for a, b in _paired(old.cells, fitted)))
+
+
+def _single(old: Design, new: Design, keep: set[str], follow: str) -> Cell:
+    """One op amp with legs on its + node, refitted so that legs that may stay do, and still weigh what they did.
+
+    A + leg of conductance g weighs `scale * g`, where scale = noise gain / (conductance
+    of the whole + node). The scale is kept at what the fitted legs have, and the ground
+    leg, which side it is on included, takes up the difference. Source: the node
+    equations of `nodes`, ideal op amp.
+    """
+    was = old.cells[0]
+    feedback = was.feedback or 1.0
+    series = {s.name: s.source_resistance for s in new.signals}
+    series[REFERENCE] = new.reference.source_resistance if new.reference else 0.0
+
+    def siemens(legs):
+        return sum(1.0 / (leg.resistance + series.get(leg.source, 0.0)) for leg in legs)
+
+    def ground(ohm):
+        return 1.0 / ohm if ohm else 0.0
+
+    node = siemens(was.plus) + ground(was.plus_ground)
+    gain = 1.0 + feedback * (siemens(was.minus) + ground(was.minus_ground))
+    scale = gain / node if was.plus and node > 0 else feedback
+    near = nearest_in_series(new)
+    kept = {leg.source: leg for leg in (*was.minus, *was.plus)}
+    minus, plus = [], []
+    for source, weight in wishes(new):
+        side, before = (minus, was.minus) if weight < 0 else (plus, was.plus)
+        if source in keep and any(leg.source == source for leg in before):
+            side.append(kept[source])
+            continue
+        per_weight = feedback if weight < 0 else scale
+        ohm = per_weight / abs(weight) - series[source]
+        if ohm <= 0:
+            raise CannotRealise(
+                f"The leg of '{source}' would need {ohm:.3g} Ω besides its source's {series[source]:g} Ω; "
+                "a larger feedback resistor makes room for it."
+            )
+        side.append(Leg(source, near(ohm)))
+    if follow == "kept":
+        return replace(was, minus=tuple(minus), plus=tuple(plus))
+    legs = siemens(plus)
+    bare = 1.0 + feedback * siemens(minus)  # noise gain without a ground leg on the - node
+    short = bare / scale - legs  # conductance that the + node lacks
+    limit = 1e-3 * legs
+    return replace(
+        was, minus=tuple(minus), plus=tuple(plus), plus_ground=near(1.0 / short) if short > limit else None,
+        minus_ground=near(feedback / (scale * legs - bare)) if short < -limit else None,
+    )  # fmt: skip
+
+
+def wishes(design: Design) -> list[tuple[str, float]]:
+    """Every weight to be made: the signals in order, then the reference's if an offset is wanted."""
+    return [(w.source, w.weight) for w in wanted_weights(design)]
+
+
+def _with_capacitors(recipe: tuple[Cell, ...], old: tuple[Cell, ...]) -> tuple[Cell, ...]:
+    """The recipe's cells with the capacitors that are fitted."""
+    return tuple(replace(b, feedback_capacitance=a.feedback_capacitance) for a, b in _paired(old, recipe))
 
 
 def _scaled(recipe: tuple[Cell, ...], old: tuple[Cell, ...], design: Design) -> tuple[Cell, ...]:

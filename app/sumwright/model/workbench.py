@@ -58,7 +58,8 @@ class Workbench(param.Parameterized):
         self._styles: dict[str, int] = {}
         design = edits.realised(design)
         choices = {name: getattr(design, name) for name in _DESIGN_FIELDS}
-        params.setdefault("on", design.signals[0].name)
+        widest = max(design.signals, key=lambda s: abs(s.weight) * (s.high - s.low))
+        params.setdefault("on", widest.name)
         super().__init__(**choices, **params)
 
     @param.depends(*_DESIGN_FIELDS, "unplugged", watch=True, on_init=True)

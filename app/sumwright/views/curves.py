@@ -190,7 +190,7 @@ def ruler(design, dc, head) -> tuple[float, float, list[float]]:
     step = nice_step(span / 6)
     top += 0.055 * span
     bottom -= 0.085 * span
-    unit = step / 4  # rounded outward so that they seldom change
+    unit = step / 10  # rounded outward so that they seldom change
     top, bottom = math.ceil(top / unit - 1e-9) * unit, math.floor(bottom / unit + 1e-9) * unit
     ticks = [round(k * step, 9) for k in range(math.ceil(bottom / step), math.floor(top / step) + 1)]
     return bottom, top, ticks

@@ -12,7 +12,8 @@ from .rows import rows
 
 def show(bench: Any) -> dict[str, Any]:
     """What the strips need, in the order of the rows."""
-    design, analysis = bench.design, bench.analysis
+    analysis = bench.analysis
+    design = analysis.design
     dc = analysis.dc
     known = {name: k for k, name in enumerate(analysis.design.signal_names)}
     shown, seen = [], set()
@@ -47,5 +48,24 @@ def show(bench: Any) -> dict[str, Any]:
     return {
         "rows": shown, "on": bench.on, "order": list(design.signal_names), "offset": design.target.offset,
         "offset_text": format_exact(design.target.offset), "follow": bench.follow, "series": design.resistor.series,
-        "sum": [[s.name, s.weight] for s in design.signals],
+        "sum": [[s.name, s.weight] for s in design.signals], "cable_out": _cable_out(bench.on, analysis),
     }  # fmt: skip
+
+
+def _cable_out(name: str, analysis: Any) -> dict[str, Any] | None:
+    """What becomes of every weight when the cable of the signal under the hand is out, or its source is dead."""
+    found = analysis.cable_out
+    if name not in found.names:
+        return None
+    k, dc = found.names.index(name), analysis.dc
+    rows = [
+        [s, float(dc.weights[i]), float(found.open_weights[k, i]), float(found.dead_weights[k, i])]
+        for i, s in enumerate(found.names)
+    ]
+    gains = analysis.net.noise_gains()
+    return {
+        "name": name,
+        "weights": rows,
+        "offset": [dc.offset, found.open_offset[k], found.dead_offset[k]],
+        "noise_gain": [gains[-1], found.open_noise_gain[k][-1], found.dead_noise_gain[k][-1]],
+    }
