@@ -160,7 +160,7 @@ export function mount(node, sheet) {
     const share = Math.round(100 * s.boards.draws / s.boards.wanted)
     progress.firstChild.style.width = `${Math.min(100, share)}%`
     setAttr(progress, 'aria-valuenow', Math.min(100, share))
-    setText(ran, `95${THIN}% of them from ${signed(s.boards.low * 1e3, 2)} to ${signed(s.boards.high * 1e3, 2)}${THIN}mV${s.holds ? '' : '; the first-order ±95 is not good here'}`)
+    setText(ran, `95${THIN}% of them from ${signed(s.boards.low * 1e3, 2)} to ${signed(s.boards.high * 1e3, 2)}${THIN}mV${s.holds ? '' : `; the first-order ±${mV(s.budget.expanded)} is not good to two figures here`}`)
     stop.disabled = !s.running
     setText(facts['known shift'], `${signed(s.budget.shift * 1e3, 2)}${THIN}mV`)
     setText(facts['95 %'], `±${mV(s.budget.expanded)}${THIN}mV`)

@@ -402,3 +402,51 @@ class _Recipe:
                         term = node[q][:, None] * g
                         drawn = term if drawn is None else drawn + term
         return load, drawn
+
+
+class Progress(NamedTuple):
+    """Boards drawn so far at one point, ready to be shown."""
+
+    statistics: MonteCarlo
+    counts: np.ndarray  # boards in each bin
+    wanted: int  # boards asked for
+
+
+def in_steps(design, unplugged, point: str, draws: int, seed: int, edges, first: int = 1 << 16):
+    """Draw boards step by step: a generator of `Progress`, returning the last; steps double.
+
+    Parameters
+    ----------
+    design : Design
+    unplugged : iterable of str
+    point : str
+        `present`, `highest` or `lowest`.
+    draws, seed : int
+    edges : (bins + 1,) array_like
+        Of the histogram [V], evenly spaced.
+    first : int, optional
+        Boards of the first step.
+    """
+    net = nodes.Network(design, unplugged)
+    stage = _Stage(design, net)
+    edges = np.asarray(edges, dtype=float)
+    errors = np.empty(draws)
+    counts = np.zeros(len(edges) - 1, dtype=int)
+    done, step = 0, max(BLOCK, first - first % BLOCK)
+    while True:
+        part = draw_boards(stage, min(step, draws - done), seed, points=(point,), first=done).errors[0]
+        errors[done : done + len(part)] = part
+        counts += np.histogram(part, len(counts), (edges[0], edges[-1]))[0]
+        done += len(part)
+        found = Progress(statistics(errors[:done], seed, design.target.accuracy), counts.copy(), draws)
+        if done >= draws:
+            return found
+        yield found
+        step *= 2
+
+
+class _Stage(NamedTuple):
+    """A design with its network, as `network_of` takes it."""
+
+    design: object
+    net: nodes.Network
