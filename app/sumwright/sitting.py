@@ -59,6 +59,7 @@ class Sitting:
         self.autosave: Autosave | None = None
         self._page: Any = lambda: None
         self._quiet = False
+        self.archived = False
         self._told = ""
         self._making = threading.Lock()
         self._spelled: dict[int, tuple[Step, str]] = {}
@@ -70,6 +71,7 @@ class Sitting:
                     raise InvalidNotebookFile(f"The link names the notebook {notebook[:40]!r}, which is none.")
                 found = desk.sheet(notebook, sheet)
                 self.workbench = self._workbench(found)
+                self.archived = desk.notebook(notebook).archived_at is not None
             except SumwrightError as error:
                 self.problem, found = (
                     f"{error} This is the demonstration; nothing you do here changes that notebook.",
@@ -140,10 +142,11 @@ class Sitting:
             may = self.desk.may("save")
         except NotAllowed:
             may = False
-        if may:
+        if may and not self.archived:
             self.autosave.changed(self._snapshot)
         elif (page := self._page()) is not None:
-            page.say_saved(state="reader", why="You look as a reader: what you move here is not kept.")
+            why = "This notebook is archived" if may else "You look as a reader"
+            page.say_saved(state="reader", why=f"{why}: what you move here is not kept.")
 
     def _save(self, snapshot: Snapshot, revision: int) -> tuple[int, str]:
         """In a thread of `Autosave`: write the sheet, or begin a notebook with it."""
