@@ -97,7 +97,7 @@ def _better(design, kind, factor):
         return f"a reference of ±{format_percent(down_figures(design.reference.tolerance * factor))}"
     if kind in ("CMRR", "PSRR"):
         ratio = amp.cmrr if kind == "CMRR" else amp.psrr
-        return f"an op amp of {20 * math.log10(ratio * worse):.0f} dB {kind}"
+        return f"an op amp of {math.ceil(20 * math.log10(ratio * worse) - 1e-9)} dB {kind}"
     figures = {
         "offset voltage": (amp.offset_voltage, "V"), "offset drift": (amp.offset_drift, "V/K"),
         "bias current": (amp.bias_current, "A"), "offset current": (amp.offset_current, "A"),

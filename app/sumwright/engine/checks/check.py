@@ -89,6 +89,14 @@ def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + "." if text and text[-1] != "." else text
 
 
+def spoken(part: str) -> str:
+    """A part's name in a sentence: what is not a leg is called a resistor."""
+    if part.endswith(" leg") or " leg, cell" in part:
+        return part
+    head, comma, where = part.partition(", ")
+    return f"{head} resistor{comma}{where}"
+
+
 def of_cell(design: Design, k: int) -> tuple[str, str]:
     """What key and title of a check carry for cell `k`: nothing where there is one cell."""
     if len(design.cells) == 1:

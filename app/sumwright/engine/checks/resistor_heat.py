@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from sumwright.quantity import format_quantity
 
-from .check import Check, choices, judged, unknown, up
+from .check import Check, choices, judged, spoken, unknown, up
 
 FOLLOWS_VALUES = False
 
@@ -23,7 +23,7 @@ def checks(analysis) -> tuple[Check, ...]:
         judged(
             "resistor_heat", "Resistor heat", "W", hot.dissipation_most, hot.rating, hot.rating - hot.dissipation_most,
             hot.rating,
-            f"The {hot.name} takes {format_quantity(hot.dissipation_most, 'W')} at worst; rated "
+            f"The {spoken(hot.name)} takes {format_quantity(hot.dissipation_most, 'W')} at worst; rated "
             f"{format_quantity(hot.rating, 'W')} at {design.ambient.high:g} °C.",
             lambda goal: _cure(design, hot, goal),
         ),
@@ -38,6 +38,8 @@ def _cure(design, hot, goal):
     need = hot.dissipation_most / derating / (0.9 if goal else 1.0)
     rating = next((r for r in RATINGS if r >= need), None)
     return choices(
-        f"a {rating:g} W part for the {hot.name}" if rating else f"several parts in series for the {hot.name}",
+        f"a {rating:g} W part for the {spoken(hot.name)}"
+        if rating
+        else f"several parts in series for the {spoken(hot.name)}",
         f"every resistor × {up(hot.dissipation_most / (hot.rating - goal)):.2f}",
     )

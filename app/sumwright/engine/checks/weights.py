@@ -10,7 +10,7 @@ from __future__ import annotations
 from sumwright.engine.stage import REFERENCE
 from sumwright.quantity import format_fixed, format_percent, format_resistor
 
-from .check import Check, choices, judged, unknown
+from .check import Check, choices, judged, spoken, unknown
 
 FOLLOWS_VALUES = False
 KEY, TITLE = "weights", "Weights"
@@ -64,7 +64,11 @@ def _cure(analysis, name, made, wanted):
         )
     new = _leg(analysis, legs[0], wanted / made)
     part = analysis.net.parts[legs[0]]
-    own = "" if new is None else f"the {part.name} from {format_resistor(part.resistance)} to {format_resistor(new)}"
+    own = (
+        ""
+        if new is None
+        else f"the {spoken(part.name)} from {format_resistor(part.resistance)} to {format_resistor(new)}"
+    )
     return choices(own, "a closer set under Choices")
 
 
