@@ -1,0 +1,37 @@
+"""A person's note as HTML that cannot do anything: Markdown without HTML in it, links to http and https alone."""
+
+from __future__ import annotations
+
+from functools import cache
+
+import nh3
+from markdown_it import MarkdownIt
+
+# CommonMark with tables and struck-out text. Pictures are left out: one from elsewhere tells its server who reads.
+_TAGS = {
+    "p", "br", "hr", "em", "strong", "s", "code", "pre", "blockquote", "ul", "ol", "li", "a", "h1", "h2", "h3", "h4",
+    "h5", "h6", "table", "thead", "tbody", "tr", "th", "td",
+}  # fmt: skip
+
+
+@cache
+def _reader() -> MarkdownIt:
+    return (
+        MarkdownIt("commonmark", {"html": False, "linkify": False}).enable(["table", "strikethrough"]).disable("image")
+    )
+
+
+def note_html(text: str) -> str:
+    """The note as HTML for the page.
+
+    Raw HTML in it is shown as it was typed. What the Markdown reader lets through is cleaned once more by a list of
+    what is allowed, so that a fault in one of the two is not enough.
+    """
+    return nh3.clean(
+        _reader().render(text),
+        tags=_TAGS,
+        attributes={"a": {"href"}, "ol": {"start"}, "th": set(), "td": set()},
+        url_schemes={"http", "https"},
+        link_rel="noopener noreferrer nofollow",
+        set_tag_attribute_values={"a": {"target": "_blank"}},
+    )
