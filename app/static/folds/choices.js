@@ -12,6 +12,10 @@ const OUTLINE = {
   disc: 'M2 7a5 5 0 1 0 10 0a5 5 0 1 0 -10 0z', square: 'M2.5 2.5h9v9h-9z', diamond: 'M7 1l6 6l-6 6l-6 -6z',
   up: 'M7 1.5l6 10.5h-12z', down: 'M7 12.5l6 -10.5h-12z', cross: 'M7 1v12M1 7h12',
 }
+const MERITS = {
+  'least weight error': 'best', 'fewest different values': 'fewest values', 'least noise': 'quietest', 'kindest to the sources': 'kindest',
+  'lifted for the single supply': 'one supply',
+}
 const AXIS_WORDS = {parts: 'parts', noise: 'noise', band: 'bandwidth'}
 const PANE_WORDS = {preview: 'Preview', parts: 'Parts list', drawer: 'Drawer', trim: 'Trim', spans: 'Spans'}
 
@@ -79,7 +83,7 @@ export function mount(node, sheet) {
     setAttr(outline, 'd', OUTLINE[SHAPES[row.arrangement] ?? 'cross'])
     setAttr(outline, 'fill', row.paired ? 'var(--paper)' : 'var(--ink)')
     setText(item.name, (row.arrangement === 'own' ? 'your own' : row.arrangement) + (row.paired ? ', paired' : ''))
-    setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + row.merits[0] : ''))
+    setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + (MERITS[row.merits[0]] ?? row.merits[0]) : ''))
     setAttr(item.merit, 'title', row.merits.join(', ') || null)
     const texts = [
       percent(row.error), row.offset === null ? '–' : plus(row.offset), String(row.resistors), String(row.op_amps), fixed(row.noise_gain, 2),

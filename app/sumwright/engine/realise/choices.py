@@ -54,6 +54,7 @@ class Choice:
     different_values: int
     least_input_resistance: float  # ohm, the least that any signal's source sees
     noise_density: float  # V/sqrt(Hz) at the output, white part
+    slowest_gain: float = 1.0  # largest noise gain of any cell: gain-bandwidth over it is about the bandwidth
     inner_gain: float = 1.0  # V/V, size of the gain from the first cell's output to the stage's; 1 with one cell
     parts: tuple[Pair, ...] = ()
     merits: tuple[str, ...] = ()  # why it is shown
@@ -61,7 +62,7 @@ class Choice:
     def respects(self) -> tuple[float, ...]:
         """What is compared, less is better; rounded to what a person would call the same."""
         return (
-            float(f"{self.worst_weight_error:.3g}"),
+            float(f"{self.worst_weight_error:.2g}"),
             self.resistor_count,
             self.op_amp_count,
             self.different_values,
@@ -129,6 +130,7 @@ def assess(design: Design, arrangement: str, cells: tuple[Cell, ...], parts: tup
         different_values=len(different),
         least_input_resistance=min(inputs.values(), default=math.inf),
         noise_density=density,
+        slowest_gain=max(gains),
         inner_gain=abs(inner),
         parts=parts,
     )
@@ -209,7 +211,7 @@ def best_choices(
             every[cells] = assess(design, arrangement, cells, parts.get(cells, ()))
     if not every:
         return []
-    ranked = sorted(every.values(), key=lambda c: (*_rank(c), *c.respects()[4:]))
+    ranked = sorted(every.values(), key=lambda c: (*rank(c), *c.respects()[4:]))
     best = min(c.worst_weight_error for c in ranked if not c.parts or not any(not r.parts for r in ranked))
     # Past the parts' own tolerance a worse set is a worse board; within three times the best it is still in play.
     ranked = [c for c in ranked if c.worst_weight_error <= max(3.0 * best, design.resistor.tolerance)]
@@ -232,7 +234,7 @@ def best_choices(
     return [_with_merits(ranked[k], kept[k]) for k in sorted(kept)]
 
 
-def _rank(c: Choice):
+def rank(c: Choice):
     usual = sum(abs(math.log(r / USUAL_LEG)) for r in resistors_of(c.cells))
     return (c.worst_weight_error, c.resistor_count, c.op_amp_count, c.different_values, round(usual, 6))
 
@@ -313,7 +315,7 @@ def realise(
     choices: list[Choice] = []
     bounds, proved = {}, {}
     for k, name in enumerate(names):
-        again = arrangement is None and _is_another(design, name)
+        again = arrangement is None and is_another(design, name)
 
         def share(done, k=k):
             if watch is not None:
@@ -342,7 +344,7 @@ def realise(
         bounds[name], proved[name] = outcome.bound, outcome.whole
     if not choices:
         raise CannotRealise(" ".join(notes) or "No set of values was found.", able(design))
-    choices.sort(key=_rank)
+    choices.sort(key=rank)
     return Realisation(tuple(choices), bounds, proved, tuple(notes))
 
 
@@ -371,7 +373,7 @@ def _wide_search(design, arrangement, values, least_input, seconds, watch) -> Ou
     return Outcome(found, outcome.bound, outcome.whole)
 
 
-def _is_another(design: Design, arrangement: str) -> bool:
+def is_another(design: Design, arrangement: str) -> bool:
     """Whether the arrangement has the cells of a plainer one, which is searched already: only its best is worth a line."""
     signs = {w.weight > 0 for w in wanted_weights(design)}
     return (arrangement == "two-stage" and len(signs) == 1) or (arrangement == "mixed-sign" and signs == {True})
