@@ -1,0 +1,216 @@
+"""Papers of the bench: the bring-up sheet with blanks to fill in, and the calibration record of a board as measured.
+
+They are made from the documents of `sumwright plan --json` and `sumwright diagnose --json`,
+so that what is printed is what was computed.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from datetime import datetime
+from typing import Any
+
+from sumwright.engine.analysis import Analysis
+from sumwright.engine.cautions import cautions
+from sumwright.engine.stage import Design
+from sumwright.quantity import format_fixed, format_quantity, format_resistor
+
+from .axes import Scale
+from .document import about, equation, render
+from .drawing import INK, LINE, RAISED, RED, SOFT, Drawing
+from .schematic import SYMBOLS, schematic
+from .tables import Column, Table
+
+VERDICT_WORDS = ("in", "out", "undecided")
+
+
+def bring_up_sheet(
+    analysis: Analysis, plan: Mapping[str, Any] | Sequence[Mapping[str, Any]], *, symbols: str = "iec", author: str | None = None,
+    now: datetime | None = None,
+) -> str:  # fmt: skip
+    """The run plan as a sheet to be filled in by hand, HTML.
+
+    Parameters
+    ----------
+    analysis : Analysis
+    plan : mapping or sequence
+        The steps, or a document with them under `steps`; each has `number`, `apply`,
+        `probe`, `expect`, `low`, `high`, `unit`, `why`, `miss`.
+    """
+    steps = plan["steps"] if isinstance(plan, Mapping) else plan
+    design = analysis.design
+    return render(
+        "bring_up.html", "bring-up sheet", about(design, author, now), equation=equation(design),
+        schematic=schematic(design, analysis.dc, symbols=symbols).svg(), symbols=SYMBOLS[symbols],
+        cautions=cautions(analysis), steps=[_step(s) for s in steps],
+    )  # fmt: skip
+
+
+def _step(step: Mapping[str, Any]) -> dict[str, Any]:
+    unit = step["unit"]
+
+    def shown(value: float | None) -> str:
+        if value is None:
+            return ""
+        return format_fixed(value, unit) if unit == "V" else format_quantity(value, unit, 4)
+
+    return {
+        "number": step["number"], "apply": _applied(step["apply"]), "probe": step["probe"], "expect": shown(step["expect"]),
+        "low": shown(step["low"]), "high": shown(step["high"]), "why": step["why"], "miss": step["miss"],
+    }  # fmt: skip
+
+
+def _applied(volts: Mapping[str, float] | str | None) -> str:
+    if isinstance(volts, str):
+        return volts
+    live = {k: v for k, v in (volts or {}).items() if v}
+    return ", ".join(f"{k} {format_fixed(v, 'V')}" for k, v in live.items()) or "every signal at 0 V"
+
+
+def calibration_record(
+    design: Design, diagnosis: Mapping[str, Any], readings: Sequence[Mapping[str, float]], *, limits: Mapping[str, tuple[float, float]] | None = None,
+    board: str = "", meter: str = "", author: str | None = None, now: datetime | None = None,
+) -> str:  # fmt: skip
+    """A board's weights as measured, with their uncertainty and verdicts, HTML.
+
+    Parameters
+    ----------
+    design : Design
+    diagnosis : mapping
+        The document of `sumwright diagnose --json`.
+    readings : sequence of mapping
+        One a row: signals [V], `output` [V] and perhaps `uncertainty` [V].
+    limits : mapping, optional
+        By signal, the least and greatest weight that its parts allow.
+    board, meter : str, optional
+        Which board, and the meter's own statement (type, uncertainty, when calibrated); blanks to fill in if not given.
+    """
+    limits = limits or {}
+    fit, verdicts = diagnosis["fit"], diagnosis["verdicts"]
+    rows = []
+    for s in design.signals:
+        if s.name not in fit["weights"]:
+            continue
+        found = fit["weights"][s.name]
+        low, high = limits.get(s.name, (None, None))
+        rows.append(
+            (s.name, s.weight, low, high, found["value"], found["standard_uncertainty"], verdicts.get(s.name, ""))
+        )
+    offset = fit["offset"]
+    rows.append(("offset, V", design.target.offset, None, None, offset["value"], offset["standard_uncertainty"], ""))
+    weights = Table(
+        "fitted",
+        "Fitted weights",
+        _COLUMNS,
+        tuple(rows),
+        marked=frozenset(i for i, r in enumerate(rows) if r[-1] == "out"),
+    )
+    counts = {word: sum(v == word for v in verdicts.values()) for word in VERDICT_WORDS}
+    passed = counts["out"] == 0 and counts["undecided"] == 0
+    headline = "all in" if passed else f"{counts['out']} out" if counts["out"] else f"{counts['undecided']} undecided"
+    return render(
+        "calibration.html", "calibration record", about(design, author, now), board=board, meter=meter, passed=passed, headline=headline,
+        count=", ".join(f"{n} {word}" for word, n in counts.items()), statement=_statement(readings, meter), weights=weights,
+        fit_note=_fit_note(fit), chart=_chart(rows[:-1]).svg(), suspects=_suspects(diagnosis.get("suspects", ())),
+        next=_applied(diagnosis.get("next_reading")) if diagnosis.get("next_reading") else "", readings=_readings(design, readings),
+    )  # fmt: skip
+
+
+_COLUMNS = (
+    Column("signal"), Column("wanted", "", "fixed", 4, True), Column("parts allow, from", "", "fixed", 5, True), Column("to", "", "fixed", 5, True),
+    Column("measured", "", "fixed", 5, True), Column("u", "", "figures", 2), Column("verdict"),
+)  # fmt: skip
+
+
+def _statement(readings, meter: str) -> str:
+    stated = [r["uncertainty"] for r in readings if r.get("uncertainty")]
+    said = f"{len(readings)} readings. "
+    if stated:
+        low, high = min(stated), max(stated)
+        span = (
+            format_quantity(low, "V", 2)
+            if low == high
+            else f"{format_quantity(low, 'V', 2)} to {format_quantity(high, 'V', 2)}"
+        )
+        said += f"Standard uncertainty of a reading, as stated: {span}."
+    else:
+        said += (
+            "No uncertainty of the readings was stated; their scatter was estimated from the fit, and Student's t used."
+        )
+    return said + ("" if meter else " The meter's own statement is to be filled in above.")
+
+
+def _fit_note(fit) -> str:
+    chi, dof, p = fit.get("chi_squared"), fit.get("degrees_of_freedom"), fit.get("p_value")
+    if chi is None or not dof:
+        return "As many readings as unknowns: the fit cannot be tested."
+    said = f"Least squares: χ² = {chi:.3g} with {dof} degrees of freedom"
+    return said + (f", p = {p:.2g}." if p is not None else ".")
+
+
+def _suspects(suspects) -> Table | None:
+    rows = tuple(
+        (
+            s["fault"],
+            s["part"],
+            s["probability"],
+            None if s.get("estimate") is None else format_resistor(s["estimate"]),
+            s["explain"],
+        )
+        for s in suspects[:6]
+    )
+    if not rows or (rows[0][0] == "none" and rows[0][2] > 0.95):
+        return None
+    columns = (
+        Column("fault"),
+        Column("part"),
+        Column("probability", "", "percent", 1),
+        Column("estimate"),
+        Column("why"),
+    )
+    return Table("suspects", "Suspects", columns, rows)
+
+
+def _readings(design: Design, readings) -> Table:
+    names = [n for n in design.signal_names if any(n in r for r in readings)]
+    stated = any(r.get("uncertainty") for r in readings)
+    columns = [
+        Column("no", "", "fixed", 0),
+        *(Column(n, "V", "fixed", 4) for n in names),
+        Column("output", "V", "fixed", 5),
+    ]
+    if stated:
+        columns.append(Column("u", "V", "scaled", 2))
+    rows = [
+        (i, *(r.get(n, 0.0) for n in names), r["output"], *([r.get("uncertainty")] if stated else [])) for i, r in enumerate(readings, 1)
+    ]  # fmt: skip
+    return Table("readings", "Readings", tuple(columns), tuple(rows))
+
+
+def _chart(rows, width: float = 680.0) -> Drawing:
+    """Departures from the nominal weight within their limits, one row a signal."""
+    said = "; ".join(f"{r[0]} {format_fixed(r[4], '', 5, sign=True)} {r[6]}" for r in rows)
+    d = Drawing(width, max(1, len(rows)) * 26 + 10, f"Measured weights against their limits: {said}.")
+    x = Scale(-1.0, 1.0, 190.0, width - 90.0)
+    for i, (name, wanted, low, high, value, u, verdict) in enumerate(rows):
+        y = i * 26 + 16.0
+        middle = wanted if low is None else (low + high) / 2
+        half = 0.0 if low is None else (high - low) / 2
+        reach = max(half, abs(value - middle) + 2 * (u or 0.0), 1e-12) * 1.15
+        d.text(180, y + 5, name, anchor="end")
+        if half:
+            d.rect(x(-half / reach), y - 8, x(half / reach) - x(-half / reach), 16, fill=RAISED)
+            for side in (-1, 1):
+                d.line(x(side * half / reach), y - 9, x(side * half / reach), y + 9, width=1.2)
+        d.line(x(0), y - 5, x(0), y + 5, stroke=LINE, width=1)
+        at = (value - middle) / reach
+        colour = RED if verdict == "out" else INK
+        if u and math.isfinite(u):
+            d.line(x(at - 2 * u / reach), y, x(at + 2 * u / reach), y, stroke=colour, width=2)
+        d.dot(x(at), y, 4, fill=colour)
+        d.text(width - 80, y + 5, verdict, bold=verdict == "out", fill=RED if verdict == "out" else SOFT)
+    return d
+
+
+__all__ = ["bring_up_sheet", "calibration_record"]
