@@ -210,7 +210,7 @@ class Bench:
                 self.d_reference[i] = design.reference.tolerance / third
         # columns that can never move anything are not carried along
         moving = np.ones(p, dtype=bool)
-        for i, (what, at) in enumerate(rows, start=1):
+        for i, (what, _) in enumerate(rows, start=1):
             if what in ("bias", "difference") and not (self.bias[i].any() or self.difference[i].any()):
                 moving[i] = False
             if what == "reference" and not self.d_reference[i]:

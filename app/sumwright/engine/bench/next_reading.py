@@ -36,7 +36,7 @@ def candidates(design, rng) -> np.ndarray:
     n = len(low)
     rest = np.clip(0.0, low, high)  # as near ground as the range allows
     far = np.where(np.abs(high - rest) >= np.abs(low - rest), high, low)
-    rows = [rest]
+    rows: list = [rest]
     for target in (far, np.where(far == high, low, high), 0.5 * (rest + far), 0.2 * far + 0.8 * rest):
         for i in range(n):
             row = rest.copy()
@@ -56,9 +56,9 @@ def candidates(design, rng) -> np.ndarray:
         rows.append(np.where(rng.random(n) < 0.5, far, rest))
     for _ in range(16):
         rows.append(low + (high - low) * np.round(rng.random(n) * 20) / 20)
-    rows = np.array(rows)
-    _, first = np.unique(rows, axis=0, return_index=True)
-    return rows[np.sort(first)]
+    table = np.array(rows)
+    _, first = np.unique(table, axis=0, return_index=True)
+    return table[np.sort(first)]
 
 
 def next_reading(diagnosis: Diagnosis, meter, *, settings=None, seed=0) -> NextReading:

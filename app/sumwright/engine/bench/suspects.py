@@ -42,6 +42,7 @@ class Suspect(NamedTuple):
     part: str
     probability: float
     estimate: float | None  # ohm
+    estimate_uncertainty: float | None  # ohm, standard
     group: int
     explain: str
     tell: str  # the measurement that parts it from the rest of its group
@@ -275,7 +276,7 @@ class Diagnosis:
     def estimate(self, case: int) -> float | None:
         """The likeliest value [ohm] of the quantity the fault leaves unknown, or None."""
         value = self.evidence.trials[self.best_trial[case]].value
-        return None if np.isnan(value) else float(value)
+        return None if np.isnan(value) or not len(self.readings) else float(value)
 
     def groups(self) -> np.ndarray:
         """(cases,) group numbers, 1 for the group of the likeliest suspect.
@@ -332,13 +333,26 @@ class Diagnosis:
         square = (residual * np.linalg.solve(cov, residual[..., None])[..., 0]).sum(axis=1)
         return square < chi2.ppf(0.99, count)
 
-    def misfit(self, case: int) -> float:
-        """Largest |reading − prediction| of the case's best board, in standard deviations."""
+    def estimate_uncertainty(self, case: int) -> float | None:
+        """Standard uncertainty [ohm] of the estimate, from the posterior of its logarithm; None without one."""
+        at = self.best_trial[case]
+        best = self.evidence.trials[at]
+        if np.isnan(best.value) or not len(self.readings):
+            return None
+        e = self.evidence
+        mine = [i for i, t in enumerate(e.trials) if t.case == case and t.way == best.way]
+        x = np.log([e.trials[i].value for i in mine])
+        w = np.exp(e.log_mass[mine] + e.log_like[mine] - np.max(e.log_mass[mine] + e.log_like[mine]))
+        mean = np.average(x, weights=w)
+        return float(best.value * np.sqrt(np.average((x - mean) ** 2, weights=w)))
+
+    def misfits(self, cases) -> np.ndarray:
+        """Of each case's best board, the largest |reading − prediction| in standard deviations."""
         if not len(self.readings):
-            return 0.0
-        p = self._best_prediction([case])
+            return np.zeros(len(cases))
+        p = self._best_prediction(cases)
         spread = np.sqrt(p.own + np.square(p.columns).sum(axis=1) + self.meter**2)
-        return float(np.max(np.abs(self.readings - p.mean) / spread))
+        return np.max(np.abs(self.readings - p.mean) / spread, axis=1)
 
     def _best_prediction(self, cases) -> Prediction:
         trials = [self.evidence.trials[self.best_trial[c]] for c in cases]
