@@ -20,6 +20,7 @@ export class Figure {
     const wanted = [width, height, left, bottom, right, top, size].join()
     if (wanted === this.frame) return
     this.frame = wanted
+    this.slot.parentNode.style.height = `${Math.round(height)}px`
     this.model.setv({
       width: Math.round(width), height: Math.round(height), min_border_left: left, min_border_right: right,
       min_border_top: top, min_border_bottom: bottom,

@@ -14,7 +14,7 @@ import numpy as np
 
 from . import nodes
 from .budget import network_of
-from .response import _refine, response
+from .response import _bandwidths, _margins, _refine, response
 from .stage import Design, replace
 
 WANTED_MARGIN = 60.0  # degrees: under a tenth of overshoot, common practice
@@ -225,6 +225,42 @@ def with_cables(stage, frequencies, capacitances) -> Cabled:
         sol = nodes.solve(net, zero, s=s, internal=unit, opened=k, source_resistances=rs)
         loops.append(nodes.open_loop_gain(net.design, s) * (sol.minus[:, k, 0] - sol.plus[:, k, 0]))
     return Cabled(h.T, np.array(loops))
+
+
+class CabledMargins(NamedTuple):
+    """Per signal −3 dB [Hz], per cell phase margin [degrees]; None where there is none."""
+
+    bandwidths: tuple[float | None, ...]
+    phase_margins: tuple[float | None, ...]
+
+
+def cabled_margins(stage, capacitances) -> CabledMargins:
+    """What cables of the given capacitances [F] (signals,) leave of bandwidth and stability."""
+    net = network_of(stage)
+    amp = net.design.op_amp
+    f = np.geomspace(amp.gain_bandwidth / amp.open_loop_gain / 100, amp.gain_bandwidth * 100, 500)
+    cabled = with_cables(stage, f, capacitances)
+    dc = nodes.solve(net, np.eye(net.signal_count + 1)).output[-1, : net.signal_count]
+    bands = _bandwidths(f, cabled.gains, dc, lambda x, i: with_cables(stage, [x], capacitances).gains[i, 0])
+    margins = []
+    for k in range(net.cell_count):
+        found = _margins(f, cabled.loop_gains[k], lambda x, k=k: with_cables(stage, [x], capacitances).loop_gains[k, 0])
+        margins.append(found[1])
+    return CabledMargins(tuple(bands), tuple(margins))
+
+
+def cures(design: Design, wanted: float = WANTED_MARGIN):
+    """Every cure there is, found one after the other: a generator of the list so far, returning it."""
+    found: list[Cure] = []
+    for k in range(len(design.cells)):
+        cure = feedback_capacitor(design, k, wanted)
+        if cure is not None:
+            found.append(cure)
+            yield found
+    cure = isolating_resistor(design, wanted)
+    if cure is not None:
+        found.append(cure)
+    return found
 
 
 def crosstalk(stage, frequency: float) -> np.ndarray:
