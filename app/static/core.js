@@ -39,8 +39,9 @@ export const sheet = {
 function apply(frame, fields = new Set()) {
   const notes = settleLater(frame, fields)
   for (const [key, value] of Object.entries(frame)) {
-    if (!['seq', 'refusals', 'heard', 'note', 'folds', 'fold'].includes(key)) state[key] = value
+    if (!['seq', 'refusals', 'heard', 'note', 'folds', 'fold', 'live'].includes(key)) state[key] = value
   }
+  if (frame.live) enliven(frame.live)
   if (frame.fold) (state.shown ??= {})[frame.fold.key] = frame.fold
   draw(false)
   for (const one of settle(fields, frame.refusals ?? [])) if (one.field === 'sum' && state.open === 'new') folds.get('new').mounted?.refused(one.text)
@@ -48,6 +49,16 @@ function apply(frame, fields = new Set()) {
   if (frame.note) note(frame.note.text, 'server', {bad: frame.note.bad})
   for (const reply of frame.heard ?? []) heard(reply)
   notes()
+}
+
+// what moves with the values, put where it belongs
+function enliven({signals, stage}) {
+  state.signals.on = signals.on
+  state.signals.rows.forEach((row, i) => { row.value = signals.value[i]; row.made = signals.made[i]; row.share = signals.share[i] })
+  const {cells, load, ...rest} = stage
+  Object.assign(state.stage, rest)
+  state.stage.load.i = load
+  cells.forEach((cell, i) => Object.assign(state.stage.cells[i], cell))
 }
 
 // a sentence of the sheet's own stays until the next thing is done
@@ -129,7 +140,7 @@ async function turn(key) {
   if (!folds.has(key)) {
     const refused = el('p', {class: 'err refused', role: 'status'})
     const body = el('div', {})
-    const node = el('section', {class: 'fold', id: `f-${key}`, 'aria-label': known?.title || 'New sheet'}, refused, body)
+    const node = el('section', {class: 'fold', id: `f-${key}`, 'aria-label': known?.title || 'New sheet'}, el('h2', {class: 'vh', text: known?.title || 'New sheet'}), refused, body)
     folds.set(key, {node, refused})
     document.getElementById('folds').append(node)
     const module = await import(key === 'new' ? './new.js' : `./folds/${key}.js`)

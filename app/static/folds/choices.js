@@ -63,7 +63,7 @@ export function mount(node, sheet) {
     keyed(box, names, name => ({node: el('button', {text: words[name], onclick: () => act(name)})}))
     names.forEach((name, i) => {
       if (box === tabs) { setAttr(box.children[i], 'role', 'tab'); setAttr(box.children[i], 'aria-selected', String(name === on)) }
-      setAttr(box.children[i], 'aria-pressed', String(name === on))
+      else setAttr(box.children[i], 'aria-pressed', String(name === on))
     })
   }
 
