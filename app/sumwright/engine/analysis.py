@@ -49,6 +49,9 @@ class Analysis:
             for name in _OF_THE_STAGE:
                 if name in forerunner.__dict__:
                     self.__dict__[name] = forerunner.__dict__[name]
+            kept = forerunner.net.__dict__.get("_kept")
+            if kept is not None:
+                self.net.__dict__["_kept"] = kept
 
     def _same_stage(self, other: Analysis) -> bool:
         if self.unplugged != other.unplugged:

@@ -201,17 +201,22 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
     )  # fmt: skip
 
 
+def kept_of(net: Network) -> dict:
+    """What is worked out once for a network, whatever its signals do; an analysis hands it on."""
+    return net.__dict__.setdefault("_kept", {})
+
+
 def linear_space(net: Network) -> StateSpace:
     """`state_space` with every op amp linear, kept with the network."""
-    known = net.__dict__.get("_linear_space")
-    if known is None:
-        known = net.__dict__["_linear_space"] = state_space(net)
-    return known
+    kept = kept_of(net)
+    if "linear" not in kept:
+        kept["linear"] = state_space(net)
+    return kept["linear"]
 
 
 def poles(net: Network) -> np.ndarray:
     """Poles of the closed stage [rad/s], complex, every op amp linear."""
-    known = net.__dict__.get("_poles")
-    if known is None:
-        known = net.__dict__["_poles"] = np.linalg.eigvals(linear_space(net).a).astype(complex)
-    return known
+    kept = kept_of(net)
+    if "poles" not in kept:
+        kept["poles"] = np.linalg.eigvals(linear_space(net).a).astype(complex)
+    return kept["poles"]

@@ -22,7 +22,7 @@ import numpy as np
 
 from . import nodes
 from .budget import network_of
-from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, state_space
+from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, kept_of, poles, state_space
 from .waves import Wave, pieces, sample
 
 MOST_EVENTS = 3000
@@ -137,7 +137,7 @@ class _Run:
             np.array([p.phasor if p.omega == om else 0.0 for p in sources] + [0.0] * (1 + self.cells))
             for om in self.sines
         ]
-        self.cache: dict[tuple[int, ...], _Mode] = {}
+        self.cache: dict[tuple[int, ...], _Mode] = kept_of(net).setdefault(("modes", limits), {})
         self.segments: list[_Segment] = []
 
     def mode(self, key):
@@ -508,13 +508,10 @@ def step(stage, signal: str, size: float, *, start: float | None = None, duratio
     low, high = net.values.copy(), net.values.copy()
     low[i], high[i] = at, at + size
     limits = nodes.nominal_limits(net.design)
-    initial, final = (
-        float(nodes.solve_clipped(net, v, limits=limits).solution.output[-1, 0]) for v in (low, high)
-    )  # fmt: skip
+    both = nodes.solve_clipped(net, np.stack([low, high]), limits=limits).solution.output
+    initial, final = float(both[0, -1, 0]), float(both[1, -1, 0])
     change = final - initial
     if duration is None:
-        from .statespace import poles
-
         slowest = np.abs(poles(net).real).min(initial=1e12)
         duration = 14.0 / max(slowest, 1e-3) + 1.5 * abs(change) / net.design.op_amp.slew_rate
     waves = {signal: Wave("step", offset=at, amplitude=size)}
@@ -565,11 +562,10 @@ def _settled(run, t, rel, initial, change, band):
         return 0.0
     lo, hi = t[last[-1]], t[last[-1] + 1]
     seg = next(s for s in run.segments if s.start <= lo <= s.end and s.end > s.start and hi <= s.end + 1e-18)
-    for _ in range(8):
-        at = np.linspace(lo, hi, 17)
+    for _ in range(4):
+        at = lo + (hi - lo) * _FRACTIONS
         y = (seg.watch(at - seg.start)[run.cells - 1] - initial) / change
         out = np.flatnonzero(np.abs(y - 1.0) > band)
-        if len(out) == 0:
-            break
-        lo, hi = at[out[-1]], at[min(out[-1] + 1, 16)]
+        last = int(out[-1]) if len(out) else -1
+        lo, hi = (float(at[last]) if last >= 0 else lo), float(at[min(last + 1, len(at) - 1)])
     return float(hi)

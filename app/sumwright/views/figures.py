@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
 from bokeh.models import BoxZoomTool, CrosshairTool, Range1d, ResetTool, Span, WheelZoomTool
 from bokeh.plotting import figure
 
@@ -63,6 +64,8 @@ def _sizes_kept(source, data):
 def _same(a, b):
     if a is b:
         return True
+    if isinstance(a, np.ndarray) and isinstance(b, np.ndarray):
+        return np.array_equal(a, b)
     try:
         return len(a) == len(b) and all(
             (x is y) or (x == y if not hasattr(x, "shape") else x.shape == y.shape and (x == y).all())
