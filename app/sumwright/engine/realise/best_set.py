@@ -24,7 +24,7 @@ from sumwright.engine.stage import Cell, Design, Leg, cell_name
 from sumwright.errors import CannotRealise, SumwrightError
 
 KEPT = 80  # sets kept beside the best, for the choice between near equals
-MOST_LEGS = 4_000_000  # legs of one node's sets made at most before the search is called cut short
+MOST_LEGS = 2_000_000  # legs of one node's sets made at most before the search is called cut short
 BLOCK = 200_000  # combinations looked at in one step
 
 
@@ -47,11 +47,19 @@ class Task:
     """One search: what is wanted, from which values, until when, and the best so far."""
 
     def __init__(
-        self, design: Design, arrangement: str, values, least_input=None, seconds=8.0, watch: Watch | None = None
+        self,
+        design: Design,
+        arrangement: str,
+        values,
+        least_input=None,
+        seconds=8.0,
+        watch: Watch | None = None,
+        proof=True,
     ):
         self.wanted = check_able(design, arrangement)
         self.values = np.asarray(values, float)
         self.least_input = least_input or {}
+        self.proof = proof
         self.deadline = time.monotonic() + seconds
         self.watch = watch or (lambda share: None)
         self.usual = float(np.clip(USUAL_LEG, self.values[0], self.values[-1]))
@@ -120,7 +128,14 @@ class Pool:
 
 
 def search(
-    design: Design, arrangement: str, values, *, least_input=None, seconds=8.0, watch: Watch | None = None
+    design: Design,
+    arrangement: str,
+    values,
+    *,
+    least_input=None,
+    seconds=8.0,
+    watch: Watch | None = None,
+    proof: bool = True,
 ) -> Outcome:
     """The best sets of values for one arrangement.
 
@@ -137,6 +152,8 @@ def search(
         Time after which what is left is bounded instead of searched.
     watch : callable, optional
         Told the share done; raises `Cancelled` to stop.
+    proof : bool
+        False: good sets are enough, the search for what could still beat them is left out.
 
     Returns
     -------
@@ -147,7 +164,7 @@ def search(
     CannotRealise
         If the arrangement cannot make the signs.
     """
-    task = Task(design, arrangement, values, least_input, seconds, watch)
+    task = Task(design, arrangement, values, least_input, seconds, watch, proof)
     if arrangement in ("non-inverting", "mixed-sign") and any(w.weight > 0 for w in task.wanted):
         from sumwright.engine.realise.one_node import search_single
 

@@ -365,6 +365,7 @@ def _wide_search(design, arrangement, values, least_input, seconds, watch) -> Ou
                 half,
                 least_input=least_input,
                 seconds=0.15 * seconds,
+                proof=False,
                 watch=lambda s, k=k: watch(0.6 + 0.2 * (k + s)),
             )
         except CannotRealise:  # no value of this half is kind enough for a source: the whole range had one

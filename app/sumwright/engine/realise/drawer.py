@@ -293,7 +293,7 @@ def _single_below(task: Task, plus: Legs, minus: Legs, counts, limit: float):
 
     values = task.values
     sets, left_out = plus.every_set_below(limit, MOST_LEGS // 8 // len(plus))
-    rows, rows_left_out, _ = _every_row_below(task, minus, limit)
+    rows, rows_left_out = _every_row_below(task, minus, limit)
     keep = [i for i, index in enumerate(sets.index) if _enough(plus.resistors(index), counts)]
     sets = sets.take(np.array(keep, np.intp))
     whole = not (np.isfinite(left_out) or np.isfinite(rows_left_out))

@@ -12,6 +12,7 @@ over the stretches between them meets every best set.
 
 from __future__ import annotations
 
+import math
 from typing import NamedTuple
 
 import numpy as np
@@ -177,12 +178,11 @@ class Legs:
                 return np.empty((0, len(self)), np.intp), True
             lists.append(good[np.argsort(np.abs(scale / c[good] - 1.0), kind="stable")])
         whole = number <= most
-        while not whole:  # too many: keep the nearest of the longest lists
-            longest = max(range(len(lists)), key=lambda i: lists[i].size)
-            number = number // lists[longest].size * (lists[longest].size - 1)
-            lists[longest] = lists[longest][:-1]
-            if number <= most:
-                break
+        longest = max(part.size for part in lists)
+        while number > most:  # keep the nearest of the longest lists
+            longest -= 1
+            lists = [part[:longest] for part in lists]
+            number = math.prod(part.size for part in lists)
         return product(lists), whole
 
 
@@ -190,7 +190,14 @@ def product(lists) -> np.ndarray:
     """Every combination of one item from each list, a row each."""
     if not lists:
         return np.zeros((1, 0), np.intp)
-    return np.stack([g.ravel() for g in np.meshgrid(*lists, indexing="ij")], axis=1).astype(np.intp)
+    # By hand: meshgrid stops at 32 lists, a sheet may have 64 signals.
+    sizes = [len(part) for part in lists]
+    out = np.empty((math.prod(sizes), len(lists)), np.intp)
+    each = len(out)
+    for k, part in enumerate(lists):
+        each = each // max(sizes[k], 1)
+        out[:, k] = np.tile(np.repeat(part, each), len(out) // max(sizes[k] * each, 1))
+    return out
 
 
 class Ratios:

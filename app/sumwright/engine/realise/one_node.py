@@ -11,6 +11,7 @@ from sumwright.engine.realise.legs import Legs, Ratios, Sets, error_at
 from sumwright.engine.stage import Cell
 
 NO_GROUND, PLUS_GROUND, MINUS_GROUND = range(3)
+LIMITS = (1.001, 1.01, 1.05, 1.2, 1.5, 2.0, 4.0)
 EXACT = 1e-13  # an error of rounding in the arithmetic, not of the values
 
 
@@ -41,20 +42,29 @@ def search_single(task: Task) -> Outcome:
         found += [_cells(task, plus, minus, sets, rows, ratios, ground, *p) for p in pool.pick]
     best = min(p.best for p in pools.values())
 
-    # Whatever is better has both its sides' own bounds under the best: make them all.
-    bound, whole = best, True
-    if best > EXACT:
-        sets, left_out = plus.every_set_below(best, MOST_LEGS // len(plus))
-        rows, rows_left_out, rows_least = _every_row_below(task, minus, best)
-        sets_least = float(sets.bound.min()) if sets.bound.size else left_out
+    bound = max(float(rows.error.min()), float(sets.bound.min()))
+    if best <= EXACT or not task.proof:
+        return Outcome(found, min(best, bound), best <= bound + EXACT)
+    # Whatever errs less than a limit has both its sides' own bounds under it: make them all, for a limit that rises
+    # from what is surely out of reach to the best found. The first limit that something is found under ends it.
+    rows_least, sets_least, cut = float(rows.error.min()), float(sets.bound.min()), False
+    least = bound
+    for limit in (*(least * f for f in LIMITS if best / 4.0 < least * f < best), best):
+        sets, left_out = plus.every_set_below(limit, MOST_LEGS // len(plus))
+        rows, rows_left_out = _every_row_below(task, minus, limit)
         pools = {g: Pool(kept=8) for g in pools}
-        unsearched = _combine(task, rows, plus, sets, ratios, pools, first=False, best=best)
+        unsearched = _combine(task, rows, plus, sets, ratios, pools, first=False, best=limit)
         for ground, pool in pools.items():
             found += [_cells(task, plus, minus, sets, rows, ratios, ground, *p) for p in pool.pick]
         best = min(best, *(p.best for p in pools.values()))
-        # A combination is no better than either of its sides.
-        bound = min(best, max(left_out, rows_least), max(rows_left_out, sets_least), max(unsearched, sets_least))
-        whole = bound >= best
+        # A combination is no better than either of its sides, whichever was left out.
+        missed = min(max(left_out, rows_least), max(rows_left_out, sets_least), max(unsearched, sets_least))
+        if not cut:
+            bound = max(bound, min(best, limit, missed))
+        cut = cut or missed < min(best, limit)
+        if best <= limit or task.late():
+            break
+    whole = bound >= best
     task.watch(1.0)
     return Outcome(found, bound, whole)
 
@@ -75,10 +85,10 @@ def _rows(task: Task, minus: Legs, feedback, index) -> Rows:
     return rows.take(np.argsort(error, kind="stable"))
 
 
-def _every_row_below(task: Task, minus: Legs, error: float) -> tuple[Rows, float, float]:
-    """Every row with an error of its own under `error`, a bound of those left out for number, and the least error of any row."""
+def _every_row_below(task: Task, minus: Legs, error: float) -> tuple[Rows, float]:
+    """Every row with an error of its own under `error`, and a bound of those left out for number."""
     if not len(minus):
-        return _nearest_rows(task, minus), np.inf, 0.0
+        return _nearest_rows(task, minus), np.inf
     feedback, index, left_out, room = [], [], np.inf, MOST_LEGS // len(minus)
     _, nearest = minus.nearest(task.values)
     own = nearest.max(axis=1)
@@ -92,8 +102,8 @@ def _every_row_below(task: Task, minus: Legs, error: float) -> tuple[Rows, float
         feedback.append(np.full(len(made), f))
         index.append(made)
     if not feedback:
-        return _nearest_rows(task, minus).take(slice(0, 0)), left_out, float(own.min())
-    return _rows(task, minus, np.concatenate(feedback), np.concatenate(index)), left_out, float(own.min())
+        return _nearest_rows(task, minus).take(slice(0, 0)), left_out
+    return _rows(task, minus, np.concatenate(feedback), np.concatenate(index)), left_out
 
 
 def _combine(
