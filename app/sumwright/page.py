@@ -25,7 +25,7 @@ from sumwright.model.workbench import Workbench
 from sumwright.sitting import Sitting, begin
 from sumwright.views import margins, plate, signals, stage
 from sumwright.views.fold import Context, Fold
-from sumwright.views.wire import Wire, packed
+from sumwright.views.wire import Wire, packed, packed_plain
 
 log = logging.getLogger(__name__)
 
@@ -74,7 +74,7 @@ class Page:
         self.folds: dict[str, Fold] = {}
         self.open = ""
         self._doc: Any = None
-        self._note: dict[str, Any] | None = None
+        self._sent: dict[str, str] = {}  # what the browser has, by key
         self.sitting: Sitting | None = None
         self.turn_to(next(iter(self.classes), ""))
 
@@ -98,8 +98,8 @@ class Page:
 
     # ------------------------------------------------------------ frames
 
-    def frame(self) -> dict[str, Any]:
-        """Everything on the sheet that may have moved."""
+    def frame(self, whole: bool = False) -> dict[str, Any]:
+        """Everything on the sheet that differs from what the browser has; with `whole`, everything."""
         bench = self.workbench
         shown: dict[str, Any] = {
             "title": bench.title,
@@ -113,10 +113,17 @@ class Page:
             "stage": stage.show(bench),
             "plate": plate.show(bench),
             "margins": margins.show(bench),
+            "cable_out": signals.cable_out(bench),
+            "live": {"signals": signals.live(bench), "stage": stage.live(bench)},
         }
+        texts = {key: packed_plain(value) for key, value in shown.items()}
+        changed = {k: v for k, v in texts.items() if whole or self._sent.get(k) != v}
+        if "signals" in changed or "stage" in changed:
+            changed["live"] = texts["live"]  # new rows come bare
+        self._sent = texts
         if fold := self.folds.get(self.open):
-            shown["fold"] = {"key": self.open, **self._shown(fold)}
-        return shown
+            changed["fold"] = packed({"key": self.open, **self._shown(fold)})
+        return changed
 
     def _shown(self, fold: Fold) -> dict[str, Any]:
         try:
@@ -126,11 +133,11 @@ class Page:
 
     def refresh(self) -> None:
         """Send what the open fold shows, of the server's own accord."""
-        self._later(lambda: self._send({"fold": {"key": self.open, **self._shown(self.folds[self.open])}}))
+        self._later(lambda: self._send(lambda: {"fold": {"key": self.open, **self._shown(self.folds[self.open])}}))
 
     def refresh_sheet(self) -> None:
         """Send a whole frame, of the server's own accord."""
-        self._later(lambda: self._send(self.frame()))
+        self._later(lambda: self._send(lambda: self.frame(whole=True)))
 
     def later(self, act: Callable[[], None]) -> None:
         """Do something inside the session's lock, from whatever thread; nothing if the session is over."""
@@ -144,16 +151,17 @@ class Page:
 
     def say(self, text: str, bad: bool = False) -> None:
         """One sentence in the line under the strips."""
-        self._later(lambda: self._send({"note": {"text": text, "bad": bad}}))
+        self._later(lambda: self._send(lambda: {"note": {"text": text, "bad": bad}}))
 
     def say_saved(self, **state: Any) -> None:
         """What stands beside the title: `state` is none, saving, saved, unsaved or changed; `at`, `by` with it."""
         self.saved = state
-        self._later(lambda: self._send({"saved": state}))
+        self._later(lambda: self._send(lambda: {"saved": state}))
 
-    def _send(self, payload: dict[str, Any]) -> None:
+    def _send(self, make: Callable[[], dict[str, Any]]) -> None:
+        """Make and send in one hold, so that figures and frame go in one message."""
         with pn.io.hold():
-            self.wire.send(payload)
+            self.wire.send(make())
 
     def _later(self, send: Callable[[], None]) -> None:
         """Send inside the session's lock; nothing if the session is not there (yet, or any more)."""
@@ -218,7 +226,7 @@ class Page:
         page.add_variable("static", _static_place())
         page.add_variable("sheet_theme", self.workbench.theme)
         start = {"folds": [{"key": k, "title": c.title or k.capitalize()} for k, c in self.classes.items()]}
-        start.update(self.frame())
+        start.update(self.frame(whole=True))
         if self.sitting is not None and self.sitting.problem:
             start["note"] = {"text": self.sitting.problem, "bad": True}
         page.add_variable("start", _for_script(start))
@@ -227,6 +235,10 @@ class Page:
     def servable(self) -> pn.Template:
         """Put the page in the present session's document."""
         self._doc = pn.state.curdoc
+        if self._doc is not None:
+            # Panel says where its files are only in the process that answered the page; when the websocket reaches
+            # another one, or comes back after a restart, its style sheets would be asked for outside.
+            self._doc._template_variables.setdefault("dist_url", pn.io.resources.LOCAL_DIST)
         page = self.template()
         if self._doc is not None and self._doc.session_context is not None:
             pn.state.on_session_destroyed(lambda context: self.close())

@@ -164,7 +164,7 @@ def test_export_new_import_and_archive(context, server, tmp_path):
     with page.expect_download() as download:
         page.get_by_role("button", name="Export").click()
     download.value.save_as(tmp_path / "notebook.zip")
-    notebook, sheets, entries = unpack((tmp_path / "notebook.zip").read_bytes())
+    notebook, _, entries = unpack((tmp_path / "notebook.zip").read_bytes())
     assert [e.body["text"] for e in entries] == ["goes along"]
     with page.expect_navigation():
         page.get_by_label("Notebook file").set_input_files(tmp_path / "notebook.zip")

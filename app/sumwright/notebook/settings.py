@@ -125,7 +125,7 @@ class Settings:
     def ensure_reachable_by(self) -> list[str]:
         """The websocket origins: loopback names, the address itself, and those named."""
         port = self.port
-        names = [f"localhost:{port}", f"127.0.0.1:{port}", f"[::1]:{port}"]
+        names = [f"localhost:{port}", f"127.0.0.1:{port}"]
         if not self.loopback and self.address not in ("0.0.0.0", "::"):
             names.append(f"{self.address}:{port}")
         return [*names, *self.origins]
