@@ -1,6 +1,6 @@
 // The sheet in the browser: takes frames from the wire, hands each part its share, turns the folds.
 
-import {el, setAttr, setText, setClass} from './dom.js'
+import {el, forgetSizes, setAttr, setText, setClass} from './dom.js'
 import {Line} from './wire.js'
 import {Blank, settle} from './blanks.js'
 import {THIN, fixed} from './format.js'
@@ -73,6 +73,7 @@ function heard(reply) {
 
 function draw(resized) {
   if (!state.signals) return
+  if (resized) forgetSizes()
   const theme = state.theme ?? 'light'
   if (document.documentElement.dataset.theme !== theme) document.documentElement.dataset.theme = theme
   title.set(state.title)
@@ -171,8 +172,15 @@ document.addEventListener('keydown', e => {
   line.act({do: e.shiftKey ? 'redo' : 'undo'})
 })
 
+// whatever changes the room there is (the window, a scroll bar, a drawer) draws everything anew, once
 let soon = 0
-addEventListener('resize', () => { cancelAnimationFrame(soon); soon = requestAnimationFrame(() => draw(true)) })
+const again = () => { cancelAnimationFrame(soon); soon = requestAnimationFrame(() => draw(true)) }
+addEventListener('resize', again)
+let width = 0
+new ResizeObserver(([main]) => {
+  if (Math.abs(main.contentRect.width - width) > .5) again()
+  width = main.contentRect.width
+}).observe(document.querySelector('main'))
 
 // ---------------------------------------------------------------- begin
 

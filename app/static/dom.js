@@ -80,9 +80,19 @@ export class Pool {
   end() { while (this.nodes.length > this.at) this.nodes.pop().remove() }
 }
 
-let pixels = new Map()
-export function px(name) {
-  if (!pixels.has(name)) pixels.set(name, parseFloat(getComputedStyle(document.documentElement).getPropertyValue(name)))
-  return pixels.get(name)
+// Lengths and sizes are asked for once: asking again in the middle of a frame makes the browser lay out the page again.
+let pixels = new Map(), sizes = new WeakMap()
+export function px(name, node = document.documentElement) {
+  const key = node === document.documentElement ? name : name + ' of ' + node.id
+  if (!pixels.has(key)) pixels.set(key, parseFloat(getComputedStyle(node).getPropertyValue(name)))
+  return pixels.get(key)
 }
-addEventListener('resize', () => { pixels = new Map() })
+export function size(node) {
+  let found = sizes.get(node)
+  if (!found) {
+    found = {width: node.clientWidth, height: node.clientHeight, top: node.getBoundingClientRect().top + scrollY}
+    sizes.set(node, found)
+  }
+  return found
+}
+export function forgetSizes() { pixels = new Map(); sizes = new WeakMap() }

@@ -135,7 +135,7 @@ const MAKERS = {
     const row = state => state.signals.rows.find(r => r.name === name)
     const title = el('span')
     const figure = (id, word, unit) => [word, act(blanks, {
-      field: `drawer signal ${id}`, label: `${name}, ${word}`, unit, take: state => (row(state)?.figures?.[id] ?? '').replace('-', '\u2212'),
+      field: `drawer signal ${id}`, label: `${name}, ${word}`, unit, take: state => id === 'value' ? fixed(row(state)?.value) : (row(state)?.figures?.[id] ?? '').replace('-', '\u2212'),
       send: text => ({do: 'signal', signal: name, figure: id, text}),
     }), unit]
     const nameBlank = act(blanks, {field: 'drawer name', label: 'name of the signal', cls: 'wide', take: () => name, send: text => ({do: 'name', signal: name, text})})
@@ -158,7 +158,7 @@ const MAKERS = {
         }
         setText(title, '')
         fillAll(blanks)(state)
-        cableOut(out, state.signals.cable_out?.name === name ? state.signals.cable_out : null)
+        cableOut(out, state.cable_out?.name === name ? state.cable_out : null)
       },
     }
   },

@@ -1,7 +1,7 @@
 // The margin column: the verdict, and hanging from its bar the plumb line, the zero-margin line of every gauge.
 // Right of the line is room, left of it is short; the hatched strip is the tight zone.
 
-import {el, svg, setAttr, setClass, setText, keyed, px} from './dom.js'
+import {el, svg, setAttr, setClass, setText, keyed, px, size} from './dom.js'
 import {margin, verdict} from './format.js'
 
 const TIGHT = .1 // of the allowance: where the hatched strip ends
@@ -85,11 +85,11 @@ function makeGauge(key) {
 
 function drawGauges(checks) {
   keyed(plumb, checks.map(c => c.key), makeGauge, gauges)
-  if (!plumb.clientWidth) return
+  if (!size(plumb).width) return
   const scale = px('--t-1') / 14
   const dense = checks.length * (scale > 1.1 ? 51 : 37) > innerHeight - (scale > 1.1 ? 310 : 240)
   setClass(box, 'dense', dense)
-  const W = plumb.clientWidth - 84 * scale, z = px2(box, '--gut') + .5, H = scale > 1.1 ? (dense ? 16 : 20) : dense ? 12 : 15, mid = H / 2
+  const W = size(plumb).width - 84 * scale, z = px('--gut', box) + .5, H = scale > 1.1 ? (dense ? 16 : 20) : dense ? 12 : 15, mid = H / 2
   for (const c of checks) {
     const item = gauges.get(c.key)
     setText(item.t, c.title); setText(item.w, c.status)
@@ -136,5 +136,3 @@ function explain(node, c) {
   node.dataset.text = text
   node.replaceChildren(el('span', {text: c.why}), ...(c.advice ? [' ', el('b', {text: 'Cure.'}), ' ' + c.advice] : []))
 }
-
-const px2 = (node, name) => parseFloat(getComputedStyle(node).getPropertyValue(name))

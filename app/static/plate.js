@@ -1,6 +1,6 @@
 // The plate: what the stage is built from and around, beside the drawing where there is room for it.
 
-import {el, setAttr, setClass, setText} from './dom.js'
+import {el, setAttr, setClass, setText, size} from './dom.js'
 import {Blank} from './blanks.js'
 import {THIN} from './format.js'
 import {placed} from './stage.js'
@@ -35,7 +35,7 @@ export function mount(theSheet) {
 
 const pair = (name, ...children) => [el('div', {}, el('dt', {text: name}), el('dd', {}, ...children))]
 
-export function update(state) {
+export function update(state, resized) {
   const p = state.plate, s = state.stage
   if (!p) return
   blanks['supply high'].set(p.supply.high); blanks['supply low'].set(p.supply.low)
@@ -48,7 +48,7 @@ export function update(state) {
   setText(words.target, t.low || t.high ? `${t.low || '…'} to ${t.high || '…'}${THIN}V${t.accuracy ? ` ±${t.accuracy}${THIN}V` : ''}` : 'no window given')
   fillWays(s)
   for (const button of words.symbols) setAttr(button, 'aria-pressed', String(button.textContent === s.symbols))
-  stand()
+  stand(resized)
 }
 
 function fillWays(s) {
@@ -62,24 +62,27 @@ function fillWays(s) {
   if (document.activeElement !== words.ways && words.ways.value !== (s.arrangement ?? '')) words.ways.value = s.arrangement ?? ''
 }
 
-function place(left, top) {
-  if (box.style.left !== left) box.style.left = left
-  if (box.style.top !== top) box.style.top = top
-}
-
 // beside the drawing if it fits there, else across the foot of the drawing
-function stand() {
-  if (!placed || !box.parentNode.clientWidth) return
-  const strip = document.getElementById('strips').clientWidth
+let stood = ''
+function stand(resized) {
+  const work = box.parentNode
+  if (!placed || !size(work).width) return
   const {left, top, bottom, above} = placed.free
-  const width = placed.width - left
-  const need = box.classList.contains('flat') ? box.__size : (box.__size = [box.scrollWidth, box.offsetHeight])
-  const [w, h] = need ?? [250, 150]
-  let at
-  if (w <= width + 4 && h <= bottom - top) at = {left: strip + left, top: bottom - h}
-  else if (w <= width + 4 && h <= above - 4) at = {left: strip + left, top: 4}
+  const key = [left, top, bottom, above, placed.width, box.textContent.length, words.ways.value].join()
+  if (key === stood && !resized) return
+  stood = key
+  const strip = size(document.getElementById('strips')).width
+  box.classList.remove('flat')
+  const w = box.scrollWidth, h = box.offsetHeight, room = placed.width - left + 4
+  let at = null
+  if (w <= room && h <= bottom - top) at = {left: strip + left, top: bottom - h}
+  else if (w <= room && h <= above - 4) at = {left: strip + left, top: 4}
   setClass(box, 'flat', !at)
-  place(at ? `${at.left}px` : '0px', `${at ? at.top : bottom + 6}px`)
-  const room = at ? 0 : box.offsetHeight + 4
-  if (box.__room !== room) { box.__room = room; box.parentNode.style.marginBottom = `${room}px` }
+  box.style.left = at ? `${at.left}px` : '0px'
+  box.style.top = `${at ? at.top : bottom + 6}px`
+  const margin = at ? '0px' : `${box.offsetHeight + 4}px`
+  if (work.style.marginBottom !== margin) {
+    work.style.marginBottom = margin
+    dispatchEvent(new Event('resize'))
+  }
 }

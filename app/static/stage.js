@@ -1,6 +1,6 @@
 // The schematic: symbols by IEC 60617 or IEEE 315, wires at the strips' heights, voltages and currents live on it.
 
-import {el, svg, setAttr, keyed, Pool, px} from './dom.js'
+import {el, svg, setAttr, keyed, Pool, px, size} from './dom.js'
 import {Blank} from './blanks.js'
 import {THIN, engineering, fixed, signed} from './format.js'
 import {layout} from './layout.js'
@@ -20,7 +20,7 @@ export function mount(theSheet) {
 }
 
 export function update(state) {
-  const width = box.clientWidth
+  const width = size(box).width
   if (!width) return
   const s = state.stage
   const row = px('--row-now') || px('--row')

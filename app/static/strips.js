@@ -1,6 +1,6 @@
 // The strips: a row a signal; its wire runs on into the drawing at the same height.
 
-import {el, svg, setAttr, setClass, setText, keyed, px} from './dom.js'
+import {el, svg, setAttr, setClass, setText, keyed, px, size, forgetSizes} from './dom.js'
 import {Blank} from './blanks.js'
 import {THIN, engineering, fixed, signed} from './format.js'
 import {style, swatch, markerAttributes} from './marks.js'
@@ -136,7 +136,7 @@ export function update(state) {
   writeSum(shown)
   setText(follow.options[0], `nearest ${shown.series}`)
   if (follow.value !== shown.follow) follow.value = shown.follow
-  if (!box.clientWidth) { drawMini(shown); return }
+  if (!size(box).width) { drawMini(shown); return }
   keyed(list, shown.rows.map(keyOf), key => {
     const r = shown.rows.find(x => keyOf(x) === key)
     return Object.assign(makeRow(key, r), {style: r.style})
@@ -144,7 +144,7 @@ export function update(state) {
   const row = px('--row-now')
   const reach = Math.max(...shown.rows.map(r => Math.abs(r.share)), 1e-12)
   const first = rows.get(keyOf(shown.rows[0]))
-  const W = first.shares.clientWidth, plugWidth = first.plug.clientWidth
+  const W = size(first.shares).width, plugWidth = size(first.plug).width
   for (const r of shown.rows) drawRow(rows.get(keyOf(r)), r, shown, row, reach, W, plugWidth)
   drawMini(shown)
 }
@@ -202,6 +202,7 @@ function fit(n) {
     document.documentElement.style.setProperty('--rows', rows)
     document.documentElement.style.setProperty('--row-now', `${now}px`)
     setClass(work, 'close', now < 36)
+    forgetSizes()
     dispatchEvent(new Event('resize'))
   }
 }
@@ -228,7 +229,7 @@ const plainWeight = w => {
 // ---------------------------------------------------------------- folded: the sliders only
 
 function drawMini(shown) {
-  if (!mini.clientWidth) return
+  if (!size(mini).width) return
   const signals = shown.rows.filter(r => !r.reference)
   keyed(mini, signals.map(r => r.name), name => {
     const r = signals.find(x => x.name === name), s = style(r.style)

@@ -1,7 +1,7 @@
 // Curves: three pictures on one ruler. Contributions and headroom are SVG; the transfer curves are a Bokeh figure
 // whose frame is set on the same volts, so the rail, the window and the output are single lines through all three.
 
-import {el, svg, setAttr, setText, Pool, px} from '../dom.js'
+import {el, svg, setAttr, setText, Pool, px, size} from '../dom.js'
 import {THIN, fixed, signed} from '../format.js'
 import {style, markerAttributes} from '../marks.js'
 
@@ -37,10 +37,10 @@ export function mount(node, sheet) {
   }
 
   function update(shown) {
-    const W = node.clientWidth
+    const W = size(node).width
     if (!W) return
     const k = px('--t-1') / 14
-    const top0 = node.getBoundingClientRect().top + scrollY
+    const top0 = size(node).top
     const H = Math.max(236, Math.min(560, innerHeight - top0 - 8))
     node.style.height = `${H}px`
     const narrow = W < 800

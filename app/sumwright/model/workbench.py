@@ -65,14 +65,24 @@ class Workbench(param.Parameterized):
     @param.depends(*_DESIGN_FIELDS, "unplugged", watch=True, on_init=True)
     def _solve(self):
         design = Design(**{name: getattr(self, name) for name in _DESIGN_FIELDS})
-        with param.edit_constant(self):
+        try:
+            analysis = Analysis(design, self.unplugged, self.analysis)
+            analysis.dc  # noqa: B018 - the one result nothing on the sheet can do without
+        except SumwrightError as error:
+            self._follows(design=design, problem=str(error))  # the last good analysis stays on the sheet
+        else:
+            self._follows(design=design, analysis=analysis, problem="")
+
+    def _follows(self, **results: Any) -> None:
+        """Set results: `param.edit_constant` for these three alone, which a drag does sixty times a second."""
+        for name, value in results.items():
+            if value is getattr(self, name):
+                continue
+            self.param[name].constant = False
             try:
-                analysis = Analysis(design, self.unplugged, self.analysis)
-                analysis.dc  # noqa: B018 - the one result nothing on the sheet can do without
-            except SumwrightError as error:
-                self.param.update(design=design, problem=str(error))  # the last good analysis stays on the sheet
-            else:
-                self.param.update(design=design, analysis=analysis, problem="")
+                setattr(self, name, value)
+            finally:
+                self.param[name].constant = True
 
     def style(self, name: str) -> int:
         """The number of a signal's colour, dash and marker; it keeps it through reordering and renaming."""
@@ -168,8 +178,13 @@ class Workbench(param.Parameterized):
             for was, now in zip(old, s.design.signal_names, strict=True):
                 if was not in s.design.signal_names and was in self._styles:
                     self._styles[now] = self._styles[was]
+        choices.update(unplugged=s.unplugged, follow=s.follow, on=on)
         changed = {n: v for n, v in choices.items() if v is not getattr(self, n)}
-        self.param.update(**changed, unplugged=s.unplugged, follow=s.follow, on=on)
+        if len(changed) == 1:
+            ((name, value),) = changed.items()
+            setattr(self, name, value)  # the path of a moving slider
+        elif changed:
+            self.param.update(**changed)
 
 
 def check_size(design: Design) -> None:

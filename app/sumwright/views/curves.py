@@ -96,15 +96,14 @@ class Curves(Fold):
         curves = [c for c in analysis.curves if c.name not in bench.unplugged]
         curves.sort(key=lambda c: c.name == bench.on)  # the one under the hand on top
         looks = (tuple(c.name for c in curves), tuple(bench.style(c.name) for c in curves), bench.on, bench.theme)
-        xs = [np.asarray(c.x, dtype=np.float32) for c in curves]
-        ys = [np.asarray(c.y, dtype=np.float32) for c in curves]
-        volts = np.array([design.signal(c.name).value for c in curves], dtype=np.float32)
-        level = np.full(len(curves), dc.output, dtype=np.float32)
+        # corners are few: as lists they ride in the one message, where each array would be two more
+        xs = [c.x.tolist() for c in curves]
+        ys = [c.y.tolist() for c in curves]
+        volts = [design.signal(c.name).value for c in curves]
+        level = [dc.output] * len(curves)
         if looks == self._looks:
             changed: dict[str, Any] = {"y": ys}
-            if any(
-                len(a) != len(b) or not np.array_equal(a, b) for a, b in zip(xs, self._lines.data["x"], strict=True)
-            ):
+            if xs != self._lines.data["x"]:
                 changed["x"] = xs
             self._lines.data.update(changed)
             self._present.data.update({"x": volts, "y": level})

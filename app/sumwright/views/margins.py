@@ -11,7 +11,7 @@ def show(bench: Any) -> list[dict[str, Any]]:
     for check in bench.analysis.checks:
         ratio = None
         if check.margin is not None and check.allowance:
-            ratio = check.margin / abs(check.allowance)
+            ratio = float(check.margin / abs(check.allowance))
         shown.append({
             "key": check.key, "title": check.title, "status": check.status, "margin": check.margin, "unit": check.unit,
             "ratio": ratio, "why": check.why, "advice": check.advice,

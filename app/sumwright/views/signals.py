@@ -2,70 +2,99 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
 from typing import Any
 
-from sumwright.engine.stage import REFERENCE
-from sumwright.quantity import format_exact, format_quantity
+from sumwright.engine.stage import REFERENCE, Signal
+from sumwright.quantity import format_exact
 
 from .rows import rows
 
 
 def show(bench: Any) -> dict[str, Any]:
-    """What the strips need, in the order of the rows."""
+    """What the strips need, in the order of the rows; what moves with the values is in `live`."""
     analysis = bench.analysis
     design = analysis.design
-    dc = analysis.dc
-    known = {name: k for k, name in enumerate(analysis.design.signal_names)}
     shown, seen = [], set()
-    for source, cell, node in rows(analysis.design.cells, analysis.design.signal_names):
+    for source, cell, node in rows(design.cells, design.signal_names):
         seen.add(source)
+        place = {"name": source, "cell": cell, "node": node}
         if source == REFERENCE:
-            volts = analysis.design.reference.voltage
-            wanted = design.target.offset / volts if volts else None
-            made = dc.offset / volts if volts else None
-            shown.append({
-                "name": source, "reference": True, "cell": cell, "node": node, "value": volts, "weight": wanted,
-                "made": made, "share": dc.offset, "rs": analysis.design.reference.source_resistance,
-            })  # fmt: skip
-            continue
-        k, s = known[source], analysis.design.signal(source)
-        shown.append({
-            "name": s.name, "style": bench.style(s.name), "cell": cell, "node": node, "value": s.value, "low": s.low,
-            "high": s.high, "weight": s.weight, "weight_text": format_exact(s.weight), "made": dc.weights[k],
-            "share": dc.contributions[k], "out": s.name in bench.unplugged, "rs": s.source_resistance,
-            "rs_text": format_quantity(s.source_resistance, "Ω", 4, trim=True),
-            "figures": {
-                f: format_exact(getattr(s, f)) for f in ("value", "low", "high", "source_resistance", "frequency")
-            },
-        })  # fmt: skip
-    for s in analysis.design.signals:  # a leg may be missing on a sheet of somebody's own making
+            shown.append({**place, "reference": True, "rs": design.reference.source_resistance})
+        else:
+            shown.append({**place, **_fixed(design.signal(source)), "style": bench.style(source)})
+            shown[-1]["out"] = source in bench.unplugged
+    for s in design.signals:  # a leg may be missing on a sheet of somebody's own making
         if s.name not in seen:
-            shown.append({
-                "name": s.name, "style": bench.style(s.name), "cell": -1, "node": "", "value": s.value, "low": s.low,
-                "high": s.high, "weight": s.weight, "weight_text": format_exact(s.weight), "made": 0.0, "share": 0.0,
-                "out": True, "rs": s.source_resistance, "rs_text": "", "figures": {},
-            })  # fmt: skip
+            shown.append(
+                {"name": s.name, "cell": -1, "node": "", **_fixed(s), "style": bench.style(s.name), "out": True}
+            )
     return {
-        "rows": shown, "on": bench.on, "order": list(design.signal_names), "offset": design.target.offset,
-        "offset_text": format_exact(design.target.offset), "follow": bench.follow, "series": design.resistor.series,
-        "sum": [[s.name, s.weight] for s in design.signals], "cable_out": _cable_out(bench.on, analysis),
+        "rows": shown, "order": list(design.signal_names), "offset": design.target.offset, "follow": bench.follow,
+        "series": design.resistor.series, "sum": [[s.name, s.weight] for s in design.signals],
     }  # fmt: skip
 
 
-def _cable_out(name: str, analysis: Any) -> dict[str, Any] | None:
+def _fixed(s: Signal) -> dict[str, Any]:
+    """What a move of its slider does not change."""
+    return {
+        "low": s.low, "high": s.high, "weight": s.weight, "weight_text": format_exact(s.weight),
+        "rs": s.source_resistance, "figures": _figures(s.low, s.high, s.source_resistance, s.frequency),
+    }  # fmt: skip
+
+
+@lru_cache(maxsize=512)
+def _figures(low: float, high: float, resistance: float, frequency: float) -> dict[str, str]:
+    return {
+        "low": format_exact(low), "high": format_exact(high), "source_resistance": format_exact(resistance),
+        "frequency": format_exact(frequency),
+    }  # fmt: skip
+
+
+def live(bench: Any) -> dict[str, Any]:
+    """What moves with the values, in the order of the rows."""
+    analysis = bench.analysis
+    design, dc = analysis.design, analysis.dc
+    places = {name: k for k, name in enumerate(design.signal_names)}
+    weights, shares, values = dc.weights.tolist(), dc.contributions.tolist(), dc.values.tolist()
+    value, made, share, seen = [], [], [], set()
+    for source, _, _ in rows(design.cells, design.signal_names):
+        seen.add(source)
+        if source == REFERENCE:
+            value.append(design.reference.voltage)
+            made.append(None)
+            share.append(dc.offset)
+        else:
+            k = places[source]
+            value.append(values[k])
+            made.append(weights[k])
+            share.append(shares[k])
+    for s in design.signals:
+        if s.name not in seen:
+            value.append(s.value)
+            made.append(0.0)
+            share.append(0.0)
+    return {"value": value, "made": made, "share": share, "on": bench.on}
+
+
+def cable_out(bench: Any) -> dict[str, Any] | None:
     """What becomes of every weight when the cable of the signal under the hand is out, or its source is dead."""
+    return _cable_out(bench.on, bench.analysis)
+
+
+def _cable_out(name: str, analysis: Any) -> dict[str, Any] | None:
     found = analysis.cable_out
     if name not in found.names:
         return None
     k, dc = found.names.index(name), analysis.dc
-    rows = [
+    weights = [
         [s, float(dc.weights[i]), float(found.open_weights[k, i]), float(found.dead_weights[k, i])]
         for i, s in enumerate(found.names)
     ]
     gains = analysis.net.noise_gains()
     return {
         "name": name,
-        "weights": rows,
-        "offset": [dc.offset, found.open_offset[k], found.dead_offset[k]],
-        "noise_gain": [gains[-1], found.open_noise_gain[k][-1], found.dead_noise_gain[k][-1]],
+        "weights": weights,
+        "offset": [dc.offset, float(found.open_offset[k]), float(found.dead_offset[k])],
+        "noise_gain": [float(gains[-1]), float(found.open_noise_gain[k][-1]), float(found.dead_noise_gain[k][-1])],
     }

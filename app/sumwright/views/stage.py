@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from functools import lru_cache
-from typing import Any
+from typing import Any, NamedTuple
 
 from sumwright.engine.arrangement import able, arrangement_of
 from sumwright.engine.stage import ARRANGEMENTS, Cell
@@ -13,26 +13,54 @@ from .rows import rows
 
 
 def show(bench: Any) -> dict[str, Any]:
-    """The cells with their parts, and what flows in them."""
-    analysis = bench.analysis
-    design, dc = analysis.design, analysis.dc
-    cells = []
-    for fixed, point in zip(_fixed(design.cells), dc.cells, strict=True):
-        cells.append({
-            **fixed, "vm": point.minus_voltage, "vp": point.plus_voltage, "vo": point.output_voltage,
-            "io": point.output_current, "ifb": point.feedback_current, "legs": point.leg_currents,
-            "img": point.minus_ground_current, "ipg": point.plus_ground_current, "clipped": point.clipped,
-            "limited": point.at_current_limit,
-        })  # fmt: skip
+    """The cells with their parts; what flows in them is in `live`."""
+    design = bench.analysis.design
     return {
-        "rows": [list(r) for r in rows(design.cells, design.signal_names)], "cells": cells,
-        "output": dc.output, "unclipped": dc.unclipped_output, "clipped": dc.clipped,
+        "rows": [list(r) for r in rows(design.cells, design.signal_names)], "cells": _fixed(design.cells),
         "load": {"fitted": design.load.resistance is not None or design.load.capacitance > 0,
-                 "resistance": design.load.resistance is not None, "i": dc.load_current},
+                 "resistance": design.load.resistance is not None},
         "supply": [design.supply.high, design.supply.low], "symbols": bench.symbols,
-        "arrangement": arrangement_of(design.cells), "arrangements": list(ARRANGEMENTS), "able": list(able(design)),
+        "arrangement": arrangement_of(design.cells), "arrangements": list(ARRANGEMENTS),
+        "able": list(_able(_Wishes(tuple((s.name, s.weight, s.source_resistance) for s in design.signals),
+                                   design.target.offset, design.reference), design)),
         "unplugged": list(bench.unplugged),
     }  # fmt: skip
+
+
+def live(bench: Any) -> dict[str, Any]:
+    """The voltages and currents, cell by cell."""
+    dc = bench.analysis.dc
+    return {
+        "output": dc.output, "unclipped": dc.unclipped_output, "clipped": dc.clipped, "load": dc.load_current,
+        "cells": [
+            {
+                "vm": p.minus_voltage, "vp": p.plus_voltage, "vo": p.output_voltage, "ifb": p.feedback_current,
+                "legs": p.leg_currents, "img": p.minus_ground_current, "ipg": p.plus_ground_current,
+                "clipped": p.clipped, "limited": p.at_current_limit,
+            }
+            for p in dc.cells
+        ],
+    }  # fmt: skip
+
+
+class _Wishes(NamedTuple):
+    """What decides which arrangements can make the weights."""
+
+    weights: tuple
+    offset: float
+    reference: Any
+
+
+_known: dict[_Wishes, tuple[str, ...]] = {}
+
+
+def _able(wishes: _Wishes, design: Any) -> tuple[str, ...]:
+    """The arrangements that can; remembered, for a drag asks again and again."""
+    if wishes not in _known:
+        if len(_known) > 500:
+            _known.clear()
+        _known[wishes] = able(design)
+    return _known[wishes]
 
 
 @lru_cache(maxsize=256)

@@ -47,14 +47,33 @@ export function render({model, el}) {
         if isinstance(message, dict):
             self.receive(message)
 
-    def send(self, payload: dict) -> None:
-        """Send one frame."""
+    def send(self, payload: dict[str, Any]) -> None:
+        """Send one frame; values that are `Packed` already go as they are."""
         self._send_msg(packed(payload))
 
 
-def packed(payload: Any) -> str:
-    """A payload as JSON: arrays as lists, what is not finite as null, figures to nine digits."""
-    return json.dumps(plain(payload), separators=(",", ":"), allow_nan=False)
+class Packed(str):
+    """JSON text, ready to stand in a payload."""
+
+    __slots__ = ()
+
+
+def packed(payload: dict[str, Any]) -> Packed:
+    """A payload as JSON: arrays as lists, named tuples as objects, what is not finite as null."""
+    parts = [f"{json.dumps(str(k))}:{v if isinstance(v, Packed) else _text(plain(v))}" for k, v in payload.items()]
+    return Packed("{" + ",".join(parts) + "}")
+
+
+def packed_plain(value: Any) -> Packed:
+    """The same for what holds no named tuples: a sixth of the time, for every move of a slider."""
+    try:
+        return Packed(_text(value))
+    except (TypeError, ValueError):  # an array, or a number that is not finite
+        return Packed(_text(plain(value)))
+
+
+def _text(value: Any) -> str:
+    return json.dumps(value, separators=(",", ":"), allow_nan=False)
 
 
 def plain(value: Any) -> Any:
@@ -76,4 +95,4 @@ def plain(value: Any) -> Any:
     raise TypeError(f"a {type(value).__name__} cannot be sent to the sheet")
 
 
-__all__ = ["MESSAGE_MOST", "Wire", "packed", "plain"]
+__all__ = ["MESSAGE_MOST", "Packed", "Wire", "packed", "packed_plain", "plain"]
