@@ -82,7 +82,15 @@ class _Mode:
                 first_w[k, n + 2 + k] = 1.0
         self.rows = np.concatenate([ss.c[ss.output], ss.c[ss.current], ss.c[ss.plus] - ss.c[ss.minus], first])
         self.direct = np.concatenate([ss.d[ss.output], ss.d[ss.current], ss.d[ss.plus] - ss.d[ss.minus], first_w])
+        # what the op amp would have to hold inside to make its output what it is: o + r_o i, and how fast that runs
+        r_out = net.design.op_amp.output_resistance
+        self.hold = ss.c[ss.output] + r_out * ss.c[ss.current]
+        self.hold_direct = ss.d[ss.output] + r_out * ss.d[ss.current]
         self.rows_v = self.rows @ self.v if size else self.rows.astype(complex)
+        if size:
+            self.rows_v = np.concatenate([self.rows_v, (self.hold @ self.v) * self.lam])
+        else:
+            self.rows_v = np.concatenate([self.rows_v, self.hold.astype(complex)])
         self._sines: dict[float, np.ndarray] = {}
         self.grid = _watch_grid(self.lam)
 
@@ -170,6 +178,7 @@ class _Run:
                 ((m.rows @ q + m.direct @ ph)[:, None] * np.exp(1j * om * probe)).real
                 for q, ph, om in zip(z, self.phasors, self.sines, strict=True)
             )
+            watch = np.concatenate([watch, np.zeros((self.cells, len(probe)))])
             if not self._leaving(key, watch).any():
                 return key, p0 + sum(q.real for q in z)
         if self.sines:
@@ -190,15 +199,15 @@ class _Run:
 
     def _parts(self, watch):
         c = self.cells
-        return watch[:c], watch[c : 2 * c], watch[2 * c : 3 * c], watch[3 * c : 4 * c]
+        return watch[:c], watch[c : 2 * c], watch[2 * c : 3 * c], watch[3 * c : 4 * c], watch[4 * c :]
 
     def _leaving(self, key, watch):
         """Where some op amp ceases to be in its mode, (times,) bool."""
         out = np.zeros(watch.shape[1], dtype=bool)
-        for k, (o, i, d, v1) in enumerate(zip(*self._parts(watch), strict=True)):
+        for k, (o, i, d, v1, run) in enumerate(zip(*self._parts(watch), strict=True)):
             if abs(key[k]) in (LINEAR, SLEW) and self._well_inside(key[k], o, i, d, v1):
                 continue
-            out |= self._next(key[k], o, i, d, v1) != key[k]
+            out |= self._next(key[k], o, i, d, v1, run) != key[k]
         return out
 
     def _well_inside(self, mode, o, i, d, v1):
@@ -214,8 +223,12 @@ class _Run:
         drop = lim.dropout_resistance * most
         return most <= lim.current and o.max() <= lim.high - drop and o.min() >= lim.low + drop
 
-    def _next(self, mode, o, i, d, v1):
-        """The mode each sample belongs in, given that it was in `mode`."""
+    def _next(self, mode, o, i, d, v1, run):
+        """The mode each sample belongs in, given that it was in `mode`.
+
+        An output leaves a limit when the op amp would pull away from it faster than the
+        limit itself runs (`run` [V/s]: it moves with the current).
+        """
         amp, lim = self.amp, self.limits
         side, kind = (mode > 0) - (mode < 0), abs(mode)
         high = lim.high - lim.dropout_resistance * np.maximum(i, 0.0)
@@ -228,8 +241,7 @@ class _Run:
             out = np.where(np.abs(i) > lim.current + tol_i, np.where(i > 0, CURRENT, -CURRENT), out)
             out = np.where(o > high + tol_v, np.where(i > 0, SWING, SWING_IDLE), out)
             return np.where(o < low - tol_v, np.where(i < 0, -SWING, -SWING_IDLE), out)
-        drive = amp.open_loop_gain * d - (o + self.r_out * i)
-        release = side * drive < -1e-9 * (1.0 + abs(lim.high))
+        release = side * (self._pull(o, i, d) - run) < -1e-9 * amp.slew_rate
         flow = side * i
         if kind == CURRENT:
             beyond = side * (o - (high if side > 0 else low)) > tol_v
@@ -238,6 +250,11 @@ class _Run:
             held = np.where(flow > lim.current + tol_i, CURRENT, np.where(flow > tol_i, SWING, kind))
             held = np.where(flow < -tol_i, SWING_IDLE, held)
         return np.where(release, LINEAR, side * held)
+
+    def _pull(self, o, i, d):
+        """How fast the op amp would move if it held just what its output is at [V/s]."""
+        rate = self.w1 * (self.amp.open_loop_gain * d - (o + self.r_out * i))
+        return np.clip(rate, -self.amp.slew_rate, self.amp.slew_rate)
 
     def run(self, times):
         """Outputs (cells, len(times)) and what happened on the way."""
@@ -282,13 +299,16 @@ class _Run:
         """Mode and state after an event."""
         watch = seg.watch(np.array([tau]))
         nxt = list(key)
-        for k, (o, i, d, f) in enumerate(zip(*self._parts(watch), strict=True)):
-            now = int(self._next(key[k], o, i, d, f)[0])
+        for k, (o, i, d, f, run) in enumerate(zip(*self._parts(watch), strict=True)):
+            now = int(self._next(key[k], o, i, d, f, run)[0])
             if now != key[k] and abs(key[k]) not in (LINEAR, SLEW) and now == LINEAR:
-                v1[k] = v2[k] = o[0] + self.r_out * i[0]  # it comes back from the limit it was held at
-                rate = self.w1 * (self.amp.open_loop_gain * d[0] - v1[k])
-                if abs(rate) > self.amp.slew_rate:
-                    now = SLEW if rate > 0 else -SLEW
+                # it comes back from the limit it was held at, already moving
+                v1[k] = v2[k] = o[0] + self.r_out * i[0]
+                pull = float(self._pull(o, i, d)[0])
+                if self.amp.second_pole is not None:
+                    v1[k] += pull / (2 * math.pi * self.amp.second_pole)
+                if abs(pull) >= self.amp.slew_rate:
+                    now = SLEW if pull > 0 else -SLEW
             nxt[k] = now
         new = self.mode(tuple(nxt))
         return tuple(nxt), self._pack(new, x[: new.ss.capacitor.shape[0]], v1, v2), v1
@@ -385,10 +405,16 @@ class _Segment:
             m.rows @ q + m.direct @ (ph * np.exp(1j * om * start))
             for q, om, ph in zip(self.z, sines, phasors, strict=True)
         ]
+        hold = m.hold @ p1 + m.hold_direct @ w1
+        self.y0, self.y1 = np.concatenate([self.y0, hold]), np.concatenate([self.y1, np.zeros(len(hold))])
+        self.ys = [
+            np.concatenate([y, 1j * om * (m.hold @ q + m.hold_direct @ (ph * np.exp(1j * om * start)))])
+            for y, q, om, ph in zip(self.ys, self.z, sines, phasors, strict=True)
+        ]
         self.l = m.rows_v * self.c
 
     def watch(self, tau):
-        """Watched rows at `tau` [s] after the start, (4 cells, times)."""
+        """Watched rows at `tau` [s] after the start, (5 cells, times)."""
         out = self.y0[:, None] + self.y1[:, None] * tau
         if len(self.c):
             out += (self.l @ np.exp(self.mode.lam[:, None] * tau)).real
