@@ -241,7 +241,7 @@ def cabled_margins(stage, capacitances) -> CabledMargins:
     f = np.geomspace(amp.gain_bandwidth / amp.open_loop_gain / 100, amp.gain_bandwidth * 100, 500)
     cabled = with_cables(stage, f, capacitances)
     dc = nodes.solve(net, np.eye(net.signal_count + 1)).output[-1, : net.signal_count]
-    bands = _bandwidths(f, cabled.gains, dc, lambda x, i: with_cables(stage, [x], capacitances).gains[i, 0])
+    bands = _bandwidths(f, cabled.gains, dc, lambda i: lambda x: with_cables(stage, [x], capacitances).gains[i, 0])
     margins = []
     for k in range(net.cell_count):
         found = _margins(f, cabled.loop_gains[k], lambda x, k=k: with_cables(stage, [x], capacitances).loop_gains[k, 0])

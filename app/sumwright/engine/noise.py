@@ -87,7 +87,7 @@ def noise(stage, *, band=None) -> Noise:
 
     Notes
     -----
-    Integrated in log f by Gauss-Legendre panels of at most half a decade, split
+    Integrated in log f by Gauss-Legendre panels of about a decade, split
     where the response turns, so the 1/f part and a resonance are both followed.
     """
     net = network_of(stage)
@@ -171,7 +171,7 @@ def _quadrature(low, high, corners):
     edges = np.unique(np.concatenate([[a, b], inner]))
     fine = []
     for p, q in pairwise(edges):
-        n = max(1, int(np.ceil((q - p) / 1.2)))
+        n = max(1, int(np.ceil((q - p) / 2.4)))
         fine.append(p + (q - p) * np.arange(n) / n)
     fine = np.append(np.concatenate(fine), b)
     half = 0.5 * np.diff(fine)

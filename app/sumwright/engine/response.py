@@ -78,32 +78,51 @@ def loop_gains(net: nodes.Network, frequencies) -> np.ndarray:
 
 
 class _Transfer:
-    """Rows of c (sI - a)^-1 b + d: curves by modes, single frequencies by elimination."""
+    """Rows of c (sI - a)^-1 b + d, by the modes of a where it has a sound set of them, else by elimination."""
 
     def __init__(self, a, b, c, d):
         self.a, self.b, self.c, self.d = a, b, c, d
-        self._eye = np.eye(len(a))
         self._modes = None
-        if len(a):
-            poles_, vectors = np.linalg.eig(a)
-            # near-coincident poles make the modes useless; elimination does not mind them
-            if np.linalg.cond(vectors) < 1e7:
-                self._modes = poles_, c @ vectors, np.linalg.solve(vectors, b)
+        if not len(a):
+            return
+        values, vectors = np.linalg.eig(a)
+        with np.errstate(all="ignore"):
+            try:
+                inverse = np.linalg.inv(vectors)
+            except np.linalg.LinAlgError:
+                return
+        # near-coincident poles make the modes useless; elimination does not mind them
+        if np.linalg.norm(vectors) * np.linalg.norm(inverse) < 1e6:
+            self._modes = values, (c @ vectors)[:, None, :] * (inverse @ b).T[None]
 
     def curves(self, f):
         """All entries over frequency, (outputs, inputs, f)."""
         s = 2j * np.pi * f
         if self._modes is None:
-            inner = np.linalg.solve(s[:, None, None] * self._eye - self.a, self.b[None].astype(complex))
+            if not len(self.a):
+                return np.broadcast_to(self.d[..., None], (*self.d.shape, len(f))).astype(complex)
+            eye = np.eye(len(self.a))
+            inner = np.linalg.solve(s[:, None, None] * eye - self.a, self.b[None].astype(complex))
             return np.moveaxis(self.c @ inner + self.d, 0, -1)
-        p, left, right = self._modes
-        residues = left[:, None, :] * right.T[None]
+        p, residues = self._modes
         h = residues.reshape(-1, len(p)) @ (1.0 / (s - p[:, None]))
         return h.reshape(*residues.shape[:2], -1) + self.d[..., None]
 
-    def at(self, f, i):
-        """Input i's column at one frequency [Hz], (outputs,)."""
-        return self.c @ np.linalg.solve(2j * math.pi * f * self._eye - self.a, self.b[:, i]) + self.d[:, i]
+    def of(self, i):
+        """The first output from input i as a function of one frequency [Hz]."""
+        d = complex(self.d[0, i])
+        if self._modes is None:
+            if not len(self.a):
+                return lambda f: d
+            eye = np.eye(len(self.a))
+            return lambda f: complex(self.c[0] @ np.linalg.solve(2j * math.pi * f * eye - self.a, self.b[:, i])) + d
+        terms = list(zip(self._modes[1][0, i].tolist(), self._modes[0].tolist(), strict=True))
+
+        def at(f):
+            s = 2j * math.pi * f
+            return sum([r / (s - p) for r, p in terms], d)
+
+        return at
 
 
 def _cut(ss: StateSpace, k: int):
@@ -143,13 +162,14 @@ def response(stage, *, frequencies=None) -> Response:
 
     gains, loops = curves(f)
     dc = nodes.solve(net, np.eye(n + 1)).output[-1]
-    bandwidths = _bandwidths(f, gains[:n], dc[:n], lambda x, i: through.at(x, i)[0])
+    bandwidths = _bandwidths(f, gains[:n], dc[:n], through.of)
     signals = tuple(
         SignalResponse(s.name, float(g), b) for s, g, b in zip(design.signals, dc, bandwidths, strict=False)
     )
     cells = []
     for k, ng in enumerate(net.noise_gains()):
-        margins = _margins(f, loops[k], lambda x, k=k: -first_stage(x) * cuts[k].at(x, 0)[0])
+        pins = cuts[k].of(0)
+        margins = _margins(f, loops[k], lambda x, pins=pins: -first_stage(x) * pins(x))
         cells.append(CellResponse(float(ng), *margins))
     if frequencies is not None:
         f = np.asarray(frequencies, dtype=float)
@@ -231,28 +251,29 @@ def _refine(f, y, at, exact):
     return math.exp(x)
 
 
-def _bandwidths(f, gains, dc, gain_at):
-    """Lowest frequency at which each gain is 3 dB under its DC value, or None."""
+def _bandwidths(f, gains, dc, gain_of):
+    """Lowest frequency at which each gain is 3 dB under its DC value, or None.
+
+    `gain_of(i)` is gain i as a function of one frequency.
+    """
     with np.errstate(divide="ignore", invalid="ignore"):
         y = np.log(np.abs(gains) / (np.abs(dc)[:, None] * _HALF_POWER))
+    below = y <= 0
+    first = below.argmax(axis=1)
+    exists = below[np.arange(len(y)), first] & (first > 0) & np.isfinite(y).all(axis=1) & (dc != 0)
+    # legs into one node share their shape over frequency, so its crossing is found once
+    looks = np.round(y[:, :: max(1, len(f) // 24)], 10).tolist()
+    found: dict[tuple, float] = {}
     out: list[float | None] = []
-    found: list[tuple[np.ndarray, float | None]] = []
     for i in range(len(dc)):
-        if dc[i] == 0 or not np.isfinite(y[i]).all():
+        if not exists[i]:
             out.append(None)
             continue
-        # legs into one node share their shape over frequency, so its crossing is found once
-        same = next((b for row, b in found if np.abs(row - y[i]).max() < 1e-10), 0)
-        if same != 0:
-            out.append(same)
-            continue
-        below = np.flatnonzero(y[i] <= 0)
-        value = None
-        if len(below) and below[0] > 0:
-            level = math.log(abs(dc[i]) * _HALF_POWER)
-            value = _refine(f, y[i], below[0] - 1, lambda x, i=i, z=level: math.log(abs(gain_at(x, i))) - z)
-        found.append((y[i], value))
-        out.append(value)
+        key = (int(first[i]), *looks[i])
+        if key not in found:
+            level, at = math.log(abs(dc[i]) * _HALF_POWER), gain_of(i)
+            found[key] = _refine(f, y[i], first[i] - 1, lambda x, at=at, z=level: math.log(abs(at(x))) - z)
+        out.append(found[key])
     return out
 
 
