@@ -5,7 +5,13 @@ import {el, svg, setAttr, setText, Pool, px, size} from '../dom.js'
 import {THIN, fixed, signed} from '../format.js'
 import {style, markerAttributes} from '../marks.js'
 
-const SIDE = 14 // px of the figure left and right of its frame, for the outermost tick labels
+const SIDE = 8 // px of the figure left and right of its frame, so that markers at the ends are whole
+
+// the smallest of 1, 2, 5 times a power of ten that is not under `least`
+function niceStep(least) {
+  const power = 10 ** Math.floor(Math.log10(least))
+  return [1, 2, 5, 10].map(m => m * power).find(step => step >= least * (1 - 1e-9))
+}
 
 export function mount(node, sheet) {
   const under = svg('svg', {role: 'img', 'aria-label': 'Contributions, transfer curves and headroom on one voltage ruler', class: 'under'})
@@ -17,26 +23,29 @@ export function mount(node, sheet) {
   node.className = 'curves'
   node.append(under, slot, over, key, whole, table)
   const below = new Pool(under), above = new Pool(over)
-  let figure = null, frame = ''
+  let figure = null, frame = '', heard = false, latest = null
 
   // the figure's own size follows the page's; its data come from the server
   function fitFigure(x, y, width, height, bottom) {
     figure ??= window.Bokeh?.documents?.map(d => d.get_model_by_name('transfer')).find(Boolean) ?? null
     if (!figure) { setTimeout(() => sheet.redraw(), 150); return }
+    if (!heard) {
+      heard = true
+      for (const end of ['start', 'end']) figure.x_range.properties[end].change.connect(() => { if (latest) requestAnimationFrame(() => update(latest)) })
+    }
     const wanted = [x, y, width, height, bottom].map(Math.round).join()
     slot.style.transform = `translate(${Math.round(x - SIDE)}px,${Math.round(y)}px)`
     if (wanted === frame) return
     frame = wanted
-    const size = `${px('--t-1')}px`
     figure.setv({
       width: Math.round(width) + 2 * SIDE, height: Math.round(height + bottom),
       min_border_left: SIDE, min_border_right: SIDE, min_border_top: 0, min_border_bottom: Math.round(bottom),
       frame_width: Math.round(width), frame_height: Math.round(height),
     })
-    for (const axis of figure.below) axis.major_label_text_font_size = size
   }
 
   function update(shown) {
+    latest = shown
     const W = size(node).width
     if (!W) return
     const k = px('--t-1') / 14
@@ -93,9 +102,17 @@ export function mount(node, sheet) {
 
     // transfer curves: the caption and the present output here, the curves in the figure
     p.text(b[0], 12 * k, narrow ? 'Output against each signal' : 'Output against each signal, the others where they are', {class: 'cap'})
-    p.path(`M${b[0]} ${y1}V${y0}`, {class: 'axis'})
+    p.path(`M${b[1]} ${y1}H${b[0]}V${y0}`, {class: 'axis'})
     p.path(`M${b[0]} ${Y(shown.output)}H${b[1]}`, {class: 'present'})
-    fitFigure(b[0], y0, b[1] - b[0], y1 - y0, pb)
+    fitFigure(b[0], y0, b[1] - b[0], y1 - y0, 6)
+    const [x0, x1] = range(shown)
+    const step = niceStep(Math.max(1e-9, (x1 - x0) / 6.5)), places = Math.max(0, -Math.floor(Math.log10(step) + 1e-9))
+    for (let n = Math.ceil(x0 / step - 1e-6); n * step <= x1 + step * 1e-6; n++) {
+      const x = b[0] + (n * step - x0) / (x1 - x0) * (b[1] - b[0])
+      p.path(`M${x} ${y1}v5`, {class: 'axis'})
+      p.text(x, y1 + 18 * k, fixed(n * step, places), {class: 'soft', 'text-anchor': 'middle'})
+    }
+    p.text(b[1] + 12 * k, y1 + 18 * k, 'V', {class: 'soft'})
 
     // headroom
     p.text(c[0], 12 * k, narrow ? 'Headroom' : 'Headroom, all corners', {class: 'cap'})
@@ -111,15 +128,20 @@ export function mount(node, sheet) {
     marks(shown, b, Y, k)
     above.end()
     legend(shown, b, Y, y0, y1, k)
-    whole.hidden = true
+    const zoomed = x0 > shown.x[0] + 1e-9 || x1 < shown.x[1] - 1e-9
+    whole.hidden = !zoomed
+    if (zoomed) whole.style.transform = `translate(${Math.round(b[1] - 92 * k)}px,${Math.round(y0 + 4)}px)`
     setText(table, `The output is ${fixed(shown.output)} volts. ` + shown.clips.map(q => `${q.name}: ${clipWords(q)}.`).join(' '))
   }
+
+  const range = shown => figure ? [figure.x_range.start, figure.x_range.end] : shown.x
 
   // where the signal under the hand meets the limit
   function marks(shown, b, Y, k) {
     const q = shown.clips.find(x => x.name === shown.on && x.at !== null)
     if (!q || q.cell !== null) return
-    const [x0, x1] = shown.x
+    const [x0, x1] = range(shown)
+    if (q.at < x0 || q.at > x1) return
     const x = b[0] + (q.at - x0) / (x1 - x0) * (b[1] - b[0])
     const y = q.side === 'high' ? Y(q.y) - 14 * k : Y(q.y) + 24 * k
     above.text(Math.max(b[0] + 18, Math.min(b[1] - 18, x)), y, 'clips', {'text-anchor': 'middle', class: 'node red halo'})

@@ -173,9 +173,9 @@ def with_resistance(design: Design, key: str, ohm: float) -> Design:
     if j >= 0:
         legs = list(getattr(cell, field))
         legs[j] = replace(legs[j], resistance=ohm)
-        cell = replace(cell, **{field: tuple(legs)})
+        cell = replace(cell, **{field: tuple(legs)})  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
     else:
-        cell = replace(cell, **{field: ohm})
+        cell = replace(cell, **{field: ohm})  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
     return replace(design, cells=(*design.cells[:c], cell, *design.cells[c + 1 :]))
 
 
@@ -292,7 +292,8 @@ def _single(old: Design, new: Design, keep: set[str], follow: str) -> Cell:
     scale = gain / node if was.plus and node > 0 else feedback
     near = nearest_in_series(new)
     kept = {leg.source: leg for leg in (*was.minus, *was.plus)}
-    minus, plus = [], []
+    minus: list[Leg] = []
+    plus: list[Leg] = []
     for source, weight in wishes(new):
         side, before = (minus, was.minus) if weight < 0 else (plus, was.plus)
         if source in keep and any(leg.source == source for leg in before):
@@ -401,7 +402,7 @@ def _with_leg(old: Design, new: Design, name: str) -> tuple[Cell, ...]:
     feedback = last.feedback or old.cells[0].feedback or new.resistor.least
     leg = Leg(name, max(feedback / abs(new.signal(name).weight), new.resistor.least))
     node = "minus" if new.signal(name).weight < 0 or not last.plus else "plus"
-    return (*old.cells[:-1], replace(last, **{node: (*getattr(last, node), leg)}))
+    return (*old.cells[:-1], replace(last, **{node: (*getattr(last, node), leg)}))  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
 
 
 # ---------------------------------------------------------------- everything else

@@ -14,8 +14,6 @@ from sumwright.engine.stage import REFERENCE
 from .fold import Context, Fold
 from .palette import COLOURS, colour, dash, marker
 
-FONT = '"Segoe UI", "Helvetica Neue", "Liberation Sans", Arial, sans-serif'
-
 
 class Curves(Fold):
     """Output against each signal, beside what each adds and how far every output goes."""
@@ -48,12 +46,7 @@ class Curves(Fold):
             BoxZoomTool(dimensions="width"), PanTool(dimensions="width"), ResetTool(),
             WheelZoomTool(dimensions="width", modifiers="ctrl"),
         )  # fmt: skip
-        axis = f.xaxis[0]
-        axis.axis_label = None
-        axis.minor_tick_line_color = None
-        axis.major_tick_in, axis.major_tick_out, axis.major_label_standoff = 0, 5, 4
-        axis.major_label_text_font = FONT
-        self._axis = axis
+        f.xaxis.visible = False  # the browser draws it with the ruler, from the range as it is zoomed
         f.multi_line("x", "y", source=self._lines, line_color="colour", line_dash="dash", line_width="width",
                      line_join="round")  # fmt: skip
         self._ideal_line = f.line("x", "y", source=self._ideal, line_width=1.4, line_dash=[1, 4], line_cap="round")
@@ -69,9 +62,6 @@ class Curves(Fold):
         if theme == self._theme or self._figure is None:
             return
         self._theme, ink = theme, COLOURS[theme]
-        self._axis.update(
-            axis_line_color=ink["line"], major_tick_line_color=ink["line"], major_label_text_color=ink["ink-2"]
-        )
         self._ideal_line.glyph.line_color = ink["ink-2"]
         self._ticks.glyph.line_color = ink["accent"]
         self._dots.glyph.line_color = ink["paper"]
