@@ -1,10 +1,17 @@
 """The bring-up sheet leaves room to write; the calibration record says what was measured, and how well."""
 
+import dataclasses
+import re
 from datetime import UTC, datetime
 from html import unescape
 
 import pytest
+from sumwright.command import main
 from sumwright.engine.analysis import Analysis
+from sumwright.engine.bench.plan import plan
+from sumwright.engine.operating_point import operating_point
+from sumwright.engine.stage import Leg
+from sumwright.files.design import write_design
 from sumwright.files.examples import example
 from sumwright.report.bench_papers import bring_up_sheet, calibration_record
 
@@ -47,7 +54,7 @@ def test_every_step_has_its_limits_and_two_blanks():
 
 
 def test_a_step_of_nothing_says_so():
-    assert "every signal at 0 V" in bring_up_sheet(Analysis(example()), [step(apply={})], now=NOON)
+    assert "every signal at 0 V" in bring_up_sheet(Analysis(example()), [step(apply={"ridge": 0.0})], now=NOON)
 
 
 def test_the_record_gives_weights_uncertainty_verdicts_and_statement():
@@ -79,3 +86,98 @@ def test_explanations_stay_text():
     d = example()
     text = calibration_record(d, diagnosis(d), readings(d), now=NOON)
     assert "<b>no current</b>" not in text and "<b>no current</b>" in unescape(text)
+
+
+# The command ---------------------------------------------------------------------------------------
+
+
+@pytest.fixture
+def files(tmp_path):
+    d = example()
+    (tmp_path / "vent.json").write_text(write_design(d), encoding="utf-8")
+    net = operating_point(d)
+    lines = ["ridge,bed,sun,damp,wind,output"]
+    for row in [[0.0] * 5, *([10.0 * (i == j) / (2 if j == 4 else 1) for j in range(5)] for i in range(5)), [2.0] * 5]:
+        lines.append(",".join(map(str, [*row, round(net.offset + float(net.weights @ row), 6)])))
+    (tmp_path / "run.csv").write_text("\n".join(lines) + "\n", encoding="utf-8")
+    return tmp_path
+
+
+def test_the_command_writes_both_papers(files):
+    out = files / "x.html"
+    design = str(files / "vent.json")
+    assert main(["report", design, "-o", str(out), "--kind", "bring-up", "--author", "R. Okafor"]) == 0
+    text = out.read_text(encoding="utf-8")
+    assert text.count('<td class="write') == 2 * len(plan(example()))
+    assert (
+        main(
+            [
+                "report",
+                design,
+                "-o",
+                str(out),
+                "--kind",
+                "calibration",
+                "--readings",
+                str(files / "run.csv"),
+                "--meter",
+                "0.02 % + 0.1 mV",
+                "--board",
+                "0042",
+            ]
+        )
+        == 0
+    )
+    text = out.read_text(encoding="utf-8")
+    assert "all in" in text and "0042" in text and "0.02 % + 0.1 mV" in text
+    assert "Standard uncertainty of a reading, as stated" in text
+
+
+def test_a_board_with_a_wrong_leg_is_out(files):
+    d = example()
+    wrong = dataclasses.replace(
+        d, cells=(dataclasses.replace(d.cells[0], minus=(Leg("wind", d.cells[0].minus[0].resistance * 1.04),)),)
+    )
+    made = operating_point(wrong)
+    rows = [[0.0] * 5, *([10.0 * (i == j) / (2 if j == 4 else 1) for j in range(5)] for i in range(5)), [2.0] * 5]
+    lines = [
+        "ridge,bed,sun,damp,wind,output",
+        *(",".join(map(str, [*r, made.offset + float(made.weights @ r)])) for r in rows),
+    ]
+    (files / "run.csv").write_text("\n".join(lines), encoding="utf-8")
+    out = files / "x.html"
+    assert (
+        main(
+            [
+                "report",
+                str(files / "vent.json"),
+                "-o",
+                str(out),
+                "--kind",
+                "calibration",
+                "--readings",
+                str(files / "run.csv"),
+                "--meter",
+                "0.02 % + 0.1 mV",
+            ]
+        )
+        == 0
+    )
+    text = out.read_text(encoding="utf-8")
+    assert re.search(r"\d out", text) and "leg wrong value" in text
+
+
+@pytest.mark.parametrize(
+    "more",
+    [
+        ["--kind", "calibration"],
+        ["--readings", "run.csv"],
+        ["--kind", "bring-up", "--bundle", "x.zip"],
+        ["--kind", "other"],
+    ],
+)
+def test_what_does_not_go_together_is_refused_and_nothing_written(files, capsys, more):
+    out = files / "x.html"
+    assert main(["report", str(files / "vent.json"), "-o", str(out), *more]) == 2
+    assert capsys.readouterr().err.count("\n") == 1
+    assert not out.exists()

@@ -36,7 +36,8 @@ def bring_up_sheet(
     analysis : Analysis
     plan : mapping or sequence
         The steps, or a document with them under `steps`; each has `number`, `apply`,
-        `probe`, `expect`, `low`, `high`, `unit`, `why`, `miss`.
+        `probe`, `expect`, `low`, `high`, `unit`, `why`, `miss`, and perhaps `title`,
+        `setup` and `caution`.
     """
     steps = plan["steps"] if isinstance(plan, Mapping) else plan
     design = analysis.design
@@ -58,6 +59,7 @@ def _step(step: Mapping[str, Any]) -> dict[str, Any]:
     return {
         "number": step["number"], "apply": _applied(step["apply"]), "probe": step["probe"], "expect": shown(step["expect"]),
         "low": shown(step["low"]), "high": shown(step["high"]), "why": step["why"], "miss": step["miss"],
+        "title": step.get("title", ""), "setup": step.get("setup", ""), "caution": step.get("caution", ""),
     }  # fmt: skip
 
 
@@ -65,11 +67,13 @@ def _applied(volts: Mapping[str, float] | str | None) -> str:
     if isinstance(volts, str):
         return volts
     live = {k: v for k, v in (volts or {}).items() if v}
-    return ", ".join(f"{k} {format_fixed(v, 'V')}" for k, v in live.items()) or "every signal at 0 V"
+    if live:
+        return ", ".join(f"{k} {format_fixed(v, 'V')}" for k, v in live.items())
+    return "every signal at 0 V" if volts else "–"
 
 
 def calibration_record(
-    design: Design, diagnosis: Mapping[str, Any], readings: Sequence[Mapping[str, float]], *, limits: Mapping[str, tuple[float, float]] | None = None,
+    design: Design, diagnosis: Mapping[str, Any], readings: Sequence[Mapping[str, float]], *,
     board: str = "", meter: str = "", author: str | None = None, now: datetime | None = None,
 ) -> str:  # fmt: skip
     """A board's weights as measured, with their uncertainty and verdicts, HTML.
@@ -81,24 +85,30 @@ def calibration_record(
         The document of `sumwright diagnose --json`.
     readings : sequence of mapping
         One a row: signals [V], `output` [V] and perhaps `uncertainty` [V].
-    limits : mapping, optional
-        By signal, the least and greatest weight that its parts allow.
     board, meter : str, optional
         Which board, and the meter's own statement (type, uncertainty, when calibrated); blanks to fill in if not given.
     """
-    limits = limits or {}
     fit, verdicts = diagnosis["fit"], diagnosis["verdicts"]
     rows = []
     for s in design.signals:
-        if s.name not in fit["weights"]:
-            continue
-        found = fit["weights"][s.name]
-        low, high = limits.get(s.name, (None, None))
         rows.append(
-            (s.name, s.weight, low, high, found["value"], found["standard_uncertainty"], verdicts.get(s.name, ""))
+            _row(
+                s.name,
+                s.weight,
+                fit["weights"].get(s.name),
+                diagnosis.get("limits", {}).get(s.name),
+                verdicts.get(s.name, ""),
+            )
         )
-    offset = fit["offset"]
-    rows.append(("offset, V", design.target.offset, None, None, offset["value"], offset["standard_uncertainty"], ""))
+    rows.append(
+        _row(
+            "offset, V",
+            design.target.offset,
+            fit["offset"],
+            diagnosis.get("limits", {}).get("offset"),
+            diagnosis.get("offset_verdict", ""),
+        )
+    )
     weights = Table(
         "fitted",
         "Fitted weights",
@@ -112,9 +122,36 @@ def calibration_record(
     return render(
         "calibration.html", "calibration record", about(design, author, now), board=board, meter=meter, passed=passed, headline=headline,
         count=", ".join(f"{n} {word}" for word, n in counts.items()), statement=_statement(readings, meter), weights=weights,
-        fit_note=_fit_note(fit), chart=_chart(rows[:-1]).svg(), suspects=_suspects(diagnosis.get("suspects", ())),
-        next=_applied(diagnosis.get("next_reading")) if diagnosis.get("next_reading") else "", readings=_readings(design, readings),
+        fit_note=_fit_note(fit), notes=list(diagnosis.get("notes", ())), chart=_chart(rows[:-1]).svg(), suspects=_suspects(diagnosis.get("suspects", ())),
+        next=_applied(diagnosis.get("next_reading")) if diagnosis.get("next_reading") else "", readings=_readings(design, readings, fit.get("left_out", ())),
     )  # fmt: skip
+
+
+def readings_rows(readings, meter=None) -> list[dict[str, float]]:
+    """`engine.bench.readings.Readings` as `calibration_record` takes them; `meter` states what they do not."""
+    rows = []
+    for i in range(readings.count):
+        row = {n: float(v) for n, v in zip(readings.names, readings.volts[i], strict=True) if n not in readings.unnamed}
+        row["output"] = float(readings.output[i])
+        if readings.uncertainty is not None:
+            row["uncertainty"] = float(readings.uncertainty[i])
+        elif meter is not None:
+            row["uncertainty"] = float(meter.standard_uncertainty(row["output"]))
+        rows.append(row)
+    return rows
+
+
+def _row(name, wanted, found, limit, verdict) -> tuple[Any, ...]:
+    found, limit = found or {}, limit or {}
+    return (
+        name,
+        wanted,
+        limit.get("low"),
+        limit.get("high"),
+        found.get("value"),
+        found.get("standard_uncertainty"),
+        verdict,
+    )
 
 
 _COLUMNS = (
@@ -172,7 +209,7 @@ def _suspects(suspects) -> Table | None:
     return Table("suspects", "Suspects", columns, rows)
 
 
-def _readings(design: Design, readings) -> Table:
+def _readings(design: Design, readings, left_out) -> Table:
     names = [n for n in design.signal_names if any(n in r for r in readings)]
     stated = any(r.get("uncertainty") for r in readings)
     columns = [
@@ -182,8 +219,12 @@ def _readings(design: Design, readings) -> Table:
     ]
     if stated:
         columns.append(Column("u", "V", "scaled", 2))
+    out = {x["row"]: x["why"] for x in left_out}
+    if out:
+        columns.append(Column("left out of the fit"))
     rows = [
-        (i, *(r.get(n, 0.0) for n in names), r["output"], *([r.get("uncertainty")] if stated else [])) for i, r in enumerate(readings, 1)
+        (i, *(r.get(n, 0.0) for n in names), r["output"], *([r.get("uncertainty")] if stated else []), *([out.get(i - 1, "")] if out else []))
+        for i, r in enumerate(readings, 1)
     ]  # fmt: skip
     return Table("readings", "Readings", tuple(columns), tuple(rows))
 
@@ -195,6 +236,10 @@ def _chart(rows, width: float = 680.0) -> Drawing:
     x = Scale(-1.0, 1.0, 190.0, width - 90.0)
     for i, (name, wanted, low, high, value, u, verdict) in enumerate(rows):
         y = i * 26 + 16.0
+        if value is None:
+            d.text(180, y + 5, name, anchor="end")
+            d.text(x(0), y + 5, "not told by these readings", anchor="middle", fill=SOFT)
+            continue
         middle = wanted if low is None else (low + high) / 2
         half = 0.0 if low is None else (high - low) / 2
         reach = max(half, abs(value - middle) + 2 * (u or 0.0), 1e-12) * 1.15
@@ -213,4 +258,4 @@ def _chart(rows, width: float = 680.0) -> Drawing:
     return d
 
 
-__all__ = ["bring_up_sheet", "calibration_record"]
+__all__ = ["bring_up_sheet", "calibration_record", "readings_rows"]

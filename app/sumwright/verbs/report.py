@@ -1,24 +1,43 @@
-"""`sumwright report`: the design report as one HTML file that stands alone."""
+"""`sumwright report`: the design report, the bring-up sheet or the calibration record, one HTML file that stands alone."""
 
 from __future__ import annotations
 
 import argparse
 from datetime import UTC, datetime
 from pathlib import Path
+from typing import Any
 
 from sumwright.engine.analysis import Analysis
+from sumwright.engine.bench.readings import parse_meter
+from sumwright.engine.stage import Design
+from sumwright.errors import SumwrightError
 from sumwright.files.text import write_whole
+from sumwright.report.bench_papers import bring_up_sheet, calibration_record, readings_rows
 from sumwright.report.document import DRAWS, design_report
 from sumwright.report.export import bundle
 from sumwright.report.schematic import SYMBOLS
 from sumwright.verbs.common import add_design, load_design, whole
 
+KINDS = ("design", "bring-up", "calibration")
 MOST_DRAWS = 10_000_000
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     add_design(parser)
     parser.add_argument("-o", "--output", metavar="FILE.html", type=Path, required=True, help="where the report goes")
+    parser.add_argument(
+        "--kind", choices=KINDS, default="design",
+        help="the design report; the bring-up sheet with blanks to fill in; or the calibration record of a board that was measured",
+    )  # fmt: skip
+    parser.add_argument(
+        "--readings", metavar="FILE.csv", type=Path, help="of --kind calibration: the readings, as diagnose takes them"
+    )
+    parser.add_argument(
+        "--meter",
+        metavar="STATEMENT",
+        help="of bring-up and calibration: the meter's accuracy as its data sheet states it",
+    )
+    parser.add_argument("--board", metavar="NAME", default="", help="of calibration: which board")
     parser.add_argument(
         "--symbols", choices=sorted(SYMBOLS), default="iec", help="resistor symbols: IEC 60617 or IEEE 315 (iec)"
     )
@@ -36,11 +55,44 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     draws = DRAWS if args.draws is None else whole(args.draws, "--draws", 0, MOST_DRAWS)
     seed = 0 if args.seed is None else whole(args.seed, "--seed", 0, 2**63 - 1)
-    analysis = Analysis(load_design(args.design))
-    how = {"symbols": args.symbols, "draws": draws, "seed": seed, "author": args.author, "now": datetime.now(UTC)}
-    text = design_report(analysis, **how)
-    files = None if args.bundle is None else bundle(analysis, **how)
+    if (args.kind == "calibration") != (args.readings is not None):
+        raise SumwrightError(
+            "A calibration record is made from readings: give both --kind calibration and --readings FILE.csv."
+        )
+    if args.kind != "design" and args.bundle is not None:
+        raise SumwrightError("--bundle goes with the design report; leave out --kind, or --bundle.")
+    design = load_design(args.design)
+    head: dict[str, Any] = {"author": args.author, "now": datetime.now(UTC)}
+    files = None
+    if args.kind == "bring-up":
+        text = _bring_up(design, args, head)
+    elif args.kind == "calibration":
+        text = _calibration(design, args, head)
+    else:
+        analysis = Analysis(design)
+        how = {"symbols": args.symbols, "draws": draws, "seed": seed, **head}
+        text = design_report(analysis, **how)
+        files = None if args.bundle is None else bundle(analysis, **how)
     write_whole(args.output, text)
     if files is not None:
         write_whole(args.bundle, files)
     return 0
+
+
+def _bring_up(design: Design, args: argparse.Namespace, head: dict[str, Any]) -> str:
+    from sumwright.engine.bench.plan import plan
+
+    meter = None if args.meter is None else parse_meter(args.meter)
+    return bring_up_sheet(Analysis(design), [s._asdict() for s in plan(design, meter)], symbols=args.symbols, **head)
+
+
+def _calibration(design: Design, args: argparse.Namespace, head: dict[str, Any]) -> str:
+    from sumwright.engine.bench.diagnose import diagnose
+    from sumwright.files.readings import read_readings
+    from sumwright.verbs.diagnose import to_json
+
+    meter = None if args.meter is None else parse_meter(args.meter)
+    readings = read_readings(args.readings, design)
+    found = to_json(diagnose(design, readings, meter=meter))
+    rows = readings_rows(readings, meter)
+    return calibration_record(design, found, rows, board=args.board, meter=args.meter or "", **head)

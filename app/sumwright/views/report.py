@@ -20,7 +20,7 @@ from sumwright.report.schematic import SYMBOLS
 
 from .fold import Context, Fold
 
-KINDS = ("report", "bundle", "summary", "table", "picture")
+KINDS = ("report", "bring-up", "bundle", "summary", "table", "picture")
 DRAWS_MOST = 1_000_000
 _SYMBOLS = {words: key for key, words in SYMBOLS.items()}
 # Every table and picture there is, with the word a person reads.
@@ -144,6 +144,13 @@ def make(
     }  # fmt: skip
     if kind == "report":
         return f"{stem}.html", "text/html", design_report(analysis, **how).encode()
+    if kind == "bring-up":
+        from sumwright.engine.bench.plan import plan
+        from sumwright.report.bench_papers import bring_up_sheet
+
+        steps = [s._asdict() for s in plan(design)]
+        text = bring_up_sheet(analysis, steps, symbols=order["symbols"], author=order["author"], now=now)
+        return f"{stem}-bring-up.html", "text/html", text.encode()
     if kind == "bundle":
         return f"{stem}.zip", "application/zip", bundle(analysis, theme="light", **how)
     if kind == "summary":
