@@ -28,14 +28,15 @@ def checks(analysis) -> tuple[Check, ...]:
     accuracy = design.target.accuracy
     share = bool(accuracy and full)
     limit = 0.5 * accuracy / full if share else USUAL
-    largest = max(abs(s.weight) for s in design.signals)
+    # what is wanted to be next to nothing is compared with the largest weight
+    largest = max(abs(s.weight) for s in design.signals) or 1.0
     rows = [
-        (s.name, float(made), s.weight, (float(made) - s.weight) / (abs(s.weight) or largest or 1.0))
+        (s.name, float(made), s.weight, (float(made) - s.weight) / _whole(s.weight, largest))
         for s, made in zip(design.signals, dc.weights, strict=True)
         if s.name not in analysis.unplugged
     ]
     if offset:
-        rows.append((REFERENCE, dc.offset, offset, (dc.offset - offset) / abs(offset)))
+        rows.append((REFERENCE, dc.offset, offset, (dc.offset - offset) / _whole(offset, full)))
     if not rows:
         return (unknown(KEY, TITLE, "%", "Every cable is out.", "Plug one in."),)
     name, made, wanted, error = max(rows, key=lambda row: abs(row[3]))
@@ -50,6 +51,11 @@ def checks(analysis) -> tuple[Check, ...]:
             lambda goal: _cure(analysis, name, made, wanted),
         ),
     )  # fmt: skip
+
+
+def _whole(wanted, largest):
+    """What an error is a share of."""
+    return abs(wanted) if abs(wanted) > 1e-9 * largest else largest
 
 
 def _cure(analysis, name, made, wanted):
@@ -89,7 +95,7 @@ def _leg(analysis, i, ratio):
         g += 1.0 / net.resistances[cell.plus_ground] if cell.plus_ground >= 0 else 0.0
         share = ratio / (total * g)
         others = g - 1.0 / total
-        if not 0 < share < 1 or others <= 0:
+        if not 1e-9 < share < 1 or others <= 0:
             return None
         new = (1.0 - share) / (share * others)
     fitted = float(new - (total - part.resistance))
