@@ -4,6 +4,12 @@ import {el, setText} from './dom.js'
 import {THIN, fixed, signed} from './format.js'
 import {read} from './commands.js'
 
+const EXAMPLES = [
+  ['glasshouse-vent', 'Glasshouse roof vent', 'four sensors open it, the wind closes it; either sign on one op amp'],
+  ['village-hall-bus', 'Village hall', 'four microphones on one bus; inverting'],
+  ['tide-gauge', 'Tide gauge', '\u00b12 V shifted into a 3.3 V converter on a single supply'],
+  ['lock-gate-switches', 'Lock gate', 'four switches weighted 8, 4, 2, 1'],
+]
 const EXAMPLE = 'out = 0.25 left + 0.25 right \u2212 0.5 zero + 0.5 V'
 
 export function mount(node, sheet) {
@@ -15,7 +21,10 @@ export function mount(node, sheet) {
   node.className = 'new'
   node.append(
     el('h3', {text: 'Write the sum you want, or paste a list: one signal and its weight a line'}), text, wrong, told,
-    el('div', {class: 'row'}, draw, el('button', {class: 'act', text: 'Open a design file', onclick: () => file.click()}), file, el('button', {class: 'act', text: 'Back to the sheet', onclick: () => { location.hash = 'curves' }})))
+    el('div', {class: 'row'}, draw, el('button', {class: 'act', text: 'Open a design file', onclick: () => file.click()}), file, el('button', {class: 'act', text: 'Back to the sheet', onclick: () => { location.hash = 'curves' }})),
+    el('h3', {text: 'Or begin from an example, all invented'}),
+    el('ul', {class: 'examples'}, ...EXAMPLES.map(([name, title, words]) => el('li', {},
+      el('button', {class: 'act', text: title, onclick: () => sheet.act({do: 'example', example: name})}), ' ', el('span', {class: 'soft', text: words})))))
   let soon = 0
   text.addEventListener('input', () => {
     clearTimeout(soon)

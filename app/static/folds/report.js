@@ -118,6 +118,7 @@ export function mount(node, sheet) {
   function show(text) {
     const parsed = new DOMParser().parseFromString(text, 'image/svg+xml').documentElement
     if (parsed.nodeName !== 'svg') return
+    parsed.setAttribute('class', 'paper') // it brings its own hand
     look.replaceChildren(document.importNode(parsed, true))
     setText(said, '')
   }

@@ -16,6 +16,8 @@ from sumwright import fields
 from sumwright.engine.catalogue import catalogue
 from sumwright.engine.stage import ARRANGEMENTS, Design
 from sumwright.files.design import design_document, read_design, write_design
+from sumwright.files.examples import NAMES as EXAMPLES
+from sumwright.files.examples import example
 from sumwright.model import edits, sums
 from sumwright.model.workbench import SYMBOLS, THEMES, Workbench, renamed
 from sumwright.quantity import parse_quantity
@@ -277,6 +279,13 @@ def open_file(bench: Workbench, message: dict) -> dict:
     return {"opened": design.title, "note": drawn}
 
 
+def open_example(bench: Workbench, message: dict) -> dict:
+    """One of the package's example designs takes the sheet's place; undo gives back what was there."""
+    design = example(fields.one_of(message, "example", EXAMPLES))
+    bench.put(design)
+    return {"opened": design.title, "note": f"{design.title}. Undo gives back the sheet you had."}
+
+
 def save_file(bench: Workbench, message: dict) -> dict:
     """The design as a file to keep."""
     safe = re.sub(r"[^\w\- ]+", "", bench.title).strip().replace(" ", "-").lower()[:60] or "design"
@@ -307,7 +316,7 @@ ACTS: dict[str, Callable[[Workbench, dict], dict | None]] = {
     "value": value, "let_go": let_go, "signal": signal, "weight": weight, "offset": offset, "name": name, "add": add,
     "remove": remove, "move": move, "order": order, "plug": plug, "on": on, "part": part, "capacitor": capacitor, "arrange": arrange,
     "follow": follow, "figure": figure, "series": series, "stray": stray, "band": band, "amplifier": amplifier,
-    "title": title, "symbols": symbols, "theme": theme, "undo": undo, "redo": redo, "open": open_file,
+    "title": title, "symbols": symbols, "theme": theme, "undo": undo, "redo": redo, "open": open_file, "example": open_example,
     "save": save_file, "read_sum": read_sum, "draw_sum": draw_sum,
 }  # fmt: skip
 # What anybody who can see the sheet may do: it changes nothing that is kept.
