@@ -106,7 +106,7 @@ def _misfit(arrangement: str, wanted: tuple[Wanted, ...], design: Design) -> str
     for w in wanted:
         if w.weight * sign > 0:
             continue
-        if w.source == REFERENCE:
+        if w.source == REFERENCE and design.reference is not None:
             need = "negative" if design.reference.voltage > 0 else "positive"
             return (
                 f"The {arrangement} arrangement cannot make an offset of {design.target.offset:g} V from a reference of "

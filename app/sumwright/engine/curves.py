@@ -105,7 +105,7 @@ def transfer_curves(
     total = present @ weights + design.target.offset
     curves = []
     last = net.cell_count - 1
-    for q, s in enumerate(design.signals):
+    for q, s in enumerate(design.signals):  # type: ignore[assignment]
         x, y = _tidy(xs[q], ys[q])
         rest = total - weights[q] * present[q]
 

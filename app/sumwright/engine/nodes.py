@@ -23,7 +23,7 @@ Source: Kirchhoff's current law at each node.
 from __future__ import annotations
 
 from itertools import product
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -330,7 +330,10 @@ def solve(
             rm = _plus_columns(rm, col(y_in) * e, columns)
 
         # the op amp's row
-        a_m, a_p, a_o, a_i = -1.0, 1.0, -inv_a, -r_out * inv_a
+        a_m: Any = -1.0
+        a_p: Any = 1.0
+        a_o: Any = -inv_a
+        a_i: Any = -r_out * inv_a
         ro = np.zeros(columns)
         if common_mode is not None:
             cm = np.asarray(common_mode)[..., k]
@@ -540,7 +543,7 @@ def solve_clipped(net: Network, sources, *, limits: Limits | None = None, state=
     amp = net.design.op_amp
     a_ol = amp.open_loop_gain if gain is None else np.asarray(gain)
     v = np.asarray(sources, dtype=float)[..., None]
-    st = np.asarray(state) if state is not None else None
+    st: Any = np.asarray(state) if state is not None else None
     upstream_first = tuple(range(net.cell_count))
     for order in (upstream_first, upstream_first[::-1]):
         for _ in range(10 + 8 * net.cell_count):

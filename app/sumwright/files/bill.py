@@ -35,7 +35,7 @@ class BillLine(NamedTuple):
     note: str = ""
 
     @property
-    def count(self) -> int:
+    def count(self) -> int:  # type: ignore[override]
         return len(self.designators)
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import csv
 import io
+from typing import Any
 
 from sumwright.engine.catalogue import FIGURES, Entry, own
 from sumwright.engine.stage import OpAmp
@@ -49,7 +50,8 @@ def read_op_amps(text: str) -> tuple[Entry, ...]:
         )
     if len(numbered) - 1 > MOST_ROWS:
         raise InvalidDesign(f"the list holds {len(numbered) - 1} op amps; at most {MOST_ROWS} are read.", "")
-    entries, seen = [], {}
+    entries: list[Any] = []
+    seen: dict[str, Any] = {}
     for line, row in numbered[1:]:
         if len(row) != len(names):
             raise InvalidDesign(f"line {line} has {len(row)} fields, the header has {len(names)}.", str(line))

@@ -173,9 +173,9 @@ def with_resistance(design: Design, key: str, ohm: float) -> Design:
     if j >= 0:
         legs = list(getattr(cell, field))
         legs[j] = replace(legs[j], resistance=ohm)
-        cell = replace(cell, **{field: tuple(legs)})  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
+        cell = replace(cell, **{field: tuple(legs)})  # type: ignore[arg-type]
     else:
-        cell = replace(cell, **{field: ohm})  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
+        cell = replace(cell, **{field: ohm})  # type: ignore[arg-type]
     return replace(design, cells=(*design.cells[:c], cell, *design.cells[c + 1 :]))
 
 
@@ -402,7 +402,7 @@ def _with_leg(old: Design, new: Design, name: str) -> tuple[Cell, ...]:
     feedback = last.feedback or old.cells[0].feedback or new.resistor.least
     leg = Leg(name, max(feedback / abs(new.signal(name).weight), new.resistor.least))
     node = "minus" if new.signal(name).weight < 0 or not last.plus else "plus"
-    return (*old.cells[:-1], replace(last, **{node: (*getattr(last, node), leg)}))  # type: ignore[arg-type]  # type: ignore[arg-type]  # type: ignore[arg-type]
+    return (*old.cells[:-1], replace(last, **{node: (*getattr(last, node), leg)}))  # type: ignore[arg-type]
 
 
 # ---------------------------------------------------------------- everything else

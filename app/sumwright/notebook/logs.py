@@ -12,6 +12,7 @@ import re
 import sys
 import traceback
 from datetime import UTC, datetime
+from typing import Any
 
 # Loggers whose lines carry what a browser sent.
 _CARRIERS = ("bokeh.server.protocol_handler", "bokeh.server.views.ws", "bokeh.server.session", "bokeh.document")
@@ -29,7 +30,12 @@ class Formatter(logging.Formatter):
 
     def format(self, record: logging.LogRecord) -> str:
         at = datetime.fromtimestamp(record.created, UTC).isoformat(timespec="milliseconds").replace("+00:00", "Z")
-        event = {"at": at, "level": record.levelname.lower(), "logger": record.name, "event": _event(record)}
+        event: dict[str, Any] = {
+            "at": at,
+            "level": record.levelname.lower(),
+            "logger": record.name,
+            "event": _event(record),
+        }
         if record.process:
             event["process"] = record.process
         if record.exc_info and record.exc_info[0] is not None:

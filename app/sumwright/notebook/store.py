@@ -220,7 +220,7 @@ class Store:
                 .where(SheetRow.notebook == key, SheetRow.number == number, SheetRow.revision == revision)
                 .values(**values)
             )
-            if done.rowcount == 1:
+            if done.rowcount == 1:  # type: ignore[attr-defined]
                 return revision + 1, now
         raise SheetConflict(self.sheet(key, number))
 
@@ -433,7 +433,9 @@ def _engine(url: str | Path) -> Engine:
 
 def _place(engine: Engine) -> str:
     """The store's address without its password."""
-    return engine.url.database if engine.dialect.name == "sqlite" else engine.url.render_as_string(hide_password=True)
+    return (
+        str(engine.url.database) if engine.dialect.name == "sqlite" else engine.url.render_as_string(hide_password=True)
+    )
 
 
 def _sqlite_set_up(connection: Any, _record: Any) -> None:

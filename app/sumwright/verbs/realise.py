@@ -67,7 +67,7 @@ def run(args: argparse.Namespace) -> int:
     )
     document = to_json(design, result)
     if goal is not None:
-        document["buy"] = [p._asdict() for p in to_buy(design, result, drawer, goal)]
+        document["buy"] = [p._asdict() for p in to_buy(design, result, drawer, goal)]  # type: ignore[arg-type]
     if args.bill is not None:
         write_whole(args.bill, bill_csv(replace(design, cells=result.choices[0].cells)))
     if args.json:

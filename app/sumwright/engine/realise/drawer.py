@@ -48,7 +48,7 @@ class Purchase(NamedTuple):
     """What to buy, and where it goes."""
 
     value: float  # ohm
-    count: int
+    count: int  # type: ignore[assignment]
     place: str
 
 
@@ -158,7 +158,7 @@ def _deal(task: Task, arrangement: str, counts, best: float):
             unique, back = np.unique(scale, return_inverse=True)
             bound = np.maximum(bound, legs.nearest(unique)[1].max(axis=1)[back])
     odd = task.oddness[trios].sum(axis=1)
-    found = []
+    found: list = []
     order = np.lexsort((odd, np.round(bound, 13)))
     for tried, k in enumerate(order):
         if bound[k] >= best:
@@ -204,8 +204,9 @@ def _assign(sides, left, limit: float):
     for legs, scale in sides:
         for i in range(len(legs)):
             error = np.abs(scale / legs.c[i] - 1.0)
-            order = np.argsort(error, kind="stable")
-            order = [k for k in order if error[k] < limit and left[float(legs.values[i][k])] > 0]
+            order = [
+                k for k in np.argsort(error, kind="stable") if error[k] < limit and left[float(legs.values[i][k])] > 0
+            ]
             rows.append([(float(error[k]), float(legs.values[i][k])) for k in order])
     if any(not row for row in rows):
         return None

@@ -23,7 +23,7 @@ from sumwright.engine.arrangement import Wanted
 class Sets(NamedTuple):
     """Sets of values for the legs of one node, one a row; `m` sets of `n` legs."""
 
-    index: np.ndarray  # (m, n) into each leg's own values
+    index: np.ndarray  # type: ignore[assignment]  # (m, n) into each leg's own values
     c_least: np.ndarray  # (m,) ohm, smallest |w| R of the set
     c_most: np.ndarray  # (m,) ohm
     siemens: np.ndarray  # (m,) sum of the legs' conductances

@@ -19,7 +19,7 @@ class Rows(NamedTuple):
     """Feedback resistors with the legs of the inverting node, one combination a row."""
 
     feedback: np.ndarray  # (r,) index into the values
-    index: np.ndarray  # (r, n) values of the legs
+    index: np.ndarray  # type: ignore[assignment]  # (r, n) values of the legs
     siemens: np.ndarray  # (r,) sum of the legs' conductances
     error: np.ndarray  # (r,) worst error of these legs
     odd: np.ndarray  # (r,)

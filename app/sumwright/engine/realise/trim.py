@@ -165,7 +165,7 @@ def trim_for(design: Design, cells: tuple[Cell, ...], source: str, *, settable: 
             factors = np.ones(len(every))
             factors[k] = 1.0 + 1e-6
             pull[k] = np.sign(abs(_weight(design, _scaled(centred, factors), source)) - base)
-    reference = design.reference.tolerance if source == REFERENCE else 0.0
+    reference = design.reference.tolerance if source == REFERENCE and design.reference is not None else 0.0
     needed = []
     for way in (-1.0, 1.0):  # everything else makes the weight small, then large
         corner = _scaled(centred, 1.0 + way * tolerance * pull)
