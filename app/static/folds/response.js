@@ -95,7 +95,7 @@ export function mount(node, sheet) {
         q.phase_margin === null ? none('–') : [`${fixed(q.phase_margin, 1)}°`, q.phase_margin < 45 ? 'r bad' : 'r'], q.gain_margin_db === null ? none('no end') : [`${fixed(q.gain_margin_db, 1)}${THIN}dB`, 'r'],
         m.cabled ? m.cabled.phase_margins[k] === null ? none('–') : [`${fixed(m.cabled.phase_margins[k], 1)}°`, m.cabled.phase_margins[k] < 45 ? 'r bad' : 'r'] : none('no cable')]))
       c.node.hidden = !m.cures?.length
-      setText(word, m.cures === null ? 'looking for parts…' : m.cures.length ? 'The smallest part that reaches 60°, and the bandwidth it costs. The resistor sits between the output and its load, the feedback before it.' : 'Nothing to cure, or no single part does it.')
+      setText(word, m.cures === null ? 'looking for parts…' : m.cures.length ? 'The smallest part that reaches 60° (or 52°, or 45°), and the bandwidth it costs. The resistor sits between the output and its load, the feedback before it.' : 'Nothing to cure, or no single part does it.')
       c.set((m.cures ?? []).map(q => {
         const cap = q.kind === 'feedback capacitor', id = `${q.cell}:${q.value}`
         if (cap && !fits.has(id)) fits.set(id, el('button', {class: 'act', text: 'fit it', onclick: () => say({do: 'fit', cell: q.cell, value: q.value})}))

@@ -249,17 +249,22 @@ def cabled_margins(stage, capacitances) -> CabledMargins:
     return CabledMargins(tuple(bands), tuple(margins))
 
 
-def cures(design: Design, wanted: float = WANTED_MARGIN):
-    """Every cure there is, found one after the other: a generator of the list so far, returning it."""
+def cures(design: Design, wanted: tuple[float, ...] = (WANTED_MARGIN, 52.0, 45.0)):
+    """Single parts that help: a generator of the list so far, returning it.
+
+    Of the margins `wanted` [degrees], best first, each part is tried for the best it reaches.
+    """
     found: list[Cure] = []
+    last = len(design.cells) - 1
     for k in range(len(design.cells)):
-        cure = feedback_capacitor(design, k, wanted)
-        if cure is not None:
-            found.append(cure)
-            yield found
-    cure = isolating_resistor(design, wanted)
-    if cure is not None:
-        found.append(cure)
+        tries = [lambda goal, k=k: feedback_capacitor(design, k, goal)]
+        if k == last:
+            tries.append(lambda goal: isolating_resistor(design, goal))
+        for look in tries:
+            cure = next((c for c in map(look, wanted) if c is not None), None)
+            if cure is not None:
+                found.append(cure)
+                yield found
     return found
 
 
