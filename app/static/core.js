@@ -11,6 +11,7 @@ import * as margins from './margins.js'
 import * as drawer from './drawer.js'
 import * as commands from './commands.js'
 import * as place from './place.js'
+import {speak} from './spoken.js'
 
 const start = JSON.parse(document.getElementById('start').textContent)
 const state = {}
@@ -83,7 +84,10 @@ function draw(resized) {
   const shown = state.shown?.[state.open]
   if (fold?.mounted && shown) {
     setText(fold.refused, shown.refused ?? state.problem ?? '')
-    if (shown.shown) fold.mounted.update(shown.shown, state, resized)
+    if (shown.shown) {
+      fold.mounted.update(shown.shown, state, resized)
+      speak(state.open, shown.shown, state)
+    }
   } else if (state.open === 'new') fold?.mounted?.update(null, state, resized)
   setText(tail.value, `${fixed(state.stage.output)}${THIN}V`)
   setClass(tail.value, 'red', state.stage.clipped !== 'no')
