@@ -36,13 +36,13 @@ def run(args: argparse.Namespace) -> int:
 
 
 def app_folder() -> Path:
-    """The folder that is served: beside the package in a checkout, or where it was installed with it."""
+    """The folder that is served: beside the package in a checkout, or `app` where the command is run."""
     package = Path(sumwright.__file__).parent
-    for folder in (package.parent, package / "served"):
+    for folder in (package.parent, Path.cwd() / "app"):
         if (folder / "main.py").is_file() and (folder / "static").is_dir():
             return folder
     raise SumwrightError(
-        f"The served folder (main.py and static) is neither {package.parent} nor {package / 'served'}; serve from a checkout."
+        f"The served folder (main.py and static) is neither {package.parent} nor {Path.cwd() / 'app'}; serve from a checkout."
     )
 
 
@@ -86,7 +86,7 @@ def serve(ours: Settings, *, show: bool = False) -> int:
     command = Ours(parser)
     folder = str(app_folder())
     words = [folder, "--address", ours.address, "--port", str(ours.port), "--num-procs", str(ours.processes)]
-    words += ["--session-token-expiration", "300", "--enable-xsrf-cookies", "--log-level", ours.log_level]
+    words += ["--liveness", "--session-token-expiration", "300", "--enable-xsrf-cookies", "--log-level", ours.log_level]
     words += ["--cookie-path", f"{ours.prefix}/", "--oauth-expiry-days", str(ours.session_hours / 24)]
     if ours.prefix:
         words += ["--prefix", ours.prefix]
