@@ -21,6 +21,13 @@ def _reader() -> MarkdownIt:
     )
 
 
+def _whole_address(tag: str, attribute: str, value: str) -> str | None:
+    """A link only to a whole address: one without a scheme would lead somewhere on this server, or to any other."""
+    if attribute == "href" and not value.lower().startswith(("http://", "https://")):
+        return None
+    return value
+
+
 def note_html(text: str) -> str:
     """The note as HTML for the page.
 
@@ -32,6 +39,7 @@ def note_html(text: str) -> str:
         tags=_TAGS,
         attributes={"a": {"href"}, "ol": {"start"}, "th": set(), "td": set()},
         url_schemes={"http", "https"},
+        attribute_filter=_whole_address,
         link_rel="noopener noreferrer nofollow",
         set_tag_attribute_values={"a": {"target": "_blank"}},
     )

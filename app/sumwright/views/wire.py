@@ -42,7 +42,7 @@ export function render({model, el}) {
             return
         try:
             message = json.loads(data)
-        except ValueError:
+        except (ValueError, RecursionError):  # brackets enough to exhaust the reader
             return
         if isinstance(message, dict):
             self.receive(message)
