@@ -195,7 +195,9 @@ class Choices(Fold):
             for p in c.parts
         }
         return " · ".join(
-            f"{name} {paired.get(name, format_resistor(ohm))}" for name, ohm in places(c.cells) if ohm > 0
+            f"{name.replace(' leg', '', 1)} {paired.get(name, format_resistor(ohm))}"
+            for name, ohm in places(c.cells)
+            if ohm > 0
         )
 
     def _open_pane(self, design: Design, now: Choice | None) -> dict[str, Any]:

@@ -20,6 +20,9 @@ SHAPES = {
 }  # fmt: skip
 LEAST = 1e-6  # relative; smaller errors, none among them, stand at the foot
 AXES = {"parts": "resistors", "noise": "noise, nV/√Hz", "band": "bandwidth about, kHz"}
+# A person's text (@name, @values) is filled in as text, never as markup.
+TOOLTIP = """<div style="max-width: 250px; white-space: normal; font-size: 14px; line-height: 1.3">
+<b>@name</b><br>worst weight @error<br>@values</div>"""
 
 
 class Map:
@@ -36,7 +39,7 @@ class Map:
         self._theme = ""
         self._quiet = False
         f = self.figure = figure(
-            name="choices map", width=400, height=380, x_range=self._x_range, y_range=self._y_range, toolbar_location=None, tools=[],
+            name="choices map", width=250, height=300, x_range=self._x_range, y_range=self._y_range, toolbar_location=None, tools=[],
             background_fill_alpha=0, border_fill_alpha=0, outline_line_color=None, sizing_mode="fixed",
             min_border_left=58, min_border_right=14, min_border_top=8, min_border_bottom=44,
         )  # fmt: skip
@@ -67,11 +70,7 @@ class Map:
             text_font={"value": FONT}, text_font_style="bold",
         )  # fmt: skip
         f.add_tools(
-            HoverTool(
-                renderers=[dots],
-                tooltips=[("", "@name"), ("worst weight", "@error"), ("", "@values")],
-                point_policy="snap_to_data",
-            ),
+            HoverTool(renderers=[dots], tooltips=TOOLTIP, point_policy="snap_to_data", limit=1),
             TapTool(renderers=[dots]),
         )
         self._points.selected.on_change("indices", self._on_tap)

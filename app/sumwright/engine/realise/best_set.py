@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -35,7 +35,7 @@ class Cancelled(SumwrightError):
 class Outcome(NamedTuple):
     """What a search found: recipes best first, and how good any set could possibly be."""
 
-    cells: list[tuple[Cell, ...]]
+    cells: Sequence[tuple[Cell, ...]]
     bound: float  # no set of these values is better than this
     whole: bool  # True if the search ended by itself, so that the first is the optimum
 
@@ -60,7 +60,7 @@ class Task:
         self.values = np.asarray(values, float)
         self.least_input = least_input or {}
         self.proof = proof
-        self.deadline = time.monotonic() + seconds
+        self.deadline = time.thread_time() + seconds  # of work, so that a busy machine finds the same
         self.watch = watch or (lambda share: None)
         self.usual = float(np.clip(USUAL_LEG, self.values[0], self.values[-1]))
         self.oddness = np.abs(np.log(self.values / self.usual))
@@ -80,7 +80,7 @@ class Task:
         return good
 
     def late(self) -> bool:
-        return time.monotonic() > self.deadline
+        return time.thread_time() > self.deadline
 
     def set_oddness(self, legs: Legs, sets: Sets) -> np.ndarray:
         """How far the resistors of each set are from the usual size, in nepers, summed."""
@@ -109,14 +109,14 @@ class Pool:
 
     def add(self, error, odd, *pick) -> None:
         """Offer combinations: arrays that broadcast together, flattened here."""
-        error, odd, *pick = np.broadcast_arrays(error, odd, *pick)
+        error, odd, *pick = np.broadcast_arrays(error, odd, *pick)  # type: ignore[assignment]
         good = np.flatnonzero((error.ravel() <= self.last) & np.isfinite(error.ravel()))
         if good.size > self.kept:
             e = error.ravel()[good]
             good = good[e <= np.partition(e, self.kept)[self.kept]]
         if not good.size:
             return
-        pick = [p.ravel()[good] for p in pick]
+        pick = tuple(p.ravel()[good] for p in pick)
         rows = np.zeros((good.size, 3), np.intp)
         for k, p in enumerate(pick):
             rows[:, k] = p
@@ -149,7 +149,7 @@ def search(
     least_input : dict of float, optional
         By signal name, the least value of its leg [ohm], so that its source sees no less.
     seconds : float
-        Time after which what is left is bounded instead of searched.
+        Processor time after which what is left is bounded instead of searched.
     watch : callable, optional
         Told the share done; raises `Cancelled` to stop.
     proof : bool

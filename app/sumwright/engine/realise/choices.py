@@ -282,7 +282,7 @@ def realise(
     least_input : dict of float, optional
         By signal name, the least leg [ohm] its source may see.
     seconds : float
-        About how long to search at most.
+        About how long to search at most, of processor time.
     watch : callable, optional
         Told the share done, 0 to 1; raises `best_set.Cancelled` to stop.
 
@@ -311,7 +311,7 @@ def realise(
 
         values, said = usable(drawer, kind.least, kind.most)
         notes += said
-    until = time.monotonic() + seconds
+    until = time.thread_time() + seconds
     choices: list[Choice] = []
     bounds, proved = {}, {}
     for k, name in enumerate(names):
@@ -321,7 +321,7 @@ def realise(
             if watch is not None:
                 watch((k + done) / len(names))
 
-        left = max(until - time.monotonic(), 0.2) / (len(names) - k)
+        left = max(until - time.thread_time(), 0.2) / (len(names) - k)
         if drawer is not None:
             from sumwright.engine.realise.drawer import search_drawer
 
