@@ -5,6 +5,7 @@ import csv
 import io
 import pickle
 import types
+from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 import pytest
@@ -56,12 +57,13 @@ def opened(design=None, may=lambda action: None):
 
 
 def in_loop(function):
-    """Run it where an event loop is, as the server does."""
+    """Run it where an event loop is, as the server does; in a thread, since a browser's tests may hold this one's."""
 
     async def go():
         return function()
 
-    return asyncio.run(go())
+    with ThreadPoolExecutor(1) as pool:
+        return pool.submit(lambda: asyncio.run(go())).result()
 
 
 def test_the_terms_are_those_of_the_engine_and_add_up():
