@@ -77,3 +77,94 @@ def every_arrangement():
         "mixed-sign": stage(),
         "two-stage": stage("two-stage", (0.5, 0.25, -0.3, -0.2), offset=0.4),
     }
+
+
+def broken(design: Design, fault: str, part: str, value: float = 10.0) -> Design:
+    """The design with one fault, by editing the drawing alone: no code of the bench is used.
+
+    `value` multiplies the resistor of a wrong value, and is ohms for the others that take one. Faults that
+    cannot be drawn (a dead op amp, inputs exchanged) raise KeyError.
+    """
+
+    def cells(change):
+        return replace(design, cells=tuple(change(k, c) for k, c in enumerate(design.cells)))
+
+    def legs(change):
+        return cells(
+            lambda k, c: replace(
+                c,
+                minus=tuple(x for leg in c.minus for x in change(k, leg)),
+                plus=tuple(x for leg in c.plus for x in change(k, leg)),
+            )
+        )
+
+    def one_cell(**fields):
+        at = int(part[5:]) - 1
+        return cells(lambda k, c: replace(c, **{n: f(c) for n, f in fields.items()}) if k == at else c)
+
+    if fault == "none":
+        return design
+    if fault == "leg open":
+        return legs(lambda k, x: () if x.source == part else (x,))
+    if fault == "leg shorted":
+        return legs(lambda k, x: (replace(x, resistance=1e-6),) if x.source == part else (x,))
+    if fault == "leg wrong value":
+        return legs(lambda k, x: (replace(x, resistance=x.resistance * value),) if x.source == part else (x,))
+    if fault == "wrong input":
+
+        def moved(k, c):
+            minus, plus = list(c.minus), list(c.plus)
+            for mine, other in ((minus, plus), (plus, minus)):
+                for x in [x for x in mine if x.source == part]:
+                    mine.remove(x)
+                    other.append(x)
+                    return replace(c, minus=tuple(minus), plus=tuple(plus))
+            return c
+
+        return cells(moved)
+    if fault == "source resistance high":
+        return replace(
+            design, signals=tuple(replace(s, source_resistance=value) if s.name == part else s for s in design.signals)
+        )
+    if fault == "legs swapped":
+        a, b = part.split(", ")
+        ohm = {x.source: x.resistance for c in design.cells for x in (*c.minus, *c.plus)}
+        ohm[a], ohm[b] = ohm[b], ohm[a]
+        return legs(lambda k, x: (replace(x, resistance=ohm[x.source]),))
+    if fault == "feedback open":
+        return one_cell(feedback=lambda c: None)
+    if fault == "feedback shorted":
+        return one_cell(feedback=lambda c: 1e-6)
+    if fault == "feedback wrong value":
+        return one_cell(feedback=lambda c: c.feedback * value)
+    if fault == "minus ground missing":
+        return one_cell(minus_ground=lambda c: None)
+    if fault == "plus ground missing":
+        return one_cell(plus_ground=lambda c: None)
+    if fault == "reference missing":
+        return replace(design, reference=replace(design.reference, voltage=0.0))
+    if fault == "rail missing":
+        return replace(design, supply=replace(design.supply, **{part: 0.0}))
+    if fault == "output overloaded":
+        return replace(design, load=replace(design.load, resistance=value))
+    raise KeyError(fault)
+
+
+def drawn_board(design: Design, rng) -> Design:
+    """A board of the design with every resistor somewhere within its tolerance."""
+    t = design.resistor.tolerance
+
+    def off(x):
+        return x * (1 + rng.uniform(-t, t)) if x else x
+
+    def cell(c):
+        return replace(
+            c,
+            minus=tuple(replace(leg, resistance=off(leg.resistance)) for leg in c.minus),
+            plus=tuple(replace(leg, resistance=off(leg.resistance)) for leg in c.plus),
+            minus_ground=off(c.minus_ground),
+            plus_ground=off(c.plus_ground),
+            feedback=off(c.feedback),
+        )
+
+    return replace(design, cells=tuple(cell(c) for c in design.cells))

@@ -61,6 +61,7 @@ class Boards:
     undriven: np.ndarray  # (B, K) bool: the output pin is connected to nothing inside
     drift: np.ndarray  # (B, K) A pushed into the + node, to say which way a floating node goes
     nudge: np.ndarray  # (B, K) V of offset beyond the ordinary, to say which way a comparator tips
+    unrest: np.ndarray  # (B,) share of the op amps' offset and bias current that is there
     reference_volts: np.ndarray  # (B,)
     rail_high: np.ndarray  # (B,) V
     rail_low: np.ndarray  # (B,) V
@@ -152,6 +153,7 @@ class Bench:
             stuck_spread=np.zeros((1, k)),
             drift=np.zeros((1, k)),
             nudge=np.zeros((1, k)),
+            unrest=np.ones(1),
             reference_volts=np.array([reference.voltage if reference else 0.0]),
             rail_high=np.array([design.supply.high]),
             rail_low=np.array([design.supply.low]),
@@ -250,8 +252,9 @@ class Bench:
                 drive += into[..., n + 1 + j, None] * outs[j][:, :, None, :]
             y_f = 1.0 / np.maximum(boards.feedback_ohm[:, None, k] * (1.0 + self.d_feedback[None, :p, k]), LEAST_OHM)
             i_m, i_p = drive[:, :, MINUS], drive[:, :, PLUS]
-            i_m = i_m - (self.bias[:p, k] - 0.5 * self.difference[:p, k])[None, :, None]
-            i_p = i_p - (self.bias[:p, k] + 0.5 * self.difference[:p, k])[None, :, None]
+            unrest = boards.unrest[:, None]
+            i_m = i_m - (unrest * (self.bias[:p, k] - 0.5 * self.difference[:p, k]))[..., None]
+            i_p = i_p - (unrest * (self.bias[:p, k] + 0.5 * self.difference[:p, k]))[..., None]
             i_p = i_p + boards.drift[:, k, None, None]
             g_m, g_p = total[..., MINUS], total[..., PLUS]
             # The exchanged op amp has its feedback on the + pin; the two pins trade places
@@ -264,7 +267,7 @@ class Bench:
             a1, b1 = t_p * y_f / det, y_in * y_f / det
             sign = np.where(boards.swapped[:, k], -1.0, 1.0)[:, None]
             gain = amp.open_loop_gain
-            d0 = sign[..., None] * (b0 - a0) + (self.offset[None, :p, k] + boards.nudge[:, k, None])[..., None]
+            d0 = sign[..., None] * (b0 - a0) + (unrest * self.offset[:p, k] + boards.nudge[:, k, None])[..., None]
             d1 = sign * (b1 - a1)
             y_out = np.zeros((b, 1))
             if k == k_all - 1:

@@ -30,7 +30,7 @@ SCATTER_SHARE = 0.01
 class LeftOut(NamedTuple):
     """A reading kept out of the linear fit."""
 
-    index: int
+    row: int  # from 0
     line: int
     reading: float
     why: str
@@ -158,7 +158,7 @@ def diagnose(
     bands = weight_bands(design, bench)
     names = (*bench.names, "offset")
     left_out = tuple(near_clipping(design, readings, bench))
-    keep = np.setdiff1d(np.arange(readings.count), [x.index for x in left_out])
+    keep = np.setdiff1d(np.arange(readings.count), [x.row for x in left_out])
     matrix = np.column_stack([readings.volts[keep], np.ones(len(keep))])
     u = None if readings.uncertainty is None else readings.uncertainty[keep]
     fit = least_squares(matrix, readings.output[keep], u)

@@ -113,7 +113,8 @@ class _Effects:
                 if len(d.readings)
                 else ""
             )
-        bits, alike = [], {}
+        bits: list[str] = []
+        alike: dict[str, list[str]] = {}
         for name, was, now in zip(d.bench.names, self.plain, made, strict=True):
             if abs(now - was) <= SMALL * max(abs(was), 1e-9):
                 continue

@@ -24,6 +24,7 @@ HEALTHY = "none"
 HEALTHY_ODDS = 0.85  # share of boards with nothing wrong; the faults share the rest
 DECADE_SHARE = 0.3  # of wrong values: how many are the right figures in a wrong decade
 OPEN = np.inf
+BALANCED = 1e-6  # an op amp whose offset and bias current happen to cancel
 
 Edit = Callable[[Boards, int, float], None]
 
@@ -112,12 +113,13 @@ def _first(bench, legs):
 
 
 def _tipping(bench, cell, edit, share=1.0):
-    """Ways of an amplifier left without a loop: with no drive its own offset tips it, either way."""
+    """Ways of an amplifier left without a loop: with no drive its own offset tips it, either way, unless trimmed out."""
     amp = bench.design.op_amp
     volts = 3.0 * max(amp.offset_voltage, 20.0 / amp.open_loop_gain)
-    yield Way(edit, 0.4 * share)
+    yield Way(edit, 0.3 * share)
+    yield Way(_both(edit, _set("unrest", (), BALANCED)), 0.2 * share)
     for side in (1.0, -1.0):
-        yield Way(_both(edit, _set("nudge", (cell,), side * volts)), 0.3 * share)
+        yield Way(_both(edit, _set("nudge", (cell,), side * volts)), 0.25 * share)
 
 
 def _leg_shorted(bench):
@@ -224,8 +226,8 @@ def _plus_ground_missing(bench):
         if any(leg.cell == k and leg.node == PLUS for leg in bench.legs):
             yield Place(part, (Way(lift),))
         else:
-            ways = [Way(_both(lift, _set("drift", (k,), amps)), 0.3) for amps in (-1e-4, 1e-4)]
-            yield Place(part, (*ways, Way(lift, 0.4)))
+            ways = [Way(_both(lift, _set("drift", (k,), amps)), 0.25) for amps in (-1e-4, 1e-4)]
+            yield Place(part, (*ways, Way(lift, 0.25), Way(_both(lift, _set("unrest", (), BALANCED)), 0.25)))
 
 
 def _inputs_swapped(bench):

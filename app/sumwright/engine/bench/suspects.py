@@ -226,7 +226,8 @@ class Diagnosis:
             peaks = np.flatnonzero((soft >= padded[:-2]) & (soft >= padded[2:]))
             peaks = peaks[np.argsort(-soft[peaks], kind="stable")][:PEAKS]
             for at in peaks[soft[peaks] > soft[peaks[0]] - PEAK_DEPTH]:
-                between.append((i, grid[max(at - 1, 0)], grid[min(at + 1, last)]))
+                # two steps: next to the gap of the allowed values one step ends too soon
+                between.append((i, grid[max(at - 2, 0)], grid[min(at + 2, last)]))
         for _ in range(CLOSER):
             fresh, where = [], []
             for i, low, high in between:
