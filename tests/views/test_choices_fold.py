@@ -213,6 +213,59 @@ def test_parts_trim_and_spans_panes():
     assert bench.undo() and bench.design == before
 
 
+def test_a_least_leg_is_searched_for_and_kept():
+    fold, _, jobs = searched()
+    fold.handle({"do": "least", "text": "150k"})
+    fold.show()
+    fold._start()
+    jobs.run()
+    names = fold.workbench.signal_names
+    assert fold._rows
+    for c in fold._rows:
+        assert min(x.resistance for cell in c.cells for x in (*cell.minus, *cell.plus) if x.source in names) >= 150e3
+    for bad in ("0", "5G", "-1k"):
+        with pytest.raises(InvalidQuantity, match="least leg"):
+            fold.handle({"do": "least", "text": bad})
+    fold.handle({"do": "least", "text": ""})
+    assert fold._least_leg is None
+
+
+def test_checks_that_would_fall_short_are_told_with_each_choice():
+    from dataclasses import replace
+
+    from sumwright.engine.analysis import Analysis
+
+    design = demo.design()
+    tight = replace(design, supply=replace(design.supply, high=3.0))
+    steps = search_steps(tight, "mixed-sign")
+    try:
+        while True:
+            next(steps)
+    except StopIteration as end:
+        for c in end.value.choices:
+            checks = Analysis(replace(tight, cells=c.cells)).checks
+            assert c.short and c.short == tuple(x.title for x in checks if x.status == "short")
+
+
+def test_the_balancing_resistor_is_fitted_where_it_is_worth_it():
+    from dataclasses import replace
+
+    from sumwright.engine.arrangement import exact_cells
+    from support.stages import op_amp
+    from support.wanted import design_for
+
+    design = design_for([-1.0] * 4, amp=op_amp(offset_voltage=3e-3, bias_current=250e-9, offset_current=50e-9))
+    fold, bench, _ = opened(replace(design, cells=exact_cells(design, "inverting", feedback=100e3)))
+    fold.handle({"do": "pane", "pane": "parts"})
+    assert fold.show()["open"]["balance"][0]["verdict"] == "worth it"
+    fold.handle({"do": "balance", "cell": 0})
+    assert bench.design.cells[0].plus_ground == 20e3
+    assert fold.show()["open"]["balance"][0]["verdict"] == "balanced"
+    with pytest.raises(InvalidQuantity, match="needs no balancing"):
+        fold.handle({"do": "balance", "cell": 0})
+    assert bench.undo() and bench.design.cells[0].plus_ground == 0
+
+
 def test_other_axes_and_papers_move_the_same_points():
     fold, bench, _ = searched()
     fold.show()

@@ -33,6 +33,7 @@ export function mount(node, sheet) {
   const ways = el('select', {class: 'blank', 'aria-label': 'Arrangements searched', onchange: options})
   const pairs = el('button', {class: 'act', 'aria-pressed': 'false', text: 'pairs', title: 'Two resistors may stand for one', onclick: () => { setAttr(pairs, 'aria-pressed', String(!pressed(pairs))); options() }})
   const held = el('button', {class: 'act', 'aria-pressed': 'false', text: 'from the drawer', onclick: () => say({do: 'drawer_use', on: !pressed(held)})})
+  const least = new Blank(sheet, {field: 'choices least', label: 'Least leg of a signal, ohms', cls: 'short', placeholder: 'any', send: text => ({do: 'fold', fold: 'choices', message: {do: 'least', text}})})
   const bar = el('i'), prog = el('div', {class: 'prog', role: 'progressbar', 'aria-label': 'Search', 'aria-valuemin': 0, 'aria-valuemax': 100}, bar)
   const where = el('span'), stop = el('button', {class: 'act', text: 'Stop', onclick: () => say({do: 'stop'})})
   const again = el('button', {class: 'act', text: 'Search again', onclick: () => say({do: 'again'})})
@@ -40,16 +41,16 @@ export function mount(node, sheet) {
   const left = el('div', {class: 'left'},
     el('div', {class: 'line'}, el('span', {class: 'cap', text: 'Worst weight error against'}), axes),
     sheet.figure('choices', 'map'),
-    el('div', {class: 'line'}, ways, pairs, held),
+    el('div', {class: 'line'}, ways, pairs, el('label', {class: 'n'}, 'legs from ', least.node), held),
     prog, el('div', {class: 'line'}, where, stop, again), proof)
 
   // ---------------------------------------------------------------- right: the table and the panes
-  const head = el('tr', {}, ...['', 'arrangement', 'worst weight', 'offset', 'R', 'op amps', 'noise gain', 'noise', 'sources see', 'Rf'].map((t, i) => el('th', {class: i > 1 && i < 9 ? 'r' : null, scope: 'col', text: t})))
+  const head = el('tr', {}, ...['(mark)', 'arrangement', 'worst weight', 'offset', 'R', 'op amps', 'noise gain', 'noise', 'sources see', 'Rf'].map((t, i) => heading(t, i > 1 && i < 9 ? 'r' : null)))
   const body = el('tbody')
   const table = el('div', {class: 'rows', tabindex: '-1'}, el('table', {}, el('thead', {}, head), body))
   const empty = el('p', {class: 'note'})
   const tabs = el('div', {class: 'seg panes', role: 'tablist'})
-  const pane = el('div', {class: 'pane', role: 'tabpanel'})
+  const pane = el('div', {class: 'pane', role: 'tabpanel', tabindex: '0', 'aria-label': 'What goes with it'})
   const right = el('div', {class: 'right'}, table, empty, tabs, pane)
   node.append(left, right)
 
@@ -70,12 +71,12 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- the table
   function makeRow(key) {
     const mark = svg('svg', {width: 14, height: 14, 'aria-hidden': 'true'}, svg('path', {stroke: 'var(--ink)', 'stroke-width': 1.5}))
-    const name = el('span'), merit = el('span', {class: 'soft merit'})
+    const name = el('span'), merit = el('span', {class: 'soft merit'}), bad = el('span', {class: 'bad'})
     const cells = Array.from({length: 8}, (_, i) => el('td', {class: i < 7 ? 'r' : null}))
     const item = {}
-    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', index: item.index})}, name, merit)
+    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', index: item.index})}, name, merit, bad)
     item.node = el('tr', {onclick: e => { if (!e.target.closest('button')) pick.click() }}, el('td', {}, mark), el('td', {class: 'who'}, pick), ...cells)
-    return Object.assign(item, {mark, name, merit, cells, pick})
+    return Object.assign(item, {mark, name, merit, bad, cells, pick})
   }
 
   function drawRow(item, row, word) {
@@ -85,6 +86,8 @@ export function mount(node, sheet) {
     setText(item.name, (row.arrangement === 'own' ? 'your own' : row.arrangement) + (row.paired ? ', paired' : ''))
     setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + (MERITS[row.merits[0]] ?? row.merits[0]) : ''))
     setAttr(item.merit, 'title', row.merits.join(', ') || null)
+    setText(item.bad, row.short.length ? ' short' : '')
+    setAttr(item.bad, 'title', row.short.join(', ') || null)
     const texts = [
       percent(row.error), row.offset === null ? '–' : plus(row.offset), String(row.resistors), String(row.op_amps), fixed(row.noise_gain, 2),
       `${small(row.noise * 1e9, 3)}${THIN}nV`, ohms(row.sees), row.feedback,
@@ -120,6 +123,7 @@ export function mount(node, sheet) {
     const wanted = ['', ...shown.able]
     keyed(ways, wanted, name => ({node: el('option', {value: name, text: name || 'every arrangement'})}))
     if (document.activeElement !== ways) ways.value = shown.arrangement ?? ''
+    least.set(shown.least_leg)
     setAttr(pairs, 'aria-pressed', String(shown.pairs)); pairs.disabled = shown.use_drawer
     held.hidden = !shown.drawer
     setAttr(held, 'aria-pressed', String(shown.use_drawer)); setAttr(held, 'title', shown.drawer)
@@ -153,7 +157,7 @@ export function mount(node, sheet) {
     told.append(el('b', {text: 'If you take it: '}), text, ' ', take)
     const none = el('p', {class: 'note soft', text: 'Pick a row, or a point of the picture, to see what it would change before it is taken.'})
     const legs = grid(['leg', 'wanted', 'now', 'made now', 'preview', 'made then'], 1)
-    const margins = grid(['margin', 'now', '', 'then', ''], 1)
+    const margins = grid(['margin', 'now', '(word now)', 'then', '(word then)'], 1)
     const both = el('div', {class: 'two'}, el('div', {}, legs.node), el('div', {}, margins.node))
     const box = el('div', {}, told, none, both)
     return {node: box, update(open, shown) {
@@ -196,7 +200,7 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- parts list
   function partsPane() {
     const of = el('span'), save = el('button', {class: 'act', text: 'Save as CSV', onclick: () => say({do: 'csv'})})
-    const lines = grid(['', 'count', 'part', 'value', 'rating', 'use', 'note'], 7, [1])
+    const lines = grid(['(designators)', 'count', 'part', 'value', 'rating', 'use', 'note'], 7, [1])
     const balance = el('ul', {class: 'note balance'})
     const problem = el('p', {class: 'err'})
     const box = el('div', {}, el('div', {class: 'line'}, of, save), problem, lines.node, balance)
@@ -205,8 +209,15 @@ export function mount(node, sheet) {
       if (open.problem) return
       setText(of, open.of === 'now' ? 'Parts of the stage on the sheet' : 'Parts of the set in preview')
       lines.fill(open.lines.map(line => line.map(String)))
-      keyed(balance, open.balance.map(b => b.cell), () => ({node: el('li')}))
-      open.balance.forEach((b, i) => setText(balance.children[i], `Bias currents, cell ${b.cell + 1}: ${b.verdict}. ${b.why}`))
+      const store = keyed(balance, open.balance.map(b => b.cell), k => {
+        const text = el('span'), fit = el('button', {class: 'act', text: 'Fit it', onclick: () => say({do: 'balance', cell: k})})
+        return {node: el('li', {}, text, ' ', fit), text, fit}
+      })
+      for (const b of open.balance) {
+        const item = store.get(b.cell)
+        setText(item.text, `Bias currents, cell ${b.cell + 1}: ${b.verdict}. ${b.why}`)
+        item.fit.hidden = b.resistor === null || open.of !== 'now'
+      }
     }}
   }
 
@@ -240,7 +251,7 @@ export function mount(node, sheet) {
   function trimPane() {
     const intro = el('p', {class: 'note'})
     const rows = el('tbody'), store = new Map()
-    const head = ['', 'fixed', 'trimmer', 'must reach', 'a step', 'measured', 'then'].map((t, i) => el('th', {class: i ? 'r' : null, scope: 'col', text: t}))
+    const head = ['(leg)', 'fixed', 'trimmer', 'must reach', 'a step', 'measured', 'then'].map((t, i) => heading(t, i ? 'r' : null))
     const box = el('div', {}, intro, el('table', {}, el('thead', {}, el('tr', {}, ...head)), rows))
     function make(name) {
       const cells = Array.from({length: 5}, (_, i) => el('td', {class: i ? 'r' : null}))
@@ -281,11 +292,17 @@ export function mount(node, sheet) {
     }}
   }
 
+  // a heading that is empty to the eye still says what the column is
+  function heading(text, side) {
+    const bare = text.startsWith('(')
+    return el('th', {class: side, scope: 'col'}, bare ? el('span', {class: 'vh', text: text.slice(1, -1)}) : text)
+  }
+
   // a table whose cells are texts: rows are kept, only what changed is written
   function grid(names, textColumns, right = []) {
     const rows = el('tbody')
     const side = i => i >= textColumns || right.includes(i) ? 'r' : null
-    const table = el('table', {}, el('thead', {}, el('tr', {}, ...names.map((t, i) => el('th', {class: side(i), scope: 'col', text: t})))), rows)
+    const table = el('table', {}, el('thead', {}, el('tr', {}, ...names.map((t, i) => heading(t, side(i))))), rows)
     return {node: table, fill(lines, look) {
       keyed(rows, lines.map((_, i) => i), () => ({node: el('tr', {}, ...names.map((_, i) => el('td', {class: side(i)})))}))
       lines.forEach((line, i) => {

@@ -36,11 +36,9 @@ SETTLE = 0.25  # s without a change before a search starts
 
 
 def search_key(design: Design) -> tuple:
-    """What the search depends on; while it is equal the choices still hold."""
-    return (
-        tuple((s.name, s.weight, s.source_resistance, s.low, s.high) for s in design.signals), design.target.offset,
-        design.reference, design.resistor, design.supply, design.op_amp, design.ambient.nominal,
-    )  # fmt: skip
+    """What the search and its checks depend on; while it is equal the choices still hold."""
+    signals = tuple(replace(s, value=0.0) for s in design.signals)
+    return (replace(design, title="", signals=signals, cells=()),)
 
 
 class Choices(Fold):
@@ -69,6 +67,7 @@ class Choices(Fold):
         self._picked: Choice | None = None
         self._previews: tuple[Any, Any, Analysis] | None = None
         self._goal = 0.005
+        self._least_leg: float | None = None
         self._measured: dict[str, float] = {}
         self._window: dict[str, float | None] = {"low": None, "high": None}
         self._map = Map(self._tapped)
@@ -87,7 +86,13 @@ class Choices(Fold):
 
     def _wish(self) -> tuple:
         drawer = self._drawer if self._use_drawer else None
-        return (*search_key(self.workbench.design), self._arrangement, self._pairs and drawer is None, drawer)
+        return (
+            *search_key(self.workbench.design),
+            self._arrangement,
+            self._pairs and drawer is None,
+            drawer,
+            self._least_leg,
+        )
 
     def _follow(self) -> None:
         """Start a search if what it depends on has changed and stands still."""
@@ -111,7 +116,7 @@ class Choices(Fold):
         design = self.workbench.design
         drawer = self._drawer if self._use_drawer else None
         self.context.jobs.start(
-            "choices", search_steps, design, self._arrangement, self._pairs and drawer is None, drawer,
+            "choices", search_steps, design, self._arrangement, self._pairs and drawer is None, drawer, self._least_leg,
             progress=self._progress, done=self._done, failed=self._failed,
         )  # fmt: skip
 
@@ -147,6 +152,7 @@ class Choices(Fold):
             "share": self._share, "looking": self._looking_at, "stopped": self._stopped, "problem": self._problem,
             "proof": self._proof(), "notes": list(self._found.notes) if self._found else [],
             "able": list(able(design)), "arrangement": self._arrangement, "pairs": self._pairs,
+            "least_leg": "" if self._least_leg is None else format_resistor(self._least_leg),
             "axis": self._axis, "axes": list(AXES), "pane": self._pane, "panes": list(PANES),
             "drawer": self._drawer_name if self._drawer else None, "use_drawer": self._use_drawer,
             "open": self._open_pane(design, now),
@@ -177,7 +183,7 @@ class Choices(Fold):
             "noise_gain": c.noise_gain, "noise": c.noise_density,
             "sees": c.least_input_resistance if math.isfinite(c.least_input_resistance) else None,
             "feedback": ", ".join(format_resistor(cell.feedback) for cell in c.cells),
-            "paired": bool(c.parts), "same": c.cells == self._kept(self.workbench.design.cells),
+            "short": list(c.short), "paired": bool(c.parts), "same": c.cells == self._kept(self.workbench.design.cells),
         }  # fmt: skip
 
     def _proof(self) -> list[dict[str, Any]]:
@@ -365,7 +371,7 @@ class Choices(Fold):
             "options": self._options, "pick": self._pick, "take": self._take, "stop": self._stop, "again": self._again,
             "axis": self._turn_axis, "pane": self._turn_pane, "drawer": self._take_drawer, "drawer_use": self._drawer_use,
             "goal": self._set_goal, "csv": self._csv, "measured": self._set_measured, "window": self._set_window,
-            "span_take": self._span_take,
+            "span_take": self._span_take, "least": self._set_least, "balance": self._balance,
         }  # fmt: skip
         return acts[fields.one_of(message, "do", tuple(acts))](message)
 
@@ -427,6 +433,26 @@ class Choices(Fold):
         if not 0 < goal < 1:
             raise InvalidQuantity(f"A wanted error is over 0 and under 1, as 0.5 % or 0.005; this is {goal:g}.")
         self._goal = goal
+
+    def _set_least(self, message: dict) -> None:
+        text = fields.text(message, "text", 40)
+        ohm = parse_quantity(text, "Ω") if text else None
+        if ohm is not None and not 0 < ohm <= self.workbench.design.resistor.most:
+            most = format_resistor(self.workbench.design.resistor.most)
+            raise InvalidQuantity(
+                f"The least leg is over 0 and at most {most}, the largest resistor; this is {ohm:g} Ω."
+            )
+        self._least_leg = ohm
+
+    def _balance(self, message: dict) -> None:
+        """Fit the resistor that balances one op amp's bias currents on the sheet."""
+        design = self.workbench.design
+        k = fields.whole(message, "cell", 0, len(design.cells) - 1)
+        ohm = bias_balance(design)[k].resistor
+        if ohm is None:
+            raise InvalidQuantity(f"Cell {k + 1} needs no balancing resistor.")
+        cells = (*design.cells[:k], replace(design.cells[k], plus_ground=ohm), *design.cells[k + 1 :])
+        self.workbench.edit(lambda d: replace(d, cells=cells))
 
     def _csv(self, message: dict) -> dict:
         design = self.workbench.design if self._picked is None else self._taken(self._picked)

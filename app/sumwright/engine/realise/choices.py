@@ -58,6 +58,7 @@ class Choice:
     inner_gain: float = 1.0  # V/V, size of the gain from the first cell's output to the stage's; 1 with one cell
     parts: tuple[Pair, ...] = ()
     merits: tuple[str, ...] = ()  # why it is shown
+    short: tuple[str, ...] = ()  # checks that would fall short with it, where they were looked at
 
     def respects(self) -> tuple[float, ...]:
         """What is compared, less is better; rounded to what a person would call the same."""

@@ -5,8 +5,10 @@ from __future__ import annotations
 import queue
 import threading
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import Any
 
+from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import able, check_able, wanted_weights
 from sumwright.engine.realise.choices import Choice, Realisation, is_another, rank, realise
 from sumwright.engine.realise.drawer import Drawer
@@ -18,7 +20,11 @@ TOLD_EVERY = 0.1  # s, between two reports of progress
 
 
 def search_steps(
-    design: Design, arrangement: str | None = None, pairs: bool = False, drawer: Drawer | None = None
+    design: Design,
+    arrangement: str | None = None,
+    pairs: bool = False,
+    drawer: Drawer | None = None,
+    least_leg: float | None = None,
 ) -> Iterator[dict[str, Any]]:
     """Find the choices; yields `{"share", "arrangement", "choices"}` and returns a `Realisation`.
 
@@ -31,6 +37,8 @@ def search_steps(
         Let two resistors stand for one.
     drawer : Drawer, optional
         From this drawer alone.
+    least_leg : float, optional
+        Least leg that any signal's source may see [ohm].
 
     Raises
     ------
@@ -43,6 +51,7 @@ def search_steps(
     else:
         wanted_weights(design)
         names = [name for name in able(design) if not is_another(design, name)]
+    least_input = dict.fromkeys(design.signal_names, least_leg) if least_leg else None
     choices: list[Choice] = []
     bounds: dict[str, float] = {}
     proved: dict[str, bool] = {}
@@ -53,7 +62,8 @@ def search_steps(
         def work(name=name, told=told):
             try:
                 found = realise(
-                    design, arrangement=name, pairs=pairs, drawer=drawer, seconds=SECONDS / len(names),
+                    design, arrangement=name, pairs=pairs, drawer=drawer, least_input=least_input,
+                    seconds=SECONDS / len(names),
                     watch=lambda done, told=told: told.put(("share", done)),
                 )  # fmt: skip
                 told.put(("found", found))
@@ -77,7 +87,7 @@ def search_steps(
                 raise value
             notes.append(str(value))
             continue
-        choices += value.choices
+        choices += [replace(c, short=_short(design, c)) for c in value.choices]
         bounds |= value.bounds
         proved |= value.proved
         notes += [n for n in value.notes if n not in notes]
@@ -86,3 +96,12 @@ def search_steps(
     if not choices:
         raise SumwrightError(" ".join(notes) or "No set of values was found.")
     return Realisation(tuple(choices), bounds, proved, tuple(notes))
+
+
+def _short(design: Design, choice: Choice) -> tuple[str, ...]:
+    """Titles of the checks that would fall short with a choice, worst first; empty where it cannot be analysed."""
+    try:
+        checks = Analysis(replace(design, cells=choice.cells)).checks
+    except SumwrightError:
+        return ()
+    return tuple(check.title for check in checks if check.status == "short")
