@@ -61,7 +61,7 @@ export function layout({width, row, head, foot, cells, rows}) {
   }
 
   // where the plate fits: under the op amps, above them, or across the whole drawing's foot
-  const low = Math.max(...L.cells.map((cell, c) => cell.mid + Math.max(cell.half, c === cells.length - 1 ? 70 * k : 0,
+  const low = Math.max(...L.cells.map((cell, c) => cell.mid + Math.max(cell.half, c === cells.length - 1 ? 60 * k : 0,
     cell.plusGround === 'down' ? row / 2 + 62 * k : cell.plusGround === 'tied' && !cell.plus.length ? row / 2 + 26 * k : 0)))
   const high = Math.min(...L.cells.map(cell => cell.yc - 16 * k))
   L.free = {left: L.cells[0].bus + 16 * k, top: low + 4, bottom: L.bottom - 6, above: high}

@@ -12,7 +12,8 @@ export class Line {
     this.shown = 0
     this.busy = false
     this.wire = null
-    this.fields = new Set()
+    this.fields = new Set() // of the acts under way
+    this.whole = false
     const join = () => {
       if (this.wire) return
       this.wire = window.sumwrightWire
@@ -32,13 +33,15 @@ export class Line {
   }
 
   pump() {
-    if (!this.wire || this.busy || !this.queue.length) return
+    if (!this.wire || this.busy || !(this.queue.length || this.whole)) return
     this.busy = true
     this.seq += 1
     const acts = this.queue.splice(0, 64).map(q => q.act)
-    this.fields = new Set(acts.map(a => a.field).filter(Boolean))
-    this.wire.send(JSON.stringify({seq: this.seq, acts}))
-    this.timer = setTimeout(() => { this.silent(true); this.free(this.seq) }, PATIENCE)
+    this.fields = new Set([...this.whole ? this.fields : [], ...acts.map(a => a.field).filter(Boolean)])
+    this.wire.send(JSON.stringify({seq: this.seq, acts, whole: this.whole}))
+    this.whole = false
+    // an answer that does not come may have carried changes: the next one has to bring everything
+    this.timer = setTimeout(() => { this.silent(true); this.whole = true; this.free(this.seq) }, PATIENCE)
   }
 
   heard(frame) {

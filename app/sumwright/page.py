@@ -188,7 +188,7 @@ class Page:
                 else:
                     if reply is not None:
                         heard.append({"do": act.get("do"), **reply})
-            answer.update(self.frame())
+            answer.update(self.frame(whole=message.get("whole") is True))
             if refusals:
                 answer["refusals"] = refusals
             if heard:

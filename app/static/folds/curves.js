@@ -37,6 +37,8 @@ export function mount(node, sheet) {
     slot.style.transform = `translate(${Math.round(x - SIDE)}px,${Math.round(y)}px)`
     if (wanted === frame) return
     frame = wanted
+    slot.style.width = `${Math.round(width) + 2 * SIDE}px`
+    slot.style.height = `${Math.round(height + bottom)}px`
     figure.setv({
       width: Math.round(width) + 2 * SIDE, height: Math.round(height + bottom),
       min_border_left: SIDE, min_border_right: SIDE, min_border_top: 0, min_border_bottom: Math.round(bottom),

@@ -1,0 +1,73 @@
+"""A sum as a person writes it."""
+
+import pytest
+from sumwright.errors import SumwrightError
+from sumwright.model.sums import read_sum
+
+
+def terms(text):
+    wanted = read_sum(text)
+    return {s.name: s.weight for s in wanted.signals}, wanted.offset
+
+
+def test_a_sum_with_signs_fractions_units_and_true_minus():
+    weights, offset = terms("out = 0.14 north + 1/4 east \u2212 .5·tare - west + 500 mV")
+    assert weights == {"north": 0.14, "east": 0.25, "tare": -0.5, "west": -1.0}
+    assert offset == pytest.approx(0.5)
+
+
+def test_a_sum_over_several_lines_and_without_a_left_side():
+    assert terms("out = 0.5 a\n + 0.25 b\n - 0.5 V") == ({"a": 0.5, "b": 0.25}, -0.5)
+    assert terms("2 left - 3 right") == ({"left": 2.0, "right": -3.0}, 0.0)
+
+
+def test_names_of_several_words_stand_in_quotes():
+    assert terms('y = 2 "left tank" + 1 "right tank"')[0] == {"left tank": 2.0, "right tank": 1.0}
+
+
+def test_names_of_other_scripts_are_names():
+    assert terms("y = 0.5 größe + 0.5 вес")[0] == {"größe": 0.5, "вес": 0.5}
+
+
+def test_a_list_of_weights_with_ranges_a_heading_and_an_offset():
+    wanted = read_sum("name, weight, low, high, source\nleft, 0.5, -1, 1, 4k7\nright, -250m\noffset, 0.1")
+    assert [(s.name, s.weight, s.low, s.high, s.source_resistance) for s in wanted.signals] == [
+        ("left", 0.5, -1.0, 1.0, 4700.0),
+        ("right", -0.25, 0.0, 10.0, 0.0),
+    ]
+    assert wanted.offset == pytest.approx(0.1)
+
+
+def test_a_column_of_bare_weights_gets_names():
+    assert terms("0.5\n0.25\n-0.1")[0] == {"signal 1": 0.5, "signal 2": 0.25, "signal 3": -0.1}
+
+
+def test_a_table_pasted_with_tabs():
+    assert terms("north\t0.14\neast\t0.1")[0] == {"north": 0.14, "east": 0.1}
+
+
+@pytest.mark.parametrize(
+    ("text", "says"),
+    [
+        ("", "no sum yet"),
+        ("out = ", "no signal"),
+        ("out = 0.5 a 0.5 b", "before"),
+        ("out = 0.5 a + 0 b", "weighs 0"),
+        ("out = 0.5 a + 0.5 a", "already"),
+        ("out = 1/0 a", "divides by 0"),
+        ("out = 0.5 a = 3", "one “=”"),
+        ("out = 0.5 a + $", "not a term"),
+        ("out = 0.5 reference", "reference"),
+        ("a, 0.5, 3, 1", "above its high end"),
+        ("b, 0.5\na, banana", "Line 2.*a number"),
+    ],
+)
+def test_what_cannot_be_read_is_refused_in_one_sentence(text, says):
+    with pytest.raises(SumwrightError, match=says) as refused:
+        read_sum(text)
+    assert "\n" not in str(refused.value)
+
+
+def test_too_many_signals_are_refused():
+    with pytest.raises(SumwrightError, match="64 signals"):
+        read_sum("out = " + " + ".join(f"0.1 s{i}" for i in range(65)))
