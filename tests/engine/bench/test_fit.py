@@ -55,7 +55,9 @@ def test_a_weight_never_varied_is_named_and_the_others_still_come_out():
 
 def test_two_signals_always_moved_together_are_both_undetermined():
     design = stage()
-    volts = np.array([[0, 0, 0, 0, 0], [5, 5, 0, 0, 0], [2, 2, 8, 0, 0], [1, 1, 0, 3, 0], [0, 0, 0, 0, 9], [1, 1, 1, 1, 1.0]])
+    volts = np.array(
+        [[0, 0, 0, 0, 0], [5, 5, 0, 0, 0], [2, 2, 8, 0, 0], [1, 1, 0, 3, 0], [0, 0, 0, 0, 9], [1, 1, 1, 1, 1.0]]
+    )
     report = diagnose(design, readings_of(design, volts, uncertainty=np.full(6, 1e-3)), foresee=False)
     assert list(report.fit.determined) == [False, False, True, True, True, True]
 
@@ -113,7 +115,9 @@ def test_without_an_uncertainty_the_t_factor_is_used():
     noisy = readings_of(design, volts, exact.output + rng.normal(size=8) * 1e-3)
     fit = diagnose(design, noisy, foresee=False).fit
     assert fit.degrees_of_freedom == 2
-    assert fit.coverage_factor == pytest.approx(4.53, abs=0.005)  # NIST TN 1297, table B.1: 2 degrees of freedom, 95.45 %
+    assert fit.coverage_factor == pytest.approx(
+        4.53, abs=0.005
+    )  # NIST TN 1297, table B.1: 2 degrees of freedom, 95.45 %
     assert fit.chi_squared is None
 
 
@@ -169,7 +173,9 @@ def test_meter_statement_becomes_a_rectangular_standard_uncertainty(text, at_10,
     np.testing.assert_allclose(meter.standard_uncertainty([10.0, -10.0, 0.0]) * np.sqrt(3), [at_10, at_10, at_0])
 
 
-@pytest.mark.parametrize("text", ["", "good", "0.05 % +", "0 %", "-1 % + 1 mV", "200 %", "3 digits of 1 kΩ", "1 % of ten"])
+@pytest.mark.parametrize(
+    "text", ["", "good", "0.05 % +", "0 %", "-1 % + 1 mV", "200 %", "3 digits of 1 kΩ", "1 % of ten"]
+)
 def test_a_meter_statement_that_cannot_be_meant_is_refused(text):
     with pytest.raises(InvalidQuantity, match="meter"):
         parse_meter(text)
