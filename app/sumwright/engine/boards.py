@@ -28,6 +28,7 @@ from .operating_point import ideal_output
 
 BLOCK = 8000  # boards that share a stream and a core's cache; not a power of two, whose rows would share cache sets
 _OP_AMP_DRAWS = 6
+_LEAK = 1e-15  # S
 
 
 class MonteCarlo(NamedTuple):
@@ -299,6 +300,8 @@ class _Recipe:
             if c.plus_ground >= 0:
                 total_p += 1.0 / r[self.row[c.plus_ground]]
             plus -= into_plus
+            if not len(c.plus_parts) or np.isinf(net.resistances[c.plus_parts]).all():
+                total_p += _LEAK  # a + pin that hangs in the air
             inv_p = 1.0 / total_p
             plus *= inv_p
             inv_p *= y_in

@@ -8,6 +8,8 @@ MT-050, p. 1).
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
+from functools import partial
 from typing import NamedTuple
 
 import numpy as np
@@ -257,9 +259,9 @@ def cures(design: Design, wanted: tuple[float, ...] = (WANTED_MARGIN, 52.0, 45.0
     found: list[Cure] = []
     last = len(design.cells) - 1
     for k in range(len(design.cells)):
-        tries = [lambda goal, k=k: feedback_capacitor(design, k, goal)]
+        tries: list[Callable[[float], Cure | None]] = [partial(feedback_capacitor, design, k)]
         if k == last:
-            tries.append(lambda goal: isolating_resistor(design, goal))
+            tries.append(partial(isolating_resistor, design))
         for look in tries:
             cure = next((c for c in map(look, wanted) if c is not None), None)
             if cure is not None:
