@@ -8,7 +8,7 @@ import pickle
 
 import pytest
 from sumwright.engine.realise.choices import Realisation
-from sumwright.engine.realise.steps import search_steps
+from sumwright.engine.realise.steps import search_steps, with_cells
 from sumwright.errors import InvalidQuantity, InvalidReadings, SumwrightError
 from sumwright.model import demo
 from sumwright.model.workbench import Workbench
@@ -243,8 +243,18 @@ def test_checks_that_would_fall_short_are_told_with_each_choice():
             next(steps)
     except StopIteration as end:
         for c in end.value.choices:
-            checks = Analysis(replace(tight, cells=c.cells)).checks
+            checks = Analysis(with_cells(tight, c.cells)).checks
             assert c.short and c.short == tuple(x.title for x in checks if x.status == "short")
+
+
+def test_feedback_capacitors_stay_with_their_op_amps():
+    from dataclasses import replace
+
+    design = demo.design()
+    design = replace(design, cells=(replace(design.cells[0], feedback_capacitance=22e-12),))
+    for c in found().choices:
+        kept = with_cells(design, c.cells).cells
+        assert [cell.feedback_capacitance for cell in kept] == [22e-12] * len(c.cells)
 
 
 def test_the_balancing_resistor_is_fitted_where_it_is_worth_it():

@@ -19,7 +19,7 @@ from sumwright.engine.realise.balance import bias_balance
 from sumwright.engine.realise.choices import Choice, Realisation, assess, places, weight_errors
 from sumwright.engine.realise.drawer import Drawer, to_buy
 from sumwright.engine.realise.span import into_window, with_spans
-from sumwright.engine.realise.steps import search_steps
+from sumwright.engine.realise.steps import search_steps, with_cells
 from sumwright.engine.realise.trim import select_on_test, trim_for
 from sumwright.engine.stage import REFERENCE, Design
 from sumwright.errors import InvalidQuantity, SumwrightError
@@ -38,7 +38,8 @@ SETTLE = 0.25  # s without a change before a search starts
 def search_key(design: Design) -> tuple:
     """What the search and its checks depend on; while it is equal the choices still hold."""
     signals = tuple(replace(s, value=0.0) for s in design.signals)
-    return (replace(design, title="", signals=signals, cells=()),)
+    capacitor = design.cells[-1].feedback_capacitance if design.cells else 0.0
+    return (replace(design, title="", signals=signals, cells=()), capacitor)
 
 
 class Choices(Fold):
@@ -223,16 +224,8 @@ class Choices(Fold):
         return tuple(replace(c, feedback_capacitance=0.0) for c in cells)
 
     def _taken(self, c: Choice) -> Design:
-        """The design with a choice's cells; a feedback capacitor stays with its op amp."""
-        design = self.workbench.design
-        if len(design.cells) == len(c.cells):
-            cells = tuple(
-                replace(new, feedback_capacitance=old.feedback_capacitance)
-                for new, old in zip(c.cells, design.cells, strict=True)
-            )
-        else:
-            cells = c.cells
-        return replace(design, cells=cells)
+        """The design with a choice's cells."""
+        return with_cells(self.workbench.design, c.cells)
 
     def _preview(self, design: Design, now: Choice | None) -> dict[str, Any]:
         c = self._picked

@@ -12,7 +12,7 @@ from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import able, check_able, wanted_weights
 from sumwright.engine.realise.choices import Choice, Realisation, is_another, rank, realise
 from sumwright.engine.realise.drawer import Drawer
-from sumwright.engine.stage import Design
+from sumwright.engine.stage import Cell, Design
 from sumwright.errors import CannotRealise, SumwrightError
 
 SECONDS = 12.0  # for all arrangements together
@@ -98,10 +98,20 @@ def search_steps(
     return Realisation(tuple(choices), bounds, proved, tuple(notes))
 
 
+def with_cells(design: Design, cells: tuple[Cell, ...]) -> Design:
+    """The design with another set of cells; feedback capacitors, which a set does not have, stay with their op amps.
+
+    Where the number of op amps changes, each gets the one that the last has now.
+    """
+    old = [cell.feedback_capacitance for cell in design.cells] or [0.0]
+    kept = old if len(old) == len(cells) else [old[-1]] * len(cells)
+    return replace(design, cells=tuple(replace(c, feedback_capacitance=f) for c, f in zip(cells, kept, strict=True)))
+
+
 def _short(design: Design, choice: Choice) -> tuple[str, ...]:
     """Titles of the checks that would fall short with a choice, worst first; empty where it cannot be analysed."""
     try:
-        checks = Analysis(replace(design, cells=choice.cells)).checks
+        checks = Analysis(with_cells(design, choice.cells)).checks
     except SumwrightError:
         return ()
     return tuple(check.title for check in checks if check.status == "short")
