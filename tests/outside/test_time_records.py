@@ -140,6 +140,61 @@ def test_a_clipped_record_recovers_to_the_linear_one():
     np.testing.assert_allclose(run.outputs[0][quiet], -16 * np.sin(2 * np.pi * 1e3 * run.times[quiet]), atol=0.05)
 
 
+def limited_ode(design, u, duration, times):
+    """As `ode`, with the output stage's limits as a stiff but smooth law: current of the branch against both ends.
+
+    Behind the output resistance the op amp holds b; what reaches the output is bounded by the rails less dropout and
+    by the current limit. The compensation capacitor follows what the output allows, as the engine holds it.
+    """
+    amp, cell = design.op_amp, design.cells[0]
+    g = np.array([1 / leg.resistance for leg in cell.minus])
+    gf = 1 / cell.feedback
+    cm = amp.differential_capacitance + amp.common_mode_capacitance + design.stray_capacitance
+    cl, gl = design.load.capacitance, 1 / design.load.resistance
+    ro, rd, w1 = amp.output_resistance, amp.dropout_resistance, 2 * np.pi * amp.gain_bandwidth / amp.open_loop_gain
+    top, bottom = design.supply.high - amp.dropout_high, design.supply.low + amp.dropout_low
+
+    def held(a, o):
+        """Output current and the inner voltage that goes with it."""
+        i = (a - o) / ro
+        most = min(amp.output_current, (top - o) / rd)
+        least = max(-amp.output_current, (bottom - o) / rd)
+        bounded = min(max(i, least), most)
+        return bounded, o + ro * bounded
+
+    def f(t, x):
+        m, o, a = x
+        i, inner = held(a, o)
+        dm = ((g * (u(t) - m)).sum() - gf * (m - o)) / cm
+        do = (i - gf * (o - m) - gl * o) / cl
+        rate = np.clip(w1 * (-amp.open_loop_gain * m - a), -amp.slew_rate, amp.slew_rate)
+        # beyond a limit the capacitor is pulled back to it within a nanosecond
+        return dm, do, rate - max(a - inner, 0.0) * 1e9 - min(a - inner, 0.0) * 1e9
+
+    s = solve_ivp(f, (0, duration), [0.0, 0.0, 0.0], "LSODA", times, rtol=1e-8, atol=1e-10, max_step=duration / 4000)
+    return s.y[1]
+
+
+@pytest.mark.parametrize(("height", "load", "current"), [(9.0, Load(1e3, 1e-9), 1.0), (6.0, Load(2e3, 2e-8), 0.01)])
+def test_limits_and_recovery_are_those_of_an_ode_solver(height, load, current):
+    """A triangle into the rail and back; a step into a heavy capacitor at the current limit."""
+    amp = op_amp(
+        second_pole=None, output_current=current, dropout_resistance=60.0, input_resistance=1e15, slew_rate=5e6
+    )
+    design = inverter(amp, r=1e4, r_f=1.5e4, supply=12.0, load=load, stray=5e-12)
+    if current < 1:
+        wave = Wave("points", times=(0.0, 1e-6, 1e-6, 60e-6, 60e-6), volts=(0.0, 0.0, height, height, 0.0))
+    else:
+        wave = Wave("triangle", amplitude=height, frequency=2e4)
+    run = trace(design, {"in1": wave}, 1e-4, samples=501)
+    from sumwright.engine.waves import pieces, sample
+
+    p = pieces(wave, 1e-4)
+    theirs = limited_ode(design, lambda t: np.array([sample(p, [t])[0]]), 1e-4, run.times)
+    assert run.clipping > 0.05 and run.complete
+    np.testing.assert_allclose(run.outputs[0], theirs, atol=0.02)
+
+
 def test_a_sine_is_the_frequency_response():
     from sumwright.engine.response import source_gains
 
