@@ -115,11 +115,13 @@ def volts(value: float, decimals: int = 3, sign: bool = False) -> str:
 
 def up(value: float, decimals: int = 2) -> float:
     """Rounded away from falling short again; a hair of rounding error does not count."""
-    return math.ceil(value * 10**decimals - 1e-9) / 10**decimals
+    scaled = value * 10.0**decimals
+    return math.ceil(scaled - 1e-9) / 10.0**decimals if math.isfinite(scaled) else value
 
 
 def down(value: float, decimals: int = 2) -> float:
-    return math.floor(value * 10**decimals + 1e-9) / 10**decimals
+    scaled = value * 10.0**decimals
+    return math.floor(scaled + 1e-9) / 10.0**decimals if math.isfinite(scaled) else value
 
 
 def down_figures(value: float, figures: int = 2) -> float:
