@@ -87,18 +87,28 @@ def statistics(errors, seed: int, accuracy: float | None) -> MonteCarlo:
 
 
 def _statistics(errors, seed, accuracy):
-    """As `statistics`, sorting `errors` in place."""
+    """As `statistics`, putting `errors` into another order.
+
+    Only the two tails are sorted: the ends of every interval of 95 % lie in them.
+    """
     draws = len(errors)
     mean = float(errors.mean())
-    squares = sum(_squares(errors[at : at + BLOCK], mean) for at in range(0, draws, BLOCK))
+    squares, inside = 0.0, 0
+    for at in range(0, draws, BLOCK):  # in pieces that stay in cache
+        part = errors[at : at + BLOCK]
+        squares += _squares(part, mean)
+        if accuracy is not None:
+            inside += int(np.count_nonzero(np.abs(part) <= accuracy))
     sd = float(np.sqrt(squares / (draws - 1))) if draws > 1 else 0.0
-    errors.sort()
-    low, high = shortest_interval(errors, is_sorted=True)
-    share = None
-    if accuracy is not None:
-        inside = np.searchsorted(errors, accuracy, side="right") - np.searchsorted(errors, -accuracy, side="left")
-        share = float(inside) / draws
-    return MonteCarlo(draws, seed, mean, sd, low, high, share)
+    q = min(int(0.95 * draws + 0.5), draws - 1)
+    if draws < 1000 or q <= 0:
+        low, high = shortest_interval(errors)
+    else:
+        errors.partition((draws - q - 1, q))
+        lows, highs = np.sort(errors[: draws - q]), np.sort(errors[q:])
+        r = int((highs - lows).argmin())
+        low, high = float(lows[r]), float(highs[r])
+    return MonteCarlo(draws, seed, mean, sd, low, high, None if accuracy is None else inside / draws)
 
 
 def _squares(part, mean):
