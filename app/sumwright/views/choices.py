@@ -16,7 +16,7 @@ from sumwright import fields
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import able, arrangement_of
 from sumwright.engine.realise.balance import bias_balance
-from sumwright.engine.realise.choices import Choice, Realisation, assess, places, weight_errors
+from sumwright.engine.realise.choices import Choice, Realisation, assess, places
 from sumwright.engine.realise.drawer import Drawer, to_buy
 from sumwright.engine.realise.span import into_window, with_spans
 from sumwright.engine.realise.steps import search_steps, with_cells
@@ -67,6 +67,8 @@ class Choices(Fold):
         self._rows: tuple[Choice, ...] = ()
         self._picked: Choice | None = None
         self._previews: tuple[Any, Any, Analysis] | None = None
+        self._pane_key: tuple = ()
+        self._pane_shown: dict[str, Any] = {}
         self._goal = 0.005
         self._least_leg: float | None = None
         self._measured: dict[str, float] = {}
@@ -208,6 +210,16 @@ class Choices(Fold):
         )
 
     def _open_pane(self, design: Design, now: Choice | None) -> dict[str, Any]:
+        # Only the preview follows the signals' values; the other panes are kept while a slider moves.
+        key = (
+            self._pane, search_key(design), design.cells, self._picked and self._picked.cells, self._goal, tuple(self._measured.items()),
+            tuple(self._window.values()), id(self._drawer), self._use_drawer, id(self._found),
+        )  # fmt: skip
+        if self._pane == "preview" or key != self._pane_key:
+            self._pane_key, self._pane_shown = key, self._made_pane(design, now)
+        return self._pane_shown
+
+    def _made_pane(self, design: Design, now: Choice | None) -> dict[str, Any]:
         try:
             return {
                 "preview": self._preview, "parts": self._parts, "drawer": self._drawer_pane,
@@ -234,7 +246,8 @@ class Choices(Fold):
         taken = self._taken(c)
         key = (taken, self.workbench.unplugged)
         if self._previews is None or self._previews[:2] != key:
-            self._previews = (*key, Analysis(taken, self.workbench.unplugged))
+            forerunner = self._previews[2] if self._previews is not None else None
+            self._previews = (*key, Analysis(taken, self.workbench.unplugged, forerunner))
         then = {x.key: x for x in self._previews[2].checks}
         margins = []
         for check in self.workbench.analysis.checks:
@@ -262,7 +275,6 @@ class Choices(Fold):
         return {
             "picked": True, "same": c.cells == self._kept(design.cells), "legs": legs, "others": others, "margins": margins,
             "before": self._row(now) if now is not None else None, "after": self._row(c),
-            "errors": weight_errors(taken, taken.cells),
         }  # fmt: skip
 
     def _leg_text(self, c: Choice, place: str, source: str, paired) -> str:

@@ -342,7 +342,7 @@ def realise(
         if drawer is None and not again and is_single(design):
             lifted = best_choices(design, name, biased_cells(design, name, values), shown=1)
             choices += [_with_merits(c, ("lifted for the single supply",)) for c in lifted]
-        bounds[name], proved[name] = outcome.bound, outcome.whole
+        bounds[name], proved[name] = float(outcome.bound), bool(outcome.whole)
     if not choices:
         raise CannotRealise(" ".join(notes) or "No set of values was found.", able(design))
     choices.sort(key=rank)

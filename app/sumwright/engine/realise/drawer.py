@@ -107,6 +107,9 @@ def search_drawer(
         watch=lambda s: watch(0.5 * s) if watch else None,
     )
     stocked = [cells for cells in free.cells if in_stock(cells, counts)]
+    if not stocked:  # a start: the best sets, what is used too often replaced by what is nearest and left
+        mended = (_mended(cells, counts) for cells in free.cells)
+        stocked = [cells for cells in mended if cells is not None]
     task = Task(
         design,
         arrangement,
@@ -129,6 +132,35 @@ def search_drawer(
     found = stocked + [c for c in more if in_stock(c, counts)]
     best = min((worst(c) for c in found), default=np.inf)
     return Outcome(sorted(found, key=worst), best if whole else max(free.bound, min(best, bound)), whole)
+
+
+def _mended(cells: tuple[Cell, ...], counts) -> tuple[Cell, ...] | None:
+    """The cells from what the drawer has, each resistor in turn taking the nearest value left; None if it runs out."""
+    left = dict(counts)
+
+    def take(ohm):
+        if not ohm:
+            return ohm
+        there = [v for v, c in left.items() if c > 0]
+        if not there:
+            raise LookupError
+        value = nearest_value(np.array(there), ohm)
+        left[value] -= 1
+        return value
+
+    def taken(legs):
+        return tuple(replace(leg, resistance=take(leg.resistance)) for leg in legs)
+
+    try:
+        return tuple(
+            replace(
+                c, minus=taken(c.minus), plus=taken(c.plus), minus_ground=take(c.minus_ground), plus_ground=take(c.plus_ground),
+                feedback=take(c.feedback),
+            )
+            for c in cells
+        )  # fmt: skip
+    except LookupError:
+        return None
 
 
 # Virtual grounds: the scale is set by one or three resistors, the legs are dealt out at it --------------
