@@ -1,12 +1,13 @@
 """Preferred values are those of IEC 60063:2015.
 
-E24 and E96 as its tables print them (from memory, and computed by its rule, which E24 departs from in eight
-places and E192 in one); compared with `eseries`-independent facts: subsets, decades, rounding.
+E24 and E96 as its tables print them (from memory), every series by the rule, which E24 departs from in eight places
+and E192 in one, and every series from a library that knows nothing of this one.
 """
 
+import eseries
 import numpy as np
 import pytest
-from sumwright.engine.realise.preferred import preferred_values, values_within
+from sumwright.engine.realise.preferred import SERIES, preferred_values, values_within
 from sumwright.errors import CannotRealise, InvalidQuantity
 
 E24 = [
@@ -67,6 +68,14 @@ def test_the_rule_and_its_exceptions(series, places, exceptions):
     values = preferred_values(series)
     assert len(values) == n
     assert {v: r for v, r in zip(values, rule, strict=True) if v != r} == exceptions
+
+
+@pytest.mark.parametrize("name", SERIES)
+def test_another_library_has_the_same_values(name):
+    """The package `eseries` (R. Smallshire), which lists them in whole numbers."""
+    theirs = np.array(eseries.series(getattr(eseries.ESeries, name)))
+    ours = preferred_values(name)
+    np.testing.assert_array_equal(np.round(ours * theirs[0]), theirs)
 
 
 def test_series_within_series():
