@@ -138,3 +138,12 @@ def test_a_tied_pin_and_a_shared_reference_are_drawn_too():
     design = replace(base, cells=cells)
     b, drawn = error_budgets(design)["present"], monte_carlo(design, 60_000, 1)["present"]
     assert drawn.standard_deviation == pytest.approx(b.combined, rel=0.02)
+
+
+def test_a_pin_straight_on_a_source_with_resistance_is_drawn_too():
+    """A follower-like cell: a leg of 0 ohm behind 50 ohm; its bias current makes 50 ohm's worth of error."""
+    design = one_cell({"a": 2.0}, plus={"a": 0.0}, minus_ground=1e4, feedback=1e4, amp=op_amp(bias_current=1e-4))
+    design = replace(design, signals=(replace(design.signals[0], weight=2.0, source_resistance=50.0),))
+    b, drawn = error_budgets(design)["present"], monte_carlo(design, 60_000, 1)["present"]
+    assert drawn.mean == pytest.approx(b.shift, abs=0.02 * b.combined)
+    assert drawn.standard_deviation == pytest.approx(b.combined, rel=0.02)

@@ -217,6 +217,17 @@ def _threads():
         return os.cpu_count() or 1
 
 
+class _Legs(NamedTuple):
+    """The live legs of one node, signals first: where their resistors are, and what drives them."""
+
+    rows: object  # slice or index array into the block's resistors
+    series: np.ndarray | None  # (legs, 1) source resistances, None where there are none
+    signals: int  # how many of the legs are signals'
+    matrix: np.ndarray  # (points + 1, signals): a row of ones, then the points' voltages
+    others: tuple[int, ...]  # the source of each further leg
+    bare: tuple[tuple[float, int], ...]  # conductance and source of legs of 0 ohm behind a source's resistance
+
+
 class _Recipe:
     """All numbers that turn a block of uniform draws into errors at the points."""
 
@@ -246,6 +257,30 @@ class _Recipe:
         self.resistors = len(self.order)
         # rows of a block: tolerance and TCR of each resistor, six a cell, reference, temperature
         self.quantities = 2 * self.resistors + _OP_AMP_DRAWS * net.cell_count + 2
+        self.legs = [
+            (self._legs(c.minus_parts, c.minus_sources), self._legs(c.plus_parts, c.plus_sources)) for c in net.cells
+        ]
+        # a + pin that hangs in the air
+        self.loose = [not np.isfinite(net.resistances[c.plus_parts]).any() and c.plus_ground < 0 for c in net.cells]
+
+    def _legs(self, parts, sources):
+        net, n = self.net, self.net.signal_count
+        live = [(int(i), int(s)) for i, s in zip(parts, sources, strict=True) if int(i) in self.row]
+        live.sort(key=lambda leg: leg[1] >= n)
+        rows = [self.row[i] for i, _ in live]
+        together = rows == list(range(rows[0], rows[0] + len(rows))) if rows else False
+        series = net._leg_rs[[s for _, s in live]][:, None] if live else np.zeros((0, 1))
+        plain = [s for _, s in live if s < n]
+        return _Legs(
+            slice(rows[0], rows[0] + len(rows)) if together else np.array(rows, dtype=int),
+            series if series.any() else None, len(plain),
+            np.vstack([np.ones(len(plain)), self.x[:, plain]]), tuple(s for _, s in live if s >= n),
+            tuple(
+                (1.0 / net._leg_rs[s], int(s))
+                for i, s in zip(parts, sources, strict=True)
+                if net.resistances[i] == 0 and net._leg_rs[s] > 0
+            ),
+        )  # fmt: skip
 
     def scratch(self):
         n_leg = max((len(c.minus_parts) + len(c.plus_parts) for c in self.net.cells), default=0)
@@ -298,7 +333,7 @@ class _Recipe:
         into_plus = into_minus + half
         into_minus -= half
 
-        total_m, drive_m = self._node(work, 0, c.minus_parts, c.minus_sources, r, volts, outs)
+        total_m, drive_m = self._node(work, 0, self.legs[k][0], r, volts, outs)
         if c.minus_ground >= 0:
             total_m += 1.0 / r[self.row[c.minus_ground]]
         drive_m -= into_minus
@@ -306,12 +341,12 @@ class _Recipe:
         total_m += g_f
         y_in = net.y_in
         if c.tied == -1:
-            total_p, plus = self._node(work, 1, c.plus_parts, c.plus_sources, r, volts, outs)
+            total_p, plus = self._node(work, 1, self.legs[k][1], r, volts, outs)
             if c.plus_ground >= 0:
                 total_p += 1.0 / r[self.row[c.plus_ground]]
             plus -= into_plus
-            if not len(c.plus_parts) or np.isinf(net.resistances[c.plus_parts]).all():
-                total_p += _LEAK  # a + pin that hangs in the air
+            if self.loose[k]:
+                total_p += _LEAK
             inv_p = 1.0 / total_p
             plus *= inv_p
             inv_p *= y_in
@@ -364,37 +399,32 @@ class _Recipe:
         out *= g_o
         return out.copy() if k < net.cell_count - 1 else out
 
-    def _node(self, work, slot, parts, sources, r, volts, outs):
+    def _node(self, work, slot, legs, r, volts, outs):
         """Total conductance (BLOCK,) and driven current (points, BLOCK) of the legs into one node."""
-        net, n = self.net, self.net.signal_count
-        live = [(int(i), int(s)) for i, s in zip(parts, sources, strict=True) if np.isfinite(net.resistances[i])]
-        g = work["g"][: len(live)]
-        for j, (i, s) in enumerate(live):
-            if i in self.row:
-                np.add(r[self.row[i]], net._leg_rs[s], out=g[j])
-            else:  # a leg of 0 ohm behind a source resistance
-                g[j] = net._leg_rs[s]
-        np.reciprocal(g, out=g)
-        plain = [j for j, (_, s) in enumerate(live) if s < n]
-        if plain:
-            rows = g[: len(plain)] if plain == list(range(len(plain))) else g[plain]
+        n = self.net.signal_count
+        count = legs.signals + len(legs.others)
+        g = work["g"][:count]
+        if legs.series is None:
+            np.reciprocal(r[legs.rows], out=g)
+        elif count:
+            np.add(r[legs.rows], legs.series, out=g)
+            np.reciprocal(g, out=g)
+        both = work["p"][slot]
+        if legs.signals:
             # one small matrix product: a row of ones sums the conductances, the points' voltages drive
-            which = [live[j][1] for j in plain]
-            both = np.dot(np.vstack([np.ones(len(plain)), self.x[:, which]]), rows, out=work["p"][slot])
-            total, drive = both[0], both[1:]
+            np.dot(legs.matrix, g[: legs.signals], out=both)
         else:
-            total, drive = work["p"][slot][0], work["p"][slot][1:]
-            total[:] = 0.0
-            drive[:] = 0.0
-        for j, (_, s) in enumerate(live):
-            if s >= n:
-                total += g[j]
-        for j, (_, s) in enumerate(live):
+            both[:] = 0.0
+        total, drive = both[0], both[1:]
+        for row, s in zip(g[legs.signals :], legs.others, strict=True):
+            total += row
             if s == n:
-                for q, v in enumerate(self.x[:, n]):
-                    drive[q] += v * g[j] * volts
-            elif s > n:
-                drive += outs[s - n - 1] * g[j]
+                drive += row * volts * self.x[0, n]  # the reference is the same at every point
+            else:
+                drive += outs[s - n - 1] * row
+        for conductance, s in legs.bare:
+            total += conductance
+            drive += conductance * (self.x[0, n] * volts if s == n else self.x[:, s][:, None])
         return total, drive
 
     def _load(self, k, r):

@@ -166,7 +166,9 @@ def influences(net: nodes.Network) -> Influences:
     if all(c.feedback >= 0 for c in net.cells):  # an open loop has no answer at infinite gain
         gain[-2:] = np.inf
     rs = np.tile(net.source_resistances, (rows + 3, 1))
-    rs[-1] = 0.0
+    # a leg of 0 ohm is alone on a + pin, which draws nothing at infinite gain: its source's resistance may stay
+    names = {p.source for p in net.parts if p.resistance == 0}
+    rs[-1] = np.where([n in names for n in (*design.signal_names, REFERENCE)], rs[-1], 0.0)
 
     # the op amps' errors are right-hand sides, so their slopes are exact
     columns = sources + 3 * cells
