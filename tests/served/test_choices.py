@@ -10,7 +10,7 @@ from .serving import served, settled, wait
 
 pytestmark = pytest.mark.browser
 
-SHOWN = "sumwright.state.shown?.choices?.shown"
+SHOWN = "window.sumwright?.state?.shown?.choices?.shown"
 FOUND = f"{SHOWN} && {SHOWN}.share === null && {SHOWN}.rows.length"
 OPTIONS = ["--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking", "--disable-component-update", "--disable-sync"]  # fmt: skip
 
