@@ -382,6 +382,21 @@ def test_accuracy_takes_the_worst_of_its_three_points():
     assert c.value == pytest.approx(max(abs(b.shift) + b.expanded_95 for b in points), rel=1e-12)
 
 
+def test_shift_and_spread_are_cured_together_where_neither_alone_is_enough():
+    design = exact(DEMO)
+    design = replace(
+        design,
+        signals=(replace(design.signals[0], weight=design.signals[0].weight * 1.01), *design.signals[1:]),
+        resistor=replace(design.resistor, tolerance=0.01),
+    )
+    c = check(design, "accuracy")
+    assert c.status == "short" and "; and a closer set" in c.advice
+    limit = amount(c.advice, r"esistors of ±(\S+ %)")
+    cured = exact(replace(design, signals=DEMO.signals))
+    cured = replace(cured, resistor=replace(cured.resistor, tolerance=limit))
+    assert check(cured, "accuracy").status != "short"
+
+
 def test_where_no_one_part_is_enough_the_two_that_matter_are_named():
     design = exact(DEMO)
     design = with_amp(replace(design, resistor=replace(design.resistor, tolerance=0.01)), offset_voltage=0.02)

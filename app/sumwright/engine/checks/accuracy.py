@@ -41,25 +41,35 @@ def _volts(value):
 
 def _cure(analysis, worst, allowed):
     """What one part must become; where no one part is enough, the two that matter most."""
-    ways = []
-    spread = worst.expanded_95
-    if abs(worst.shift) > 0.3 * allowed:
-        ways.append(_less_shift(analysis, worst, allowed))
-    room = allowed - abs(worst.shift)
+    shift = _less_shift(analysis, worst, allowed) if abs(worst.shift) > 0.3 * allowed else ""
+    if analysis.unplugged and shift:
+        return shift
+    if worst.expanded_95 < allowed:
+        # either alone is enough: less shift, or less spread beside the shift as it is
+        return choices(shift, _less_spread(analysis, worst, allowed - abs(worst.shift)))
+    # the spread is too much by itself; the shift, if it matters, must go as well
+    room = 0.9 * allowed if shift else allowed - abs(worst.shift)
+    spread = _less_spread(analysis, worst, room)
+    return f"{spread}; and {shift}" if shift else spread
+
+
+def _less_spread(analysis, worst, room):
+    """The figure that brings the 95 % spread down to `room`."""
+    if room <= 0:
+        return ""
     groups: dict[str, float] = {}
     for term in worst.terms:
         groups[term.kind] = groups.get(term.kind, 0.0) + term.standard_uncertainty**2
     total = sum(groups.values())
     ranked = sorted((kind for kind in groups if groups[kind] > 0), key=lambda kind: -groups[kind])
-    if ranked and room > 0 and spread > room:
-        kind = ranked[0]
-        left = (0.5 * room) ** 2 - (total - groups[kind])
-        if left > 0:
-            ways.append(_better(analysis.design, kind, math.sqrt(left / groups[kind])))
-        else:
-            shares = " and ".join(f"{k} ({format_percent(groups[k] / total)} of the variance)" for k in ranked[:2])
-            ways.append(f"less of both {shares}" if len(ranked) > 1 else f"less {shares}")
-    return choices(*ways)
+    if not ranked:
+        return ""
+    kind = ranked[0]
+    left = (0.5 * room) ** 2 - (total - groups[kind])
+    if left > 0:
+        return _better(analysis.design, kind, math.sqrt(left / groups[kind]))
+    shares = " and ".join(f"{k} ({format_percent(groups[k] / total)} of the variance)" for k in ranked[:2])
+    return f"less of both {shares}" if len(ranked) > 1 else f"less {shares}"
 
 
 def _less_shift(analysis, worst, allowed):
