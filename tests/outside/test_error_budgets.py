@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 from sumwright.engine.boards import first_order_holds, monte_carlo, shortest_interval
-from sumwright.engine.budget import error_budget
+from sumwright.engine.budget import error_budget, sensitivities
 from sumwright.engine.stage import Cell, Design, Leg, ResistorKind, Signal, Supply, replace
 from support.stages import ideal_op_amp, one_cell
 
@@ -147,3 +147,14 @@ def test_an_lm358_summing_four():
     assert bare["offset voltage"] + bare["bias current"] == pytest.approx(0.060, rel=1e-6)
     fair = offsets(amp, 1e5, 1e5, 2e4, legs=4)
     assert sum(fair.values()) == pytest.approx(0.040, rel=1e-6)
+
+
+def test_sensitivities_are_the_derivatives_of_the_textbook_formula():
+    # v = -Rf Σ v_i/R_i: +1 % of a leg takes 1 % of its contribution away, +1 % of Rf adds 1 % of the sum;
+    # a millivolt of offset comes out times the noise gain, a nanoampere of bias times Rf
+    design = one_percent_summer()
+    found = {s.part: s.volts for s in sensitivities(design)}
+    assert found["c leg"] == pytest.approx(0.04, rel=1e-6) and found["a leg"] == pytest.approx(0.01, rel=1e-6)
+    assert found["feedback"] == pytest.approx(-0.07, rel=1e-6)
+    assert abs(found["op amp, offset voltage"]) == pytest.approx(8e-3, rel=1e-6)
+    assert abs(found["op amp, bias current"]) == pytest.approx(4e4 * 1e-9, rel=1e-6)

@@ -61,7 +61,8 @@ export function mount(node, sheet) {
     const trims = table([{text: 'after'}, {text: '|shift| + 95 %, mV', class: 'r'}], 'What remains')
     const all = el('p', {}, 'All resistors at ', ...[[0.01, '1'], [0.005, '0.5'], [0.001, '0.1'], [0.0001, '0.01']].flatMap(([v, text]) => [
       el('button', {class: 'act', text: `${text}${THIN}%`, onclick: () => sheet.fold({do: 'tolerance', tolerance: v})}), ' ']))
-    return {node: el('div', {}, told, t.node, rest, all, el('h3', {text: 'What remains'}), trims.node,
+    const slopes = table([{text: 'sensitivity'}, {text: 'for', class: 'r'}, {text: 'output moves, mV', class: 'r'}], 'Sensitivities')
+    return {node: el('div', {}, told, t.node, rest, all, el('h3', {text: 'Sensitivities'}), slopes.node, el('h3', {text: 'What remains'}), trims.node,
       el('p', {class: 'soft', text: 'Trimmed at nominal temperature and supply, offset with the signals at 0 V, gain at the farthest corner. Software corrects every weight.'})),
     update(s) {
       const m = s.more, plan = m.plan
@@ -74,6 +75,7 @@ export function mount(node, sheet) {
         t.set(plan.changes.map(c => [c.part, grade(c.tolerance), `${fixed(c.temperature_coefficient * 1e6, 0)}${THIN}ppm/K`]).map(r => [r[0], [r[1], 'r'], [r[2], 'r']]))
         setText(rest, plan.possible && plan.changes.length ? `Costs about ${fixed(plan.extra_cost, 1)} more 1${THIN}% resistors: representative prices, ask your supplier.` : '')
       } else { setText(told, m.problem); setText(rest, '') }
+      slopes.set(m.slopes.map(q => [q.part, [q.per, 'r'], [signed(q.volts * 1e3, 3), 'r']]))
       const trim = m.trim
       trims.set([['nothing', trim.untrimmed], ['an offset trim', trim.offset], ['offset and gain', trim.offset_and_gain], ['software correction', trim.software]]
         .map(([name, v]) => [name, [mV(v), s.accuracy !== null && v > s.accuracy ? 'r bad' : 'r']]))

@@ -309,3 +309,35 @@ def error_budgets(stage, points=POINTS) -> dict[str, Budget]:
 def error_budget(stage, point: str = "present") -> Budget:
     """The error budget at one point: `present`, `highest` or `lowest`; see `error_budgets`."""
     return error_budgets(stage, (point,))[point]
+
+
+class Sensitivity(NamedTuple):
+    """How far the output moves [V] for a small change of one quantity: `per` says of what."""
+
+    part: str
+    per: str  # "+1 %", "1 mV", "1 nA"
+    volts: float
+
+
+def sensitivities(stage, point: str = "present") -> tuple[Sensitivity, ...]:
+    """First derivatives of the output at one point, whatever the limits are; largest first.
+
+    Resistors and the reference for +1 %, input error voltage for 1 mV, bias and offset
+    current for 1 nA of each op amp.
+    """
+    net = network_of(stage)
+    known = getattr(stage, "error_influences", None)
+    inf = influences(net) if known is None else known
+    x = extreme_corners(net, inf.nominal)[point]
+    slopes = (inf.moved[4] - inf.moved[5]) @ x / (2 * _STEP) * 0.01
+    names = [part for _, part, kind in inf.labels if kind == "tolerance"]
+    found = [Sensitivity(name, "+1 %", float(v)) for name, v in zip(names, slopes, strict=True)]
+    if inf.uses_reference:
+        found.append(Sensitivity(REFERENCE, "+1 %", float(inf.nominal[-1] * x[-1] * 0.01)))
+    found.sort(key=lambda s: -abs(s.volts))
+    for k, (volt, bias, offset) in enumerate(inf.op_amp.tolist()):
+        at = f"op amp, cell {k + 1}" if net.cell_count > 1 else "op amp"
+        found.append(Sensitivity(f"{at}, offset voltage", "1 mV", volt * 1e-3))
+        found.append(Sensitivity(f"{at}, bias current", "1 nA", bias * 1e-9))
+        found.append(Sensitivity(f"{at}, offset current", "1 nA", offset * 1e-9))
+    return tuple(found)

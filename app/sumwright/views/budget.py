@@ -15,7 +15,7 @@ from bokeh.models import Span as Line
 
 from sumwright import fields
 from sumwright.engine import abuse, boards, catalogue, tighten, which_op_amp
-from sumwright.engine.budget import POINTS
+from sumwright.engine.budget import POINTS, sensitivities
 from sumwright.engine.budget import Budget as ErrorBudget
 from sumwright.errors import InvalidQuantity, SumwrightError
 from sumwright.files.op_amps import read_op_amps
@@ -153,7 +153,10 @@ class Budget(Fold):
         """The cheapest grades that meet the accuracy, and what trimming would leave."""
         accuracy = analysis.design.target.accuracy
         left = tighten.after_trim(analysis)
-        out: dict[str, Any] = {"trim": left, "accuracy": accuracy, "plan": None, "problem": ""}
+        out: dict[str, Any] = {
+            "trim": left, "accuracy": accuracy, "plan": None, "problem": "",
+            "slopes": sensitivities(analysis, self.point),
+        }  # fmt: skip
         key = (analysis.design, analysis.unplugged)
         if self._advice[0] != key:
             try:
