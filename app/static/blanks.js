@@ -23,6 +23,7 @@ export class Blank {
     })
     this.node.addEventListener('blur', () => this.commit())
     this.node.addEventListener('focus', () => { if (!this.refused) this.node.select() })
+    this.node.blank = this
     blanks.set(field, this)
   }
 

@@ -170,8 +170,8 @@ function mountFolds() {
 
 document.addEventListener('keydown', e => {
   if (!(e.ctrlKey || e.metaKey) || e.altKey || e.key.toLowerCase() !== 'z') return
-  const typing = e.target.matches?.('input.blank, textarea') && e.target.value !== e.target.defaultValue && e.target.dataset.dirty
-  if (typing) return
+  // a text being typed has an undo of its own
+  if (e.target.matches?.('textarea') || (e.target.blank && e.target.value !== e.target.blank.good)) return
   e.preventDefault()
   line.act({do: e.shiftKey ? 'redo' : 'undo'})
 })

@@ -42,8 +42,12 @@ def fold_classes() -> dict[str, type[Fold]]:
     found = {}
     for key in FOLDS:
         name = f"sumwright.views.{key}"
-        if importlib.util.find_spec(name):
+        if not importlib.util.find_spec(name):
+            continue
+        try:
             found[key] = getattr(importlib.import_module(name), key.capitalize())
+        except ImportError:  # one fold that cannot be loaded must not take the sheet with it
+            log.exception("The fold %s is left out.", key)
     return found
 
 

@@ -1,0 +1,231 @@
+"""The run on the bench: steps of the plan, readings taken, and what is still to do.
+
+A reading belongs to what was applied and where it was probed, not to a row: when the
+design changes, a reading finds its step again or stands as a step of its own.
+"""
+
+from __future__ import annotations
+
+import csv
+import io
+from dataclasses import dataclass, replace
+from typing import NamedTuple
+
+import numpy as np
+
+from sumwright.engine.bench.board import Bench
+from sumwright.engine.bench.plan import Step, plan
+from sumwright.engine.bench.readings import Meter, Readings
+from sumwright.engine.operating_point import operating_point
+from sumwright.engine.stage import Design
+from sumwright.engine.stage import replace as with_fields
+from sumwright.errors import InvalidReadings
+from sumwright.files.readings import number, parse_readings
+from sumwright.quantity import parse_quantity
+
+MOST_READINGS = 2000
+OUTPUT_PROBE = "output"
+
+
+@dataclass(frozen=True)
+class Taken:
+    """One reading, in SI units, as it was typed."""
+
+    apply: tuple[tuple[str, float], ...]  # signals not named are at 0 V
+    probe: str
+    unit: str
+    text: str
+    value: float
+    uncertainty: float | None = None  # V, where a file stated it
+
+    @property
+    def key(self):
+        return (self.probe, self.unit, tuple(sorted((n, round(v, 9)) for n, v in self.apply if v)))
+
+
+class Row(NamedTuple):
+    """A step with its reading, if one was taken."""
+
+    step: Step
+    taken: Taken | None
+    planned: bool
+
+    @property
+    def word(self) -> str:
+        """in, out, or empty without a reading."""
+        if self.taken is None or self.step.low is None:
+            return ""
+        return "in" if self.step.low <= self.taken.value <= self.step.high else "out"
+
+
+def step_key(step: Step):
+    """What a reading must share to belong to the step."""
+    return (step.probe, step.unit, tuple(sorted((n, round(v, 9)) for n, v in step.apply.items() if v)))
+
+
+class BenchRun:
+    """Readings of one board against one design."""
+
+    def __init__(self, design: Design, meter: Meter | None = None):
+        self.meter = meter or Meter()
+        self.taken: dict[tuple, Taken] = {}
+        self.asked: dict[tuple, Taken] = {}  # settings a person took up beyond the plan, not read yet
+        self._for: Design | None = None
+        self.follow(design)
+
+    def follow(self, design: Design) -> bool:
+        """Make the plan again if the stage is another one; whether it was."""
+        still = with_fields(design, signals=tuple(with_fields(s, value=0.0) for s in design.signals), title="")
+        if still == self._for:
+            return False
+        self._for, self.design = still, design
+        self.bench = Bench(design)
+        self.steps = plan(design, self.meter)
+        return True
+
+    def restate(self, meter: Meter) -> None:
+        """Another meter: the limits move with it."""
+        self.meter = meter
+        self.steps = plan(self.design, meter)
+
+    def rows(self) -> list[Row]:
+        """Steps in their order, then readings and settings that no step asks for."""
+        rows = [Row(s, self.taken.get(step_key(s)), True) for s in self.steps]
+        known = {step_key(s) for s in self.steps}
+        names = set(self.design.signal_names)
+        extra = [t for key, t in {**self.asked, **self.taken}.items() if key not in known]
+        extra = [
+            t for t in extra if t.probe == OUTPUT_PROBE and t.unit == "V" and {n for n, v in t.apply if v} <= names
+        ]
+        for t in extra:
+            rows.append(Row(self._step_of(t, len(rows) + 1), self.taken.get(t.key), False))
+        return rows
+
+    def _step_of(self, t: Taken, number_: int) -> Step:
+        volts = dict(t.apply)
+        apply = {n: float(volts.get(n, 0.0)) for n in self.design.signal_names}
+        x = np.array([list(apply.values())])
+        p = self.bench.predict(self.bench.healthy, x)
+        expect = operating_point(self.design, x[0]).output
+        u = np.sqrt(np.square(p.columns).sum() + p.own.sum() + self.meter.standard_uncertainty(expect) ** 2)
+        half = 2 * float(u) + abs(float(p.mean[0, 0]) - expect)
+        return Step(
+            number_, "A reading of your own", "Power on", apply, OUTPUT_PROBE, expect, expect - half, expect + half, "V",
+            "Not a step of the run; it counts in the fit and for the suspects all the same.",
+            "What it means is told by the suspects.", "",
+        )  # fmt: skip
+
+    # -- readings ----------------------------------------------------------------
+
+    def put(self, row: int, text: str) -> None:
+        """Type a reading at a row; an empty text takes it back.
+
+        Raises
+        ------
+        InvalidQuantity
+            If the text is not a quantity in the row's unit.
+        """
+        rows = self.rows()
+        if not 0 <= row < len(rows):
+            raise InvalidReadings(f"The run has {len(rows)} rows; there is no row {row + 1}.")
+        step = rows[row].step
+        key = step_key(step)
+        if not text.strip():
+            if self.taken.pop(key, None) is not None and not rows[row].planned:
+                self.asked[key] = Taken(tuple(step.apply.items()), step.probe, step.unit, "", 0.0)
+            return
+        value = parse_quantity(text, step.unit, f"Reading {row + 1}")
+        self._room(1)
+        self.taken[key] = Taken(tuple(step.apply.items()), step.probe, step.unit, text.strip(), value)
+
+    def ask(self, volts: dict[str, float]) -> int:
+        """Add a setting to the run; the row it stands at."""
+        t = Taken(tuple((n, float(v)) for n, v in volts.items()), OUTPUT_PROBE, "V", "", 0.0)
+        known = {step_key(r.step): i for i, r in enumerate(self.rows())}
+        if t.key in known:
+            return known[t.key]
+        self._room(1)
+        self.asked[t.key] = t
+        return len(self.rows()) - 1
+
+    def paste(self, row: int, text: str) -> int:
+        """Fill readings downward from a row, or take a whole table with a heading; how many were read.
+
+        Nothing is taken unless all of it can be.
+        """
+        lines = [line for line in text.replace("\r", "\n").split("\n") if line.strip()]
+        if not lines:
+            raise InvalidReadings("What was pasted is empty.")
+        if "output" in lines[0].casefold():
+            return self.take(parse_readings(text, self.design, "What was pasted"))
+        rows = self.rows()
+        if row + len(lines) > len(rows):
+            raise InvalidReadings(
+                f"{len(lines)} readings were pasted at row {row + 1}, but the run ends at row {len(rows)}; a table with a heading adds rows."
+            )
+        fresh = {}
+        for k, line in enumerate(lines):
+            cells = [c for c in line.replace(";", "\t").split("\t") if c.strip()]
+            if len(cells) != 1:
+                raise InvalidReadings(
+                    f"Line {k + 1} of what was pasted has {len(cells)} cells; a column of readings, or a table with a heading, is wanted."
+                )
+            step = rows[row + k].step
+            where = f"Line {k + 1} of what was pasted"
+            value = number(cells[0], "\t", where) if step.unit == "V" else parse_quantity(cells[0], step.unit, where)
+            fresh[step_key(step)] = Taken(tuple(step.apply.items()), step.probe, step.unit, cells[0].strip(), value)
+        self.taken.update(fresh)
+        return len(fresh)
+
+    def take(self, readings: Readings) -> int:
+        """Every reading of a file; how many."""
+        self._room(readings.count)
+        for i in range(readings.count):
+            apply = tuple(zip(readings.names, map(float, readings.volts[i]), strict=True))
+            value = float(readings.output[i])
+            u = None if readings.uncertainty is None else float(readings.uncertainty[i])
+            t = Taken(apply, OUTPUT_PROBE, "V", f"{value:.6g}", value, u)
+            self.taken[t.key] = t
+        return readings.count
+
+    def _room(self, more: int) -> None:
+        if len(self.taken) + len(self.asked) + more > MOST_READINGS:
+            raise InvalidReadings(f"The run holds {MOST_READINGS} readings, the most it takes.")
+
+    def clear(self) -> dict[tuple, Taken]:
+        """Take every reading away; what they were, to bring back."""
+        gone, self.taken, self.asked = self.taken, {}, {}
+        return gone
+
+    def readings(self) -> Readings:
+        """The readings of the output, for the fit."""
+        names = self.design.signal_names
+        rows = [
+            (i, r) for i, r in enumerate(self.rows()) if r.taken and r.step.probe == OUTPUT_PROBE and r.step.unit == "V"
+        ]
+        volts = np.array([[r.step.apply.get(n, 0.0) for n in names] for _, r in rows]).reshape(-1, len(names))
+        output = np.array([r.taken.value for _, r in rows if r.taken])
+        stated = [r.taken.uncertainty for _, r in rows if r.taken]
+        guess = self.meter.standard_uncertainty(output)
+        u = np.array([g if s is None else s for s, g in zip(stated, guess, strict=True)])
+        return Readings(names, volts, output, u, tuple(i + 1 for i, _ in rows))
+
+    def to_csv(self) -> str:
+        """The readings of the output as the readings file holds them."""
+        r = self.readings()
+        out = io.StringIO()
+        writer = csv.writer(out, lineterminator="\n")
+        writer.writerow([*r.names, "output", "uncertainty"])
+        for volts, y, u in zip(
+            r.volts, r.output, r.uncertainty if r.uncertainty is not None else r.output, strict=True
+        ):
+            writer.writerow([f"{x:.9g}" for x in (*volts, y, u)])
+        return out.getvalue()
+
+    def restore(self, text: str) -> int:
+        """Readings kept earlier as `to_csv` wrote them."""
+        count = self.take(parse_readings(text, self.design, "The readings kept"))
+        for key, t in self.taken.items():
+            if t.uncertainty is not None:
+                self.taken[key] = replace(t, text=f"{t.value:.6g}")
+        return count
