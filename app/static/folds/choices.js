@@ -74,7 +74,7 @@ export function mount(node, sheet) {
     const name = el('span'), merit = el('span', {class: 'soft merit'}), bad = el('span', {class: 'bad'})
     const cells = Array.from({length: 8}, (_, i) => el('td', {class: i < 7 ? 'r' : null}))
     const item = {}
-    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', index: item.index})}, name, merit, bad)
+    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', index: item.index})}, name, bad, merit)
     item.node = el('tr', {onclick: e => { if (!e.target.closest('button')) pick.click() }}, el('td', {}, mark), el('td', {class: 'who'}, pick), ...cells)
     return Object.assign(item, {mark, name, merit, bad, cells, pick})
   }
