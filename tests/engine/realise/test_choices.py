@@ -63,6 +63,12 @@ def test_refusals_name_the_reason():
         realise(design_for([1.0]), least_input={"s0": -1.0})
 
 
+def test_a_range_too_wide_to_search_is_narrowed_and_said():
+    result = realise(design_for([-1.0, -2.0], series="E192", least=1e-6, most=1e12), arrangement="inverting")
+    assert "The design allows 1e-06 to 1e+12 ohm; searched were" in result.notes[0]
+    assert not result.proved["inverting"] and result.choices[0].worst_weight_error < 1e-3
+
+
 def test_places_are_named_as_the_drawing_names_them():
     for design in WANTED.values():
         for c in realise(design).choices[:3]:

@@ -25,6 +25,7 @@ from sumwright.engine.stage import ARRANGEMENTS, REFERENCE, Cell, Design, cell_n
 from sumwright.errors import CannotRealise
 
 BOLTZMANN = 1.380649e-23  # J/K, exact in the SI of 2019
+MOST_VALUES = 1800  # nine decades of E192, the most that is searched
 CELL_OUTPUT = re.compile(r"cell \d+")
 SHOWN = 8  # sets shown of one arrangement at most
 
@@ -305,8 +306,16 @@ def realise(
     _check_least_input(design, least_input)
     kind = design.resistor
     notes: list[str] = []
+    narrowed = False
     if drawer is None:
         values = values_within(kind.series, kind.least, kind.most)
+        if values.size > MOST_VALUES:
+            usual = np.argsort(np.abs(np.log(values / USUAL_LEG)), kind="stable")[:MOST_VALUES]
+            values = np.sort(values[usual])
+            narrowed = True
+            notes.append(
+                f"The design allows {kind.least:g} to {kind.most:g} ohm; searched were {values[0]:g} to {values[-1]:g} ohm. Narrow the range for a proof."
+            )
     else:
         from sumwright.engine.realise.drawer import usable
 
@@ -342,7 +351,7 @@ def realise(
         if drawer is None and not again and is_single(design):
             lifted = best_choices(design, name, biased_cells(design, name, values), shown=1)
             choices += [_with_merits(c, ("lifted for the single supply",)) for c in lifted]
-        bounds[name], proved[name] = float(outcome.bound), bool(outcome.whole)
+        bounds[name], proved[name] = 0.0 if narrowed else float(outcome.bound), bool(outcome.whole) and not narrowed
     if not choices:
         raise CannotRealise(" ".join(notes) or "No set of values was found.", able(design))
     choices.sort(key=rank)
