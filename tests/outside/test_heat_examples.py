@@ -89,3 +89,14 @@ def test_zonotope_is_what_a_box_is_mapped_to():
     whole = np.array([1.0, -2.0]) + np.array(np.meshgrid(*[[0, 1]] * 5)).reshape(5, -1).T @ sides
     for corner in corners:
         assert np.abs(whole - corner).sum(axis=1).min() < 1e-12
+
+
+def test_dropout_that_grows_with_current_bounds_the_reach():
+    """Always asked for more than it can: into 100 Ω the output stands at 15 - 50 i = 100 i, 10 V and 0.1 A, 0.5 W."""
+    amp = ideal_op_amp(supply_current=0.0, dropout_resistance=50.0, output_current=10.0)
+    assert most(follower(amp, 100.0, 12.0, 14.0, Supply(15.0, -15.0))) == pytest.approx(0.5, rel=1e-6)
+    # half swing is within reach: 7.5² / 100
+    assert most(follower(amp, 100.0, 0.0, 14.0, Supply(15.0, -15.0))) == pytest.approx(0.5625, rel=1e-6)
+    # up to 4 V into 10 Ω the current limit of 0.2 A stops it at 2 V: 13 V times 0.2 A
+    weak = ideal_op_amp(supply_current=0.0, output_current=0.2)
+    assert most(follower(weak, 10.0, 0.0, 4.0, Supply(15.0, -15.0))) == pytest.approx(2.6, rel=1e-6)

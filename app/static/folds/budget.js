@@ -47,7 +47,7 @@ export function mount(node, sheet) {
         const known = r[1] === 'rounding' || r[1] === 'source resistance' || r[1] === 'finite gain'
         if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${signed(r[5] * 1e3, 2)}${THIN}mV`]
         bars[i] ??= (() => { const bar = el('div', {class: 'bar'}), text = el('span', {class: 'n'}); return {bar, text, node: el('div', {class: 'share'}, bar, text)} })()
-        const width = `${(r[4] / most * 68).toFixed(1)}%`
+        const width = `${(r[4] / most * 58).toFixed(1)}%`
         if (bars[i].bar.style.width !== width) bars[i].bar.style.width = width
         setText(bars[i].text, percent(r[4]))
         return [r[0], [mV(r[2]), 'r'], [mV(r[3]), 'r'], [bars[i].node, '']]
@@ -147,17 +147,17 @@ export function mount(node, sheet) {
     const W = node.clientWidth
     if (!W) return
     const top = node.getBoundingClientRect().top + scrollY
-    const H = Math.max(320, Math.min(640, innerHeight - top - 44))
+    const H = Math.max(320, Math.min(640, innerHeight - top - sum.offsetHeight - 14))
     pages.set(s.page); points.set(s.point); sizes.set(s.size)
     built[s.page] ??= makers[s.page]()
     const now = built[s.page]
     if (page.firstChild !== now.node) page.replaceChildren(now.node)
     setClass(node, 'wide', !!now.wide)
-    const height = `${Math.round(H - 34)}px`
+    const height = `${Math.round(H - pages.node.parentNode.offsetHeight - 4)}px`
     if (page.style.maxHeight !== height) page.style.maxHeight = height
     now.update(s)
     const right = drawn.clientWidth
-    if (right) figure.fit(right, Math.max(200, H - 96), {left: 12, bottom: 32, right: 12})
+    if (right) figure.fit(right, Math.max(200, H - drawn.firstChild.offsetHeight - drawn.lastChild.offsetHeight - 14), {left: 12, bottom: 32, right: 12})
     setText(caption, `Error ${WHERE[s.point]}, mV: ${s.boards.draws.toLocaleString('en').replaceAll(',', THIN)} boards${s.accuracy === null ? '' : ', allowed band'}`)
     const share = Math.round(100 * s.boards.draws / s.boards.wanted)
     progress.firstChild.style.width = `${Math.min(100, share)}%`

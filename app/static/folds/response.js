@@ -137,7 +137,8 @@ export function mount(node, sheet) {
     if (!W) return
     const top = node.getBoundingClientRect().top + scrollY
     const H = Math.max(420, Math.min(820, innerHeight - top - 8))
-    const wide = left.clientWidth, narrow = right.clientWidth, rest = H - 60
+    const wide = left.clientWidth, narrow = right.clientWidth
+    const rest = H - [...left.querySelectorAll('.heads')].reduce((sum, h) => sum + h.offsetHeight, 4)
     gain.fit(wide, Math.round(rest * .66), {left: 46, bottom: 26, right: 16, top: 6})
     phase.fit(wide, Math.round(rest * .34), {left: 46, bottom: 26, right: 16, top: 6})
     const tall = Math.round(H * .4)
@@ -159,7 +160,7 @@ export function mount(node, sheet) {
     built[s.page] ??= makers[s.page]()
     const now = built[s.page]
     if (page.firstChild !== now.node) page.replaceChildren(now.node)
-    const height = `${Math.max(120, H - tall - 116)}px`
+    const height = `${Math.max(120, H - tall - [...right.children].filter(c => c.classList.contains('heads')).reduce((sum, h) => sum + h.offsetHeight, 6))}px`
     if (page.style.maxHeight !== height) page.style.maxHeight = height
     now.update(s)
   }

@@ -94,11 +94,7 @@ def heat(stage) -> Heat:
     if supply.low > 0:
         low = supply.low
     idle = amp.supply_current * (high - low)
-    own = [
-        idle
-        + _output_stage(net, sol.current[k], sol.output[k], high, low, high - amp.dropout_high, low + amp.dropout_low)
-        for k in range(net.cell_count)
-    ]
+    own = [idle + _output_stage(net, k, sol, high, low) for k in range(net.cell_count)]
     per = max(1, amp.per_package)
     amps = []
     for k, watts in enumerate(own):
@@ -118,19 +114,26 @@ def _range(net, rows):
     return fixed + np.minimum(a, b).sum(axis=-1), fixed + np.maximum(a, b).sum(axis=-1)
 
 
-def _output_stage(net, current, output, high, low, reach_high, reach_low):
-    """Most that the output stage dissipates [W] over the signals' box."""
-    n = net.signal_count
+def _output_stage(net, k, sol, high, low):
+    """Most that a cell's output stage dissipates [W] over the signals' box, its output within its limits."""
+    n, amp = net.signal_count, net.design.op_amp
+    current, output = sol.current[k], sol.output[k]
     start = np.array([row[:n] @ net.lows + row[n] * net.values[n] for row in (current, output)])
     sides = np.stack([current[:n], output[:n]], axis=-1) * (net.highs - net.lows)[:, None]
     polygon = zonotope(start, sides)
-    limit = net.design.op_amp.output_current
-    for axis, bound, sign in ((1, reach_high, 1), (1, reach_low, -1), (0, limit, 1), (0, -limit, -1)):
-        cut = _clip(polygon, axis, bound, sign)
-        if len(cut) == 0:  # the whole box is beyond this limit: it sits at it
-            cut = polygon.copy()
-            cut[:, axis] = bound
-        polygon = cut
+    drop, top, bottom = amp.dropout_resistance, high - amp.dropout_high, low + amp.dropout_low
+    for normal, bound in (
+        ((0.0, 1.0), top), ((drop, 1.0), top), ((0.0, -1.0), -bottom), ((-drop, -1.0), -bottom),
+        ((1.0, 0.0), amp.output_current), ((-1.0, 0.0), amp.output_current),
+    ):  # fmt: skip
+        polygon = _clip(polygon, np.array(normal), bound)
+        if not len(polygon):  # it never leaves a limit: where it sits there
+            up = output[:n] >= 0
+            ends = [np.append(np.where(up == side, net.highs, net.lows), net.values[n:]) for side in (True, False)]
+            limits = nodes.Limits(top, bottom, drop, amp.output_current)
+            held = nodes.solve_clipped(net, np.array(ends), limits=limits).solution
+            polygon = np.stack([held.current[:, k, 0], held.output[:, k, 0]], axis=-1)
+            break
 
     def watts(i, v):
         return np.where(i > 0, (high - v) * i, (low - v) * i)
@@ -171,19 +174,17 @@ def zonotope(start, sides):
     return lowest + np.cumsum(np.concatenate([np.zeros((1, 2)), up, -up[:-1]]), axis=0)
 
 
-def _clip(polygon, axis, bound, sign):
-    """The part of a convex polygon with sign * x[axis] <= sign * bound."""
-    inside = sign * (bound - polygon[:, axis]) >= 0
+def _clip(polygon, normal, bound):
+    """The part of a convex polygon with normal · x <= bound; (0, 2) if there is none."""
+    room = bound - polygon @ normal
+    inside = room >= 0
     if inside.all():
         return polygon
     out = []
     for i in range(len(polygon)):
-        a, b = polygon[i], polygon[(i + 1) % len(polygon)]
+        j = (i + 1) % len(polygon)
         if inside[i]:
-            out.append(a)
-        if inside[i] != inside[(i + 1) % len(polygon)]:
-            t = (bound - a[axis]) / (b[axis] - a[axis])
-            corner = a + t * (b - a)
-            corner[axis] = bound
-            out.append(corner)
+            out.append(polygon[i])
+        if inside[i] != inside[j]:
+            out.append(polygon[i] + room[i] / (room[i] - room[j]) * (polygon[j] - polygon[i]))
     return np.array(out).reshape(-1, 2)
