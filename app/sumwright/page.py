@@ -201,6 +201,8 @@ class Page:
 
     def _do(self, act: dict[str, Any]) -> dict[str, Any] | None:
         name = act.get("do")
+        if not isinstance(name, str):
+            return None
         if name == "turn":
             self.turn_to(str(act.get("fold")))
             return None

@@ -74,8 +74,8 @@ export function mount(node, sheet) {
     const name = el('span'), merit = el('span', {class: 'soft merit'}), bad = el('span', {class: 'bad'})
     const cells = Array.from({length: 8}, (_, i) => el('td', {class: i < 7 ? 'r' : null}))
     const item = {}
-    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', index: item.index})}, name, bad, merit)
-    item.node = el('tr', {onclick: e => { if (!e.target.closest('button')) pick.click() }}, el('td', {}, mark), el('td', {class: 'who'}, pick), ...cells)
+    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', id: key})}, name, bad, merit)
+    item.node = el('tr', {onclick: e => { if (!e.target.closest('button')) pick.click() }, ondblclick: () => say({do: 'take', id: key})}, el('td', {}, mark), el('td', {class: 'who'}, pick), ...cells)
     return Object.assign(item, {mark, name, merit, bad, cells, pick})
   }
 
@@ -99,12 +99,11 @@ export function mount(node, sheet) {
   present.pick.replaceWith(el('span', {}, present.name, present.merit))
 
   function drawTable(shown) {
-    const keys = shown.now ? ['now', ...shown.rows.map((_, i) => i)] : shown.rows.map((_, i) => i)
+    const keys = shown.now ? ['now', ...shown.rows.map(row => row.id)] : shown.rows.map(row => row.id)
     const store = keyed(body, keys, key => key === 'now' ? present : makeRow(key))
     if (shown.now) drawRow(present, shown.now, ' now')
     shown.rows.forEach((row, i) => {
-      const item = store.get(i)
-      item.index = i
+      const item = store.get(row.id)
       drawRow(item, row)
       setClass(item.node, 'picked', i === shown.picked)
       setAttr(item.pick, 'aria-pressed', String(i === shown.picked))
@@ -153,7 +152,7 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- preview
   function previewPane() {
     const told = el('p', {class: 'note'}), text = el('span')
-    const take = el('button', {class: 'act', onclick: () => say({do: 'take', index: take.index})}, el('b', {text: 'Take this set'}))
+    const take = el('button', {class: 'act', onclick: () => say({do: 'take', id: take.of})}, el('b', {text: 'Take this set'}))
     told.append(el('b', {text: 'If you take it: '}), text, ' ', take)
     const none = el('p', {class: 'note soft', text: 'Pick a row, or a point of the picture, to see what it would change before it is taken.'})
     const legs = grid(['leg', 'wanted', 'now', 'made now', 'preview', 'made then'], 1)
@@ -165,7 +164,7 @@ export function mount(node, sheet) {
       told.hidden = both.hidden = !ready
       none.hidden = ready
       if (!ready) return
-      take.index = shown.picked
+      take.of = shown.rows[shown.picked].id
       take.disabled = open.same
       setText(text, open.same ? 'this set is on the sheet already.' : change(open))
       legs.fill([

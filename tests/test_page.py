@@ -1,0 +1,116 @@
+"""A session's page without a browser: what it sends, what it refuses, and that nothing of it stays."""
+
+import gc
+import json
+import weakref
+
+import pytest
+from sumwright.errors import NotAllowed
+from sumwright.model import acts
+from sumwright.page import FOLDS, Page, fold_classes
+
+
+class Browser:
+    """The other end of the wire: keeps what it was sent, as the browser does."""
+
+    def __init__(self, page):
+        self.frames, self.state = [], {}
+        page.wire._send_msg = self.hear
+
+    def hear(self, text):
+        self.frames.append(json.loads(text))
+        self.state.update(self.frames[-1])
+
+
+@pytest.fixture
+def page():
+    page = Page()
+    yield page
+    page.close()
+
+
+def test_every_fold_is_there():
+    assert set(fold_classes()) == set(FOLDS)
+
+
+def test_one_message_is_answered_by_one_frame(page):
+    browser = Browser(page)
+    page.receive({"seq": 7, "acts": [{"do": "value", "signal": "north", "value": 1.0}, {"do": "let_go"}]})
+    assert [f["seq"] for f in browser.frames] == [7]
+
+
+def test_a_frame_after_a_move_carries_only_what_moved(page):
+    browser = Browser(page)
+    page.receive({"seq": 1, "acts": []})
+    for seq, volts in enumerate((1.0, 1.2), 2):
+        page.receive({"seq": seq, "acts": [{"do": "value", "signal": "north", "value": volts}]})
+    last = browser.frames[-1]
+    assert "live" in last
+    assert "plate" not in last
+    assert "signals" not in last
+    assert len(json.dumps(last)) < 8000
+
+
+def test_what_was_sent_piece_by_piece_is_the_whole(page):
+    browser = Browser(page)
+    page.receive({"seq": 1, "acts": [], "whole": True})
+    for seq, act in enumerate(
+        [
+            {"do": "value", "signal": "north", "value": 1.0},
+            {"do": "weight", "signal": "east", "text": "0.2"},
+            {"do": "plug", "signal": "south", "out": True},
+            {"do": "arrange", "arrangement": "two-stage"},
+            {"do": "undo"},
+        ],
+        2,
+    ):
+        page.receive({"seq": seq, "acts": [act]})
+    whole = {k: json.loads(v) for k, v in page.frame(whole=True).items()}
+    for key, value in whole.items():
+        assert browser.state[key] == value, key
+
+
+def test_what_changes_the_sheet_asks_first_and_what_does_not_is_free():
+    asked = []
+
+    def may(action):
+        asked.append(action)
+        raise NotAllowed("You may read this sheet, not change it.")
+
+    page = Page(may=may)
+    browser = Browser(page)
+    before = page.workbench.snapshot
+    for name in acts.ACTS:
+        page.receive({"seq": 1, "acts": [{"do": name, "signal": "north", "text": "1", "value": 1.0, "out": True}]})
+    assert page.workbench.snapshot == before
+    assert set(asked) == set(acts.ACTS) - acts.FREE
+    assert all(
+        f["refusals"][0]["not_allowed"] for f in browser.frames if "refusals" in f and f["refusals"][0]["do"] in asked
+    )
+    page.close()
+
+
+@pytest.mark.parametrize(
+    "message",
+    [{}, {"acts": None}, {"acts": [1, None, "x"]}, {"acts": [{"do": ["value"]}]}, {"acts": [{"do": "fold", "fold": {}}]},
+     {"acts": [{"do": "turn", "fold": "<b>"}]}, {"seq": "1", "acts": [{"do": "value"}]}, {"acts": [{}] * 1000}],
+)  # fmt: skip
+def test_messages_of_the_wrong_shape_do_nothing(page, message):
+    Browser(page)
+    before = page.workbench.snapshot
+    page.receive(message)
+    assert page.workbench.snapshot == before
+
+
+def test_a_closed_session_is_collected():
+    gc.collect()
+    page = Page()
+    Browser(page)
+    for key in fold_classes():
+        page.receive({"seq": 1, "acts": [{"do": "turn", "fold": key}]})
+    page.receive({"seq": 2, "acts": [{"do": "value", "signal": "north", "value": 1.0}]})
+    watched = [weakref.ref(page), weakref.ref(page.workbench), *(weakref.ref(f) for f in page.folds.values())]
+    page.close()
+    del page
+    gc.collect()
+    assert [w() for w in watched] == [None] * len(watched)
