@@ -64,7 +64,7 @@ def test_a_resistor_across_the_inputs_costs_bandwidth_but_no_gain():
     assert fast.cells[0].crossover / slow.cells[0].crossover == pytest.approx(101, rel=2e-3)
 
 
-# slew rate / (2π·10 V): LM741 0.5, NE5532 9, TL072 13, LM358 0.3 V/µs; 2 V/µs at 12 V 26.5 kHz (NPTEL 117107094, 7)
+# slew rate / (2π·10 V): LM741 0.5, NE5532 9, TL072 13, LM358 0.3 V/µs; 2 V/µs at 12 V 26.5 kHz
 @pytest.mark.parametrize(
     ("slew", "peak", "hz"),
     [(0.5e6, 10, 7.96e3), (9e6, 10, 143e3), (13e6, 10, 207e3), (0.3e6, 10, 4.77e3), (2e6, 12, 26.5e3)],

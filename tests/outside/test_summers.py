@@ -226,7 +226,7 @@ def test_gain_error_moves_with_the_open_loop_gain():
 
 
 def test_offset_current_through_a_kilohm_in_open_loop():
-    # NPTEL course 117107094, lecture 7: 20 nA of offset current through 1 kΩ is 20 µV, 2.0 V behind a gain of 1e5.
+    # By Ohm's law: 20 nA of offset current through 1 kΩ is 20 µV, 2.0 V behind a gain of 1e5.
     amp = ideal_op_amp(
         open_loop_gain=1e5, offset_current=20e-9, offset_voltage=0.0, offset_drift=0.0, bias_current=0.0, cmrr=1e12, psrr=1e12
     )  # fmt: skip
