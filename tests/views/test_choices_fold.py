@@ -12,7 +12,7 @@ from sumwright.engine.realise.steps import search_steps, with_cells
 from sumwright.errors import InvalidQuantity, InvalidReadings, SumwrightError
 from sumwright.model import demo
 from sumwright.model.workbench import Workbench
-from sumwright.views.choices import Choices
+from sumwright.views.choices import Choices, tag
 from sumwright.views.fold import Context
 from sumwright.views.wire import packed
 
@@ -76,6 +76,10 @@ def searched():
     return fold, bench, jobs
 
 
+def name_of(fold, k):
+    return tag(fold._rows[k])
+
+
 def test_the_search_tells_how_far_it_is_and_ends_with_a_proof():
     fold, _, jobs = opened()
     fold.show()
@@ -106,14 +110,14 @@ def test_a_moving_slider_does_not_search_again_but_a_weight_does():
 def test_preview_changes_nothing_and_take_is_one_step_that_undo_brings_back():
     fold, bench, _ = searched()
     before, checks = bench.design, bench.analysis.checks
-    fold.handle({"do": "pick", "index": 0})
+    fold.handle({"do": "pick", "id": name_of(fold, 0)})
     shown = fold.show()
     preview = shown["open"]
     assert bench.design is before and preview["picked"] and not preview["same"]
     assert {m["key"] for m in preview["margins"]} <= {c.key for c in checks} and len(preview["margins"]) >= 5
     assert [leg["name"] for leg in preview["legs"]] == list(bench.signal_names)
     then = {m["key"]: m["margin_then"] for m in preview["margins"]}
-    fold.handle({"do": "take", "index": 0})
+    fold.handle({"do": "take", "id": name_of(fold, 0)})
     assert bench.design.cells != before.cells
     # what was promised is what the sheet now says
     assert {c.key: c.margin for c in bench.analysis.checks if c.key in then} == then
@@ -123,9 +127,9 @@ def test_preview_changes_nothing_and_take_is_one_step_that_undo_brings_back():
 
 def test_picking_again_puts_it_down_and_a_tap_picks():
     fold, _, _ = searched()
-    fold.handle({"do": "pick", "index": 1})
+    fold.handle({"do": "pick", "id": name_of(fold, 1)})
     assert fold.show()["picked"] == 1
-    fold.handle({"do": "pick", "index": 1})
+    fold.handle({"do": "pick", "id": name_of(fold, 1)})
     assert fold.show()["picked"] is None
     fold._map._points.selected.indices = [3]  # the present stage is point 0
     assert fold.show()["picked"] == 2
@@ -134,7 +138,7 @@ def test_picking_again_puts_it_down_and_a_tap_picks():
 def test_what_a_browser_sends_is_checked():
     fold, _, _ = searched()
     for bad in (
-        {}, {"do": "explode"}, {"do": "pick", "index": 10**6}, {"do": "pick", "index": -1}, {"do": "pick"}, {"do": "take", "index": 0.5},
+        {}, {"do": "explode"}, {"do": "pick", "id": "0"}, {"do": "pick", "id": 1}, {"do": "pick"}, {"do": "take", "id": "x" * 99},
         {"do": "options", "arrangement": "sideways", "pairs": True}, {"do": "options", "arrangement": "", "pairs": "yes"},
         {"do": "goal", "text": "0"}, {"do": "goal", "text": "abc"}, {"do": "measured", "signal": "nobody", "text": "1"},
         {"do": "window", "end": "low", "text": "9 A"}, {"do": "window", "end": "low", "text": "99"},
@@ -149,7 +153,7 @@ def test_a_choice_found_for_another_sheet_is_not_taken():
 
     bench.edit(edits.with_weight, bench.signal_names[0], bench.design.signals[0].weight * 2)
     with pytest.raises(InvalidQuantity, match="has changed"):
-        fold.handle({"do": "take", "index": 0})
+        fold.handle({"do": "take", "id": name_of(fold, 0)})
 
 
 def test_stop_keeps_what_was_found_so_far():

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import asyncio
 import math
+import zlib
 from dataclasses import replace
 from typing import Any
 
@@ -40,6 +41,11 @@ def search_key(design: Design) -> tuple:
     signals = tuple(replace(s, value=0.0) for s in design.signals)
     capacitor = design.cells[-1].feedback_capacitance if design.cells else 0.0
     return (replace(design, title="", signals=signals, cells=()), capacitor)
+
+
+def tag(c: Choice) -> str:
+    """A choice's name on the wire: the same as long as its resistors are, wherever it stands in the table."""
+    return f"{zlib.crc32(repr((c.arrangement, c.cells, c.parts)).encode()):08x}"
 
 
 class Choices(Fold):
@@ -181,6 +187,7 @@ class Choices(Fold):
         if design.target.offset:
             offset = c.offset / design.target.offset - 1.0
         return {
+            "id": tag(c),
             "arrangement": c.arrangement, "merits": list(c.merits), "error": c.worst_weight_error, "worst": c.worst_weight,
             "offset": offset, "resistors": c.resistor_count, "op_amps": c.op_amp_count, "values": c.different_values,
             "noise_gain": c.noise_gain, "noise": c.noise_density,
@@ -385,9 +392,11 @@ class Choices(Fold):
         self._arrangement, self._pairs = name or None, fields.truth(message, "pairs")
 
     def _choice(self, message: dict) -> Choice:
-        if not self._rows:
-            raise InvalidQuantity("There is no choice to take yet.")
-        return self._rows[fields.whole(message, "index", 0, len(self._rows) - 1)]
+        wanted = fields.text(message, "id", 20)
+        for c in self._rows:
+            if tag(c) == wanted:
+                return c
+        raise InvalidQuantity("That set is not among the choices any more.")
 
     def _pick(self, message: dict) -> None:
         c = self._choice(message)
