@@ -6,7 +6,7 @@ import {margin, verdict} from './format.js'
 
 const TIGHT = .1 // of the allowance: where the hatched strip ends
 const WORDS = ['short', 'tight', 'clear', 'unknown']
-let box, head, big, what, why, cure, live, counts, plumb, tip
+let box, head, big, what, why, cure, live, counts, plumb, tip, warned, usual
 const gauges = new Map()
 let open = null, spoken = '', speak = 0
 
@@ -24,7 +24,9 @@ export function mount(sheet) {
   const hatch = svg('svg', {width: 0, height: 0, 'aria-hidden': 'true', class: 'defs'}, svg('defs', {},
     svg('pattern', {id: 'hatch', width: 4, height: 4, patternUnits: 'userSpaceOnUse', patternTransform: 'rotate(45)'},
       svg('path', {d: 'M0 0V4', stroke: 'var(--line)', 'stroke-width': 1}))))
-  box.append(live, head, el('div', {class: 'count'}, ...counts), plumb, tip, hatch)
+  warned = el('div', {class: 'cautions now', role: 'alert'})
+  usual = el('div', {class: 'cautions'})
+  box.append(live, head, el('div', {class: 'count'}, ...counts), warned, plumb, tip, usual, hatch)
 }
 
 export function update(state) {
@@ -50,7 +52,16 @@ export function update(state) {
   }
   WORDS.forEach((word, i) => { setText(counts[i].firstChild, String(count(word))); setClass(counts[i], 'red', word === 'short' && count(word) > 0) })
   announce(`${big.textContent}. ${what.textContent}`)
+  caution(warned, (state.cautions ?? []).filter(c => c.present))
+  caution(usual, (state.cautions ?? []).filter(c => !c.present))
   drawGauges(checks)
+}
+
+function caution(node, list) {
+  const key = JSON.stringify(list)
+  if (node.dataset.key === key) return
+  node.dataset.key = key
+  node.replaceChildren(...list.map(c => el('p', {}, el('b', {text: `${c.title}.`}), ' ' + c.text)))
 }
 
 function sentence(node, advice) {

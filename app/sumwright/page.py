@@ -78,6 +78,7 @@ class Page:
         self.folds: dict[str, Fold] = {}
         self.open = ""
         self._doc: Any = None
+        self._warned: tuple[Any, list[dict[str, Any]]] | None = None
         self._sent: dict[str, str] = {}  # what the browser has, by key
         self.sitting: Sitting | None = None
         self.turn_to(next(iter(self.classes), ""))
@@ -117,6 +118,7 @@ class Page:
             "stage": stage.show(bench),
             "plate": plate.show(bench),
             "margins": margins.show(bench),
+            "cautions": self._cautions(),
             "cable_out": signals.cable_out(bench),
             "live": {"signals": signals.live(bench), "stage": stage.live(bench)},
         }
@@ -128,6 +130,13 @@ class Page:
         if fold := self.folds.get(self.open):
             changed["fold"] = packed({"key": self.open, **self._shown(fold)})
         return changed
+
+    def _cautions(self) -> list[dict[str, Any]]:
+        """The cautions, asked for anew only when the stage is another: a drag changes none."""
+        analysis = self.workbench.analysis
+        if self._warned is None or self._warned[0] is not analysis.power:
+            self._warned = (analysis.power, margins.warnings(analysis))
+        return self._warned[1]
 
     def _shown(self, fold: Fold) -> dict[str, Any]:
         try:

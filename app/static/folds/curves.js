@@ -152,7 +152,23 @@ export function mount(node, sheet) {
   const clipWords = q => q.out ? 'cable out' : q.at === null ? 'not in its range'
     : `at ${fixed(q.at, 2)}${THIN}V${q.side === 'low' ? ', low' : ''}${q.cell !== null ? `, cell ${q.cell + 1}` : ''}`
 
-  // the key stands in the emptier half of the picture
+  // how much of the curves runs through a box
+  function crossings(at, wide, high, b, Y, shown) {
+    const data = figure?.renderers[0]?.data_source.data
+    const xs = data?.get ? data.get('x') : data?.x, ys = data?.get ? data.get('y') : data?.y
+    if (!xs) return 0
+    const [x0, x1] = range(shown)
+    let inside = 0
+    for (let q = 0; q < xs.length; q++) for (let j = 1; j < xs[q].length; j++) for (let t = 0; t <= 1; t += .125) {
+      const x = b[0] + (xs[q][j - 1] + t * (xs[q][j] - xs[q][j - 1]) - x0) / (x1 - x0) * (b[1] - b[0])
+      const y = Y(ys[q][j - 1] + t * (ys[q][j] - ys[q][j - 1]))
+      if (x > at.left && x < at.left + wide && y > at.top - 4 && y < at.top + high + 4) inside++
+    }
+    return inside
+  }
+
+  // the key stands where the curves leave room
+  let stand = 0
   const items = []
   function legend(shown, b, Y, y0, y1, k) {
     const n = shown.clips.length
@@ -176,10 +192,13 @@ export function mount(node, sheet) {
     const rows = Math.ceil(n / (n > 6 ? 2 : 1))
     setAttr(key, 'class', n > 6 ? 'clips two-columns' : 'clips')
     const high = (rows + 1) * 16 * k
-    const room = [Y(shown.output) - y0, y1 - Y(shown.output)]
-    const low = room[1] > room[0] || room[1] > high + 40 * k && shown.output > (shown.low + shown.high) / 2
-    const top = low ? y1 - high - 6 : y0 + 26 * k
-    const left = Math.max(b[0] + 8, b[1] - (n > 6 ? 380 : 232) * k)
+    const wide = (n > 6 ? 380 : 232) * k
+    const lefts = [Math.max(b[0] + 8, b[1] - wide), b[0] + 10], tops = [y1 - high - 6, y0 + 4]
+    const places = tops.flatMap(top => lefts.map(left => ({left, top})))
+    // stay where it is unless the curves run through it there and do so less elsewhere
+    const crossed = places.map(at => crossings(at, wide, high, b, Y, shown))
+    if (stand >= places.length || crossed[stand] > Math.min(...crossed) + 2) stand = crossed.indexOf(Math.min(...crossed))
+    const {left, top} = places[stand]
     key.style.transform = `translate(${Math.round(left)}px,${Math.round(top)}px)`
     key.hidden = n > 12 || b[1] - b[0] < 220
   }

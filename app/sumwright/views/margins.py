@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from sumwright.engine.cautions import cautions
+
 
 def show(bench: Any) -> list[dict[str, Any]]:
     """Every check as plain data; `ratio` is its margin in parts of its allowance."""
@@ -17,3 +19,8 @@ def show(bench: Any) -> list[dict[str, Any]]:
             "ratio": ratio, "why": check.why, "advice": check.advice,
         })  # fmt: skip
     return shown
+
+
+def warnings(analysis: Any) -> list[dict[str, Any]]:
+    """The usual cautions: those this design gives reason for first, then those that hold of any."""
+    return [{"title": c.title, "text": c.text, "present": c.present} for c in cautions(analysis)]
