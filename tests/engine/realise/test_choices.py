@@ -128,3 +128,13 @@ def test_pairs_are_taken_where_they_earn_their_place():
         assert c.resistor_count == len(at) + len(c.parts)
     # E96 sets that already err less than a tenth of the parts' tolerance gain nothing from a pair.
     assert not any(c.parts for c in realise(design_for([1.0, -1.0]), pairs=True).choices)
+
+
+def test_a_pair_keeps_the_least_input_resistance_too():
+    design = design_for([2.1, -4.2, 1.11, 3.7], series="E12")
+    least = {s.name: 20e3 for s in design.signals}
+    choices = realise(design, pairs=True, least_input=least).choices
+    assert any(c.parts for c in choices)
+    for c in choices:
+        for cell in c.cells:
+            assert all(x.resistance >= 20e3 for x in (*cell.minus, *cell.plus) if x.source in least)

@@ -345,7 +345,7 @@ def realise(
         if pairs and drawer is None:
             from sumwright.engine.realise.pairs import with_pairs
 
-            parts = with_pairs(design, name, found, values)
+            parts = with_pairs(design, found, values, least_input)
             found += list(parts)
         choices += best_choices(design, name, found, shown=1 if again else SHOWN, parts=parts)
         if drawer is None and not again and is_single(design):

@@ -48,18 +48,18 @@ class Combinations:
         ]
 
 
-def with_pairs(design: Design, arrangement: str, found, values) -> dict[tuple[Cell, ...], tuple[Pair, ...]]:
+def with_pairs(design: Design, found, values, least_input=None) -> dict[tuple[Cell, ...], tuple[Pair, ...]]:
     """Sets with pairs in them, made from sets without.
 
     Parameters
     ----------
     design : Design
-    arrangement : str
-        For symmetry with the searches; every arrangement is treated alike.
     found : sequence of tuple of Cell
         Sets of single resistors.
     values : (k,) array
         What a pair may be made of [ohm].
+    least_input : dict of float, optional
+        By signal name, the least its leg may be [ohm].
 
     Returns
     -------
@@ -74,7 +74,7 @@ def with_pairs(design: Design, arrangement: str, found, values) -> dict[tuple[Ce
         pairs: dict[str, Pair] = {}
         worst = _worst(design, cells)
         while worst > stop and len(pairs) < len(wanted):
-            step = _best_step(design, cells, wanted, combinations, pairs)
+            step = _best_step(design, cells, wanted, combinations, pairs, least_input or {})
             if step is None or step[0] > EARNS * worst:
                 break
             worst, cells, pair = step
@@ -97,10 +97,11 @@ def _worst(design: Design, cells) -> float:
     return max(abs(e) for e in weight_errors(design, cells).values())
 
 
-def _best_step(design: Design, cells, wanted, combinations: Combinations, pairs):
+def _best_step(design: Design, cells, wanted, combinations: Combinations, pairs, least_input):
     """The one pair that takes most off the worst error: in the leg that errs most, or in a ground leg."""
     errors = weight_errors(design, cells)
-    place, ohm, put = _leg_place(cells, max(errors, key=lambda s: abs(errors[s])))
+    worst_source = max(errors, key=lambda s: abs(errors[s]))
+    place, ohm, put = _leg_place(cells, worst_source)
     options = []
     if place not in pairs:
         options.append((place, put, _wanted_leg(design, cells, wanted, errors, ohm)))
@@ -116,6 +117,8 @@ def _best_step(design: Design, cells, wanted, combinations: Combinations, pairs)
         if target is None or not np.isfinite(target) or target <= 0:
             continue
         for made, first, second, how in combinations.near(target):
+            if where == place and made < least_input.get(worst_source, 0.0):
+                continue
             new = fit(made)
             worst = _worst(design, new)
             if best is None or worst < best[0]:
