@@ -48,6 +48,9 @@ class Mode:
             self.v_inv = np.linalg.inv(self.v)
         else:
             self.lam, self.v, self.v_inv = np.zeros(0, complex), np.zeros((0, 0)), np.zeros((0, 0))
+        # where constant inputs take x, and how a running one makes it lag
+        self.lag = np.linalg.inv(a) if size else np.zeros((0, 0))
+        self.still = -self.lag @ ss.b if size else np.zeros((0, ss.b.shape[1]))
         # rows watched: outputs, output currents, what reaches the pins, first op amp states
         first = np.zeros((cells, size))
         first_w = np.zeros((cells, n + 2 + cells))
@@ -72,13 +75,8 @@ class Mode:
 
     def particular(self, w0, w1):
         """Straight-line response x = p0 + p1 τ to w = w0 + w1 τ."""
-        ss = self.ss
-        if not len(ss.a):
-            return np.zeros(0), np.zeros(0)
-        both = np.linalg.solve(ss.a, np.stack([ss.b @ w0, ss.b @ w1], axis=-1))
-        p1 = -both[:, 1]
-        p0 = -both[:, 0] + np.linalg.solve(ss.a, p1)
-        return p0, p1
+        p1 = self.still @ w1
+        return self.still @ w0 + self.lag @ p1, p1
 
     def sine(self, omega, drive):
         """Phasor of x for the phasor `drive` (inputs,) at `omega`."""
@@ -181,9 +179,25 @@ class Course:
         """Where some op amp ceases to be in its mode, (times,) bool."""
         out = np.zeros(watch.shape[1], dtype=bool)
         for k, (o, i, d, v1, run) in enumerate(zip(*self._parts(watch), strict=True)):
-            if abs(key[k]) in (LINEAR, SLEW) and self._well_inside(key[k], o, i, d, v1):
-                continue
-            out |= self._next(key[k], o, i, d, v1, run) != key[k]
+            if abs(key[k]) not in (LINEAR, SLEW):
+                out |= self._next(key[k], o, i, d, v1, run) != key[k]
+            elif not self._well_inside(key[k], o, i, d, v1):
+                out |= self._free_no_more(key[k], o, i, d, v1)
+        return out
+
+    def _free_no_more(self, mode, o, i, d, v1):
+        """Where `_next` would not leave an op amp that is linear or slews as it is; the same bounds, fewer steps."""
+        amp, lim = self.amp, self.limits
+        rate = self.w1 * (amp.open_loop_gain * d - v1)
+        if mode == LINEAR:
+            out = np.abs(rate) > amp.slew_rate * (1 + 1e-9)
+        else:
+            out = rate <= amp.slew_rate * (1 - 1e-9) if mode > 0 else rate >= -amp.slew_rate * (1 - 1e-9)
+        tol_v, tol_i = 1e-9 * (1.0 + abs(lim.high) + abs(lim.low)), 1e-9 * lim.current + 1e-15
+        drop = lim.dropout_resistance * i
+        out |= np.abs(i) > lim.current + tol_i
+        out |= o + np.maximum(drop, 0.0) > lim.high + tol_v
+        out |= o + np.minimum(drop, 0.0) < lim.low - tol_v
         return out
 
     def _well_inside(self, mode, o, i, d, v1):
@@ -323,7 +337,7 @@ class Course:
 
     def _pin_down(self, seg, key, lo, hi):
         """First moment of the event between `lo` and `hi`, on its far side."""
-        close = 1e-7 / np.abs(seg.mode.lam).max() if len(seg.mode.lam) else 0.0
+        close = 1e-6 / (2 * math.pi * self.amp.gain_bandwidth)  # a millionth of the fastest loop's time constant
         for _ in range(8):
             t = lo + (hi - lo) * FRACTIONS
             bad = self._leaving(key, seg.watch(t))
