@@ -25,7 +25,9 @@ def test_one_sided_conformance_probability(probability, z):
 
 # JCGM 106:2012, 9.5: resistors of nominally 1500 ohm, u0 = 0.12, tolerance ± 0.2, um = 0.04 (inputs from memory).
 # Risks in percent: guard band, consumer's, producer's.
-@pytest.mark.parametrize(("guard", "consumer", "producer"), [(0.0, 1.894, 3.721), (0.04, 0.433, 11.47), (0.08, 0.0469, 24.77)])
+@pytest.mark.parametrize(
+    ("guard", "consumer", "producer"), [(0.0, 1.894, 3.721), (0.04, 0.433, 11.47), (0.08, 0.0469, 24.77)]
+)
 def test_global_risks_of_the_resistor_example(guard, consumer, producer):
     got = guarded_risks(1500.0, 0.12, 1499.8, 1500.2, 0.04, guard)
     assert 100 * got[0] == pytest.approx(consumer, rel=0.002)

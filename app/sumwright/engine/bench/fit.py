@@ -112,7 +112,10 @@ def _determined(scaled):
     rows, p = scaled.shape
     if not rows:
         return np.zeros(p, dtype=bool), 0
-    _, s, vt = np.linalg.svd(scaled, full_matrices=True)
+    square = np.zeros((p, p))
+    triangle = np.linalg.qr(scaled, mode="r")  # p columns however many rows there are
+    square[: len(triangle)] = triangle
+    _, s, vt = np.linalg.svd(square)
     rank = int((s > RANK_TOLERANCE * s[0]).sum()) if s[0] > 0 else 0
     return (np.abs(vt[rank:]) < 1e-7).all(axis=0), rank
 
