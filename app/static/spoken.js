@@ -8,7 +8,7 @@ const percent = x => `${fixed(x * 100, 2)}${THIN}%`
 
 const SAYS = {
   curves(s) {
-    const at = s.clips.map(c => c.out ? `${c.name}: cable out` : c.at === null ? `${c.name} does not clip in its range` : `${c.name} clips ${c.side ?? ''} at ${fixed(c.at)}${THIN}V`)
+    const at = s.clips.map(c => c.out ? `${c.name}: cable out` : c.at === null ? `${c.name} ${s.clipped === 'no' ? 'does not clip in its range' : 'is clipped all through its range'}` : `${c.name} clips ${c.side ?? ''} at ${fixed(c.at)}${THIN}V`)
     return {transfer: `Output against each signal, the others where they are; now ${fixed(s.output)}${THIN}V. ${at.join('; ')}.`}
   },
   choices(s) {

@@ -149,7 +149,7 @@ export function mount(node, sheet) {
     above.text(Math.max(b[0] + 18, Math.min(b[1] - 18, x)), y, 'clips', {'text-anchor': 'middle', class: 'node red halo'})
   }
 
-  const clipWords = q => q.out ? 'cable out' : q.at === null ? 'not in its range'
+  const clipWords = q => q.out ? 'cable out' : q.at === null ? (shown.clipped === 'no' ? 'not in its range' : 'all through its range')
     : `at ${fixed(q.at, 2)}${THIN}V${q.side === 'low' ? ', low' : ''}${q.cell !== null ? `, cell ${q.cell + 1}` : ''}`
 
   // how much of the curves runs through a box
