@@ -19,6 +19,7 @@ from PIL import Image
 
 GOLDEN = Path(__file__).parent / "golden"
 HOW = "Make it by: cd tests && python -m served.pictures {name}; look at it, then commit it."
+COLOURS = 96
 BLOCK = 8  # px: what moves by less than a letter is not a change of look
 FAR = 22.0  # of 255: a block this far from the golden one has changed
 SHARE = 0.006  # of all blocks that may have changed: hinting, antialiasing, a digit
@@ -86,14 +87,14 @@ def taken(page, fold: str, theme: str) -> bytes:
 
 
 def small(png: bytes) -> bytes:
-    """The picture in few colours, as it is kept."""
-    image = (
-        Image.open(io.BytesIO(png))
-        .convert("RGB")
-        .quantize(64, method=Image.Quantize.MAXCOVERAGE, dither=Image.Dither.NONE)
-    )
+    """The picture in its own most frequent colours, as it is kept: paper, tints and hues stay exact."""
+    image = Image.open(io.BytesIO(png)).convert("RGB")
+    often = sorted(image.getcolors(1 << 24), reverse=True)[:COLOURS]
+    palette = Image.new("P", (1, 1))
+    flat = [v for _, colour in often for v in colour]
+    palette.putpalette(flat + flat[-3:] * (256 - len(often)))
     out = io.BytesIO()
-    image.save(out, "PNG", optimize=True)
+    image.quantize(palette=palette, dither=Image.Dither.NONE).save(out, "PNG", optimize=True)
     return out.getvalue()
 
 
