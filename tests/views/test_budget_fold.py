@@ -212,9 +212,10 @@ def test_margins_are_compared_with_the_stage_held():
     fold.handle({"do": "hold"})
     bench.edit(lambda d: replace(d, supply=replace(d.supply, high=d.supply.high + 1.0)))
     rows = {r[0]: r for r in fold.show()["more"]["rows"]}
+    assert len(fold._held.data["x"]) == 73 and max(fold._held.data["y"]) == 1.0
     assert rows["Swing to + rail"][6] == pytest.approx(0.95, abs=0.05)  # a volt of rail, less its tolerance
     fold.handle({"do": "let go"})
-    assert fold.show()["more"]["held"] is None
+    assert fold.show()["more"]["held"] is None and len(fold._held.data["x"]) == 0
 
 
 def test_csv_holds_what_is_shown():

@@ -55,6 +55,8 @@ class Budget(Fold):
         self._band = BoxAnnotation(left=0, right=0, fill_alpha=1.0, line_color=None, level="image")
         self._limits = [Line(location=0, dimension="height", line_dash=[7, 4], line_width=1.4) for _ in range(2)]
         self._spread = ColumnDataSource({"x": [], "y": []})
+        self._held = ColumnDataSource({"x": [], "y": []})
+        self._held_of: tuple[Any, Any, Any] = (None, None, None)
         self._theme = ""
         self.point = "highest"
         self.page = "terms"
@@ -74,6 +76,7 @@ class Budget(Fold):
         for line in self._limits:
             f.add_layout(line)
         self._bars = f.quad("left", "right", "top", 0, source=self._bins, line_color=None)
+        self._outline = f.step("x", "y", source=self._held, mode="before", line_width=2, line_dash=[2, 3])
         self._bracket = f.line("x", "y", source=self._spread, line_width=2)
         f.add_tools(
             HoverTool(renderers=[self._bars], tooltips=[("", "@left{+0.0} to @right{+0.0} mV"), ("", "@share{0.00} %")])
@@ -103,6 +106,7 @@ class Budget(Fold):
         progress = self._drawn[1]
         self._paint(bench.theme)
         self._draw(budget, progress, edges, design.target.accuracy)
+        self._draw_held(edges)
         shown = {
             "point": self.point, "page": self.page, "budget": _summary(budget), "accuracy": design.target.accuracy,
             "terms": _rows(budget), "boards": _told(progress), "running": self.context.jobs.running("budget boards"),
@@ -122,6 +126,7 @@ class Budget(Fold):
             line.line_color = ink["ink"]
         self._bars.glyph.fill_color = ink["ink"]
         self._bracket.glyph.line_color = ink["ink"]
+        self._outline.glyph.line_color = ink["line"]
 
     def _draw(self, budget: ErrorBudget, progress, edges, accuracy) -> None:
         share = 100.0 * progress.counts / max(progress.statistics.draws, 1)
@@ -145,6 +150,21 @@ class Budget(Fold):
                 line.location = sign * 1e3 * accuracy
         a, b = 1e3 * progress.statistics.low_95, 1e3 * progress.statistics.high_95
         put(self._spread, {"x": [a, a, a, b, b, b], "y": [1.05, 1.13, 1.09, 1.09, 1.05, 1.13]})
+
+    def _draw_held(self, edges) -> None:
+        """The boards of the stage held, as an outline over the present ones."""
+        held = held_of(self.context)
+        if held is None:
+            put(self._held, {"x": [], "y": []})
+            return
+        key = (id(held), self.point, float(edges[-1]))
+        if self._held_of[0] != key:
+            drawn = boards.draw_boards(held, COARSE, SEED, points=(self.point,)).errors[0]
+            counts = np.histogram(drawn, BINS, (edges[0], edges[-1]))[0] / max(len(drawn), 1)
+            x = (1e3 * edges).astype(np.float32)
+            y = np.concatenate([[0.0], counts / max(counts.max(), 1e-12)]).astype(np.float32)
+            self._held_of = (key, x, y)
+        put(self._held, {"x": self._held_of[1], "y": self._held_of[2]})
 
     def _page_terms(self, analysis) -> dict[str, Any]:
         return {}
