@@ -66,6 +66,8 @@ class Headers(OutputTransform):
             headers["Cache-Control"] = "no-store"  # it holds a session's token
         else:
             headers["Content-Security-Policy"] = _OTHER_POLICY
+            if "Cache-Control" not in headers:
+                headers["Cache-Control"] = "no-cache"  # ask each time: modules of two versions must not meet
         headers["X-Content-Type-Options"] = "nosniff"
         headers["X-Frame-Options"] = "DENY"
         headers["Referrer-Policy"] = "no-referrer"
