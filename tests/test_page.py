@@ -2,12 +2,17 @@
 
 import gc
 import json
+import posixpath
+import re
 import weakref
+from pathlib import Path
 
 import pytest
 from sumwright.errors import NotAllowed
 from sumwright.model import acts
 from sumwright.page import FOLDS, Page, fold_classes
+
+TEMPLATE = (Path(__file__).parents[1] / "app/sumwright/views/sheet.html").read_text(encoding="utf-8")
 
 
 class Browser:
@@ -31,6 +36,21 @@ def page():
 
 def test_every_fold_is_there():
     assert set(fold_classes()) == set(FOLDS)
+
+
+def test_every_module_of_the_sheet_is_fetched_at_once():
+    static = Path(__file__).parents[1] / "app/static"
+    named = set(re.findall(r'"([\w/]+)"', re.search(r"for module in \[(.*?)\]", TEMPLATE).group(1)))
+    needed, ahead = set(), ["core", "folds/curves"]
+    while ahead:
+        module = ahead.pop()
+        if module in needed:
+            continue
+        needed.add(module)
+        text = (static / f"{module}.js").read_text(encoding="utf-8")
+        for found in re.findall(r"^import .*?'(\.[\w./]+)\.js'", text, re.MULTILINE):
+            ahead.append(posixpath.normpath(posixpath.join(posixpath.dirname(module), found)))
+    assert named == needed
 
 
 def test_one_message_is_answered_by_one_frame(page):

@@ -120,9 +120,10 @@ export function note(text, field = null, {bad = false, refusal = null} = {}) {
   })))
 }
 
-function silent(lost) {
+function silent(lost, never = false) {
   if (lost && !state.lost) state.lost = new Date()
   if (!lost) state.lost = null
+  state.never = lost && never
   commands.saved(state)
 }
 

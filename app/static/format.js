@@ -10,6 +10,11 @@ export function fixed(x, decimals = 3) {
   return minus((Math.abs(x) < 0.5 * 10 ** -decimals ? 0 : x).toFixed(decimals))
 }
 
+// volts where they stand in a column: three decimals, fewer where the number is large
+export const volts = (x, write = fixed) => write(x, Math.abs(x) < 999.9995 ? 3 : Math.abs(x) < 99999.95 ? 1 : 0)
+// a weight: four decimals; a large one in four figures
+export const weight = x => missing(x) || Math.abs(x) < 99.99995 ? signed(x, 4) : (x > 0 ? '+' : '') + engineering(x, '', 4).replace(THIN, '')
+
 export const signed = (x, decimals = 3) => (x >= 0.5 * 10 ** -decimals ? '+' : '') + fixed(x, decimals)
 
 const PREFIX = {'-15': 'f', '-12': 'p', '-9': 'n', '-6': 'µ', '-3': 'm', 0: '', 3: 'k', 6: 'M', 9: 'G', 12: 'T'}
@@ -38,6 +43,7 @@ export function margin(x, unit) {
 // The verdict, two decimals or two figures, without a sign: "0.68 V".
 export function verdict(x, unit) {
   const size = Math.abs(x)
+  if (['V', '%'].includes(unit) && size >= 99.95) return fixed(size, 0) + THIN + unit
   if (unit === 'V') return size >= 0.0995 ? fixed(size, 2) + THIN + 'V' : engineering(size, 'V', 2)
   if (unit === '°') return fixed(size, 0) + '°'
   if (unit === '°C' || unit === 'K') return fixed(size, 0) + THIN + unit

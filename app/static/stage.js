@@ -1,6 +1,6 @@
 // The schematic: symbols by IEC 60617 or IEEE 315, wires at the strips' heights, voltages and currents live on it.
 
-import {el, svg, setAttr, keyed, Pool, px, size} from './dom.js'
+import {el, svg, setAttr, setClass, keyed, Pool, px, size} from './dom.js'
 import {Blank} from './blanks.js'
 import {THIN, engineering, fixed, signed} from './format.js'
 import {layout} from './layout.js'
@@ -26,6 +26,7 @@ export function update(state) {
   const row = px('--row-now') || px('--row')
   const L = placed = layout({width, row, head: px('--head'), foot: px('--foot'), cells: s.cells, rows: s.rows})
   setAttr(drawing, 'aria-label', `Schematic of the ${s.arrangement ?? ''} stage with live voltages and currents`)
+  setClass(box, 'wide', L.inner > width + 1)
   setAttr(drawing, 'width', L.inner)
   setAttr(drawing, 'height', L.bottom)
   const spots = draw(L, s)

@@ -2,7 +2,7 @@
 
 import {el, svg, setAttr, setClass, setText, keyed, px, size, forgetSizes} from './dom.js'
 import {Blank} from './blanks.js'
-import {THIN, engineering, fixed, signed} from './format.js'
+import {THIN, engineering, fixed, signed, volts, weight} from './format.js'
 import {style, swatch, markerAttributes} from './marks.js'
 import {openDrawer} from './drawer.js'
 
@@ -101,7 +101,7 @@ function makeRow(key, r) {
     node.append(el('span', {class: 'soft n offset-word', text: 'makes the offset'}))
     item.plug = el('span', {class: 'plug'}, plugDrawing)
   } else {
-    item.slide = slider(name, volts => { if (document.activeElement !== value.node) value.node.value = fixed(volts) })
+    item.slide = slider(name, moved => { if (document.activeElement !== value.node) value.node.value = volts(moved) })
     const moves = el('span', {class: 'moves'},
       ...[['up', -1], ['down', 1]].map(([word, way]) => el('button', {class: 'act', text: word, 'aria-label': `${name} ${word}`, onclick: () => move(name, way)})),
       el('button', {class: 'act', text: 'remove', 'aria-label': `remove ${name}`, onclick: () => sheet.act({do: 'remove', signal: name})}))
@@ -155,19 +155,19 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   setClass(node, 'out', r.out)
   setAttr(node.querySelector('svg.swatch').parentNode, 'title', r.name)
   item.slide?.show(r)
-  if (!(pulled === r.name)) item.value.set(fixed(r.value))
+  if (!(pulled === r.name)) item.value.set(volts(r.value))
   const beyond = !r.reference && (r.value < r.low || r.value > r.high)
   setClass(node, 'beyond', beyond)
   setAttr(item.value.node, 'title', beyond ? `outside its range, ${fixed(r.low)} to ${fixed(r.high)} V` : null)
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u2009)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
-  setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : signed(r.made, 4))
+  setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : weight(r.made))
   if (W) {
     const zero = W * .24, room = W - zero - 2, x = r.share / reach * room * (r.share < 0 ? Math.min(1, zero / room * .95) : 1)
     setAttr(item.zero, 'd', `M${zero} 0V${row}`)
     setAttr(item.bar, 'x', Math.min(zero, zero + x)); setAttr(item.bar, 'y', row / 2 - 13); setAttr(item.bar, 'width', Math.max(1.5, Math.abs(x)))
     setAttr(item.share, 'x', W); setAttr(item.share, 'y', row / 2 + 13)
-    setText(item.share, signed(r.share))
+    setText(item.share, volts(r.share, signed))
   }
   const y = row / 2, at = plugWidth * .42
   const [wire, cord, pin, socket] = item.plugDrawing.children
@@ -234,13 +234,13 @@ function drawMini(shown) {
   keyed(mini, signals.map(r => r.name), name => {
     const r = signals.find(x => x.name === name), s = style(r.style)
     const value = el('span', {class: 'n'})
-    const slide = slider(name, volts => setText(value, `${fixed(volts)}${THIN}V`))
+    const slide = slider(name, moved => setText(value, `${volts(moved)}${THIN}V`))
     const node = el('label', {style: `--c:${s.colour}`}, el('span', {class: 'top'}, el('b', {}, swatch(s), el('span', {text: name})), value), slide.input)
     return {node, slide, value}
   }, minis)
   for (const r of signals) {
     const item = minis.get(r.name)
     item.slide.show(r)
-    if (pulled !== r.name) setText(item.value, `${fixed(r.value)}${THIN}V`)
+    if (pulled !== r.name) setText(item.value, `${volts(r.value)}${THIN}V`)
   }
 }

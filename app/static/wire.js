@@ -21,7 +21,10 @@ export class Line {
       this.pump()
     }
     if (window.sumwrightWire) join()
-    else document.addEventListener('sumwright:wire', join, {once: true})
+    else {
+      document.addEventListener('sumwright:wire', join, {once: true})
+      setTimeout(() => { if (!this.wire) silent(true, true) }, 3 * PATIENCE)
+    }
   }
 
   // `newest` names what only the newest act matters of: a slider under the hand.

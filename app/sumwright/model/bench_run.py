@@ -53,9 +53,10 @@ class Row(NamedTuple):
     @property
     def word(self) -> str:
         """in, out, or empty without a reading."""
-        if self.taken is None or self.step.low is None:
+        low, high = self.step.low, self.step.high
+        if self.taken is None or low is None or high is None:
             return ""
-        return "in" if self.step.low <= self.taken.value <= self.step.high else "out"
+        return "in" if low <= self.taken.value <= high else "out"
 
 
 def step_key(step: Step):
