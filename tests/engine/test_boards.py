@@ -110,7 +110,7 @@ def test_progress_can_stop_a_run():
 
 
 def test_bad_requests_are_refused_with_their_value():
-    for draws, seed, says in ((0, 1, "it is 0"), (10, -3, "it is -3")):
+    for draws, seed, says in ((0, 1, "it is 0"), (10, -3, "it is -3"), (10**9, 1, "1 to 20000000")):
         with pytest.raises(InvalidQuantity, match=says):
             monte_carlo(chain(0), draws, seed)
 

@@ -1,5 +1,7 @@
 """The person's own list of op amps, and the list that comes with the project."""
 
+from pathlib import Path
+
 import pytest
 from sumwright.engine.catalogue import FIGURES, catalogue, find
 from sumwright.errors import InvalidDesign
@@ -67,3 +69,8 @@ def test_engineering_notation_is_read():
 def test_a_bad_list_is_refused_by_line_and_column(text, says):
     with pytest.raises(InvalidDesign, match=f"(?s).*{says}"):
         read_op_amps(text)
+
+
+def test_the_example_list_can_be_read():
+    text = (Path(__file__).parents[2] / "assets" / "own-op-amps.csv").read_text(encoding="utf-8")
+    assert [e.kind for e in read_op_amps(text)] == ["own"] * 3

@@ -27,6 +27,7 @@ from .budget import POINTS, extreme_corners, network_of, supply_error, temperatu
 from .operating_point import ideal_output
 
 BLOCK = 8000  # boards that share a stream and a core's cache; not a power of two, whose rows would share cache sets
+MOST_DRAWS = 20_000_000  # 8 bytes a board and point
 _OP_AMP_DRAWS = 6
 _LEAK = 1e-15  # S
 
@@ -159,8 +160,8 @@ def draw_boards(stage, draws: int, seed: int = 0, *, points=POINTS, first: int =
     """
     from ..errors import InvalidQuantity
 
-    if draws < 1 or draws != int(draws):
-        raise InvalidQuantity(f"draws must be a whole number of boards, at least 1; it is {draws}.")
+    if not 1 <= draws <= MOST_DRAWS or draws != int(draws):
+        raise InvalidQuantity(f"draws must be a whole number of boards, 1 to {MOST_DRAWS}; it is {draws}.")
     if seed < 0:
         raise InvalidQuantity(f"seed must be a whole number, not negative; it is {seed}.")
     if first % BLOCK:

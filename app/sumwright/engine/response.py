@@ -21,7 +21,7 @@ import numpy as np
 from . import nodes
 from .budget import network_of
 from .stage import Design
-from .statespace import StateSpace, linear_space, poles
+from .statespace import StateSpace, kept_of, linear_space, poles
 
 _PER_DECADE = 20
 _HALF_POWER = 1.0 / math.sqrt(2.0)
@@ -83,9 +83,11 @@ class _Transfer:
     def __init__(self, a, b, c, d):
         self.a, self.b, self.c, self.d = a, b, c, d
         self._modes = None
+        self.poles = np.zeros(0, complex)
         if not len(a):
             return
         values, vectors = np.linalg.eig(a)
+        self.poles = values.astype(complex)
         with np.errstate(all="ignore"):
             try:
                 inverse = np.linalg.inv(vectors)
@@ -148,9 +150,10 @@ def response(stage, *, frequencies=None) -> Response:
     """
     net = network_of(stage)
     design, n = net.design, net.signal_count
-    f = _grid(net)
     ss = linear_space(net)
     through = _Transfer(ss.a, ss.b[:, : n + 1], ss.c[ss.output[-1:]], ss.d[ss.output[-1:], : n + 1])
+    kept_of(net).setdefault("poles", through.poles)
+    f = _grid(net)
     cuts = [_cut(ss, k) for k in range(net.cell_count)]
     w1 = 2 * math.pi * design.op_amp.gain_bandwidth / design.op_amp.open_loop_gain
 

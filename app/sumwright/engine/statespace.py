@@ -197,7 +197,7 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
                 d[row, n + 1] += branch[k] * (limits.high if modes[k] > 0 else limits.low)
     base = 3 * np.arange(cells)
     return StateSpace(
-        a, b, c, d, q.T @ np.linalg.pinv(same), tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
+        a, b, c, d, q.T @ (same / same.sum(axis=0)).T, tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
     )  # fmt: skip
 
 
