@@ -47,6 +47,7 @@ export function mount(node, sheet) {
   }
 
   function update(shown) {
+    clippedNow = shown.clipped
     latest = shown
     const W = size(node).width
     if (!W) return
@@ -149,7 +150,7 @@ export function mount(node, sheet) {
     above.text(Math.max(b[0] + 18, Math.min(b[1] - 18, x)), y, 'clips', {'text-anchor': 'middle', class: 'node red halo'})
   }
 
-  const clipWords = q => q.out ? 'cable out' : q.at === null ? (shown.clipped === 'no' ? 'not in its range' : 'all through its range')
+  const clipWords = q => q.out ? 'cable out' : q.at === null ? (latest?.clipped === 'no' ? 'not in its range' : 'all through its range')
     : `at ${fixed(q.at, 2)}${THIN}V${q.side === 'low' ? ', low' : ''}${q.cell !== null ? `, cell ${q.cell + 1}` : ''}`
 
   // how much of the curves runs through a box
