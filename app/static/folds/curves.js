@@ -47,7 +47,6 @@ export function mount(node, sheet) {
   }
 
   function update(shown) {
-    clippedNow = shown.clipped
     latest = shown
     const W = size(node).width
     if (!W) return
