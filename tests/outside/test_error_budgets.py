@@ -158,3 +158,36 @@ def test_sensitivities_are_the_derivatives_of_the_textbook_formula():
     assert found["feedback"] == pytest.approx(-0.07, rel=1e-6)
     assert abs(found["op amp, offset voltage"]) == pytest.approx(8e-3, rel=1e-6)
     assert abs(found["op amp, bias current"]) == pytest.approx(4e4 * 1e-9, rel=1e-6)
+
+
+def gain_shift(a_ol, ground, feedback, volts=1.0):
+    """Relative finite-gain shift of a non-inverting stage."""
+    design = one_cell({"a": volts}, plus={"a": 0.0}, minus_ground=ground, feedback=feedback, supply=1e5,
+                      amp=ideal_op_amp(**NO_ERROR, open_loop_gain=a_ol))  # fmt: skip
+    design = replace(design, signals=(replace(design.signals[0], weight=1 + feedback / ground),))
+    budget = error_budget(design)
+    return next(t.shift for t in budget.terms if t.kind == "finite gain") / budget.ideal_output
+
+
+# Sedra and Smith, 7th ed., problem 2.12 (from memory): gain 10 with A = 10³, 10⁴, 10⁵ errs by -0.990, -0.0999,
+# -0.0100 %. A = 2000 at gain 8: -0.398 %. Analog Devices MT-044 (from memory): noise gain 1000, A from 2e6 to 3e5:
+# 0.05 to 0.33 %, a change of 0.28 %.
+@pytest.mark.parametrize(
+    ("a_ol", "gain", "percent", "digit"),
+    [(1e3, 10, -0.990, 5e-4), (1e4, 10, -0.0999, 5e-5), (1e5, 10, -0.0100, 5e-5), (2000, 8, -0.398, 5e-4),
+     (2e6, 1000, -0.05, 5e-3), (3e5, 1000, -0.33, 5e-3)],
+)  # fmt: skip
+def test_finite_gain_is_a_known_shift(a_ol, gain, percent, digit):
+    assert 100 * gain_shift(a_ol, 1e3, 1e3 * (gain - 1)) == pytest.approx(percent, abs=digit)
+
+
+def test_known_shifts_add_up_and_are_no_uncertainty():
+    design = one_percent_summer()
+    amp = ideal_op_amp(**NO_ERROR, open_loop_gain=500.0)
+    sources = tuple(replace(s, source_resistance=200.0, weight=s.weight * 1.01) for s in design.signals)
+    budget = error_budget(replace(design, op_amp=amp, signals=sources))
+    shifts = {t.kind: t for t in budget.terms if t.shift}
+    assert set(shifts) == {"rounding", "source resistance", "finite gain"}
+    assert sum(t.shift for t in shifts.values()) == pytest.approx(budget.shift, rel=1e-12)
+    assert all(t.limit_effect == 0 and t.standard_uncertainty == 0 for t in shifts.values())
+    assert budget.worst_case == pytest.approx(sum(t.limit_effect for t in budget.terms) + abs(budget.shift))
