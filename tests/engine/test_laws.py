@@ -2,13 +2,14 @@
 
 import numpy as np
 import pytest
+from sumwright.engine.abuse import overdrive
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.heat import heat
 from sumwright.engine.nodes import Network
 from sumwright.engine.noise import noise, spectrum
 from sumwright.engine.response import loop_gains, response, source_gains
 from sumwright.engine.stage import Ambient, Leg, replace
-from sumwright.engine.trace import trace
+from sumwright.engine.trace import step, trace
 from sumwright.engine.waves import Wave
 from support.stages import random_chain
 
@@ -114,3 +115,19 @@ def test_unplugged_signals_neither_gain_nor_noise():
     assert a.ac.signals[1].dc_gain == 0 and a.ac.signals[1].bandwidth_3db is None
     assert not any(t.name.startswith(gone) for t in a.noise.terms)
     assert not any(t.source.startswith(gone) for t in a.errors["present"].terms)
+
+
+def test_whole_numbers_are_numbers():
+    """A design typed with integers gives what the same design with floats gives."""
+    floats = chain(4, cells=2, count=3)
+    floats = replace(floats, signals=tuple(replace(s, low=-2.0, high=3.0, value=1.0) for s in floats.signals))
+    ints = replace(
+        floats, signals=tuple(replace(s, low=-2, high=3, value=1) for s in floats.signals),
+        supply=replace(floats.supply, high=500, low=-500), op_amp=replace(floats.op_amp, open_loop_gain=200000),
+    )  # fmt: skip
+    a, b = Analysis(floats), Analysis(ints)
+    assert a.errors["highest"].worst_case == b.errors["highest"].worst_case
+    assert a.power == b.power and a.noise.rms == b.noise.rms
+    s, t = step(a, "s0", 0.5), step(b, "s0", 0.5)
+    np.testing.assert_array_equal(s.trace.outputs, t.trace.outputs)
+    assert overdrive(a, 1.25) == overdrive(b, 1.25)

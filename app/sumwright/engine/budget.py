@@ -162,7 +162,7 @@ def influences(net: nodes.Network) -> Influences:
     rows = 6 * count
     trial = np.tile(r0, (rows + 3, 1))
     trial[np.arange(rows), np.tile(fitted, 6)] *= 1.0 + np.repeat(moves, count)
-    gain = np.full(rows + 3, design.op_amp.open_loop_gain)
+    gain = np.full(rows + 3, float(design.op_amp.open_loop_gain))
     if all(c.feedback >= 0 for c in net.cells):  # an open loop has no answer at infinite gain
         gain[-2:] = np.inf
     rs = np.tile(net.source_resistances, (rows + 3, 1))

@@ -107,12 +107,12 @@ class Network:
         reference = design.reference
         rs = [0.0 if s.name in self.shorted else s.source_resistance for s in design.signals]
         rs.append(reference.source_resistance if reference else 0.0)
-        self.source_resistances = np.array(rs)
+        self.source_resistances = np.array(rs, dtype=float)
         volts = [0.0 if s.name in self.shorted else s.value for s in design.signals]
         volts.append(reference.voltage if reference else 0.0)
-        self.values = np.array(volts)
-        self.lows = np.array([0.0 if s.name in self.shorted else s.low for s in design.signals])
-        self.highs = np.array([0.0 if s.name in self.shorted else s.high for s in design.signals])
+        self.values = np.array(volts, dtype=float)
+        self.lows = np.array([0.0 if s.name in self.shorted else s.low for s in design.signals], dtype=float)
+        self.highs = np.array([0.0 if s.name in self.shorted else s.high for s in design.signals], dtype=float)
         # rs by leg source, upstream outputs included (their resistance is the op amp's own)
         self._leg_rs = np.concatenate([self.source_resistances, np.zeros(self.cell_count)])
         parts: list[Part] = []
