@@ -92,3 +92,21 @@ def test_figures_and_curves_can_be_taken_away(sheet):
         with sheet.expect_download() as waiting:
             sheet.get_by_label(label, exact=True).first.click()
         assert waiting.value.path().read_bytes().startswith(start)
+
+
+def test_a_frozen_design_is_held_beside_the_sheet(sheet):
+    sheet.evaluate("location.hash = 'log'")
+    wait(sheet, "!!document.querySelector('#f-log .writing')")
+    settled(sheet)
+    sheet.get_by_role("button", name="Freeze now").click()
+    hold = sheet.get_by_role("button", name="Hold frozen A beside the sheet in Budget and Response")
+    hold.wait_for(timeout=20000)
+    hold.click()
+    wait(sheet, "document.querySelector('#note').textContent.includes('held beside')")
+    turn(sheet, "budget")
+    press(sheet, "budget", "Compare")
+    wait(sheet, "document.querySelectorAll('.budget .page tbody tr').length > 8")
+    differences = sheet.evaluate(
+        "[...document.querySelectorAll('.budget .page tbody td:last-child')].map(d => d.textContent)"
+    )
+    assert all(d == "–" or float(d.replace("−", "-").split("\u2009")[0].rstrip("°%")) == 0 for d in differences)

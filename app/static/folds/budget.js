@@ -29,7 +29,7 @@ export function mount(node, sheet) {
   sum.append(...Object.entries(facts).map(([k, b]) => el('span', {}, `${k.replace(' %', THIN + '%')} `, b)), points.node)
   const drawn = el('div', {class: 'drawn'},
     el('div', {class: 'capline'}, caption, takers(sheet, () => figure, 'boards', 'Histogram')),
-    el('div', {class: 'figure'}, figure.slot), progress,
+    el('div', {class: 'figure', role: 'img', 'aria-label': 'Histogram of the boards\' errors over the allowed band; the line under it says where 95 % of them lie'}, figure.slot), progress,
     el('div', {class: 'ran'}, ran, el('span', {}, sizes.node, ' ', stop)))
   node.append(el('div', {class: 'left'}, el('div', {class: 'heads'}, pages.node), page), drawn, sum)
 

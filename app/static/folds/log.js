@@ -69,6 +69,7 @@ export function mount(node, sheet) {
       acts.replaceChildren(
         ...(e.kind === 'frozen' ? [
           el('button', {class: 'act', text: 'Compare', 'aria-label': `Compare frozen ${e.letter} with the sheet`, onclick: () => { a.value = e.number; b.value = 'sheet'; runCompare() }}),
+          el('button', {class: 'act', text: 'Hold beside', 'aria-label': `Hold frozen ${e.letter} beside the sheet in Budget and Response`, onclick: () => ask('hold', {number: e.number}, done => done.held && sheet.note(`Frozen ${e.letter} is held beside the sheet: Budget, Compare, and the plots of Response show what moved.`))}),
           el('button', {class: 'act', text: 'Put on the sheet', 'aria-label': `Put frozen ${e.letter} on the sheet`, onclick: () => ask('use', {number: e.number}, done => done.used && sheet.note(`Frozen ${e.letter} is on the sheet; Undo takes it back.`))}),
         ] : []),
         el('button', {class: 'act', text: 'Correct', 'aria-label': `Correct entry ${e.number}`, onclick: () => { correcting = e.number; sayKind(); text.focus() }}),

@@ -18,9 +18,9 @@ export function mount(node, sheet) {
   const held = el('button', {class: 'act', text: 'Hold this stage', onclick: () => say({do: held.getAttribute('aria-pressed') === 'true' ? 'let go' : 'hold'}), 'aria-pressed': 'false'})
   const left = el('div', {},
     el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Gain, dB'}), key, held, takers(sheet, () => gain, 'gain', 'Gain')),
-    el('div', {class: 'figure'}, gain.slot),
+    el('div', {class: 'figure', role: 'img', 'aria-label': 'Gain over frequency: open loop, noise gain and each signal; the numbers are under Signals and Loop'}, gain.slot),
     el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Phase, degrees: each signal against DC; loop gain dashed'}), takers(sheet, () => phase, 'gain', 'Phase')),
-    el('div', {class: 'figure'}, phase.slot))
+    el('div', {class: 'figure', role: 'img', 'aria-label': 'Phase over frequency of each signal and of the loop gain'}, phase.slot))
 
   const blank = (label, send, cls = '') => {
     const input = el('input', {class: `blank ${cls}`, 'aria-label': label, autocomplete: 'off'})
@@ -39,7 +39,7 @@ export function mount(node, sheet) {
   const page = el('div', {class: 'page', tabindex: 0, role: 'region', 'aria-label': 'Response, numbers'})
   const right = el('div', {},
     el('div', {class: 'heads'}, kinds.node, caption, takers(sheet, () => scope, 'scope', 'Record')),
-    el('div', {class: 'figure'}, scope.slot),
+    el('div', {class: 'figure', role: 'img', 'aria-label': 'Output over time; the line under it says how it settles'}, scope.slot),
     el('div', {class: 'heads'}, told, el('label', {class: 'soft n'}, 'length ', length.node)),
     el('div', {class: 'heads'}, pages.node), page)
   node.append(left, right)

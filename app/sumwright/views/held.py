@@ -14,9 +14,9 @@ def hold(context) -> None:
     context.extras[KEY] = context.workbench.analysis
 
 
-def hold_design(context, design) -> None:
-    """Hold another design (a frozen one)."""
-    context.extras[KEY] = Analysis(design)
+def hold_design(context, design, unplugged=()) -> None:
+    """Hold another design (a frozen one), perhaps with cables out."""
+    context.extras[KEY] = Analysis(design, unplugged)
 
 
 def let_go(context) -> None:

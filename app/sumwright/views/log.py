@@ -23,6 +23,7 @@ from sumwright.notebook.text import NOTE_MOST, TITLE_MOST, InvalidText
 from sumwright.quantity import format_quantity
 
 from .fold import Context, Fold
+from .held import hold_design
 
 PAGE = 100  # entries shown at first, and with each "more"
 BOOKS = 60  # notebooks in the list
@@ -224,6 +225,20 @@ class Log(Fold):
 
         self._do(message, lambda: desk.entry(key, number), put)
 
+    def _hold(self, message: dict) -> None:
+        """A frozen design held beside the sheet, in the plots and margins of Budget and Response."""
+        key, number = self._key(), fields.whole(message, "number", 1, 10**7)
+        desk = self._sitting.desk
+
+        def put(entry: Entry) -> dict[str, Any]:
+            try:
+                hold_design(self.context, read_design(_frozen(entry)["design"]), entry.body.get("unplugged") or ())
+            except (SumwrightError, KeyError) as error:
+                return {"refused": str(error)}
+            return {"held": number}
+
+        self._do(message, lambda: desk.entry(key, number), put)
+
     def _list_books(self, message: dict) -> None:
         text, archived = fields.text(message, "text", 200), message.get("archived") is True
         desk = self._sitting.desk
@@ -331,7 +346,7 @@ class Log(Fold):
 
 _ASKED: dict[str, Callable[[Log, dict], dict | None]] = {
     "write": Log._write, "freeze": Log._freeze, "search": Log._search, "more": Log._more, "compare": Log._compare,
-    "conflict": Log._conflict, "resolve": Log._resolve, "use": Log._use, "books": Log._list_books,
+    "conflict": Log._conflict, "resolve": Log._resolve, "use": Log._use, "hold": Log._hold, "books": Log._list_books,
     "new book": Log._new_book, "new sheet": Log._new_sheet, "rename": Log._rename, "archive": Log._archive,
     "verify": Log._verify, "export": Log._export, "part": Log._part, "import": Log._import,
 }  # fmt: skip
