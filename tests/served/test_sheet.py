@@ -37,9 +37,11 @@ def type_in(page, selector, text):
 
 def open_design(page, design):
     text = write_design(design) if not isinstance(design, str) else design
+    before = page.evaluate("sumwright.line.seq")
     page.locator('#commands input[type="file"]').set_input_files(
         {"name": "a.json", "mimeType": "application/json", "buffer": text.encode()}
     )
+    wait(page, f"sumwright.line.seq > {before}")  # the file is read in its own time
     settled(page)
 
 
@@ -266,7 +268,7 @@ def test_a_design_file_is_opened_and_saved_whole(sheet):
     open_design(sheet, design)
     assert sheet.locator("#title").input_value() == "Opened"
     with sheet.expect_download() as download:
-        sheet.get_by_role("button", name="Save").click()
+        sheet.get_by_role("button", name="Save", exact=True).click()
     assert read_design(download.value.path()) == design
 
 
@@ -287,6 +289,26 @@ def test_a_file_that_is_none_is_refused_in_one_line_and_the_sheet_keeps_what_it_
     assert "\n" not in note
     assert output(sheet) == before
     assert sheet.locator("#title").input_value() == "Grain hopper, four corners"
+
+
+def test_a_design_file_can_be_dropped_on_the_sheet(sheet):
+    design = drawn("out = 0.5 left + 0.25 right", "non-inverting", "Dropped")
+    sheet.evaluate(
+        """text => { const data = new DataTransfer()
+             data.items.add(new File([text], 'dropped.json', {type: 'application/json'}))
+             document.body.dispatchEvent(new DragEvent('drop', {dataTransfer: data, bubbles: true, cancelable: true})) }""",
+        write_design(design),
+    )
+    wait(sheet, "document.getElementById('title').value === 'Dropped'")
+
+
+def test_a_file_of_megabytes_is_refused_before_it_is_sent(sheet):
+    before = sheet.evaluate("sumwright.line.seq")
+    sheet.locator('#commands input[type="file"]').set_input_files(
+        {"name": "huge.json", "mimeType": "application/json", "buffer": b" " * 2_500_000}
+    )
+    wait(sheet, "document.getElementById('note').textContent.includes('at most 2 MB')")
+    assert sheet.evaluate("sumwright.line.seq") == before
 
 
 def test_markup_in_a_name_is_a_name(sheet):
@@ -310,7 +332,7 @@ def test_markup_in_a_name_is_a_name(sheet):
 
 
 def test_a_new_sum_is_read_as_it_is_written_and_drawn(sheet):
-    sheet.get_by_role("button", name="New").click()
+    sheet.get_by_role("button", name="New", exact=True).click()
     text = sheet.get_by_label("The sum")
     text.fill("out = 0.2 top + 0.3 bottom - 0.1 drift + 0.5 V")
     wait(sheet, "document.querySelector('.new .told.soft').textContent.includes('3 signals')")
@@ -366,7 +388,7 @@ def test_everything_that_can_be_used_has_a_name_and_size(sheet):
 
 def test_light_and_dark_paper(sheet):
     light = sheet.evaluate("getComputedStyle(document.documentElement).backgroundColor")
-    sheet.get_by_role("button", name="Dark").click()
+    sheet.get_by_role("button", name="Dark", exact=True).click()
     settled(sheet)
     dark = sheet.evaluate("getComputedStyle(document.documentElement).backgroundColor")
     assert (light, dark) == ("rgb(244, 246, 244)", "rgb(17, 25, 30)")

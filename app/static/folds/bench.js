@@ -115,7 +115,7 @@ export function mount(node, sheet) {
       head.dataset.of = heads.join('\u0000')
       head.replaceChildren(...heads.map((h, k) => {
         const signal = k > 0 && k <= s.names.length
-        const th = el('th', {scope: 'col', class: signal ? 'r sig' : k > s.names.length && k < heads.length - 2 ? 'r' : ''})
+        const th = el('th', {scope: 'col', class: signal ? 'r src' : k > s.names.length && k < heads.length - 2 ? 'r' : ''})
         if (signal) th.append(swatch(style(s.styles[k - 1])), ' ', el('span', {text: h})); else th.textContent = h || ''
         if (!h) th.append(el('span', {class: 'vh', text: k ? 'verdict' : 'number'}))
         return th

@@ -1,0 +1,61 @@
+"""The Bench's heavy work, each a job in a process of its own: kept apart from the views, so that a worker starts quickly."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+from sumwright.engine.bench.capture import fit_capture
+from sumwright.engine.bench.diagnose import diagnose
+from sumwright.files.capture import read_capture
+
+LISTED = 8  # suspects shown
+OUTPUT = "output"
+
+
+def weigh(design, readings, meter):
+    """A job: suspects and the next reading."""
+    report = diagnose(design, readings, meter=meter)
+    yield None
+    return told(report)
+
+
+def told(report) -> dict[str, Any]:
+    """What the fold shows of a diagnosis."""
+    first = [s for s in report.suspects if s.group == 1]
+    return {
+        "suspects": [s._asdict() for s in report.suspects[:LISTED]],
+        "more": max(0, len(first) - LISTED),
+        "tell": next((s.tell for s in first if s.tell), "") if len(first) > 1 else "",
+        "next": report.next_reading.volts, "bits": report.next_reading.bits, "notes": list(report.notes),
+    }  # fmt: skip
+
+
+def look(path: str, signals: tuple[str, ...]):
+    """A job: read a record and say what is in it."""
+    c = read_capture(Path(path), "The capture")
+    yield None
+    return {
+        "channels": list(c.channels), "rows": len(c.time), "interval": c.interval, "span": float(c.time[-1] - c.time[0]),
+        "map": guess(tuple(c.channels), signals),
+    }  # fmt: skip
+
+
+def guess(channels: tuple[str, ...], signals: tuple[str, ...]) -> dict[str, str]:
+    """Which channel is what, by name; the last unnamed one is taken for the output."""
+    folded = {s.casefold(): s for s in signals}
+    found = {c: folded.get(c.casefold(), OUTPUT if c.casefold() in ("output", "out", "vout") else "") for c in channels}
+    if OUTPUT not in found.values():
+        left = [c for c in channels if not found[c]]
+        if left:
+            found[left[-1]] = OUTPUT
+    return found
+
+
+def fit_record(path: str, design, mapping: dict[str, str]):
+    """A job: fit a record whose channels are mapped."""
+    c = read_capture(Path(path), "The capture")
+    yield None
+    output = next(name for name, what in mapping.items() if what == OUTPUT)
+    signals = {what: c.channels[name] for name, what in mapping.items() if what and what != OUTPUT}
+    return fit_capture(design, c.time, c.channels[output], signals)
