@@ -43,8 +43,11 @@ def bench(page):
     page.evaluate("location.hash = 'bench'")
     wait(page, "sumwright.state.open === 'bench' && !!document.querySelector('#f-bench')")
     settled(page)
-    page.set_input_files("#f-bench input[type=file][data-what=readings]", str(HERE / "kiln-damper-readings.csv"))
+    page.set_input_files("#f-bench input[aria-label='Readings file']", str(HERE / "kiln-damper-readings.csv"))
     page.wait_for_timeout(1500)
+    page.evaluate("sumwright.fold({do: 'meter', text: '0.02 % + 0.2 mV'})")
+    settled(page)
+    page.evaluate("sumwright.fold({do: 'go', row: 9})")
     settled(page)
 
 

@@ -10,12 +10,14 @@ machine it is: the sheet's font stacks name them after fonts of other systems.
 from __future__ import annotations
 
 import io
+import re
 import sys
 from pathlib import Path
 from typing import NamedTuple
 
 import numpy as np
 from PIL import Image
+from sumwright.tokens import tokens
 
 GOLDEN = Path(__file__).parent / "golden"
 HOW = "Make it by: cd tests && python -m served.pictures {name}; look at it, then commit it."
@@ -55,7 +57,8 @@ STILL = """() => {
   document.activeElement?.blur()
 }"""
 # Nothing that could be stopped is under way.
-IDLE = """[...document.querySelectorAll('button')].every(b => b.textContent !== 'Stop' || b.hidden || b.disabled || !b.offsetParent)"""
+IDLE = """[...document.querySelectorAll('button')].every(b => b.textContent !== 'Stop' || b.hidden || b.disabled || !b.offsetParent)
+  && !/weighing…|searching…/.test(document.querySelector('main').innerText)"""
 UNTIMED = """() => {
   for (const e of document.querySelectorAll('#saved, .log time, .log .who')) e.style.visibility = 'hidden'
 }"""
@@ -89,10 +92,12 @@ def taken(page, fold: str, theme: str) -> bytes:
 def small(png: bytes) -> bytes:
     """The picture in its own most frequent colours, as it is kept: paper, tints and hues stay exact."""
     image = Image.open(io.BytesIO(png)).convert("RGB")
-    often = sorted(image.getcolors(1 << 24), reverse=True)[:COLOURS]
+    often = [colour for _, colour in sorted(image.getcolors(1 << 24), reverse=True)[:COLOURS]]
+    hues = [v for theme in ("light", "dark") for v in tokens(theme).values() if re.fullmatch("#[0-9A-F]{6}", v)]
+    colours = list(dict.fromkeys([*often, *(tuple(bytes.fromhex(h[1:])) for h in hues)]))
     palette = Image.new("P", (1, 1))
-    flat = [v for _, colour in often for v in colour]
-    palette.putpalette(flat + flat[-3:] * (256 - len(often)))
+    flat = [v for colour in colours for v in colour]
+    palette.putpalette(flat + flat[-3:] * (256 - len(colours)))
     out = io.BytesIO()
     image.quantize(palette=palette, dither=Image.Dither.NONE).save(out, "PNG", optimize=True)
     return out.getvalue()
