@@ -34,7 +34,15 @@ def free_port() -> int:
 class Server:
     """`sumwright serve` (or plain `panel serve app`) with settings of its own; logs go to a file in its data folder."""
 
-    def __init__(self, data: Path, *, plain: bool = False, port: int | None = None, **settings):
+    def __init__(
+        self,
+        data: Path,
+        *,
+        plain: bool = False,
+        port: int | None = None,
+        more: dict[str, str] | None = None,
+        **settings,
+    ):
         self.data, self.port = data, port or free_port()
         data.mkdir(parents=True, exist_ok=True)
         self.log = data / "server.log"
@@ -43,7 +51,7 @@ class Server:
             k: v for k, v in os.environ.items() if not k.startswith(("SUMWRIGHT_", "PANEL_", "BOKEH_"))
         }
         self._environment |= {"SUMWRIGHT_DATA": str(data), "SUMWRIGHT_PORT": str(self.port), "SUMWRIGHT_LOG": "json"}
-        self._environment |= {f"SUMWRIGHT_{k.upper()}": str(v) for k, v in settings.items()}
+        self._environment |= {f"SUMWRIGHT_{k.upper()}": str(v) for k, v in settings.items()} | (more or {})
         self._command = [sys.executable, "-m", "sumwright.command", "serve"]
         if plain:
             self._command = [sys.executable, "-m", "panel", "serve", str(APP), "--port", str(self.port)]

@@ -200,7 +200,9 @@ def test_notes_with_links_that_are_none(context, server):
     schemes = page.locator(".log a").evaluate_all("all => all.map(a => a.getAttribute('href'))")
     assert schemes and all(re.match(r"https?://", s) for s in schemes if s is not None), schemes
     assert page.locator(".log img, .log script, .log svg, .log iframe, .log style, .log form").count() == 0
-    page.evaluate("() => addEventListener('click', e => e.preventDefault())")  # a link of http itself may be followed
+    page.evaluate(
+        "() => addEventListener('click', e => e.preventDefault(), true)"
+    )  # a link of http itself may be followed
     page.locator(".log .said *").evaluate_all("all => all.forEach(e => { e.dispatchEvent(new MouseEvent('mouseover')); e.dispatchEvent(new MouseEvent('click', {cancelable: true})) })")  # fmt: skip
     attributes = page.locator(".log .said *").evaluate_all(
         "all => [...new Set(all.flatMap(e => e.getAttributeNames()))]"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import importlib.util
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -96,7 +97,10 @@ def serve(ours: Settings, *, show: bool = False) -> int:
         words += ["--show"]
     for origin in ours.ensure_reachable_by():
         words += ["--allow-websocket-origin", origin]
-    command.invoke(parser.parse_args(words))
+    try:
+        command.invoke(parser.parse_args(words))
+    except ValueError as error:  # Panel's own word on its PANEL_* settings
+        raise SumwrightError(str(error)) from None
     return 0
 
 
@@ -104,6 +108,10 @@ def _refuse_unset_oauth(ours: Settings, config: Any) -> None:
     if ours.sign_in == "oauth" and not config.oauth_provider:
         raise SumwrightError(
             "sign_in is 'oauth' and PANEL_OAUTH_PROVIDER is not set; set Panel's PANEL_OAUTH_* variables."
+        )
+    if ours.sign_in == "oauth" and importlib.util.find_spec("cryptography") is None:
+        raise SumwrightError(
+            "sign_in is 'oauth', which needs the cryptography library: pip install 'sumwright[oauth]'."
         )
     if ours.sign_in != "oauth" and config.oauth_provider:
         raise SumwrightError(f"PANEL_OAUTH_PROVIDER is set and sign_in is {ours.sign_in!r}; set sign_in to oauth.")
