@@ -36,6 +36,12 @@ const SAYS = {
       scope,
     }
   },
+  bench(s) {
+    const fit = s.capture?.fit
+    if (!fit) return {}
+    const weights = fit.names.map((n, i) => `${n} ${signed(fit.value[i], 4)}, predicted ${signed(fit.predicted[i], 4)}`)
+    return {capture: `Captured output with the prediction and the fit laid over it: ${weights.join('; ')}; noise ${engineering(fit.noise, 'V')} RMS.`}
+  },
 }
 
 export function speak(key, shown, state) {
