@@ -273,9 +273,9 @@ def _block(data: bytes, shape: _Shape, name: str, line: int):
             flat = flat.replace(shape.separator.encode(), b" ")
         flat = flat.replace(b"\n", b" ")
         values = _parsed(flat)
-        if values is not None and len(values) % shape.columns == 0 and np.isfinite(values).all():
-            if len(values) // shape.columns == text.count(b"\n") + (not text.endswith(b"\n")):
-                return values.reshape(-1, shape.columns), lines
+        rows = text.count(b"\n") + (not text.endswith(b"\n"))
+        if values is not None and len(values) == rows * shape.columns and np.isfinite(values).all():
+            return values.reshape(-1, shape.columns), lines
     return _cell_by_cell(text, shape, name, line), lines
 
 

@@ -16,14 +16,13 @@ import numpy as np
 from sumwright.engine.bench.board import Bench
 from sumwright.engine.bench.plan import Step, plan
 from sumwright.engine.bench.readings import Meter, Readings
-from sumwright.engine.operating_point import operating_point
 from sumwright.engine.stage import Design
 from sumwright.engine.stage import replace as with_fields
 from sumwright.errors import InvalidReadings
 from sumwright.files.readings import number, parse_readings
 from sumwright.quantity import parse_quantity
 
-MOST_READINGS = 2000
+MOST_READINGS = 400  # by hand or from a file; longer tables go to the command line
 OUTPUT_PROBE = "output"
 
 
@@ -98,23 +97,28 @@ class BenchRun:
         extra = [
             t for t in extra if t.probe == OUTPUT_PROBE and t.unit == "V" and {n for n, v in t.apply if v} <= names
         ]
-        for t in extra:
-            rows.append(Row(self._step_of(t, len(rows) + 1), self.taken.get(t.key), False))
-        return rows
+        steps = self._steps_of(extra, len(rows) + 1)
+        return rows + [Row(s, self.taken.get(t.key), False) for s, t in zip(steps, extra, strict=True)]
 
-    def _step_of(self, t: Taken, number_: int) -> Step:
-        volts = dict(t.apply)
-        apply = {n: float(volts.get(n, 0.0)) for n in self.design.signal_names}
-        x = np.array([list(apply.values())])
-        p = self.bench.predict(self.bench.healthy, x)
-        expect = operating_point(self.design, x[0]).output
-        u = np.sqrt(np.square(p.columns).sum() + p.own.sum() + self.meter.standard_uncertainty(expect) ** 2)
-        half = 2 * float(u) + abs(float(p.mean[0, 0]) - expect)
-        return Step(
-            number_, "A reading of your own", "Power on", apply, OUTPUT_PROBE, expect, expect - half, expect + half, "V",
-            "Not a step of the run; it counts in the fit and for the suspects all the same.",
-            "What it means is told by the suspects.", "",
-        )  # fmt: skip
+    def _steps_of(self, extra: list[Taken], first: int) -> list[Step]:
+        """Steps for settings that are not in the plan, with the same limits as if they were."""
+        if not extra:
+            return []
+        names = self.design.signal_names
+        volts = np.array([[dict(t.apply).get(n, 0.0) for n in names] for t in extra])
+        p = self.bench.predict(self.bench.healthy, volts)
+        expect = self.bench.outputs(self.bench.healthy, volts)[0]
+        u = np.sqrt(np.square(p.columns[0]).sum(axis=0) + p.own[0] + self.meter.standard_uncertainty(expect) ** 2)
+        half = 2 * u + np.abs(p.mean[0] - expect)
+        return [
+            Step(
+                first + i, "A reading of your own", "Power on", dict(zip(names, map(float, volts[i]), strict=True)), OUTPUT_PROBE,
+                float(expect[i]), float(expect[i] - half[i]), float(expect[i] + half[i]), "V",
+                "Not a step of the run; it counts in the fit and for the suspects all the same.", "The suspects tell what it means.",
+                "",
+            )
+            for i in range(len(extra))
+        ]  # fmt: skip
 
     # -- readings ----------------------------------------------------------------
 

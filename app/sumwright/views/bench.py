@@ -15,31 +15,13 @@ from sumwright.engine.bench.readings import parse_meter
 from sumwright.engine.stage import replace
 from sumwright.errors import InvalidQuantity, InvalidReadings, SumwrightError
 from sumwright.files.readings import MOST_BYTES, parse_readings
+from sumwright.model.bench_jobs import told, weigh
 from sumwright.model.bench_run import BenchRun, Row
 
 from .bench_capture import CapturePart
 from .fold import Context, Fold
 
-LISTED = 8
 TEXT_MOST = 400_000
-
-
-def weigh(design, readings, meter):
-    """A job: suspects and the next reading."""
-    report = diagnose(design, readings, meter=meter)
-    yield None
-    return told(report)
-
-
-def told(report) -> dict[str, Any]:
-    """What the fold shows of a diagnosis."""
-    first = [s for s in report.suspects if s.group == 1]
-    return {
-        "suspects": [s._asdict() for s in report.suspects[:LISTED]],
-        "more": max(0, len(first) - LISTED),
-        "tell": next((s.tell for s in first if s.tell), "") if len(first) > 1 else "",
-        "next": report.next_reading.volts, "bits": report.next_reading.bits, "notes": list(report.notes),
-    }  # fmt: skip
 
 
 class Bench(Fold):
@@ -119,13 +101,17 @@ class Bench(Fold):
         def done(result):
             if self._told_for == key:
                 self._told = result
-                self.context.refresh()
+            else:
+                self._weigh(self._told_for)
+            self.context.refresh()
 
         try:
             asyncio.get_running_loop()
         except RuntimeError:  # no server: a test, or a script
             self._told = told(diagnose(self._run.design, readings, meter=self._run.meter))
             return
+        if self.context.jobs.running("bench"):
+            return  # what is under way ends, then the newest readings are weighed: a worker is not thrown away
         self.context.jobs.start(
             "bench", weigh, self._run.design, readings, self._run.meter, done=done,
             failed=lambda sentence: self.context.say(sentence, bad=True),

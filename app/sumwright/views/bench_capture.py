@@ -6,52 +6,19 @@ import asyncio
 import base64
 import binascii
 import tempfile
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 from bokeh.models import ColumnDataSource, Range1d
 
 from sumwright import fields
-from sumwright.engine.bench.capture import fit_capture
 from sumwright.errors import InvalidReadings
-from sumwright.files.capture import read_capture
+from sumwright.model.bench_jobs import OUTPUT, fit_record, look
 
 from .figures import move, paint, put, ruled_figure
 
 UPLOAD_MOST = 128 * 1024 * 1024
 PART_MOST = 3_000_000  # characters of one part, base64
-OUTPUT = "output"
-
-
-def look(path: str, signals: tuple[str, ...]):
-    """A job: read a record and say what is in it."""
-    c = read_capture(Path(path), "The capture")
-    yield None
-    return {
-        "channels": list(c.channels), "rows": len(c.time), "interval": c.interval, "span": float(c.time[-1] - c.time[0]),
-        "map": guess(tuple(c.channels), signals),
-    }  # fmt: skip
-
-
-def guess(channels: tuple[str, ...], signals: tuple[str, ...]) -> dict[str, str]:
-    """Which channel is what, by name; the last unnamed one is taken for the output."""
-    folded = {s.casefold(): s for s in signals}
-    found = {c: folded.get(c.casefold(), OUTPUT if c.casefold() in ("output", "out", "vout") else "") for c in channels}
-    if OUTPUT not in found.values():
-        left = [c for c in channels if not found[c]]
-        if left:
-            found[left[-1]] = OUTPUT
-    return found
-
-
-def fit_record(path: str, design, mapping: dict[str, str]):
-    """A job: fit a record whose channels are mapped."""
-    c = read_capture(Path(path), "The capture")
-    yield None
-    output = next(name for name, what in mapping.items() if what == OUTPUT)
-    signals = {what: c.channels[name] for name, what in mapping.items() if what and what != OUTPUT}
-    return fit_capture(design, c.time, c.channels[output], signals)
 
 
 class CapturePart:

@@ -30,9 +30,9 @@ Edit = Callable[[Boards, int, float], None]
 
 
 class Values(NamedTuple):
-    """A quantity [ohm] the fault leaves unknown: spans of equal odds per decade, and single likely values."""
+    """A quantity [ohm] the fault leaves unknown: spans, each even in its logarithm, and single likely values."""
 
-    spans: tuple[tuple[float, float], ...]
+    spans: tuple[tuple[float, float, float], ...]  # from, to, share
     likely: tuple[float, ...] = ()
     likely_share: float = 0.0
 
@@ -94,10 +94,15 @@ def _both(*edits):
 
 
 def _wrong_values(bench, nominal):
-    """Anything from a thousandth to a thousand times, but not what the tolerance allows."""
+    """Mostly another value within a decade, or the right figures in a wrong decade; but not what the tolerance allows."""
     near = max(2.0 * bench.design.resistor.tolerance, 0.004)
     return Values(
-        ((nominal * 1e-3, nominal * (1 - near)), (nominal * (1 + near), nominal * 1e3)),
+        (
+            (nominal * 1e-3, nominal * 0.1, 0.1),
+            (nominal * 0.1, nominal * (1 - near), 0.4),
+            (nominal * (1 + near), nominal * 10, 0.4),
+            (nominal * 10, nominal * 1e3, 0.1),
+        ),
         tuple(nominal * d for d in (0.01, 0.1, 10.0, 100.0)),
         DECADE_SHARE,
     )
@@ -159,7 +164,9 @@ def _source_resistance_high(bench):
             continue
         have, leg = float(bench.healthy.series_ohm[0, at]), _first(bench, legs)
         least = have + max(2.0 * bench.design.resistor.tolerance, 0.004) * max(leg, have, 1.0)
-        yield Place(source, (Way(_set("series_ohm", (at,)), 1.0, Values(((least, 1e3 * max(leg, have, 1.0)),))),), have)
+        yield Place(
+            source, (Way(_set("series_ohm", (at,)), 1.0, Values(((least, 1e3 * max(leg, have, 1.0), 1.0),))),), have
+        )
 
 
 def _legs_swapped(bench):
@@ -283,7 +290,7 @@ def _output_overloaded(bench):
     load = bench.design.load.resistance or np.inf
     most = min(load / 3, 1e4)
     if most > 1:
-        yield Place(OUTPUT, (Way(_set("load_ohm", ()), 1.0, Values(((1.0, most),), (50.0, 75.0, 600.0), 0.3)),))
+        yield Place(OUTPUT, (Way(_set("load_ohm", ()), 1.0, Values(((1.0, most, 1.0),), (50.0, 75.0, 600.0), 0.3)),))
 
 
 FAULTS: tuple[Fault, ...] = (

@@ -88,10 +88,10 @@ def list_cases(bench: Bench, faults=FAULTS) -> list[Case]:
 def coarse_values(values: Values) -> np.ndarray:
     """First grid of an unknown quantity: even steps of its logarithm in each span."""
     points = []
-    for low, high in values.spans:
+    for low, high, _ in values.spans:
         a, b = np.log(low), np.log(high)
         points.append(np.exp(np.linspace(a, b, max(3, int(np.ceil((b - a) / COARSE_STEP)) + 1))))
-    return np.concatenate(points)
+    return np.unique(np.concatenate(points))
 
 
 def wire(bench: Bench, cases, trials) -> Boards:
@@ -362,7 +362,7 @@ class Diagnosis:
 
 def _inside(values: Values, points):
     ok = np.zeros(len(points), dtype=bool)
-    for low, high in values.spans:
+    for low, high, _ in values.spans:
         ok |= (points >= low) & (points <= high)
     return ok
 
@@ -371,13 +371,11 @@ def _grid_log_masses(values: Values, grid, table):
     """Log prior mass of each grid point, shaped so that sum(mass * likelihood) integrates
     a log-likelihood taken as straight between neighbours (exact for exponentials)."""
     x = np.log(grid)
-    width = sum(np.log(high / low) for low, high in values.spans)
     mass = np.zeros(len(grid))
-    step = np.diff(x)
-    same = np.zeros(len(step), dtype=bool)
-    for low, high in values.spans:
-        same |= (grid[:-1] >= low * (1 - 1e-9)) & (grid[1:] <= high * (1 + 1e-9))
-    step = np.where(same, step, 0.0)
+    step = np.zeros(len(grid) - 1)  # prior mass of each step between neighbours
+    for low, high, share in values.spans:
+        same = (grid[:-1] >= low * (1 - 1e-9)) & (grid[1:] <= high * (1 + 1e-9))
+        step += np.where(same, np.diff(x) * share / np.log(high / low), 0.0)
     rise = np.diff(table)
     # ∫ exp over one step, shared between its two ends by which is higher
     small = np.abs(rise) < 1e-6
@@ -388,7 +386,7 @@ def _grid_log_masses(values: Values, grid, table):
     for i in np.flatnonzero(step > 0):
         at = i if table[i] >= table[i + 1] else i + 1
         mass[at] += np.exp(log_area[i] - table[at])
-    return np.log(np.maximum(mass / width, 1e-300))
+    return np.log(np.maximum(mass, 1e-300))
 
 
 def condense(volts, readings, meter, most=MOST_ROWS):
