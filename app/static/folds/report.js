@@ -8,6 +8,7 @@ export const styles = true
 const DOCUMENTS = [
   ['report', 'Design report', 'job, schematic, values, weights, margins, errors, response, noise, cautions: one file that prints on A4 and Letter', ['Open', 'Keep']],
   ['bring-up', 'Bring-up sheet', 'the run step by step with limits, blanks for the readings, and room to sign', ['Open', 'Keep']],
+  ['record', 'Calibration record', 'the weights as measured on the bench, their uncertainty, verdicts, suspects, and room to sign', ['Open', 'Keep']],
   ['summary', 'Summary', 'a page of Markdown for a message or a ticket', ['Copy', 'Keep']],
   ['bundle', 'Everything', 'the report, the design, the results, every table as CSV, every picture as SVG, in one ZIP', ['Keep']],
 ]

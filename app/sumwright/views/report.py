@@ -20,7 +20,7 @@ from sumwright.report.schematic import SYMBOLS
 
 from .fold import Context, Fold
 
-KINDS = ("report", "bring-up", "bundle", "summary", "table", "picture")
+KINDS = ("report", "bring-up", "record", "bundle", "summary", "table", "picture")
 DRAWS_MOST = 1_000_000
 _SYMBOLS = {words: key for key, words in SYMBOLS.items()}
 # Every table and picture there is, with the word a person reads.
@@ -53,8 +53,13 @@ class Report(Fold):
         return {
             "making": self._making, "ready": None if self._ready is None else self._ready["token"], "refused": self._refused,
             "tables": [t for t in TABLES if t[0] != "cables" or len(design.signals) > 1], "pictures": PICTURES,
-            "symbols": self.workbench.symbols, "draws": DRAWS,
+            "symbols": self.workbench.symbols, "draws": DRAWS, "readings": 0 if self._readings is None else self._readings.count,
         }  # fmt: skip
+
+    @property
+    def _readings(self) -> Any:
+        """What was read on the bench, if anything."""
+        return self.context.extras.get("readings")
 
     def handle(self, message: dict) -> dict | None:
         if message.get("ask") == "take":
@@ -75,9 +80,16 @@ class Report(Fold):
         if kind in ("table", "picture"):
             which = fields.one_of(message, "which", [key for key, _ in (TABLES if kind == "table" else PICTURES)])
         draws = fields.whole(message, "draws", 0, DRAWS_MOST)
+        readings = self._readings if kind == "record" else None
+        if kind == "record" and (readings is None or readings.count == 0):
+            raise InvalidQuantity("There are no readings yet: take some under Bench, then make the record.")
+        if readings is not None and readings.names != self.workbench.analysis.design.signal_names:
+            raise InvalidQuantity(
+                "The signals are not those of the readings any more; take the readings of this stage under Bench."
+            )
         order = {
             "kind": kind, "which": which, "draws": draws, "symbols": _SYMBOLS[self.workbench.symbols], "theme": self.workbench.theme,
-            "made": datetime.now(UTC).isoformat(), "author": None, "decisions": [],
+            "made": datetime.now(UTC).isoformat(), "author": None, "decisions": [], "readings": readings,
         }  # fmt: skip
         self._making, self._refused, self._ready = token, "", None
         sitting = self.context.extras.get("sitting")
@@ -151,6 +163,15 @@ def make(
         steps = [s._asdict() for s in plan(design)]
         text = bring_up_sheet(analysis, steps, symbols=order["symbols"], author=order["author"], now=now)
         return f"{stem}-bring-up.html", "text/html", text.encode()
+    if kind == "record":
+        from sumwright.engine.bench.diagnose import diagnose
+        from sumwright.report.bench_papers import calibration_record, readings_rows
+        from sumwright.verbs.diagnose import to_json
+
+        readings = order["readings"]
+        found = to_json(diagnose(design, readings))
+        text = calibration_record(design, found, readings_rows(readings), author=order["author"], now=now)
+        return f"{stem}-calibration.html", "text/html", text.encode()
     if kind == "bundle":
         return f"{stem}.zip", "application/zip", bundle(analysis, theme="light", **how)
     if kind == "summary":
