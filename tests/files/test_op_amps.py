@@ -3,7 +3,7 @@
 from pathlib import Path
 
 import pytest
-from sumwright.engine.catalogue import FIGURES, catalogue, find
+from sumwright.engine.catalogue import FIGURES, UNITS, catalogue, find
 from sumwright.errors import InvalidDesign
 from sumwright.files.op_amps import COLUMNS, read_op_amps, write_op_amps
 
@@ -15,7 +15,7 @@ def test_a_list_written_is_the_list_read():
 
 
 def test_every_figure_of_the_catalogue_says_where_it_comes_from():
-    assert len(catalogue()) >= 20
+    assert len(catalogue()) >= 20 and set(UNITS) == set(FIGURES)
     for entry in catalogue():
         assert set(entry.sources) == set(FIGURES)
         assert all(entry.sources.values())

@@ -168,6 +168,11 @@ def test_every_op_amp_is_tried_and_one_is_taken_in_one_step():
     more = in_loop(go)
     assert more["tried"] == more["of"] == len(catalogue())
     packed(more)
+    fold.handle({"do": "entry", "name": "TL072"})
+    entry = fold.show()["more"]["entry"]
+    assert len(entry["rows"]) == 30 and all(source for *_, source in entry["rows"])
+    fold.handle({"do": "entry", "name": "TL072"})  # once more folds it away
+    assert fold.show()["more"]["entry"] is None
     fold.handle({"do": "take", "name": "TL072"})
     assert bench.design.op_amp.name == "TL072"
     assert bench.undo() and bench.design.op_amp.name == demo.design().op_amp.name

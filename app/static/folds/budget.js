@@ -91,17 +91,27 @@ export function mount(node, sheet) {
     }})
     const buttons = new Map()
     const take = name => { if (!buttons.has(name)) buttons.set(name, el('button', {class: 'act', text: 'take', 'aria-label': `take ${name}`, onclick: () => sheet.fold({do: 'take', name})})); return buttons.get(name) }
+    const names = new Map()
+    const look = name => { if (!names.has(name)) names.set(name, el('button', {class: 'act', text: name, 'aria-label': `figures of ${name} and their sources`, onclick: () => sheet.fold({do: 'entry', name})})); return names.get(name) }
+    const head = el('h3'), about = el('p', {class: 'soft'}), figures = table([{text: 'figure'}, {text: 'value', class: 'r'}, {text: 'source'}], 'Figures and their sources')
+    const back = el('button', {class: 'act', text: 'Back to the table', onclick: () => sheet.fold({do: 'entry', name: head.textContent})})
+    const card = el('div', {}, el('p', {class: 'heads'}, head, about, back), figures.node)
     return {wide: true, node: el('div', {class: 'op-amps'}, el('p', {class: 'heads'}, told, el('label', {class: 'act'}, 'Your own list, CSV', file),
-      el('button', {class: 'act', text: 'CSV', 'aria-label': 'This table as CSV', onclick: () => sheet.fold({do: 'csv', what: 'op amps'})})), t.node,
+      el('button', {class: 'act', text: 'CSV', 'aria-label': 'This table as CSV', onclick: () => sheet.fold({do: 'csv', what: 'op amps'})})), card, t.node,
       el('p', {class: 'soft', text: 'Classes are invented and representative; types are from published or remembered figures. Check your data sheet before you build.'})),
     update(s) {
       const m = s.more
       setText(told, m.tried < m.of ? `${m.tried} of ${m.of} tried` : `${m.of} tried in this stage; the fewest that fall short first`)
       t.heads(['op amp', '', 'short', 'tight', ...m.columns.map(c => c[1])])
       t.set(m.rows.map(r => [
-        [r.name, r.name === m.now ? 'now' : ''], [take(r.name), ''], [String(r.short), r.short ? 'r short' : 'r'], [String(r.tight), r.tight ? 'r tight' : 'r'],
+        [look(r.name), r.name === m.now ? 'now' : ''], [take(r.name), ''], [String(r.short), r.short ? 'r short' : 'r'], [String(r.tight), r.tight ? 'r tight' : 'r'],
         ...m.columns.map(([key]) => { const c = r.checks[key]; return c ? [c[1] === 'unknown' ? '–' : c[2] === null ? c[1] : `${margin(c[2], c[3])}${c[1] === 'clear' ? '' : ` ${c[1]}`}`, `r ${c[1]}`] : ['', ''] }),
       ]))
+      card.hidden = !m.entry
+      if (m.entry) {
+        setText(head, m.entry.name); setText(about, m.entry.note)
+        figures.set(m.entry.rows.map(([name, value, unit, source]) => [name, [value === null ? 'none' : ['°C', 'K/W', 'V/V', ''].includes(unit) ? `${+value.toPrecision(4)}${THIN}${unit}`.replace('-', '−') : engineering(value, unit), 'r'], source]))
+      }
       m.rows.forEach((r, i) => setAttr(t.body.rows[i], 'title', [r.note, m.sources[r.name]].filter(Boolean).join('. ')))
     }}
   }

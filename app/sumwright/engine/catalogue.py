@@ -31,6 +31,15 @@ class Entry:
         return self.op_amp.name
 
 
+UNITS = {
+    "open_loop_gain": "V/V", "gain_bandwidth": "Hz", "second_pole": "Hz", "slew_rate": "V/s", "input_resistance": "Ω",
+    "differential_capacitance": "F", "common_mode_capacitance": "F", "output_resistance": "Ω", "offset_voltage": "V",
+    "offset_drift": "V/K", "bias_current": "A", "offset_current": "A", "cmrr": "V/V", "psrr": "V/V",
+    "noise_voltage": "V/√Hz", "noise_voltage_corner": "Hz", "noise_current": "A/√Hz", "noise_current_corner": "Hz",
+    "dropout_high": "V", "dropout_low": "V", "dropout_resistance": "Ω", "common_mode_high": "V", "common_mode_low": "V",
+    "output_current": "A", "supply_least": "V", "supply_most": "V", "supply_current": "A", "thermal_resistance": "K/W",
+    "junction_most": "°C", "per_package": "",
+}  # fmt: skip
 FIGURES = tuple(f.name for f in fields(OpAmp) if f.name != "name")
 
 

@@ -62,6 +62,7 @@ class Budget(Fold):
         self.page = "terms"
         self.size = SIZES[1]
         self._own: tuple[catalogue.Entry, ...] = ()
+        self._entry = ""
         self._trials: tuple[Any, list[which_op_amp.Trial]] = (None, [])
         self._drawn: tuple[Any, Any] = (None, None)  # what was drawn for, and the boards.Progress
         self._for: Any = None
@@ -200,8 +201,19 @@ class Budget(Fold):
         return {
             "rows": rows, "columns": [[k, titles[k]] for k in keys], "now": analysis.design.op_amp.name,
             "tried": len(rows), "of": every, "own": len(self._own),
-            "sources": {e.name: _sources(e) for e in (*catalogue.catalogue(), *self._own)},
+            "sources": {e.name: _sources(e) for e in (*catalogue.catalogue(), *self._own)}, "entry": self._figures(),
         }  # fmt: skip
+
+    def _figures(self) -> dict[str, Any] | None:
+        """Every figure of the op amp looked at, with its source."""
+        entry = catalogue.find(self._entry, (*catalogue.catalogue(), *self._own)) if self._entry else None
+        if entry is None:
+            return None
+        rows = [
+            [name.replace("_", " "), getattr(entry.op_amp, name), catalogue.UNITS[name], entry.sources[name]]
+            for name in catalogue.FIGURES
+        ]
+        return {"name": entry.name, "note": entry.note, "rows": rows}
 
     def _try(self, design) -> None:
         def got(rows):
@@ -268,7 +280,7 @@ class Budget(Fold):
     def handle(self, message: dict) -> dict | None:
         """Choose a point, a page or a number of boards; stop; take an op amp or a plan; hold; give a CSV."""
         do = fields.one_of(message, "do", (
-            "point", "page", "size", "stop", "take", "own", "tolerance", "hold", "let go", "csv",
+            "point", "page", "size", "stop", "take", "entry", "own", "tolerance", "hold", "let go", "csv",
         ))  # fmt: skip
         if do == "point":
             self.point = fields.one_of(message, "point", POINTS)
@@ -284,6 +296,9 @@ class Budget(Fold):
             self.context.jobs.stop("budget boards")
         elif do == "take":
             self._take(fields.text(message, "name"))
+        elif do == "entry":
+            name = fields.text(message, "name")
+            self._entry = "" if name == self._entry else name
         elif do == "own":
             self._own = read_op_amps(fields.text(message, "text", 1_000_000))
             self.page = "op amps"
