@@ -8,6 +8,9 @@ import weakref
 from pathlib import Path
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from sumwright.engine.stage import ARRANGEMENTS
 from sumwright.errors import NotAllowed
 from sumwright.model import acts
 from sumwright.page import FOLDS, Page, fold_classes
@@ -134,3 +137,54 @@ def test_a_closed_session_is_collected():
     del page
     gc.collect()
     assert [w() for w in watched] == [None] * len(watched)
+
+
+NUMBERS = st.sampled_from(
+    [
+        "1e-12",
+        "1e-6",
+        "0.001",
+        "0.5",
+        "1",
+        "-1",
+        "0",
+        "12",
+        "-12",
+        "60",
+        "4k7",
+        "1M",
+        "1e9",
+        "1e12",
+        "-1e6",
+        "1e30",
+        "300",
+        "",
+    ]
+)
+FIGURES = [(group, figure) for group, figures in acts.UNITS.items() for figure in figures]
+ACTS = st.one_of(
+    st.builds(lambda s, v: {"do": "value", "signal": s, "value": v}, st.sampled_from(["tare", "north"]), st.floats(-1e6, 1e6)),
+    st.builds(lambda s, f, t: {"do": "signal", "signal": s, "figure": f, "text": t}, st.sampled_from(["tare", "north"]),
+              st.sampled_from(sorted(acts.SIGNAL_UNITS)), NUMBERS),
+    st.builds(lambda s, t: {"do": "weight", "signal": s, "text": t}, st.sampled_from(["tare", "north", "west"]), NUMBERS),
+    st.builds(lambda t: {"do": "offset", "text": t}, NUMBERS),
+    st.builds(lambda p, t: {"do": "part", "part": p, "text": t},
+              st.sampled_from(["0/feedback", "0/plus_ground", "0/minus/tare", "0/plus/north", "1/feedback"]), NUMBERS),
+    st.builds(lambda t: {"do": "capacitor", "cell": 0, "text": t}, NUMBERS),
+    st.builds(lambda f, t: {"do": "figure", "group": f[0], "figure": f[1], "text": t}, st.sampled_from(FIGURES), NUMBERS),
+    st.builds(lambda w: {"do": "arrange", "arrangement": w}, st.sampled_from(ARRANGEMENTS)),
+    st.builds(lambda w: {"do": "follow", "follow": w}, st.sampled_from(["nearest", "exact", "kept"])),
+    st.builds(lambda s, o: {"do": "plug", "signal": s, "out": o}, st.sampled_from(["tare", "north", "east"]), st.booleans()),
+    st.sampled_from([{"do": "add"}, {"do": "undo"}, {"do": "redo"}, {"do": "remove", "signal": "east"}]),
+)  # fmt: skip
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.lists(ACTS, min_size=1, max_size=12))
+def test_whatever_a_person_types_the_sheet_answers(steps):
+    page = Page()
+    browser = Browser(page)
+    for seq, act in enumerate(steps, 1):
+        page.receive({"seq": seq, "acts": [act]})
+        assert browser.frames[-1]["seq"] == seq, act
+    page.close()

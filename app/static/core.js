@@ -132,7 +132,7 @@ function silent(lost, never = false) {
 const tail = {node: el('span', {class: 'tail soft'}), value: el('b', {class: 'n'})}
 tail.node.append(el('i', {class: 'serif', text: 'out'}), ' = ', tail.value)
 const title = new Blank(sheet, {
-  field: 'title', label: 'Title of the sheet', send: text => ({do: 'title', text}), cls: 'title',
+  field: 'title', label: 'Title of the sheet', send: text => ({do: 'title', text}), cls: 'title', placeholder: 'Untitled sheet',
 })
 { const there = document.getElementById('title'); title.node.id = 'title'; there.replaceWith(title.node) }
 

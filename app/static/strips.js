@@ -43,11 +43,20 @@ function letGo() {
   sheet.act({do: 'let_go'})
 }
 
+// under a moving hand everything follows at once; only what a single act changed glides to its place
+let still = 0
+function moving() {
+  document.body.classList.add('moving')
+  clearTimeout(still)
+  still = setTimeout(() => document.body.classList.remove('moving'), 400)
+}
+
 // A live slider: the arrows move it 1/500 of its range, with Shift ten times that, Home and End to the ends.
 function slider(name, tell) {
   const input = el('input', {type: 'range', 'aria-label': `${name}, volts`, 'data-v': name})
   let rest = 0
   const send = () => {
+    moving()
     tell?.(input.valueAsNumber)
     sheet.act({do: 'value', signal: name, value: input.valueAsNumber}, `value ${name}`)
   }

@@ -7,6 +7,7 @@ person makes go through `edit`, which also makes the undo step.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import fields, replace
 from typing import Any
@@ -67,7 +68,8 @@ class Workbench(param.Parameterized):
         design = Design(**{name: getattr(self, name) for name in _DESIGN_FIELDS})
         try:
             analysis = Analysis(design, self.unplugged, self.analysis)
-            analysis.dc  # noqa: B018 - the one result nothing on the sheet can do without
+            if not math.isfinite(analysis.dc.output):  # the one result nothing on the sheet can do without
+                raise InvalidDesign("The node equations have no finite solution with these values.")
         except SumwrightError as error:
             self._follows(design=design, problem=str(error))  # the last good analysis stays on the sheet
         else:
