@@ -8,9 +8,8 @@ import re
 
 import pytest
 from axe_playwright_python.sync_playwright import Axe
-from support.browser import chromium
 
-from .serving import served, settled, wait
+from .serving import settled, wait
 
 pytestmark = pytest.mark.browser
 RULES = {
@@ -19,9 +18,8 @@ RULES = {
 
 
 @pytest.fixture(scope="module")
-def place():
-    with served() as (_, url), chromium() as browser:
-        yield browser, url
+def place(server, browser):
+    return browser, server[1]
 
 
 @pytest.fixture
