@@ -132,7 +132,7 @@ def photographs(shots=SHOTS):
     from .serving import served, settled
 
     fonts_are_liberation()
-    with served() as (_, url), chromium() as browser:
+    with served(environment={"LOGNAME": "keeper", "USER": "keeper"}) as (_, url), chromium() as browser:
         for size in SIZES:
             mine = [s for s in shots if s.size == size]
             if not mine:
