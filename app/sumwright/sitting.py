@@ -28,7 +28,7 @@ from sumwright.notebook.settings import settings
 from sumwright.notebook.shelf import the_store
 from sumwright.notebook.sign_in import who_for
 from sumwright.notebook.store import Sheet
-from sumwright.notebook.text import InvalidNotebookFile, canonical, read_json
+from sumwright.notebook.text import InvalidNotebookFile, InvalidText, canonical, clean_line, read_json
 
 log = logging.getLogger("sumwright.sitting")
 
@@ -152,19 +152,24 @@ class Sitting:
         """In a thread of `Autosave`: write the sheet, or begin a notebook with it."""
         with self._making:
             if not self.key:
-                return 1, self._make(snapshot.state)
+                return 1, self._make(snapshot)
         return self.desk.save(self.key, self.number, snapshot, max(revision, 1))
 
     def begin_notebook(self) -> None:
         """Make the notebook that the sheet as it stands goes into, if there is none yet; in a thread."""
         with self._making:
             if not self.key and self.autosave is not None:
-                self.autosave.follow(1, self._make(self.state()))
+                self.autosave.follow(1, self._make(self._snapshot()))
 
-    def _make(self, state: dict[str, Any]) -> str:
-        made = self.desk.new_notebook(self.workbench.title, state)
+    def _make(self, snapshot: Snapshot) -> str:
+        try:
+            title = clean_line("The title", self.workbench.title)
+        except InvalidText:  # no reason to keep nothing: the notebook can be given another one
+            title = "Untitled sheet"
+        made = self.desk.new_notebook(title, snapshot.state, snapshot.history)
         self.key, self.number = made.id, 1
-        self._stored_steps = None  # the history has yet to go there
+        if snapshot.history is None:
+            self._stored_steps = None  # it has yet to go there
         if (page := self._page()) is not None:
             page.extras["place"] = self.place
             page.refresh_sheet()

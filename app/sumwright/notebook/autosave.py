@@ -230,6 +230,7 @@ class _Threads:
                 writers.submit(autosave._run).add_done_callback(_report)
             except RuntimeError:  # the interpreter is shutting down: no new work is taken
                 return
+            del autosave  # else the last sheet saved would be kept in memory until the next one is
 
 
 def _report(future: Future[None]) -> None:

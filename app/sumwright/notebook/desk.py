@@ -89,8 +89,8 @@ class Desk:
         return bundle.export_notebook(self._store, key)
 
     # writing
-    def new_notebook(self, title: str, state: dict[str, Any]) -> Notebook:
-        return self._store.new_notebook(title, self.require("new").name, state)
+    def new_notebook(self, title: str, state: dict[str, Any], history: dict[str, Any] | None = None) -> Notebook:
+        return self._store.new_notebook(title, self.require("new").name, state, history=history)
 
     def new_sheet(self, key: str, title: str, state: dict[str, Any]) -> Sheet:
         return self._store.new_sheet(key, title, self.require("new").name, state)

@@ -108,7 +108,9 @@ class Store:
 
     # notebooks ---------------------------------------------------------------------------------------------------
 
-    def new_notebook(self, title: str, author: str, state: dict[str, Any], *, sheet_title: str = "Sheet 1") -> Notebook:
+    def new_notebook(
+        self, title: str, author: str, state: dict[str, Any], *, history: dict[str, Any] | None = None
+    ) -> Notebook:
         """A new notebook with one sheet."""
         title, author = clean_line("The notebook's title", title), clean_line("The author", author)
         key, now = new_id(), log.utc_now()
@@ -119,7 +121,7 @@ class Store:
                 )
             )
             session.flush()
-            session.add(_sheet_row(key, 1, clean_line("The sheet's title", sheet_title), state, {}, author, now))
+            session.add(_sheet_row(key, 1, "Sheet 1", state, history or {}, author, now))
         return self.notebook(key)
 
     def notebook(self, key: str) -> Notebook:

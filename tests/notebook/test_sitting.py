@@ -1,0 +1,185 @@
+"""A session's place in the notebook, without a server: what is stored comes back, what is not of ours is refused."""
+
+from __future__ import annotations
+
+import gc
+import json
+import threading
+import weakref
+
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+from sumwright.errors import SumwrightError
+from sumwright.files.design import design_document
+from sumwright.model import demo, edits
+from sumwright.model.history import Snapshot as Step
+from sumwright.notebook.desk import Desk
+from sumwright.notebook.people import Person
+from sumwright.page import Page
+from sumwright.sitting import STEPS_MOST, Sitting, read_history, read_state, state_of, step_document
+
+
+@pytest.fixture
+def desk(sqlite_store):
+    return Desk(sqlite_store, lambda: Person("Ines", "keeper"))
+
+
+def page_of(sitting):
+    page = Page(sitting.workbench, sitting.may)
+    page.sit(sitting)
+    return page
+
+
+def moved(sitting, *values):
+    for value in values:
+        sitting.workbench.edit(edits.with_value, "north", value)
+    assert sitting.autosave.wait(10)
+
+
+def test_the_state_comes_back_with_its_history(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    moved(sitting, 1.0, 2.0, 3.0)
+    sitting.workbench.plug("east", True)
+    sitting.workbench.follow_weights("exact")
+    sitting.workbench.symbols = "IEEE 315"
+    sitting.workbench.undo()
+    assert sitting.autosave.wait(10)
+    again = Sitting(desk, sitting.key, 1)
+    assert again.problem == ""
+    assert again.workbench.snapshot == sitting.workbench.snapshot
+    assert again.workbench.symbols == "IEEE 315"
+    assert again.workbench.history.past == sitting.workbench.history.past
+    assert again.workbench.history.future == sitting.workbench.history.future
+    page.close()
+
+
+def test_a_single_change_is_kept_with_its_undo_step_at_the_first_save(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    moved(sitting, 1.0)
+    assert Sitting(desk, sitting.key, 1).workbench.undo()
+    page.close()
+
+
+def test_a_title_that_no_notebook_may_have_does_not_keep_the_sheet_from_being_saved(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    sitting.workbench.title = "a\u202eb"
+    assert sitting.autosave.wait(10)
+    assert desk.notebook(sitting.key).title == "Untitled sheet"
+    page.close()
+
+
+def test_history_is_kept_to_its_newest_steps(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    moved(sitting, *[k / 100 for k in range(STEPS_MOST + 30)])
+    again = Sitting(desk, sitting.key, 1)
+    assert again.workbench.history.past == sitting.workbench.history.past[-STEPS_MOST:]
+    page.close()
+
+
+def test_what_is_looked_at_by_a_reader_is_not_kept(sqlite_store, desk):
+    key = desk.new_notebook("N", state_of(Sitting(desk).workbench)).id
+    reader = Sitting(Desk(sqlite_store, lambda: Person("Rea", "reader")), key, 1)
+    page = page_of(reader)
+    reader.workbench.edit(edits.with_value, "north", 1.5)
+    assert reader.autosave.clean and page.saved["state"] == "reader"
+    assert sqlite_store.sheet(key, 1).revision == 1
+    page.close()
+
+
+def test_an_archived_notebook_is_shown_and_not_written(desk):
+    key = desk.new_notebook("N", state_of(Sitting(desk).workbench)).id
+    desk.archive(key)
+    sitting = Sitting(desk, key, 1)
+    page = page_of(sitting)
+    sitting.workbench.edit(edits.with_value, "north", 1.5)
+    assert sitting.problem == "" and sitting.autosave.clean and "archived" in page.saved["why"]
+    page.close()
+
+
+def test_a_first_entry_and_a_first_change_at_once_make_one_notebook(sqlite_store, desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    threads = [threading.Thread(target=sitting.begin_notebook) for _ in range(4)]
+    for t in threads:
+        t.start()
+    moved(sitting, 1.0)
+    for t in threads:
+        t.join()
+    moved(sitting, 2.0)
+    assert len(sqlite_store.notebooks()) == 1
+    assert sitting.autosave.mark.kind == "saved"
+    page.close()
+
+
+def test_a_closed_session_is_collected(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    page.turn_to("log")
+    moved(sitting, 1.0)
+    gone = [weakref.ref(sitting), weakref.ref(page), weakref.ref(sitting.workbench), weakref.ref(page.folds["log"])]
+    page.close()
+    del sitting, page
+    for _ in range(50):  # what was under way in a thread still holds on to it for a moment
+        gc.collect()
+        if not any(ref() for ref in gone):
+            break
+        threading.Event().wait(0.1)
+    assert [ref() for ref in gone] == [None] * 4
+
+
+@pytest.mark.parametrize(
+    ("change", "says"),
+    [
+        ({"format": "other"}, "'other'; it must be 'sumwright-sheet/1'"),
+        ({"symbols": "crayon"}, "crayon"),
+        ({"unplugged": ["nobody"]}, "cables out of signals"),
+        ({"unplugged": "north"}, "cables out of signals"),
+        ({"follow": []}, "follow of the stored sheet"),
+        ({"design": None}, ""),
+        ({"design": {"signals": []}}, ""),
+    ],
+)
+def test_a_stored_sheet_that_is_none_is_refused_in_one_sentence(change, says):
+    whole = {"format": "sumwright-sheet/1", **step_document(Step(demo.design())), "symbols": "IEC 60617"}
+    read_state(whole)
+    with pytest.raises(SumwrightError) as caught:
+        read_state(whole | change)
+    assert says in str(caught.value)
+
+
+_ANY = st.recursive(
+    st.none() | st.booleans() | st.integers() | st.floats() | st.text(max_size=6),
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.text(max_size=6), inner, max_size=3),
+    max_leaves=6,
+)
+
+
+@settings(max_examples=200, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+@given(data=st.data())
+def test_any_value_anywhere_in_a_stored_sheet_is_taken_or_refused(data):
+    whole = {"format": "sumwright-sheet/1", **step_document(Step(demo.design())), "symbols": "IEC 60617"}
+    held = json.loads(json.dumps(whole))
+    place = held
+    while isinstance(place, dict | list) and place:
+        key = data.draw(st.sampled_from(sorted(place) if isinstance(place, dict) else range(len(place))))
+        if data.draw(st.booleans()) or not isinstance(place[key], dict | list) or not place[key]:
+            place[key] = data.draw(_ANY)
+            break
+        place = place[key]
+    try:
+        step, symbols = read_state(held)
+    except SumwrightError as error:
+        assert str(error)
+    else:
+        assert design_document(step.design)["signals"] and symbols
+
+
+@settings(max_examples=100, deadline=None)
+@given(st.dictionaries(st.sampled_from(["past", "future", "x"]), _ANY | st.lists(st.text(max_size=20), max_size=4)))
+def test_any_history_is_read_or_left_out(held):
+    assert read_history(held) == ([], [])
