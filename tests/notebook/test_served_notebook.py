@@ -272,6 +272,35 @@ def test_kill_the_server_in_the_middle_of_a_drag_and_lose_at_most_a_second(chrom
     server.stop()
 
 
+def test_a_server_that_is_told_to_stop_saves_what_waits(chromium, tmp_path):
+    server = Server(tmp_path / "stopped", plain=True)
+    context = chromium.new_context()
+    page = begin(context, server, 5.0)
+    key = re.search("notebook=([a-z2-7]{16})", page.url)[1]
+    act(page, do="value", signal="north", value=9.25)
+    server.stop()
+    state = Store(server.data / "notebook.db").sheet(key, 1).state
+    assert next(s["value"] for s in state["design"]["signals"] if s["name"] == "north") == 9.25
+    context.close()
+
+
+def test_a_search_over_all_notebooks_leads_to_the_entry(context, server):
+    page = begin(context, server)
+    turn(page, "log")
+    page.get_by_label("Text of the entry").fill("an unmistakable zebrawood enclosure")
+    page.get_by_role("button", name="Write it").click()
+    page.wait_for_selector("#entry-1")
+    page.goto(server.url + "#log")
+    page.get_by_role("button", name="Notebooks").click()
+    page.get_by_label("Search the notebooks").fill("ZEBRAWOOD")
+    found = page.locator(".hits li")
+    found.first.wait_for()
+    assert "note: an unmistakable zebrawood enclosure" in found.first.inner_text()
+    found.first.locator("a").click()
+    page.wait_for_selector("#entry-1.asked")
+    assert "zebrawood" in page.locator("#entry-1").inner_text()
+
+
 def test_a_store_that_cannot_be_written_is_told_and_saved_when_it_can(chromium, tmp_path):
     server = Server(tmp_path / "locked", plain=True)
     context = chromium.new_context()

@@ -147,20 +147,30 @@ export function mount(node, sheet) {
   }
   const heading = el('h3', {}), sheets = el('p', {class: 'sheets'})
   const books = el('ol', {class: 'books', 'aria-label': 'Notebooks'})
-  const bookFind = el('input', {class: 'blank wide', type: 'search', 'aria-label': 'Search the notebooks', placeholder: 'search titles and people', maxlength: 200})
+  const hits = el('ol', {class: 'books hits', 'aria-label': 'Entries found in all notebooks'})
+  const bookFind = el('input', {class: 'blank wide', type: 'search', 'aria-label': 'Search the notebooks', placeholder: 'search all: titles, notes, parts, people', maxlength: 200})
   const archived = el('input', {type: 'checkbox', id: 'log-archived'})
   const askBooks = () => ask('books', {text: bookFind.value, archived: archived.checked})
   bookFind.addEventListener('input', () => { clearTimeout(soon); soon = setTimeout(askBooks, 250) })
   archived.addEventListener('change', askBooks)
-  const shelf = el('div', {hidden: true}, el('h3', {text: 'Notebooks'}), bookFind, el('label', {class: 'soft'}, archived, ' archived ones'), books)
+  const shelf = el('div', {hidden: true}, el('h3', {text: 'Notebooks'}), bookFind, el('label', {class: 'soft'}, archived, ' archived ones'), books, hits)
   const who = el('p', {class: 'soft'})
 
   const go = done => { if (done.go) location.href = link(done.go, 'curves') }
-  const address = (id, number) => { const url = new URL(link({notebook: id, sheet: number}, 'log')); return url.search + url.hash }
+  const address = (id, number, entry = null) => { const url = new URL(link({notebook: id, sheet: number}, 'log', entry)); return url.search + url.hash }
 
-  function showBooks(found) {
+  function showBooks(found, entries) {
     shelf.hidden = !found
     if (!found) return
+    const rows = keyed(hits, entries.map(e => `${e.id} ${e.number}`), () => {
+      const open = el('a', {class: 'act'}), about = el('span', {class: 'soft'}), said = el('span', {})
+      return {node: el('li', {}, open, ' ', said, ' ', about), open, about, said}
+    })
+    for (const e of entries) {
+      const row = rows.get(`${e.id} ${e.number}`)
+      setText(row.open, `${e.title}, entry ${e.number}`); setAttr(row.open, 'href', address(e.id, e.sheet, e.number))
+      setText(row.said, e.summary); setText(row.about, `${e.by}, ${clock(e.at)}`)
+    }
     const items = keyed(books, found.map(n => n.id), () => {
       const open = el('a', {class: 'act'}), about = el('span', {class: 'soft'}), act = el('button', {class: 'act', text: ''})
       return {node: el('li', {}, open, ' ', about, ' ', act), open, about, act}
@@ -232,7 +242,7 @@ export function mount(node, sheet) {
       fillSelect(a, String(now.frozen?.[0]?.[0] ?? 'sheet')); fillSelect(b, 'sheet')
       choose.hidden = !(now.frozen ?? []).length
       showCompared(now.compared)
-      showBooks(now.books)
+      showBooks(now.books, now.hits ?? [])
       setText(who, may.name ? `${may.name}, ${may.role}` : '')
       settle(now.done)
       if (asked && rows.get(Number(asked))) {

@@ -7,6 +7,7 @@ succeeds; a sheet that somebody else saved in between is never written over: it 
 
 from __future__ import annotations
 
+import atexit
 import heapq
 import itertools
 import logging
@@ -246,5 +247,14 @@ def _after_fork() -> None:
     _threads = _Threads()
 
 
+def _before_the_end() -> None:
+    """The server was told to stop: what waits for its turn is saved now."""
+    with _threads._change:
+        left = [autosave for _, _, autosave in _threads._due]
+    for autosave in left:
+        autosave._run()
+
+
+atexit.register(_before_the_end)
 if hasattr(os, "register_at_fork"):
     os.register_at_fork(after_in_child=_after_fork)

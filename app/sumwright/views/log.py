@@ -27,6 +27,7 @@ from .held import hold_design
 
 PAGE = 100  # entries shown at first, and with each "more"
 BOOKS = 60  # notebooks in the list
+HITS = 40  # entries found in all notebooks
 PART = 1_500_000  # bytes of a file in one message
 SHEET = "sheet"  # what stands for the sheet at work where two designs are compared
 
@@ -42,6 +43,7 @@ class Log(Fold):
         self._most = PAGE
         self._query = ""
         self._books: list[dict[str, Any]] | None = None
+        self._hits: list[dict[str, Any]] = []
         self._listing: dict[str, Any] = {}
         self._compared: dict[str, Any] | None = None
         self._done: dict[str, Any] | None = None
@@ -60,7 +62,7 @@ class Log(Fold):
         if mark is not None and mark.theirs is not None:
             conflict = {"by": mark.theirs.saved_by, "at": mark.theirs.saved_at}
         return {
-            **self._listing, "place": place, "query": self._query, "books": self._books, "compared": self._compared,
+            **self._listing, "place": place, "query": self._query, "books": self._books, "hits": self._hits, "compared": self._compared,
             "done": self._done, "conflict": conflict, "may": self._may(),
         }  # fmt: skip
 
@@ -243,15 +245,25 @@ class Log(Fold):
         text, archived = fields.text(message, "text", 200), message.get("archived") is True
         desk = self._sitting.desk
 
-        def read() -> list[dict[str, Any]]:
-            return [
-                {"id": n.id, "title": n.title, "by": n.changed_by, "at": n.changed_at, "entries": n.length,
-                 "sheets": [list(s) for s in n.sheets[:20]], "archived": n.archived_at is not None}
+        def read() -> dict[str, list[dict[str, Any]]]:
+            books = [
+                {
+                    "id": n.id, "title": n.title, "by": n.changed_by, "at": n.changed_at, "entries": n.length,
+                    "sheets": [list(s) for s in n.sheets[:20]], "archived": n.archived_at is not None,
+                }
                 for n in desk.notebooks(text=text, archived=archived)[:BOOKS]
             ]  # fmt: skip
+            found = [
+                {
+                    "id": n.id, "title": n.title, "number": e.number, "sheet": e.sheet or n.sheets[0][0], "by": e.author,
+                    "at": e.at, "summary": f"{e.kind}: {e.summary}",
+                }
+                for n, e in ([] if archived else desk.search(text)[:HITS])
+            ]  # fmt: skip
+            return {"books": books, "hits": found}
 
-        def listed(found: list[dict[str, Any]]) -> dict[str, Any]:
-            self._books = found
+        def listed(found: dict[str, list[dict[str, Any]]]) -> dict[str, Any]:
+            self._books, self._hits = found["books"], found["hits"]
             return {}
 
         self._do(message, read, listed)
