@@ -17,7 +17,7 @@ from typing import Any
 
 import jinja2
 import numpy as np
-from markupsafe import Markup
+from markupsafe import Markup, escape
 
 from sumwright import __version__
 from sumwright.engine.analysis import Analysis
@@ -146,7 +146,7 @@ def design_report(
         shares=charts.shares(analysis).svg(), histogram=histogram, gain=charts.gain_and_phase(analysis).svg(),
         loops=charts.loops(analysis).svg(), step=step_picture, step_caption=step_caption, sine=sine_picture, sine_caption=sine_caption,
         full_power=_full_power(analysis), noise=charts.noise_density(analysis).svg(), cautions=cautions(analysis),
-        assumptions=ASSUMPTIONS, decisions=list(decisions), design_text=write_design(design),
+        assumptions=ASSUMPTIONS, decisions=list(decisions), design_text=escape(write_design(design)),
     )  # fmt: skip
 
 
@@ -162,8 +162,16 @@ def render(template: str, kind: str, head: About, **values: Any) -> str:
 def _environment() -> jinja2.Environment:
     return jinja2.Environment(
         loader=jinja2.PackageLoader("sumwright.report", "templates"), autoescape=True, undefined=jinja2.StrictUndefined,
+        finalize=_together,
         trim_blocks=True, lstrip_blocks=True,
     )  # fmt: skip
+
+
+def _together(value: Any) -> Any:
+    """A number stays on the line of its unit: the thin space between them becomes one that does not break."""
+    if isinstance(value, str) and not isinstance(value, Markup):
+        return value.replace(THIN, "\u202f")
+    return value
 
 
 def _plain_css(text: str) -> Markup:
