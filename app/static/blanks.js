@@ -65,6 +65,8 @@ export class Blank {
   drop() { if (blanks.get(this.field) === this) blanks.delete(this.field) }
 }
 
+export const isRefused = field => blanks.get(field)?.refused ?? false
+
 // After a frame: the blanks whose acts it answers were taken, or refused.
 export function settle(fields, refusals) {
   const refused = new Map(refusals.filter(r => r.field).map(r => [r.field, r]))

@@ -2,7 +2,7 @@
 
 import {el, forgetSizes, setAttr, setText, setClass} from './dom.js'
 import {Line} from './wire.js'
-import {Blank, settle} from './blanks.js'
+import {Blank, isRefused, settle} from './blanks.js'
 import {THIN, fixed} from './format.js'
 import * as strips from './strips.js'
 import * as stage from './stage.js'
@@ -64,7 +64,7 @@ function enliven({signals, stage}) {
 
 // a sentence of the sheet's own stays until the next thing is done
 function settleLater(frame, fields) {
-  return () => { if (frame.seq && fields.size === 0 && noted.field === null && Date.now() - noted.at > 1500) note(null, null) }
+  return () => { if (frame.seq && !frame.refusals?.length && !isRefused(noted.field) && Date.now() - noted.at > 1500) note(null, noted.field) }
 }
 
 function heard(reply) {
@@ -192,6 +192,8 @@ new ResizeObserver(([main]) => {
 for (const part of PARTS) part.mount?.(sheet)
 mountFolds()
 apply(start)
-turn(location.hash.slice(1) || start.folds[0]?.key)
+// a phone at the board shows the bench alone
+const small = matchMedia('(max-width: 640px)').matches && start.folds.some(f => f.key === 'bench')
+turn(location.hash.slice(1) || (small ? 'bench' : start.folds[0]?.key))
 document.fonts?.ready.then(() => draw(true))
 window.sumwright = sheet

@@ -9,6 +9,7 @@ import {openDrawer} from './drawer.js'
 let sheet, box
 const blanks = {}
 const words = {}
+let asked = false // an arrangement was chosen and is not answered yet
 
 const figure = (group, name, label, unit, cls = '') => {
   const blank = blanks[`${group} ${name}`] = new Blank(sheet, {
@@ -20,7 +21,7 @@ const figure = (group, name, label, unit, cls = '') => {
 export function mount(theSheet) {
   sheet = theSheet
   const word = (name, drawer, label) => (words[name] = el('button', {class: 'act', 'aria-label': label, onclick: () => openDrawer(drawer)}))
-  const ways = words.ways = el('select', {class: 'blank ways', 'aria-label': 'Arrangement', onchange: () => sheet.act({do: 'arrange', arrangement: ways.value, field: 'arrangement'})})
+  const ways = words.ways = el('select', {class: 'blank ways', 'aria-label': 'Arrangement', onchange: () => { asked = true; sheet.act({do: 'arrange', arrangement: ways.value, field: 'arrangement'}) }})
   const symbols = words.symbols = ['IEC 60617', 'IEEE 315'].map(name => el('button', {text: name, onclick: () => sheet.act({do: 'symbols', symbols: name})}))
   box = el('dl', {class: 'plate', id: 'plate'},
     ...pair('stage', ways),
@@ -59,7 +60,8 @@ function fillWays(s) {
     if (!s.arrangement) ways.unshift(el('option', {value: '', text: 'of its own', disabled: true}))
     words.ways.replaceChildren(...ways)
   }
-  if (document.activeElement !== words.ways && words.ways.value !== (s.arrangement ?? '')) words.ways.value = s.arrangement ?? ''
+  if ((asked || document.activeElement !== words.ways) && words.ways.value !== (s.arrangement ?? '')) words.ways.value = s.arrangement ?? ''
+  asked = false
 }
 
 // beside the drawing if it fits there, else across the foot of the drawing

@@ -221,6 +221,16 @@ def test_an_arrangement_that_cannot_is_refused_with_one_that_can_to_take(sheet):
     assert number(strip(sheet, "a").locator(".made").text_content()) == pytest.approx(0.5, rel=0.02)
 
 
+def test_an_arrangement_chosen_that_cannot_is_put_back(sheet):
+    sheet.locator('[aria-label="Arrangement"]').select_option("inverting")
+    settled(sheet)
+    assert sheet.locator('[aria-label="Arrangement"]').input_value() == "mixed-sign"
+    assert "positive" in sheet.locator("#note").text_content() or "negative" in sheet.locator("#note").text_content()
+    sheet.locator("#note").get_by_role("button", name="take two-stage").click()
+    settled(sheet)
+    assert sheet.locator('[aria-label="Arrangement"]').input_value() == "two-stage"
+
+
 def drawn(text, arrangement, title="A test stage"):
     design = sums.new_design(sums.read_sum(text), demo.op_amp(), title)
     return edits.with_arrangement(design, arrangement)

@@ -218,7 +218,7 @@ export function mount(node, sheet) {
     const t = s.told
     setText(weighing, s.busy ? 'weighing…' : '')
     if (!t) { suspects.set([]); return }
-    const list = s.taken ? t.suspects.filter((x, i) => i < 3 || x.probability >= .005 || x.group === 1).slice(0, 6) : t.suspects.slice(0, 1)
+    const list = s.taken ? t.suspects.filter((x, i) => i < 1 || x.probability >= .005).slice(0, 6) : t.suspects.slice(0, 1)
     const rest = 1 - list.reduce((sum, x) => sum + x.probability, 0)
     suspects.set([...list.map(x => [[fixed(x.probability, 2), 'r'], [x.fault === 'none' ? 'nothing wrong' : [x.part, x.fault].filter(Boolean).join(', '), 'who'], [x.estimate === null ? '' : resistor(x.estimate), 'r']]),
       ...(rest > .004 ? [[[fixed(rest, 2), 'r'], ['anything else', 'who soft'], ['', '']]] : [])])
@@ -227,7 +227,10 @@ export function mount(node, sheet) {
     setText(told, first ? first.explain : '')
     setText(apart, t.tell && s.taken ? `These readings cannot part the first ${list.filter(x => x.group === 1).length + t.more}. ${t.tell}` : '')
     const live = Object.entries(t.next).map(([n, v]) => `${n} ${volts(v)}`).join(', ')
-    next.replaceChildren(el('b', {text: 'Next reading. '}), `${live}${THIN}V, worth ${fixed(t.bits, 2)} bit. `, take)
+    const spent = s.taken && t.bits < .01
+    next.replaceChildren(el('b', {text: 'Next reading. '}), spent
+      ? t.tell ? 'No reading of the output tells more; the measurement above does.' : 'Nothing more to tell.'
+      : `${live}${THIN}V, worth ${fixed(t.bits, 2)} bit. `, spent ? '' : take)
     notes.replaceChildren(...t.notes.map(text => el('p', {class: 'fit-note', text})))
   }
 

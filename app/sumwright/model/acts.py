@@ -322,6 +322,6 @@ ACTS: dict[str, Callable[[Workbench, dict], dict | None]] = {
 # What anybody who can see the sheet may do: it changes nothing that is kept.
 FREE = {"let_go", "on", "symbols", "theme", "save", "read_sum"}
 # Acts that can be done again with another arrangement when the present one cannot make the weights.
-RETAKEN = {"weight", "offset", "add", "remove"}
+RETAKEN = {"weight", "offset", "add", "remove", "arrange"}
 
 __all__ = ["ACTS", "FREE", "RETAKEN", "checked"]
