@@ -30,7 +30,9 @@ VERBS = (
     Verb("analyse", "sumwright.verbs.analyse", "everything the design does: DC, headroom, errors, AC, noise, heat"),
     Verb("realise", "sumwright.verbs.realise", "resistors that can be bought, or are in the drawer, best set first"),
     Verb("plan", "sumwright.verbs.plan", "the bring-up run: what to apply, what to expect, between which limits"),
-    Verb("diagnose", "sumwright.verbs.diagnose", "fit, verdicts, suspects and the next reading, from readings of a board"),
+    Verb(
+        "diagnose", "sumwright.verbs.diagnose", "fit, verdicts, suspects and the next reading, from readings of a board"
+    ),
     Verb("report", "sumwright.verbs.report", "the design report: one HTML file that stands alone and prints well"),
     Verb("serve", "sumwright.verbs.serve", "the sheet in a browser, for one person or a lab"),
     Verb(

@@ -174,4 +174,4 @@ class Design:
 __all__ = [
     "ARRANGEMENTS", "OUTPUT", "REFERENCE", "Ambient", "Cell", "Design", "Leg", "Load", "OpAmp", "Reference",
     "ResistorKind", "Signal", "Supply", "Target", "cell_name", "fields", "replace",
-]
+]  # fmt: skip
