@@ -48,9 +48,9 @@ def test_every_step_has_its_limits_and_two_blanks():
     text = bring_up_sheet(Analysis(example()), {"steps": steps}, author="R. Okafor", now=NOON)
     assert text.count('<td class="write') == 2 * len(steps)
     for i in range(4):
-        assert f"{1.0 + i:.3f}\u202fV" in text and f"{1.5 + i:.3f}\u202fV" in text
+        assert f"{1.0 + i:.3f}\u00a0V" in text and f"{1.5 + i:.3f}\u00a0V" in text
     assert "signature" in text and "Not for protection" in text
-    assert "ridge 10.000\u202fV" in text and "wind 0.000" not in text
+    assert "ridge 10.000\u00a0V" in text and "wind 0.000" not in text
 
 
 def test_a_step_of_nothing_says_so():

@@ -168,9 +168,9 @@ def _environment() -> jinja2.Environment:
 
 
 def _together(value: Any) -> Any:
-    """A number stays on the line of its unit: the thin space between them becomes one that does not break."""
+    """A number stays on the line of its unit: the space between them does not break."""
     if isinstance(value, str) and not isinstance(value, Markup):
-        return value.replace(THIN, "\u202f")
+        return value.replace(THIN, "\u00a0")
     return value
 
 
