@@ -33,7 +33,7 @@ export function margin(x, unit) {
   if (missing(x)) return 'not given'
   const plus = x > 0 ? '+' : ''
   if (unit === 'V') return Math.abs(x) < 0.02 ? plus + engineering(x, 'V') : signed(x) + THIN + 'V'
-  if (unit === '°') return signed(x, 0) + '°'
+  if (unit === '°') return signed(x, Math.abs(x) < 1 ? 1 : 0) + '°'
   if (unit === '°C' || unit === 'K') return signed(x, 0) + THIN + unit
   if (unit === '') return plus + engineering(x, '').replace(THIN, '')
   if (unit === '%') return signed(x, 2) + THIN + '%'
@@ -45,7 +45,7 @@ export function verdict(x, unit) {
   const size = Math.abs(x)
   if (['V', '%'].includes(unit) && size >= 99.95) return fixed(size, 0) + THIN + unit
   if (unit === 'V') return size >= 0.0995 ? fixed(size, 2) + THIN + 'V' : engineering(size, 'V', 2)
-  if (unit === '°') return fixed(size, 0) + '°'
+  if (unit === '°') return fixed(size, size < 1 ? 1 : 0) + '°'
   if (unit === '°C' || unit === 'K') return fixed(size, 0) + THIN + unit
   if (unit === '%') return fixed(size, 2) + THIN + '%'
   return engineering(size, unit, 2).trimEnd()

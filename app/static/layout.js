@@ -27,7 +27,7 @@ export function layout({width, row, head, foot, cells, rows}) {
     L.cells.push({bus, xm, tri, tip, out, half: (many ? 36 : 42) * k})
     x = out + 44 * q
   }
-  L.inner = many ? Math.max(width, L.cells[L.cells.length - 1].out + 70 * q) : width
+  L.inner = many ? Math.max(width, L.cells[L.cells.length - 1].out + 64 * q) : width
 
   // heights
   for (let c = cells.length - 1; c >= 0; c--) {
