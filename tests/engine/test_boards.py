@@ -95,11 +95,14 @@ def test_yield_counts_the_boards_inside():
     np.testing.assert_array_equal(errors, [-2.0, -1.0, 0.0, 1.0, 1.5])  # sorted a copy
 
 
-@pytest.mark.parametrize("draws", [2, 999, 1000, 1001, 12_345])
+@pytest.mark.parametrize("draws", [2, 999, 12_345, 32_000, 100_001])
 def test_the_interval_from_the_tails_is_that_of_a_full_sort(draws):
     errors = np.random.default_rng(draws).gamma(2.0, size=draws)
     found = statistics(errors, 0, 1.0)
     assert (found.low_95, found.high_95) == boards.shortest_interval(errors)
+    rising = np.sort(errors)  # the first boards tell nothing of the tails
+    found = statistics(rising, 0, 1.0)
+    assert (found.low_95, found.high_95) == boards.shortest_interval(rising)
 
 
 def test_progress_can_stop_a_run():
