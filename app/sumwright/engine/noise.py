@@ -116,45 +116,65 @@ def _powers(net, f):
         error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
     )  # fmt: skip
     h = sol.output[..., -1, :].T.reshape(cells, 4, -1)  # to the output from e, m, p, o
-    h2 = h.real**2 + h.imag**2
+    # every term is a number times one of a few squared transfers, some with a 1/f part
+    bases: list[np.ndarray] = []
+    known: dict[tuple, int] = {}
+
+    def base(key, transfer):
+        """Index of |transfer()|², worked out once."""
+        if key not in known:
+            t = transfer()
+            known[key] = len(bases)
+            bases.append(t.real**2 + t.imag**2)
+        return known[key]
 
     names: list[str] = []
     kinds: list[str] = []
-    rows: list[np.ndarray] = []
-    e2 = amp.noise_voltage**2 * (1.0 + amp.noise_voltage_corner / f)
-    i2 = amp.noise_current**2 * (1.0 + amp.noise_current_corner / f)
+    factors: list[float] = []
+    which: list[int] = []
 
-    def add(name, kind, power):
+    def add(name, kind, factor, index):
         names.append(name)
         kinds.append(kind)
-        rows.append(power)
+        factors.append(factor)
+        which.append(index)
 
     for k in range(cells):
         suffix = f", cell {k + 1}" if cells > 1 else ""
-        add(f"op amp voltage{suffix}", "op amp voltage", e2 * h2[k, 0])
-        add(f"op amp current into −{suffix}", "op amp current", i2 * h2[k, 1])
-        add(f"op amp current into +{suffix}", "op amp current", i2 * h2[k, 2])
+        add(f"op amp voltage{suffix}", "op amp voltage", amp.noise_voltage**2, base((k, "e"), lambda k=k: h[k, 0]))
+        for node, sign in ((1, "−"), (2, "+")):
+            index = base((k, node), lambda k=k, node=node: h[k, node])
+            add(f"op amp current into {sign}{suffix}", "op amp current", amp.noise_current**2, index)
+    own = len(names)
     four_kt = 4.0 * BOLTZMANN * (design.ambient.nominal + ZERO_CELSIUS)
     ups = {f"cell {j + 1}": j for j in range(cells)}
     rs_of = {s.name: net.source_resistances[i] for i, s in enumerate(design.signals)}
     rs_of["reference"] = net.source_resistances[-1]
-    for part, r in zip(net.parts, net.resistances, strict=True):
-        if not np.isfinite(r):
+    for part, r in zip(net.parts, net.resistances.tolist(), strict=True):
+        if r == np.inf:
             continue
         k = part.cell
         rs = float(rs_of.get(part.source, 0.0)) if part.source else 0.0
         if r + rs <= 0:
             continue
-        node = h[k, 2] if part.kind.startswith("plus") else h[k, 1]
+        node = 2 if part.kind.startswith("plus") else 1
         if part.kind == "feedback":
-            node = node - h[k, 3]
+            index = base((k, "feedback"), lambda k=k: h[k, 1] - h[k, 3])
         elif part.source in ups:
-            node = node - h[ups[part.source], 3]
-        t2 = (node.real**2 + node.imag**2) / (r + rs) ** 2
-        add(part.name, "resistor", four_kt * r * t2)
+            j = ups[part.source]
+            index = base((k, node, j), lambda k=k, node=node, j=j: h[k, node] - h[j, 3])
+        else:
+            index = base((k, node), lambda k=k, node=node: h[k, node])
+        add(part.name, "resistor", four_kt * r / (r + rs) ** 2, index)
         if rs > 0:
-            add(f"{part.source} source resistance" + _where(part, cells), "source", four_kt * rs * t2)
-    return tuple(names), tuple(kinds), np.array(rows)
+            add(
+                f"{part.source} source resistance" + _where(part, cells), "source", four_kt * rs / (r + rs) ** 2, index
+            )  # fmt: skip
+    power = np.array(factors)[:, None] * np.array(bases)[which]
+    voltage, current = (1.0 + corner / f for corner in (amp.noise_voltage_corner, amp.noise_current_corner))
+    for i in range(own):
+        power[i] *= voltage if i % 3 == 0 else current
+    return tuple(names), tuple(kinds), power
 
 
 def _where(part, cells):
