@@ -284,6 +284,19 @@ def test_a_server_that_is_told_to_stop_saves_what_waits(chromium, tmp_path):
     context.close()
 
 
+def test_the_table_of_an_entry_comes_as_a_file(context, server, tmp_path):
+    page = begin(context, server)
+    key = re.search("notebook=([a-z2-7]{16})", page.url)[1]
+    store, table = Store(server.data / "notebook.db"), "north,output\n1.0,0.14\n"
+    store.append(key, "readings", {"title": "Corner by corner", "csv": table}, "Ines", sheet=1)
+    turn(page, "log")
+    with page.expect_download() as download:
+        page.get_by_role("button", name="Table of entry 1 as a file").click()
+    download.value.save_as(tmp_path / "r.csv")
+    assert download.value.suggested_filename == "readings-1.csv"
+    assert (tmp_path / "r.csv").read_text() == table
+
+
 def test_a_search_over_all_notebooks_leads_to_the_entry(context, server):
     page = begin(context, server)
     turn(page, "log")

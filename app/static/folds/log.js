@@ -68,10 +68,11 @@ export function mount(node, sheet) {
       else setText(body, e.text)
       acts.replaceChildren(
         ...(e.kind === 'frozen' ? [
-          el('button', {class: 'act', text: 'Compare', 'aria-label': `Compare frozen ${e.letter} with the sheet`, onclick: () => { a.value = e.number; b.value = 'sheet'; runCompare() }}),
+          el('button', {class: 'act', text: 'Compare', 'aria-label': `Compare frozen ${e.letter} with the sheet`, onclick: () => { a.value = e.number; b.value = 'sheet'; a.__chosen = b.__chosen = true; runCompare() }}),
           el('button', {class: 'act', text: 'Hold beside', 'aria-label': `Hold frozen ${e.letter} beside the sheet in Budget and Response`, onclick: () => ask('hold', {number: e.number}, done => done.held && sheet.note(`Frozen ${e.letter} is held beside the sheet: Budget, Compare, and the plots of Response show what moved.`))}),
           el('button', {class: 'act', text: 'Put on the sheet', 'aria-label': `Put frozen ${e.letter} on the sheet`, onclick: () => ask('use', {number: e.number}, done => done.used && sheet.note(`Frozen ${e.letter} is on the sheet; Undo takes it back.`))}),
         ] : []),
+        ...(e.table ? [el('button', {class: 'act', text: 'CSV', 'aria-label': `Table of entry ${e.number} as a file`, onclick: () => ask('table', {number: e.number}, done => fetchParts(done.file))})] : []),
         el('button', {class: 'act', text: 'Correct', 'aria-label': `Correct entry ${e.number}`, onclick: () => { correcting = e.number; sayKind(); text.focus() }}),
         el('button', {class: 'act', text: 'Link', 'aria-label': `Copy a link to entry ${e.number}`, onclick: () => copied(link(shown.place, 'log', e.number))}))
     }}
@@ -82,7 +83,7 @@ export function mount(node, sheet) {
   const a = el('select', {class: 'blank', 'aria-label': 'Compare this'}), b = el('select', {class: 'blank', 'aria-label': 'with this'})
   const side = v => v === 'sheet' ? v : Number(v)
   const runCompare = () => ask('compare', {a: side(a.value), b: side(b.value)})
-  for (const s of [a, b]) s.addEventListener('change', runCompare)
+  for (const s of [a, b]) s.addEventListener('change', () => { s.__chosen = true; runCompare() })
   const table = el('tbody', {}), headA = el('th', {class: 'r'}), headB = el('th', {class: 'r'})
   const compared = el('table', {class: 'compared'}, el('thead', {}, el('tr', {}, el('th', {}), headA, headB)), table)
   const choose = el('p', {class: 'acts'}, 'Compare ', a, ' with ', b)
@@ -98,7 +99,7 @@ export function mount(node, sheet) {
     const spelled = JSON.stringify(options)
     if (node.__spelled === spelled) return
     node.__spelled = spelled
-    const had = node.value || keep
+    const had = node.__chosen && node.value ? node.value : keep // the newest frozen one, until somebody chose
     node.replaceChildren(...options.map(([value, label]) => el('option', {value, text: label})))
     node.value = options.some(o => o[0] === had) ? had : 'sheet'
   }
@@ -258,7 +259,7 @@ export function mount(node, sheet) {
       if (reply.part !== undefined && taking) {
         taking.got.push(Uint8Array.from(atob(reply.data), c => c.charCodeAt(0)))
         if (taking.got.length < taking.parts) { sheet.fold({ask: 'part', part: taking.got.length}); return }
-        const url = URL.createObjectURL(new Blob(taking.got, {type: 'application/zip'}))
+        const url = URL.createObjectURL(new Blob(taking.got, {type: taking.name.endsWith('.csv') ? 'text/csv' : 'application/zip'}))
         el('a', {href: url, download: taking.name}).click()
         setTimeout(() => URL.revokeObjectURL(url), 10000)
         taking = null

@@ -317,6 +317,19 @@ class Log(Fold):
 
         self._do(message, lambda: desk.export(key), packed)
 
+    def _table(self, message: dict) -> None:
+        """The readings or the capture of an entry, as they were written."""
+        key, number, desk = self._key(), fields.whole(message, "number", 1, 10**7), self._sitting.desk
+        desk.require("export")
+
+        def packed(entry: Entry) -> dict[str, Any]:
+            if "csv" not in entry.body:
+                return {"refused": f"Entry {number} is a {entry.kind}; it holds no table."}
+            self._file = entry.body["csv"].encode("utf-8")
+            return {"file": {"parts": max(1, -(-len(self._file) // PART)), "name": f"{entry.kind}-{number}.csv"}}
+
+        self._do(message, lambda: desk.entry(key, number), packed)
+
     def _part(self, message: dict) -> dict[str, Any]:
         k = fields.whole(message, "part", 0, 10**4)
         data = self._file[k * PART : (k + 1) * PART]
@@ -360,7 +373,7 @@ _ASKED: dict[str, Callable[[Log, dict], dict | None]] = {
     "write": Log._write, "freeze": Log._freeze, "search": Log._search, "more": Log._more, "compare": Log._compare,
     "conflict": Log._conflict, "resolve": Log._resolve, "use": Log._use, "hold": Log._hold, "books": Log._list_books,
     "new book": Log._new_book, "new sheet": Log._new_sheet, "rename": Log._rename, "archive": Log._archive,
-    "verify": Log._verify, "export": Log._export, "part": Log._part, "import": Log._import,
+    "verify": Log._verify, "export": Log._export, "table": Log._table, "part": Log._part, "import": Log._import,
 }  # fmt: skip
 
 
@@ -384,6 +397,8 @@ def shown_entry(entry: Entry, letters: dict[int, str]) -> dict[str, Any]:
         row["html"] = note_html(entry.body["text"])
     else:
         row["text"] = str(entry.body.get("title", ""))
+    if "csv" in entry.body:
+        row["table"] = True
     if entry.kind == "frozen":
         row["letter"] = letters.get(entry.number, "")
     if entry.kind == "correction":
