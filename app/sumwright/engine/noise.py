@@ -7,6 +7,7 @@ four injections a cell carry every term. Sources: Nyquist, Phys. Rev. 32 (1928):
 
 from __future__ import annotations
 
+import math
 from itertools import pairwise
 from typing import NamedTuple
 
@@ -186,28 +187,26 @@ _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(8)
 
 def _quadrature(low, high, corners):
     """Frequencies and weights for ∫ S(f) df from `low` to `high`, panels in log f."""
-    a, b = np.log(low), np.log(high)
-    inner = np.log(corners[(corners > low) & (corners < high)]) if len(corners) else np.zeros(0)
-    edges = np.unique(np.concatenate([[a, b], inner]))
-    fine = []
+    a, b = math.log(low), math.log(high)
+    edges = [a, *sorted(x for x in map(math.log, corners) if a < x < b), b]
+    middles, halves = [], []
     for p, q in pairwise(edges):
-        n = max(1, int(np.ceil((q - p) / 2.4)))
-        fine.append(p + (q - p) * np.arange(n) / n)
-    fine = np.append(np.concatenate(fine), b)
-    half = 0.5 * np.diff(fine)
-    x = (fine[:-1] + half)[:, None] + half[:, None] * _NODES
-    f = np.exp(x)
-    return f.ravel(), (half[:, None] * _WEIGHTS * f).ravel()
+        n = max(1, math.ceil((q - p) / 2.4))
+        half = 0.5 * (q - p) / n
+        middles += [p + (2 * i + 1) * half for i in range(n)]
+        halves += [half] * n
+    half = np.array(halves)[:, None]
+    f = np.exp(np.array(middles)[:, None] + half * _NODES)
+    return f.ravel(), (half * _WEIGHTS * f).ravel()
 
 
 def _corners(net):
     """Where the response turns sharply [Hz]: around each resonant closed-loop pole."""
-    p = poles(net)
-    p = p[p.imag > 0]
-    if len(p) == 0:
-        return np.zeros(0)
-    f0 = np.abs(p) / (2 * np.pi)
-    damping = np.clip(np.abs(p.real) / np.abs(p), 1e-4, 1.0)
-    spread = np.array([-8.0, -2.5, -0.8, 0.0, 0.8, 2.5, 8.0])
-    near = f0[:, None] * np.exp(spread * np.minimum(damping, 0.4)[:, None])
-    return np.unique(near[damping < 0.8])
+    out = []
+    for p in poles(net).tolist():
+        size = abs(p)
+        damping = max(abs(p.real) / size, 1e-4) if size else 1.0
+        if p.imag > 0 and damping < 0.8:
+            spread = min(damping, 0.4)
+            out += [size / (2 * math.pi) * math.exp(x * spread) for x in (-8.0, -2.5, -0.8, 0.0, 0.8, 2.5, 8.0)]
+    return out

@@ -164,7 +164,8 @@ def response(stage, *, frequencies=None) -> Response:
         return through.curves(x)[0], np.array([-first_stage(x) * cut.curves(x)[0, 0] for cut in cuts])
 
     gains, loops = curves(f)
-    dc = nodes.solve(net, np.eye(n + 1)).output[-1]
+    linear = getattr(stage, "linear", None)  # an analysis knows the influences already
+    dc = (nodes.solve(net, np.eye(n + 1)) if linear is None else linear).output[-1]
     bandwidths = _bandwidths(f, gains[:n], dc[:n], through.of)
     signals = tuple(
         SignalResponse(s.name, float(g), b) for s, g, b in zip(design.signals, dc, bandwidths, strict=False)
