@@ -75,6 +75,17 @@ def test_each_picture_is_svg(fold, which):
     assert ordered(fold, "picture", which)[2].startswith(b"<?xml")
 
 
+@pytest.mark.parametrize("which", [key for key, _ in PICTURES])
+def test_each_picture_can_be_looked_at_at_once(fold, which):
+    stamp = fold.show()["stamp"]
+    reply = fold.handle({"ask": "look", "which": which})
+    assert reply["look"] == which and reply["stamp"] == stamp
+    assert reply["svg"].startswith("<svg") and "var(--ink)" in reply["svg"]
+    assert fold.show()["stamp"] == stamp
+    fold.workbench.put(example("tide-gauge"))
+    assert fold.show()["stamp"] == stamp + 1
+
+
 def test_a_record_needs_readings_of_this_stage(fold):
     with pytest.raises(SumwrightError, match="no readings yet"):
         fold.handle({"ask": "make", "kind": "record", "which": "", "token": "t", "draws": 0})

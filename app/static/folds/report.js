@@ -34,13 +34,13 @@ export function mount(node, sheet) {
       el('p', {class: 'acts'}, el('label', {class: 'soft'}, 'boards drawn ', draws), said, stop)),
     el('div', {},
       el('h3', {text: 'Tables and pictures'}),
-      el('p', {class: 'acts'}, table, button('CSV', 'CSV of the table', () => order('table', table.value, 'keep', word(table)))),
-      el('p', {class: 'acts'}, picture,
-        button('Look', 'Look at the picture', () => order('picture', picture.value, 'look', word(picture))),
-        button('SVG', 'SVG of the picture', () => order('picture', picture.value, 'keep', word(picture))),
-        button('PNG', 'PNG of the picture', () => order('picture', picture.value, 'png', word(picture))))),
-    look)
-  picture.addEventListener('change', () => order('picture', picture.value, 'look', word(picture)))
+      el('div', {class: 'chosen'},
+        el('p', {class: 'acts'}, table, button('CSV', 'CSV of the table', () => order('table', table.value, 'keep', word(table)))),
+        el('p', {class: 'acts'}, picture,
+          button('SVG', 'SVG of the picture', () => order('picture', picture.value, 'keep', word(picture))),
+          button('PNG', 'PNG of the picture', () => order('picture', picture.value, 'png', word(picture))))),
+      look))
+  picture.addEventListener('change', () => ask())
 
   const word = select => select.selectedOptions[0]?.textContent ?? ''
 
@@ -59,6 +59,10 @@ export function mount(node, sheet) {
     sheet.fold({ask: 'make', kind, which, token, draws: count})
   }
 
+  // the picture that is chosen is there to look at, and follows the sheet
+  let stamp = null, soon = 0
+  const ask = () => { if (picture.value) sheet.fold({ask: 'look', which: picture.value}, 'look') }
+
   function drop() {
     waiting?.tab?.close()
     waiting = null
@@ -75,6 +79,12 @@ export function mount(node, sheet) {
         if (list.some(([value]) => value === now)) select.value = now
       }
     }
+    if (shown.stamp !== stamp) {
+      const first = stamp === null
+      stamp = shown.stamp
+      clearTimeout(soon)
+      soon = setTimeout(ask, first ? 0 : 250)
+    }
     if (waiting && shown.ready === waiting.token && !waiting.asked) {
       waiting.asked = true
       sheet.fold({ask: 'take', token: waiting.token})
@@ -86,6 +96,7 @@ export function mount(node, sheet) {
   }
 
   async function heard(reply) {
+    if (reply?.look) { if (reply.look === picture.value) show(reply.svg); return }
     if (!waiting || reply?.token !== waiting.token) return
     const {then, title, tab} = waiting
     waiting = null
@@ -102,8 +113,7 @@ export function mount(node, sheet) {
         keep(file, reply.name)
         setText(said, `${title}: the browser did not lend the clipboard; it is kept as ${reply.name}.`)
       }
-    } else if (then === 'look') show(new TextDecoder().decode(bytes))
-    else if (then === 'png') await raster(file, reply.name, title)
+    } else if (then === 'png') await raster(file, reply.name, title)
     else { keep(file, reply.name); setText(said, `${title}: kept as ${reply.name}.`) }
   }
 
@@ -117,11 +127,12 @@ export function mount(node, sheet) {
 
   // the drawing itself, so that its words can be read out and its lines stay sharp
   function show(text) {
+    if (!text) { look.replaceChildren(el('p', {class: 'soft', text: 'This stage has no such picture.'})); return }
     const parsed = new DOMParser().parseFromString(text, 'image/svg+xml').documentElement
     if (parsed.nodeName !== 'svg') return
+    if (Number(parsed.getAttribute('width')) > 700) parsed.setAttribute('data-wide', '') // scrolls rather than shrink
     parsed.setAttribute('class', 'paper') // it brings its own hand
     look.replaceChildren(document.importNode(parsed, true))
-    setText(said, '')
   }
 
   // twice the size of the drawing, enough for a slide

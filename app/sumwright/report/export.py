@@ -5,7 +5,7 @@ from __future__ import annotations
 import io
 import json
 import zipfile
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from datetime import UTC, datetime
 
 from sumwright.engine.analysis import Analysis
@@ -23,21 +23,35 @@ from .drawing import Drawing
 from .schematic import schematic
 from .tables import csv_text, markdown, plain_markdown
 
+PICTURES = ("schematic", "curves", "key", "error-shares", "gain-and-phase", "loop", "noise", "step", "boards")
+
+
+def drawing(analysis: Analysis, which: str, *, symbols: str = "iec", errors=None) -> Drawing | None:
+    """One picture of `PICTURES`; None where the stage has none (a step of a signal that cannot move, boards not drawn)."""
+    if which == "schematic":
+        return schematic(analysis.design, analysis.dc, symbols=symbols, unplugged=analysis.unplugged)
+    if which == "step":
+        s = analysis.design.signals[charts.busiest(analysis)]
+        if s.high <= s.low:
+            return None
+        return charts.step_answer(analysis, step(analysis, s.name, s.high - s.low, start=s.low), s.name)
+    if which == "boards":
+        return (
+            None
+            if errors is None
+            else charts.histogram(errors, analysis.design.target.accuracy, shortest_interval(errors))
+        )
+    draw: dict[str, Callable[..., Drawing]] = {
+        "curves": charts.ruler, "key": charts.curve_key, "error-shares": charts.shares, "gain-and-phase": charts.gain_and_phase,
+        "loop": charts.loops, "noise": charts.noise_density,
+    }  # fmt: skip
+    return draw[which](analysis)
+
 
 def drawings(analysis: Analysis, *, symbols: str = "iec", errors=None) -> dict[str, Drawing]:
     """Every picture by name; `errors` (draws,) [V] are drawn boards for a histogram."""
-    name = analysis.design.signals[charts.busiest(analysis)].name
-    s = analysis.design.signal(name)
-    found = {
-        "schematic": schematic(analysis.design, analysis.dc, symbols=symbols, unplugged=analysis.unplugged),
-        "curves": charts.ruler(analysis), "key": charts.curve_key(analysis), "error-shares": charts.shares(analysis),
-        "gain-and-phase": charts.gain_and_phase(analysis), "loop": charts.loops(analysis), "noise": charts.noise_density(analysis),
-    }  # fmt: skip
-    if s.high > s.low:
-        found["step"] = charts.step_answer(analysis, step(analysis, name, s.high - s.low, start=s.low), name)
-    if errors is not None:
-        found["boards"] = charts.histogram(errors, analysis.design.target.accuracy, shortest_interval(errors))
-    return found
+    found = {which: drawing(analysis, which, symbols=symbols, errors=errors) for which in PICTURES}
+    return {which: picture for which, picture in found.items() if picture is not None}
 
 
 def summary(analysis: Analysis, author: str | None = None, now: datetime | None = None) -> str:
@@ -92,4 +106,4 @@ def bundle(
     return out.getvalue()
 
 
-__all__ = ["bundle", "drawings", "summary"]
+__all__ = ["PICTURES", "bundle", "drawing", "drawings", "summary"]

@@ -47,10 +47,16 @@ class Report(Fold):
         self._ready: dict[str, Any] | None = None
         self._making = ""
         self._refused = ""
+        self._seen: Any = None
+        self._stamp = 0  # changes with the stage, so that a picture that is looked at can be drawn anew
 
     def show(self) -> dict[str, Any]:
         design = self.workbench.analysis.design
+        if self._seen != (self.workbench.analysis, self.workbench.symbols, self.workbench.theme):
+            self._seen = (self.workbench.analysis, self.workbench.symbols, self.workbench.theme)
+            self._stamp += 1
         return {
+            "stamp": self._stamp,
             "making": self._making, "ready": None if self._ready is None else self._ready["token"], "refused": self._refused,
             "tables": [t for t in TABLES if t[0] != "cables" or len(design.signals) > 1], "pictures": PICTURES,
             "symbols": self.workbench.symbols, "draws": DRAWS, "readings": 0 if self._readings is None else self._readings.count,
@@ -64,6 +70,8 @@ class Report(Fold):
     def handle(self, message: dict) -> dict | None:
         if message.get("ask") == "take":
             return self._take(fields.text(message, "token", 40))
+        if message.get("ask") == "look":
+            return self._look(fields.one_of(message, "which", [key for key, _ in PICTURES]))
         if message.get("ask") == "stop":
             self.context.jobs.stop("report")
             self._making = ""
@@ -72,6 +80,16 @@ class Report(Fold):
             raise InvalidQuantity("The report was asked for something it does not know.")
         self._make(message)
         return None
+
+    def _look(self, which: str) -> dict[str, Any]:
+        """A picture to look at, at once: each takes milliseconds."""
+        from sumwright.engine.boards import draw_boards
+        from sumwright.report.export import drawing
+
+        analysis = self.workbench.analysis
+        errors = draw_boards(analysis, DRAWS, points=("present",)).errors[0] if which == "boards" else None
+        found = drawing(analysis, which, symbols=_SYMBOLS[self.workbench.symbols], errors=errors)
+        return {"look": which, "stamp": self._stamp, "svg": "" if found is None else str(found.svg())}
 
     def _make(self, message: dict) -> None:
         kind = fields.one_of(message, "kind", KINDS)
