@@ -185,8 +185,8 @@ function draw(L, s) {
         p.dot(a, yf); p.dot(b, yf)
       }
       part(`${c}/cf`, data.cf ? xr + 9 : xr + wide + 4, data.cf ? yc - 9 * k : yf - 9 * k, data.cf, `capacitor across the feedback of cell ${c + 1}, farads`, 'right')
-      const lift = clip && last ? 18 * k : 0
-      if (!still(data.ifb)) arrowUp(out, mid - (L.many ? 26 : 50) * k - lift + (data.ifb > 0 ? 5 : -5), data.ifb <= 0)
+      const lift = clip && last ? 32 * k : 0
+      if (!still(data.ifb)) arrowUp(out, mid - (L.many ? 26 : 50) * k - lift / 2 + (data.ifb > 0 ? 5 : -5), data.ifb <= 0)
       current(out + 8, mid - (L.many ? 36 : 46) * k - lift, data.ifb, 'start')
     }
 
@@ -220,7 +220,10 @@ function draw(L, s) {
   p.put('circle', {cx: W - 5, cy: mid, r: 4, class: 'terminal'})
   p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many || fixed(s.output).length > 6 ? ' less' : '')}, fixed(s.output))
   p.text(W, mid - 11 * k, 'V', {'text-anchor': 'end', class: 'halo'})
-  if (clip) p.text(W, mid - (L.many ? 33 : 40) * k, `${s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped}`, {'text-anchor': 'end', class: 'node red halo'})
+  if (clip) {
+    p.text(W, mid - (L.many ? 48 : 56) * k, s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped, {'text-anchor': 'end', class: 'node red halo'})
+    p.text(W, mid - (L.many ? 33 : 40) * k, `by ${fixed(s.over)}${THIN}V`, {'text-anchor': 'end', class: 'node red halo'})
+  }
   p.end()
   return spots
 }

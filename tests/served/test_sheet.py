@@ -2,6 +2,8 @@
 
 import json
 import re
+import subprocess
+import sys
 
 import pytest
 from sumwright.engine.operating_point import operating_point
@@ -471,3 +473,45 @@ def test_messages_that_are_none_are_ignored(sheet):
         sheet.evaluate("t => window.sumwrightWire.send(t)", text)
     type_in(sheet, VALUE.format("tare"), "0.42")
     assert output(sheet) == before
+
+
+def test_the_job_from_a_file_to_the_same_numbers_on_the_command_line(fresh, tmp_path):
+    """A file is opened, a weight changed, a signal driven into the rail, a cable pulled; all is undone and done again, saved, analysed."""
+    page = fresh
+    open_design(
+        page, edits.with_value(drawn("out = 0.25 front + 0.2 rear - 0.1 zero", "mixed-sign", "Two beams"), "zero", 0.5)
+    )
+    type_in(page, '[aria-label="front, wanted weight"]', "0.33")
+    type_in(page, '[aria-label="plus rail"]', "5")
+    drag(page, "front", 0.99)
+    assert page.locator("#drawing .red", has_text="clipped high").count() == 1
+    assert re.match(r"by \d\.\d{3}\u2009V", page.locator("#drawing .red", has_text="by ").text_content())
+    assert re.search(r"at \d\.\d\d\u2009V", page.locator(".clips .on").text_content())
+    page.get_by_label("pull the rear cable out").click()
+    settled(page)
+    undo, redo = (page.locator("#commands button", has_text=t) for t in ("Undo", "Redo"))
+    for _ in range(4):
+        undo.click()
+        settled(page)
+    assert number(strip(page, "front").locator(".made").text_content()) == pytest.approx(0.25, rel=0.01)
+    for _ in range(4):
+        redo.click()
+        settled(page)
+    page.get_by_label("plug the rear cable in").click()
+    settled(page)
+    with page.expect_download() as download:
+        page.get_by_role("button", name="Save", exact=True).click()
+    path = tmp_path / "saved.json"
+    download.value.save_as(path)
+    done = subprocess.run(
+        [sys.executable, "-m", "sumwright.command", "analyse", str(path), "--json"],
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    dc = json.loads(done.stdout)["dc"]
+    assert output(page) == pytest.approx(dc["output"], abs=6e-4)
+    assert dc["clipped"] == "high"
+    for name in ("front", "rear", "zero"):
+        made = number(strip(page, name).locator(".made").text_content())
+        assert made == pytest.approx(dc["weights"][name], abs=6e-5)

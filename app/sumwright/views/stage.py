@@ -31,7 +31,7 @@ def live(bench: Any) -> dict[str, Any]:
     """The voltages and currents, cell by cell."""
     dc = bench.analysis.dc
     return {
-        "output": dc.output, "unclipped": dc.unclipped_output, "clipped": dc.clipped, "load": dc.load_current,
+        "output": dc.output, "over": abs(dc.unclipped_output - dc.output), "clipped": dc.clipped, "load": dc.load_current,
         "cells": [
             {
                 "vm": p.minus_voltage, "vp": p.plus_voltage, "vo": p.output_voltage, "ifb": p.feedback_current,
