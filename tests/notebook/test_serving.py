@@ -151,13 +151,22 @@ def test_health_and_readiness_say_nothing_but_that(alone):
     assert json.loads(alone.get("/ready")[2]) == {"status": "ready"}
 
 
-def test_readiness_tells_when_the_store_does_not_answer(tmp_path):
+@pytest.mark.browser
+def test_a_spoilt_store_is_told_by_readiness_and_to_the_person_and_left_alone(chromium, tmp_path):
     (tmp_path / "d").mkdir()
     (tmp_path / "d" / "notebook.db").write_bytes(b"spoilt" * 1000)
     server = Server(tmp_path / "d", plain=True)
     assert server.get("/health")[0] == 200
     status, _, body = server.get("/ready")
     assert status == 503 and str(tmp_path).encode() not in body
+    context = chromium.new_context()
+    page = open_sheet(context, server.url)
+    act(page, do="value", signal="north", value=5.0)
+    saved(page, "unsaved")
+    assert "notebook.db" in page.locator("#note").inner_text()
+    (tmp_path / "d" / "notebook.db").unlink()  # the keeper puts it aside: a new one is made, and what waits is saved
+    saved(page)
+    context.close()
     server.stop()
 
 
@@ -265,6 +274,17 @@ def test_too_many_wrong_passwords_close_the_door_even_to_the_right_one(lab):
         )
     status, headers, _ = _post(lab, "Rea<script>", "wrong")
     assert status == 429 and int(headers["Retry-After"]) > 0
+
+
+def test_a_body_larger_than_any_form_is_not_read(lab):
+    token, cookie, _ = _form(lab)
+    body = urllib.parse.urlencode({"username": "Ines", "password": "x" * 2_000_000, "_xsrf": token}).encode()
+    try:
+        status, _, _ = lab.get("/login", {"Cookie": cookie}, data=body)
+    except (BrokenPipeError, ConnectionResetError):
+        status = 400  # closed while it was still being sent
+    assert status == 400
+    assert lab.get("/health")[0] == 200
 
 
 def test_a_forged_cookie_is_nobody(lab):

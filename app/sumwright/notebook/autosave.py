@@ -26,6 +26,7 @@ from .store import Sheet, SheetConflict
 
 DELAY = 0.5  # s from a change to the write that holds it; further changes in between ride along
 RETRIES = (1.0, 2.0, 5.0)  # s between tries; the last one again and again
+TRIES_ALONE = 720  # about an hour, for a page that was closed while the store was away
 
 _log = logging.getLogger(__name__)
 
@@ -184,7 +185,7 @@ class Autosave:
             self._failures += 1
             again = _wait(self._failures)
             self._tell(Mark("unsaved", self._since, problem, again))
-            if not self._closed or self._failures < 5:
+            if not self._closed or self._failures < TRIES_ALONE:
                 self._schedule(again)
 
     def _tell(self, mark: Mark) -> None:

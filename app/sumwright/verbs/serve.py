@@ -13,6 +13,8 @@ from sumwright.errors import SumwrightError
 from sumwright.notebook.settings import Settings, read_settings
 from sumwright.verbs.common import whole
 
+BODY_MOST = 100_000  # bytes
+
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--address", metavar="ADDRESS", help="address to listen on (127.0.0.1)")
@@ -78,6 +80,8 @@ def serve(ours: Settings, *, show: bool = False) -> int:
         def customize_kwargs(self, args: argparse.Namespace, server_kwargs: dict[str, Any]) -> dict[str, Any]:
             kwargs = super().customize_kwargs(args, server_kwargs)
             kwargs.update(secret_key=secret.encode(), sign_sessions=True)
+            # Nothing but a sign-in form comes as a request body; files come over the websocket.
+            kwargs.setdefault("http_server_kwargs", {})["max_body_size"] = BODY_MOST
             if ours.sign_in == "password":
                 kwargs["auth_provider"] = sign_in.SignIn(ours)
             return kwargs
