@@ -92,7 +92,8 @@ def parse_readings(text: str, design: Design, name: str = "The readings") -> Rea
                 raise InvalidReadings(f"{name} has more than {MOST_ROWS} readings, the most that are read.")
     except csv.Error as problem:
         raise InvalidReadings(f"{name}, line {reader.line_num} cannot be read: {problem}.") from None
-    assert columns is not None
+    if columns is None:
+        raise InvalidReadings(f"{name} holds separators only; its first line must name the signals and output.")
     if not rows:
         raise InvalidReadings(f"{name} has a heading but no readings.")
     table = np.array(rows)
