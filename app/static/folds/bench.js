@@ -69,10 +69,10 @@ export function mount(node, sheet) {
 
   const count = el('div', {class: 'soft'}), ask = el('div', {class: 'ask'}), setup = el('div', {class: 'soft'}), expect = el('div', {class: 'exp'})
   const result_ = el('div', {class: 'res', role: 'status'}), unit = el('span')
-  const large = new Blank(sheet, {field: 'bench large', label: 'Reading', inputmode: 'text', send: text => ({do: 'fold', fold: 'bench', message: {do: 'reading', row: shown.now, text}})})
-  large.node.addEventListener('keydown', e => { if (e.key === 'Enter' && !e.shiftKey && !large.refused) go(shown.now + 1, true) })
-  const before = el('button', {class: 'act', text: 'Step before', onclick: () => go(shown.now - 1)})
-  const after = el('button', {class: 'act', text: 'Next step', onclick: () => go(shown.now + 1)})
+  const large = new Blank(sheet, {field: 'bench large', label: 'Reading', inputmode: 'text', send: text => ({do: 'fold', fold: 'bench', message: {do: 'reading', row: shown?.now ?? 0, text}})})
+  large.node.addEventListener('keydown', e => { if (e.key === 'Enter' && !e.shiftKey && !large.refused) go(shown?.now + 1, true) })
+  const before = el('button', {class: 'act', text: 'Step before', onclick: () => go(shown?.now - 1)})
+  const after = el('button', {class: 'act', text: 'Next step', onclick: () => go(shown?.now + 1)})
   const caution = el('p', {class: 'caution', hidden: true}), miss = el('p', {class: 'miss'})
   node.append(el('div', {class: 'step'},
     el('div', {}, el('div', {class: 'turns'}, count, before, after), ask, setup, expect),
@@ -99,7 +99,7 @@ export function mount(node, sheet) {
       e.preventDefault()
       lines[i + step]?.blank.node.focus()
     })
-    blank.node.addEventListener('focus', () => { if (shown.now !== i) send({do: 'go', row: i}) })
+    blank.node.addEventListener('focus', () => { if (shown?.now !== i) send({do: 'go', row: i}) })
     blank.node.addEventListener('paste', e => {
       const text = e.clipboardData.getData('text')
       if (!/[\n\t]/.test(text.trim())) return
