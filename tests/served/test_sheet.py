@@ -323,6 +323,32 @@ def test_a_file_of_megabytes_is_refused_before_it_is_sent(sheet):
     assert sheet.evaluate("sumwright.line.seq") == before
 
 
+def hover(page, name):
+    """Put the pointer on a signal's marker among the transfer curves, and wait for what Bokeh says of it."""
+    x, y = page.evaluate(
+        """name => { const f = Bokeh.documents[0].get_model_by_name('transfer'), d = f.renderers.at(-1).data_source.data
+             const column = key => [...(d.get ? d.get(key) : d[key])], k = column('name').indexOf(name)
+             const box = document.querySelector('.curves .slot').getBoundingClientRect(), pad = f.min_border_left
+             const share = (v, r) => (v - r.start) / (r.end - r.start)
+             return [box.left + pad + share(column('x')[k], f.x_range) * f.frame_width,
+                     box.top + (1 - share(column('y')[k], f.y_range)) * f.frame_height] }""",
+        name,
+    )
+    page.mouse.move(x - 3, y)
+    page.mouse.move(x, y)
+    page.wait_for_timeout(300)
+    said = page.evaluate(
+        """() => { const found = []; const walk = root => { for (const e of root.querySelectorAll('*')) {
+             if (e.classList.contains('bk-Tooltip')) found.push(e.shadowRoot?.textContent ?? e.textContent)
+             if (e.shadowRoot) walk(e.shadowRoot) } }; walk(document); return found.join() }"""
+    )
+    assert name in said
+
+
+def test_a_marker_says_its_signal(sheet):
+    hover(sheet, "north")
+
+
 def test_markup_in_a_name_is_a_name(sheet):
     hostile = "<img src=x onerror=window.ran=1>"
     document = json.loads(write_design(demo.design()))
@@ -333,11 +359,11 @@ def test_markup_in_a_name_is_a_name(sheet):
     open_design(sheet, json.dumps(document))
     assert strip(sheet, hostile).locator("b").text_content() == hostile
     assert hostile in sheet.locator("#sum").text_content()
+    hover(sheet, hostile)
     for fold in sheet.evaluate("[...document.querySelectorAll('#crease a')].map(a => a.hash)"):
         sheet.evaluate(f"location.hash = {fold!r}")
         sheet.wait_for_timeout(300)
         settled(sheet)
-    sheet.mouse.move(640, 560)
     assert sheet.evaluate("window.ran") is None
     assert sheet.locator("main img, main script").count() == 0
     sheet.watch.said.clear()  # other folds may warn of a name they cannot print

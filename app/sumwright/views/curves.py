@@ -6,13 +6,17 @@ import math
 from typing import Any
 
 import numpy as np
-from bokeh.models import BoxZoomTool, ColumnDataSource, HoverTool, PanTool, Range1d, ResetTool, WheelZoomTool
+from bokeh.models import BoxZoomTool, ColumnDataSource, HoverTool, Range1d, ResetTool, WheelZoomTool
 from bokeh.plotting import figure
 
 from sumwright.engine.stage import REFERENCE
 
 from .fold import Context, Fold
 from .palette import COLOURS, colour, dash, marker
+
+# names go through @name, which Bokeh escapes
+TOOLTIP = """<div style="font-size: 14px; line-height: 1.3; max-width: 250px">
+<b>@name</b><br>in @x{0.000} V<br>out @y{0.000} V</div>"""
 
 
 class Curves(Fold):
@@ -43,7 +47,7 @@ class Curves(Fold):
         )  # fmt: skip
         f.grid.visible = False
         f.add_tools(
-            BoxZoomTool(dimensions="width"), PanTool(dimensions="width"), ResetTool(),
+            BoxZoomTool(dimensions="width"), ResetTool(),
             WheelZoomTool(dimensions="width", modifiers="ctrl"),
         )  # fmt: skip
         f.xaxis.visible = False  # the browser draws it with the ruler, from the range as it is zoomed
@@ -53,8 +57,7 @@ class Curves(Fold):
         self._ticks = f.scatter("x", "y", source=self._onsets, marker="dash", angle=math.pi / 2, size=20, line_width=2)
         dots = f.scatter("x", "y", source=self._present, marker="marker", size=11, fill_color="colour", line_width=1.2)
         self._dots = dots
-        f.add_tools(HoverTool(renderers=[dots], tooltips=[("", "@name"), ("in", "@x{0.000} V"), ("out", "@y{0.000} V")],
-                              point_policy="snap_to_data"))  # fmt: skip
+        f.add_tools(HoverTool(renderers=[dots], tooltips=TOOLTIP, point_policy="snap_to_data", limit=1))
         return {"transfer": f}
 
     def _paint(self, theme: str) -> None:
