@@ -271,3 +271,21 @@ def test_every_case_wires_its_own_board():
     boards = wire(bench, cases, [Trial(i, 0, 12345.0) for i in range(len(cases))])
     assert boards.count == len(cases)
     np.testing.assert_array_equal(bench.healthy.leg_ohm[0], wire(bench, cases, [Trial(0, 0, 0.0)]).leg_ohm[0])
+
+
+def test_screening_on_a_few_readings_changes_no_answer(monkeypatch):
+    """With thirty readings the long way and the screened way rank the same suspects with the same odds."""
+    from sumwright.engine.bench import suspects
+
+    design = STAGES["mixed-sign"]
+    rng = np.random.default_rng(12)
+    board = drawn_board(broken(design, "leg wrong value", "west", 1.3), rng)
+    readings = read(board, rng.uniform(0, 10, (30, 5)), rng)
+    both = []
+    for rows in (suspects.SCREEN_ROWS, 100):
+        monkeypatch.setattr(suspects, "SCREEN_ROWS", rows)
+        both.append(Diagnosis(Bench(design), readings.volts, readings.output, readings.uncertainty))
+    assert not both[0]._alive.all()
+    assert both[1]._alive.all()
+    np.testing.assert_allclose(both[0].probabilities, both[1].probabilities, atol=2e-3)
+    np.testing.assert_array_equal(both[0].order[:2], both[1].order[:2])
