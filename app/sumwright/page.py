@@ -25,7 +25,7 @@ from sumwright.model.workbench import Workbench
 from sumwright.sitting import Sitting, begin
 from sumwright.views import margins, plate, signals, stage
 from sumwright.views.fold import Context, Fold
-from sumwright.views.wire import Wire, packed, packed_plain
+from sumwright.views.wire import Packed, Wire, packed, packed_plain
 
 log = logging.getLogger(__name__)
 
@@ -80,6 +80,9 @@ class Page:
         self._doc: Any = None
         self._warned: tuple[Any, list[dict[str, Any]]] | None = None
         self._sent: dict[str, str] = {}  # what the browser has, by key
+        self._packed: dict[
+            str, tuple[Any, Packed]
+        ] = {}  # the part a text was made from: the same object, the same text
         self.sitting: Sitting | None = None
         self.turn_to(next(iter(self.classes), ""))
 
@@ -122,13 +125,19 @@ class Page:
             "cable_out": signals.cable_out(bench),
             "live": {"signals": signals.live(bench), "stage": stage.live(bench)},
         }
-        texts = {key: packed_plain(value) for key, value in shown.items()}
+        texts = {}
+        for key, value in shown.items():
+            made, text = self._packed.get(key, (None, None))
+            texts[key] = text if text is not None and value is made else packed_plain(value)
+            if key in ("plate", "cautions"):  # large, remembered where they are made, and never changed in place
+                self._packed[key] = (value, texts[key])
         changed = {k: v for k, v in texts.items() if whole or self._sent.get(k) != v}
         if "signals" in changed or "stage" in changed:
             changed["live"] = texts["live"]  # new rows come bare
         self._sent = texts
         if fold := self.folds.get(self.open):
-            changed["fold"] = packed({"key": self.open, **self._shown(fold)})
+            pack = packed_plain if fold.plain else packed
+            changed["fold"] = pack({"key": self.open, **self._shown(fold)})
         return changed
 
     def _cautions(self) -> list[dict[str, Any]]:

@@ -24,6 +24,7 @@ class Curves(Fold):
 
     title = "Curves"
     slots = ("transfer",)
+    plain = True
 
     def __init__(self, context: Context):
         super().__init__(context)

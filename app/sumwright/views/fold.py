@@ -55,6 +55,7 @@ class Fold:
 
     title = ""  # the word in the row of folds
     slots: tuple[str, ...] = ()  # names of its Bokeh figures
+    plain = False  # `show` gives nothing but JSON's own types: packed faster
 
     def __init__(self, context: Context):
         self.context = context
