@@ -12,6 +12,7 @@ import * as drawer from './drawer.js'
 import * as commands from './commands.js'
 import * as place from './place.js'
 import {speak} from './spoken.js'
+import './help.js'
 
 const start = JSON.parse(document.getElementById('start').textContent)
 const state = {}

@@ -1,5 +1,6 @@
 // The strips: a row a signal; its wire runs on into the drawing at the same height.
 
+import {helpFor} from './help.js'
 import {el, svg, setAttr, setClass, setText, keyed, px, size, forgetSizes} from './dom.js'
 import {Blank} from './blanks.js'
 import {THIN, engineering, fixed, signed, volts, weight} from './format.js'
@@ -167,7 +168,7 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   if (!(pulled === r.name)) item.value.set(volts(r.value))
   const beyond = !r.reference && (r.value < r.low || r.value > r.high)
   setClass(node, 'beyond', beyond)
-  setAttr(item.value.node, 'title', beyond ? `outside its range, ${fixed(r.low)} to ${fixed(r.high)} V` : null)
+  setAttr(item.value.node, 'title', beyond ? `outside its range, ${fixed(r.low)} to ${fixed(r.high)} V` : helpFor('value'))
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u2009)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
   setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : weight(r.made))

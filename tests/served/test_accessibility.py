@@ -131,6 +131,10 @@ def test_states_have_no_serious_finding(sheet):
     settled(sheet)
     assert sheet.locator("#drawer").is_visible()
     assert findings(sheet) == []
+    for field in sheet.locator("#drawer input.blank, .plate input.blank, .sig .val input.blank").all():
+        field.focus()
+        said = field.get_attribute("title") or ""
+        assert " In " in said and "From " in said, field.get_attribute("aria-label")
 
 
 def test_two_cells_and_sixteen_signals_have_no_serious_finding(sheet):
