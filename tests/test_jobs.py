@@ -2,6 +2,7 @@
 
 import asyncio
 import time
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 from sumwright.errors import InvalidQuantity
@@ -63,7 +64,9 @@ def run(test):
             jobs.close()
             await asyncio.sleep(0.05)
 
-    asyncio.run(limited())
+    # in a thread of its own: the browser's tests leave an event loop running in this one
+    with ThreadPoolExecutor(1) as pool:
+        pool.submit(asyncio.run, limited()).result()
 
 
 def test_progress_comes_in_order_and_then_the_result():
