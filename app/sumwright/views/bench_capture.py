@@ -32,6 +32,7 @@ class CapturePart:
         self._fit: Any = None
         self._problem = ""
         self._theme = ""
+        self._fresh = False
         self._measured = ColumnDataSource({"x": [], "low": [], "high": []})
         self._lines = ColumnDataSource({"x": [], "predicted": [], "fitted": []})
         self._x, self._y = Range1d(0.0, 1.0), Range1d(-1.0, 1.0)
@@ -52,6 +53,9 @@ class CapturePart:
             self._predicted.glyph.line_color = ink["ink-2"]
             self._through.glyph.line_color = ink["ink"]
         r = self._fit
+        if r is not None and self._fresh:
+            self._fresh = False
+            self._draw(r)
         return {
             "about": self._about, "problem": self._problem, "coming": self._size if self._file and not self._about else 0,
             "busy": self._fold.context.jobs.running("capture"),
@@ -119,7 +123,11 @@ class CapturePart:
         self._job(fit_record, self._file.name, self._fold.workbench.analysis.design, mapping, done=self._fitted)
 
     def _fitted(self, result):
-        self._fit, self._problem = result, ""
+        self._fit, self._problem, self._fresh = result, "", True
+        self._fold.context.refresh()
+
+    def _draw(self, result):
+        """Only while a frame is made: the figure belongs to the page's document."""
         scale = 1e3 if result.time[-1] - result.time[0] < 1 else 1.0  # ms, or s
         x = scale * (result.time - result.time[0])
         put(self._measured, {
@@ -133,7 +141,6 @@ class CapturePart:
         room = 0.06 * max(highest - lowest, 1e-3)
         move(self._x, 0.0, float(x[-1]))
         move(self._y, lowest - room, highest + room)
-        self._fold.context.refresh()
 
     def _job(self, function, *args, done):
         def failed(sentence):
