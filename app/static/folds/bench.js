@@ -124,17 +124,17 @@ export function mount(node, sheet) {
     while (lines.length < s.rows.length) { const l = line(lines.length); lines.push(l); body.append(l.row) }
     while (lines.length > s.rows.length) { const l = lines.pop(); l.blank.drop(); l.row.remove() }
     s.rows.forEach((row, i) => {
-      const l = lines[i], shape = row.apply ? String(s.names.length) : 'what'
+      const l = lines[i], isOutput = row.apply && row.probe === 'output' && row.unit === 'V', shape = isOutput ? 'volts' : 'what'
       if (l.shape !== shape + s.names.length) {
         l.shape = shape + s.names.length
         const td = cls => el('td', {class: cls})
-        l.cells = [td('r'), ...(row.apply ? s.names.map(() => td('r')) : [el('td', {class: 'what', colspan: s.names.length})]), td('r'), td('r soft'), td('r'), td('bar-cell'), td('')]
+        l.cells = [td('r'), ...(isOutput ? s.names.map(() => td('r')) : [el('td', {class: 'what', colspan: s.names.length})]), td('r'), td('r soft'), td('r'), td('bar-cell'), td('')]
         l.cells.at(-3).append(l.blank.node); l.cells.at(-2).append(l.bar.node)
         l.row.replaceChildren(...l.cells)
       }
-      const c = l.cells, isOutput = row.apply && row.probe === 'output' && row.unit === 'V'
+      const c = l.cells
       setText(c[0], String(i + 1))
-      if (row.apply) row.apply.forEach((v, k) => { setText(c[k + 1], volts(v)); setClass(c[k + 1], 'soft', !v) })
+      if (isOutput) row.apply.forEach((v, k) => { setText(c[k + 1], volts(v)); setClass(c[k + 1], 'soft', !v) })
       else setText(c[1], row.title)
       setAttr(l.row, 'title', isOutput ? row.title : `${row.title}: ${row.probe}`)
       const n = c.length
