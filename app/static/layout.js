@@ -4,7 +4,7 @@
 // A later cell's rows stand above an earlier one's, so the last op amp, which makes the output, is at the top right.
 // A feedback leaves over its op amp: in the room above the first row, or on the line of its cell's first row.
 
-export function layout({width, row, head, foot, cells, rows}) {
+export function layout({width, row, head, foot, type, cells, rows}) {
   const k = Math.max(.85, Math.min(1.35, row / 40))
   const many = cells.length > 1
   const y = i => head + (i + .5) * row
@@ -21,7 +21,7 @@ export function layout({width, row, head, foot, cells, rows}) {
   for (let c = 0; c < cells.length; c++) {
     const bus = x
     const xm = bus + (many ? 6 * k : 16 * k)
-    const tri = xm + (many ? 53 * q : 56 * k)
+    const tri = xm + Math.max(many ? 53 * q : 56 * k, 3.85 * type)
     const tip = tri + (many ? 42 * k : 74 * k)
     const out = tip + (many ? 8 * q : 23 * k)
     L.cells.push({bus, xm, tri, tip, out, half: (many ? 36 : 42) * k})
@@ -53,7 +53,7 @@ export function layout({width, row, head, foot, cells, rows}) {
       cell.yMinusGround = (minus.length ? Math.min(y(minus[0]), cell.ym) : cell.ym) - 42 * k
       if (minus.length && minus[0] === 0) cell.yMinusGround = head - 22 * k
     }
-    if (cell.plusGround === 'left') cell.yPlusGround = head + shown * row + 15 * k
+    if (cell.plusGround === 'left') cell.yPlusGround = y(shown - 1) + Math.max(row / 2 + 15 * k, Math.min(row, row / 2 + foot - 18))
   }
   for (let i = 0; i < rows.length; i++) {
     const [source, c, node] = rows[i]

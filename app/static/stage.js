@@ -24,7 +24,7 @@ export function update(state) {
   if (!width) return
   const s = state.stage
   const row = px('--row-now') || px('--row')
-  const L = placed = layout({width, row, head: px('--head'), foot: px('--foot'), cells: s.cells, rows: s.rows})
+  const L = placed = layout({width, row, head: px('--head'), foot: px('--foot'), type: px('--t-1'), cells: s.cells, rows: s.rows})
   setAttr(drawing, 'aria-label', `Schematic of the ${s.arrangement ?? ''} stage with live voltages and currents`)
   setClass(box, 'wide', L.inner > width + 1)
   setAttr(drawing, 'width', L.inner)

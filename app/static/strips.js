@@ -202,11 +202,11 @@ const weightText = r => {
   return Math.abs(r.weight) >= 1e-4 && decimals <= 4 ? signed(r.weight, 4) : (r.weight > 0 ? '+' : '') + r.weight_text.replace('-', '\u2212')
 }
 
-// Rows shrink to 30 px before the sheet grows beyond the window.
+// Rows shrink to two lines of type before the sheet grows beyond the window.
 function fit(n) {
   const base = px('--row')
   const rows = Math.max(6, n)
-  const now = Math.max(30, Math.min(base, base * 6 / rows))
+  const now = Math.max(Math.round(px('--t-1') * 2.2), Math.min(base, base * 6 / rows))
   if (work.dataset.rows !== `${rows} ${now}`) {
     work.dataset.rows = `${rows} ${now}`
     document.documentElement.style.setProperty('--rows', rows)

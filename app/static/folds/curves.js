@@ -207,7 +207,7 @@ export function mount(node, sheet) {
     const n = list.length, step = (c1 - c0) / n
     list.forEach((beam, i) => {
       const x = c0 + step * (i + (n > 2 ? .3 : i === 0 ? .3 : .42))
-      const right = i > 0 || n > 2
+      const right = (i > 0 || n > 2) && x + 21 + 46 * k < c1 + 4
       const bad = {high: beam.high > beam.limit_high, low: beam.low < beam.limit_low}
       const top = bad.high ? clamp(Math.max(beam.limit_high, beam.low)) : clamp(beam.high), base = bad.low ? clamp(Math.min(beam.limit_low, beam.high)) : clamp(beam.low)
       p.path(`M${x} ${base}V${top}`, {class: 'beam'})
