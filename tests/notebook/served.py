@@ -14,6 +14,7 @@ import time
 from pathlib import Path
 
 import pytest
+from support.browser import chromium
 
 APP = Path(__file__).parents[2] / "app"
 CHROMIUM = next((p for p in map(shutil.which, ("chromium", "chromium-browser", "google-chrome")) if p), None)
@@ -107,12 +108,8 @@ def browser():
     """Chromium, headless; fails with what to install when it is not there."""
     if CHROMIUM is None:
         pytest.fail(NEEDS, pytrace=False)
-    from playwright.sync_api import sync_playwright
-
-    with sync_playwright() as playwright:
-        opened = playwright.chromium.launch(executable_path=CHROMIUM, args=CHROMIUM_OPTIONS)
+    with chromium(executable_path=CHROMIUM, args=CHROMIUM_OPTIONS) as opened:
         yield opened
-        opened.close()
 
 
 def open_sheet(context, url: str):

@@ -4,7 +4,8 @@ import csv
 import io
 
 import pytest
-from playwright.sync_api import sync_playwright
+
+from tests.support.browser import chromium
 
 from .serving import served, settled, wait
 
@@ -12,7 +13,6 @@ pytestmark = pytest.mark.browser
 
 SHOWN = "window.sumwright?.state?.shown?.choices?.shown"
 FOUND = f"{SHOWN} && {SHOWN}.share === null && {SHOWN}.rows.length"
-OPTIONS = ["--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking", "--disable-component-update", "--disable-sync"]  # fmt: skip
 
 
 @pytest.fixture(scope="module")
@@ -23,10 +23,8 @@ def address():
 
 @pytest.fixture(scope="module")
 def browser():
-    with sync_playwright() as p:
-        chromium = p.chromium.launch(executable_path="/usr/bin/chromium", args=OPTIONS)
-        yield chromium
-        chromium.close()
+    with chromium() as opened:
+        yield opened
 
 
 @pytest.fixture

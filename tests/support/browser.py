@@ -1,5 +1,6 @@
 """A headless Chromium for tests: found on the machine, or the test fails with what to install."""
 
+import atexit
 import contextlib
 import shutil
 from pathlib import Path
@@ -26,20 +27,35 @@ def fonts_are_liberation():
     return True
 
 
+def playwright():
+    """The one Playwright of this process: a second beside it refuses to start, and fixtures of several rooms overlap.
+
+    It is kept on Playwright's own module, since this module can be imported under two names.
+    """
+    from playwright import sync_api
+
+    if not hasattr(sync_api, "started_for_tests"):
+        started = sync_api.started_for_tests = sync_api.sync_playwright().start()
+
+        def stop():
+            with contextlib.suppress(Exception):  # the process ends anyway
+                started.stop()
+
+        atexit.register(stop)
+    return sync_api.started_for_tests
+
+
 @contextlib.contextmanager
 def chromium(**options):
     """A browser of Playwright's, closed at the end."""
-    from playwright.sync_api import sync_playwright
-
     path = chromium_path()
-    with sync_playwright() as playwright:
-        browser = playwright.chromium.launch(
-            executable_path=path,
-            args=["--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking",
-                  "--disable-component-update", "--disable-sync", "--font-render-hinting=none"],
-            **options,
-        )  # fmt: skip
-        try:
-            yield browser
-        finally:
-            browser.close()
+    chosen = {
+        "executable_path": path,
+        "args": ["--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking",
+                 "--disable-component-update", "--disable-sync", "--font-render-hinting=none"],
+    }  # fmt: skip
+    browser = playwright().chromium.launch(**{**chosen, **options})
+    try:
+        yield browser
+    finally:
+        browser.close()
