@@ -125,14 +125,14 @@ def changed(a: bytes, b: bytes) -> float:
     return float((near > FAR).mean())
 
 
-def photographs(shots=SHOTS):
-    """Take `shots`, yielding each with its PNG; a fresh sheet a size."""
-    from support.browser import chromium, fonts_are_liberation
+def photographs(browser, shots=SHOTS):
+    """Take `shots`, yielding each with its PNG; a server of its own, a fresh sheet a size."""
+    from support.browser import fonts_are_liberation
 
     from .serving import served, settled
 
     fonts_are_liberation()
-    with served(environment={"LOGNAME": "keeper", "USER": "keeper"}) as (_, url), chromium() as browser:
+    with served(environment={"LOGNAME": "keeper", "USER": "keeper"}) as (_, url):
         for size in SIZES:
             mine = [s for s in shots if s.size == size]
             if not mine:
@@ -149,11 +149,14 @@ def photographs(shots=SHOTS):
 
 def main(words: list[str]) -> int:
     shots = [s for s in SHOTS if not words or any(w in s.name for w in words)]
+    from support.browser import chromium
+
     GOLDEN.mkdir(exist_ok=True)
-    for shot, png in photographs(shots):
-        kept = small(png)
-        (GOLDEN / f"{shot.name}.png").write_bytes(kept)
-        print(f"{shot.name}.png  {len(kept) / 1000:.0f} kB")
+    with chromium() as browser:
+        for shot, png in photographs(browser, shots):
+            kept = small(png)
+            (GOLDEN / f"{shot.name}.png").write_bytes(kept)
+            print(f"{shot.name}.png  {len(kept) / 1000:.0f} kB")
     return 0
 
 

@@ -10,22 +10,19 @@ from .pictures import GOLDEN, HOW, SHARE, SHOTS, changed, photographs, small
 pytestmark = pytest.mark.browser
 
 
-@pytest.fixture(scope="module")
-def pictures():
-    return {shot.name: png for shot, png in photographs()}
-
-
-@pytest.mark.parametrize("name", [s.name for s in SHOTS])
-def test_it_looks_as_it_did(pictures, name, tmp_path):
-    golden = GOLDEN / f"{name}.png"
-    assert golden.exists(), f"{golden.name} is missing. {HOW.format(name=name)}"
-    share = changed(pictures[name], golden.read_bytes())
-    if share > SHARE:
-        now = tmp_path / f"{name}-now.png"
-        now.write_bytes(pictures[name])
-        pytest.fail(
-            f"{name} looks different in {share:.1%} of its area; it is now {now}. If that is meant: {HOW.format(name=name)}"
-        )
+def test_every_fold_looks_as_it_did(browser, tmp_path):
+    """One test, so that one worker takes all the pictures with one server."""
+    missing = [s.name for s in SHOTS if not (GOLDEN / f"{s.name}.png").exists()]
+    assert not missing, f"{', '.join(missing)}: no golden picture. {HOW.format(name=missing[0])}"
+    other = []
+    for shot, png in photographs(browser):
+        share = changed(png, (GOLDEN / f"{shot.name}.png").read_bytes())
+        if share > SHARE:
+            (tmp_path / f"{shot.name}.png").write_bytes(png)
+            other.append(f"{shot.name} in {share:.1%} of its area")
+    assert not other, (
+        f"Looks different: {'; '.join(other)}. It is now as in {tmp_path}. If that is meant: {HOW.format(name='WORD')}"
+    )
 
 
 def test_there_is_no_picture_of_what_is_gone():
