@@ -161,6 +161,22 @@ def test_a_job_that_dies_says_so():
     run(test)
 
 
+@pytest.mark.parametrize("which", ["done", "progress"])
+def test_a_result_that_cannot_be_taken_up_ends_in_a_sentence(which):
+    async def test(jobs):
+        heard = Heard()
+
+        def broken(value):
+            raise RuntimeError("no document")
+
+        jobs.start("sum", count, 3, **{**heard.callbacks(), which: broken})
+        await heard.event.wait()
+        assert heard.failed and "try again" in heard.failed[0]
+        assert not jobs.running("sum")
+
+    run(test)
+
+
 def die():
     """End the process, as a fault in a library would."""
     import os

@@ -11,6 +11,7 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import importlib
+import logging
 import os
 import pickle
 import struct
@@ -19,6 +20,8 @@ from collections.abc import Callable, Iterator
 from typing import Any
 
 from sumwright.errors import SumwrightError
+
+log = logging.getLogger(__name__)
 
 WORKERS_MOST = max(1, (os.cpu_count() or 2) - 1)  # over all sessions; one core is for the hands
 _LENGTH = struct.Struct(">Q")
@@ -44,7 +47,9 @@ class Jobs:
         """Run `function(*args)`; one under the same `key` still running is stopped first.
 
         `progress` gets each value yielded, `done` the value returned, `failed` one
-        sentence; all are called in the server's thread, none after `stop`.
+        sentence; all are called in the server's thread, none after `stop`. They run outside
+        the session's lock: what belongs to a document (a figure) is changed in the frame
+        that they ask for, not in them. One that fails ends the job with `failed`.
         """
         self.stop(key)
         name = (function.__module__, function.__qualname__)
@@ -89,11 +94,18 @@ class Jobs:
             if not mine():
                 return
             del self._tasks[key]
-            if kind == "done" and done:
-                done(value)
-            elif kind == "failed" and failed:
+            if kind == "failed" and failed:
                 failed(value)
-        except (asyncio.IncompleteReadError, ConnectionError, OSError):
+            elif kind == "done" and done:
+                try:
+                    done(value)
+                except Exception:  # else the person would wait for ever
+                    log.exception("The result of %s.%s could not be taken up.", *name)
+                    if failed:
+                        failed("The calculation ended, but its result could not be shown; try again.")
+        except Exception as error:
+            if not isinstance(error, asyncio.IncompleteReadError | OSError):
+                log.exception("%s.%s stopped.", *name)
             if mine():
                 del self._tasks[key]
                 if failed:
