@@ -86,11 +86,11 @@ export function mount(node, sheet) {
     setText(item.name, (row.arrangement === 'own' ? 'your own' : row.arrangement) + (row.paired ? ', paired' : ''))
     setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + (MERITS[row.merits[0]] ?? row.merits[0]) : ''))
     setAttr(item.merit, 'title', row.merits.join(', ') || null)
-    setText(item.bad, row.short.length ? ' short' : '')
+    setText(item.bad, row.short.length ? ` short: ${row.short[0]}${row.short.length > 1 ? ` and ${row.short.length - 1} more` : ''}` : '')
     setAttr(item.bad, 'title', row.short.join(', ') || null)
     const texts = [
       percent(row.error), row.offset === null ? '–' : plus(row.offset), String(row.resistors), String(row.op_amps), fixed(row.noise_gain, 2),
-      `${small(row.noise * 1e9, 3)}${THIN}nV`, ohms(row.sees), row.feedback,
+      `${small(row.noise * 1e9, 3)}${THIN}nV/√Hz`, ohms(row.sees), row.feedback,
     ]
     texts.forEach((text, i) => setText(item.cells[i], text))
   }
@@ -171,9 +171,10 @@ export function mount(node, sheet) {
         ...open.legs.map(l => [l.name, signed(l.wanted, 4), l.now, l.made === null || l.made === undefined ? '–' : signed(l.made, 4), l.then, signed(l.made_then, 4)]),
         ...open.others.map(o => [o.name, '', '', '', o.then, '']),
       ])
+      const said = (status, value, unit) => status === null ? '–' : status === 'unknown' ? 'not given' : margin(value, unit)
       margins.fill(open.margins.map(m => [
-        m.title, m.status === 'unknown' ? 'not given' : margin(m.margin, m.unit), m.status === m.status_then ? '' : m.status,
-        m.status_then === 'unknown' ? 'not given' : margin(m.margin_then, m.unit), m.status_then,
+        m.title, said(m.status, m.margin, m.unit), m.status === m.status_then ? '' : m.status ?? 'no such check',
+        said(m.status_then, m.margin_then, m.unit), m.status_then ?? 'no such check',
       ]), (row, i) => {
         setClass(row, 'worse', open.margins[i].status_then === 'short')
         setClass(row, 'moved', open.margins[i].status_then !== open.margins[i].status)
@@ -191,8 +192,14 @@ export function mount(node, sheet) {
       const way = after.error < before.error ? 'falls' : after.error > before.error ? 'rises' : 'stays'
       bits.push(way === 'stays' ? `Worst weight error stays ${percent(after.error)}.` : `Worst weight error ${way} from ${percent(before.error)} to ${percent(after.error)}.`)
     }
-    for (const m of margins) if (m.status !== m.status_then) bits.push(`${m.title} becomes ${m.status_then}: ${margin(m.margin, m.unit)} to ${margin(m.margin_then, m.unit)}.`)
-    if (!margins.some(m => m.status !== m.status_then)) bits.push('Every margin keeps its word.')
+    const both = margins.filter(m => m.status !== null && m.status_then !== null), moved = both.filter(m => m.status !== m.status_then)
+    for (const m of moved) bits.push(`${m.title} becomes ${m.status_then}: ${margin(m.margin, m.unit)} to ${margin(m.margin_then, m.unit)}.`)
+    // a stage with more or fewer op amps has checks of its own
+    const fresh = margins.filter(m => m.status === null && (m.status_then === 'short' || m.status_then === 'tight'))
+    for (const m of fresh) bits.push(`${m.title} is ${m.status_then}: ${margin(m.margin_then, m.unit)}.`)
+    const stay = both.filter(m => m.status === 'short' && m.status_then === 'short')
+    if (stay.length) bits.push(`Still short: ${stay.map(m => `${m.title} ${margin(m.margin_then, m.unit)}`).join(', ')}.`)
+    if (!moved.length && !fresh.length) bits.push(both.length === margins.length ? 'Every margin keeps its word.' : 'Every margin that both stages have keeps its word.')
     return bits.join(' ')
   }
 

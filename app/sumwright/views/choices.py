@@ -16,6 +16,7 @@ from typing import Any
 from sumwright import fields
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import able, arrangement_of
+from sumwright.engine.checks import Check
 from sumwright.engine.realise.balance import bias_balance
 from sumwright.engine.realise.choices import Choice, Realisation, assess, places
 from sumwright.engine.realise.drawer import Drawer, to_buy
@@ -255,15 +256,7 @@ class Choices(Fold):
         if self._previews is None or self._previews[:2] != key:
             forerunner = self._previews[2] if self._previews is not None else None
             self._previews = (*key, Analysis(taken, self.workbench.unplugged, forerunner))
-        then = {x.key: x for x in self._previews[2].checks}
-        margins = []
-        for check in self.workbench.analysis.checks:
-            new = then.get(check.key)
-            if new is not None:
-                margins.append({
-                    "key": check.key, "title": check.title, "unit": check.unit, "status": check.status, "margin": check.margin,
-                    "status_then": new.status, "margin_then": new.margin,
-                })  # fmt: skip
+        margins = _margins(self.workbench.analysis.checks, self._previews[2].checks)
         made = dict(now.weights) if now is not None else {}
         had = {leg.source: leg.resistance for cell in design.cells for leg in (*cell.minus, *cell.plus)}
         paired = {p.place: [format_resistor(p.first), format_resistor(p.second), p.how] for p in c.parts}
@@ -495,3 +488,25 @@ class Choices(Fold):
         low, high = self._ends(design)
         wanted = with_spans(design, into_window(design.signals, low, high))
         self.workbench.put(replace(wanted, target=replace(wanted.target, low=low, high=high)))
+
+
+def _margins(now: tuple[Check, ...], then: tuple[Check, ...]) -> list[dict[str, Any]]:
+    """Every check of either stage, side by side; None where the other stage has no such check.
+
+    A stage with more op amps has checks of its own (a swing for each cell): what would
+    fall short then is told whether or not it can be asked today.
+    """
+    ahead = {x.key: x for x in then}
+    old = {x.key for x in now}
+    pairs = [(x, ahead.get(x.key)) for x in now] + [(None, x) for x in then if x.key not in old]
+    shown = []
+    for before, after in pairs:
+        named = before if before is not None else after
+        if named is None:
+            continue
+        shown.append({
+            "key": named.key, "title": named.title, "unit": named.unit,
+            "status": before and before.status, "margin": before and before.margin,
+            "status_then": after and after.status, "margin_then": after and after.margin,
+        })  # fmt: skip
+    return shown
