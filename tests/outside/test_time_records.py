@@ -35,6 +35,14 @@ def test_a_single_pole_settles_in_logarithms(band, constants):
     assert s.overshoot == 0
 
 
+def test_an_output_at_its_limit_has_no_step_to_measure():
+    # by hand: -10 V and -11 V are both past the -5 V rail; the limit creeps a little with the current, that is no step
+    amp = replace(one_pole(), dropout_resistance=20.0, output_current=0.1)
+    s = step(replace(inverter(amp, legs=1), supply=Supply(5.0, -5.0, 0.0)), "in1", 1.0, start=10.0)
+    assert s.at_limit and s.overshoot == 0.0 and s.rise is None and set(s.settled.values()) == {None}
+    assert not step(replace(inverter(amp, legs=1), supply=Supply(5.0, -5.0, 0.0)), "in1", 1.0, start=0.0).at_limit
+
+
 def test_a_large_step_slews_first_and_then_settles():
     # One-pole slew model: slews until the error is SR·τ, then an exponential. 10 V at 13 V/µs, GBW 3 MHz, noise
     # gain 5, to 0.1 %: 0.504 µs of slewing, 1.550 µs of tail, 2.054 µs in all (not 2.60, slewing plus 6.9 τ).

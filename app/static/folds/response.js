@@ -153,7 +153,7 @@ export function mount(node, sheet) {
       const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'oscillates; record cut short'].filter(Boolean).join(', ')
       setText(caption, s.kind === 'step' ? `of ${signed(q.size, 2)}${THIN}V on ${q.signal}; V, ${q.unit}` : `V, ${q.unit}`)
       const time = t => t === null ? 'not in this record' : engineering(t, 's')
-      setText(told, s.kind === 'step'
+      setText(told, s.kind === 'step' && q.at_limit ? 'the output is at its limit; there is no step to measure' : s.kind === 'step'
         ? `settles to 1${THIN}% in ${time(q.settled['0.01'])}, 0.1${THIN}% ${time(q.settled['0.001'])}, 0.01${THIN}% ${time(q.settled['0.0001'])}; overshoot ${percent(q.overshoot)}${q.rise === null ? '' : `, rise ${engineering(q.rise, 's')}`}${busy ? `; ${busy}` : ''}`
         : busy || 'linear throughout')
     }

@@ -99,6 +99,8 @@ class Step(NamedTuple):
 
     `settled`: time [s] after which the output stays within 1 %, 0.1 % and 0.01 % of
     its change around the final value, None where it does not within the record.
+    `at_limit`: a limit takes (nearly) the whole step away, so there is none to measure;
+    overshoot, rise and settling are then empty.
     """
 
     trace: Trace
@@ -107,8 +109,11 @@ class Step(NamedTuple):
     overshoot: float  # share of the change, 0 where there is none
     rise: float | None  # s, 10 % to 90 %
     settled: dict[float, float | None]
+    at_limit: bool = False
 
 
+# An output at its limit still creeps with its current; below this share of the linear change it is no step.
+LEAST_CHANGE = 1e-2
 SETTLING_BANDS = (0.01, 0.001, 0.0001)
 
 
@@ -146,6 +151,9 @@ def step(stage, signal: str, size: float, *, start: float | None = None, duratio
     both = nodes.solve_clipped(net, np.stack([low, high]), limits=limits).solution.output
     initial, final = float(both[0, -1, 0]), float(both[1, -1, 0])
     change = final - initial
+    unlimited = nodes.solve(net, np.stack([low, high])[..., None]).output
+    linear = float(unlimited[1, -1, 0] - unlimited[0, -1, 0])
+    at_limit = abs(change) < LEAST_CHANGE * abs(linear)
     if duration is None:
         slowest = np.abs(poles(net).real).min(initial=1e12)
         duration = 14.0 / max(slowest, 1e-3) + 1.5 * abs(change) / net.design.op_amp.slew_rate
@@ -156,8 +164,8 @@ def step(stage, signal: str, size: float, *, start: float | None = None, duratio
     record = Trace(
         times[:upto], inputs[:, :upto], out[:, :upto], slewing / duration, clipping / duration, events, complete
     )
-    if change == 0 or not complete:
-        return Step(record, initial, final, 0.0, None, dict.fromkeys(SETTLING_BANDS))
+    if change == 0 or at_limit or not complete:
+        return Step(record, initial, final, 0.0, None, dict.fromkeys(SETTLING_BANDS), at_limit)
     t, y = _dense(run)
     rel = (y - initial) / change
     settled = {band: _settled(run, t, rel, initial, change, band) for band in SETTLING_BANDS}

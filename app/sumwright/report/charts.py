@@ -394,11 +394,11 @@ def busiest(analysis: Analysis) -> int:
 def step_answer(analysis: Analysis, result, name: str, width: float = WIDTH, height: float = 240.0) -> Drawing:
     """The output after a step of one signal, with the ideal dotted; `result` is of `trace.step`."""
     t, v = result.trace.times, result.trace.outputs[-1]
-    alt = (
-        f"Step of {name}: output from {format_fixed(result.initial, 'V')} to {format_fixed(result.final, 'V')}, "
-        f"overshoot {format_percent(result.overshoot)}, rise {format_quantity(result.rise, 's')}, "
-        + ", ".join(f"within {format_percent(b)} after {format_quantity(s, 's')}" for b, s in result.settled.items())
-        + "."
+    timed = ", ".join(f"within {format_percent(b)} after {format_quantity(s, 's')}" for b, s in result.settled.items())
+    alt = f"Step of {name}: output from {format_fixed(result.initial, 'V')} to {format_fixed(result.final, 'V')}, " + (
+        "at its limit; there is no step to measure."
+        if result.at_limit
+        else f"overshoot {format_percent(result.overshoot)}, rise {format_quantity(result.rise, 's')}, {timed}."
     )
     d = Drawing(width, height, alt)
     ends = (result.initial, result.final)

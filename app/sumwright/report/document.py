@@ -272,10 +272,15 @@ def _step(analysis: Analysis, name: str) -> tuple[Markup, str]:
     settled = "; ".join(
         f"within {format_percent(b)} after {format_quantity(t, 's')}" for b, t in result.settled.items()
     )
-    caption = (
-        f"Step of {name} from {format_quantity(s.low, 'V', 3, trim=True)} to {format_quantity(s.high, 'V', 3, trim=True)}, the others where they are: "
-        f"rise {format_quantity(result.rise, 's')} (10 % to 90 %), overshoot {format_percent(result.overshoot)}; {settled}. "
+    told = (
+        "the output is at its limit; there is no step to measure."
+        if result.at_limit
+        else f"rise {format_quantity(result.rise, 's')} (10 % to 90 %), overshoot {format_percent(result.overshoot)}; {settled}. "
         f"Slewing {format_percent(result.trace.slewing)} of the record."
+    )
+    caption = (
+        f"Step of {name} from {format_quantity(s.low, 'V', 3, trim=True)} to {format_quantity(s.high, 'V', 3, trim=True)}, "
+        f"the others where they are: {told}"
     )
     return charts.step_answer(analysis, result, name).svg(), caption
 

@@ -184,7 +184,7 @@ class Response(Fold):
             found = trace.step(analysis, on, size, duration=self.duration)
             record = found.trace
             told = {"signal": on, "size": size, "settled": {f"{b:g}": t for b, t in found.settled.items()},
-                    "overshoot": found.overshoot, "rise": found.rise}  # fmt: skip
+                    "overshoot": found.overshoot, "rise": found.rise, "at_limit": found.at_limit}  # fmt: skip
         else:
             waves = {n: w for n, w in self.waves.items() if n in bench.design.signal_names and n not in bench.unplugged}
             record = trace.trace(analysis, waves, self._length(waves))
