@@ -34,7 +34,7 @@ log = logging.getLogger("sumwright.sitting")
 
 STATE_FORMAT = "sumwright-sheet/1"
 STEPS_MOST = 100  # undo steps kept through a reload
-_WATCHED = ("design", "unplugged", "follow", "symbols")
+_WATCHED = ("design", "unplugged", "follow", "symbols", "readings")
 _ID = re.compile(r"[a-z2-7]{16}")
 
 _beside = ThreadPoolExecutor(4, thread_name_prefix="notebook")
@@ -261,6 +261,7 @@ class Sitting:
         try:
             self.workbench.replace_quietly(step)
             self.workbench.symbols = symbols
+            self.workbench.readings = readings_of(theirs.state)
             self.workbench.history.past[:] = [*past, before] if before != step else past
             self.workbench.history.future[:] = future
         finally:
@@ -301,7 +302,8 @@ class Sitting:
     def _workbench(self, sheet: Sheet) -> Workbench:
         step, symbols = read_state(sheet.state)
         past, future = read_history(sheet.history)
-        bench = Workbench(step.design, unplugged=step.unplugged, follow=step.follow, symbols=symbols)
+        readings = readings_of(sheet.state)
+        bench = Workbench(step.design, unplugged=step.unplugged, follow=step.follow, symbols=symbols, readings=readings)
         bench.history.past[:], bench.history.future[:] = past, future
         return bench
 
@@ -326,7 +328,14 @@ def begin(user: str | None, arguments: Mapping[str, list[bytes]]) -> Sitting:
 
 def state_of(bench: Workbench) -> dict[str, Any]:
     """The sheet at work as the store keeps it."""
-    return {"format": STATE_FORMAT, **step_document(bench.snapshot), "symbols": bench.symbols}
+    state = {"format": STATE_FORMAT, **step_document(bench.snapshot), "symbols": bench.symbols}
+    return {**state, "readings": bench.readings} if bench.readings else state
+
+
+def readings_of(state: dict[str, Any]) -> dict[str, Any]:
+    """What was read on the bench; the Bench checks it when it takes it up."""
+    held = state.get("readings")
+    return held if isinstance(held, dict) else {}
 
 
 def step_document(step: Step) -> dict[str, Any]:

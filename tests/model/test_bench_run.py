@@ -1,10 +1,13 @@
 """The run on the bench: readings find their step, and nothing typed is lost."""
 
+import json
+
 import numpy as np
 import pytest
 from sumwright.engine.bench.readings import parse_meter
 from sumwright.engine.stage import replace
 from sumwright.errors import InvalidQuantity, InvalidReadings
+from sumwright.files.readings import parse_readings
 from sumwright.model.bench_run import MOST_READINGS, BenchRun
 from support.bench_stages import stage
 
@@ -118,3 +121,37 @@ def test_cleared_readings_can_be_brought_back():
     assert run.readings().count == 0
     run.taken = gone
     assert run.readings().count == 1
+
+
+def test_what_the_sheet_holds_comes_back_as_it_was():
+    run = BenchRun(DESIGN, parse_meter("0.1 % + 2 mV"))
+    rows = output_rows(run)
+    run.put(rows[0], "1900m")
+    run.put(0, "12.01")
+    run.ask({"north": 1.25})
+    run.take(parse_readings("north,output,uncertainty\n3,1.31,0.002\n", DESIGN, "A file"))
+    again = BenchRun(DESIGN)
+    again.take_up(json.loads(json.dumps(run.document())))
+    assert (again.taken, again.asked, again.meter) == (run.taken, run.asked, run.meter)
+    assert again.document() == run.document()
+    again.take_up({})
+    assert again.taken == again.asked == {} and again.meter.text == BenchRun(DESIGN).meter.text
+
+
+@pytest.mark.parametrize(
+    "held",
+    [
+        {"taken": 3}, {"taken": [{}]}, {"taken": [None]}, {"meter": "fine"}, {"asked": [{"apply": []}]}, {"taken": [{}] * (MOST_READINGS + 1)},
+        {"taken": [{"apply": {"north": "x"}, "probe": "output", "unit": "V", "text": "1", "value": 1.0, "uncertainty": None}]},
+        {"taken": [{"apply": {}, "probe": "output", "unit": "V", "text": "1", "value": float("nan"), "uncertainty": None}]},
+        {"taken": [{"apply": {}, "probe": "output", "unit": "V", "text": "1", "value": 1.0, "uncertainty": -1}]},
+        {"taken": [{"apply": {}, "probe": 7, "unit": "V", "text": "1", "value": 1.0, "uncertainty": None}]},
+    ],
+)  # fmt: skip
+def test_what_the_sheet_cannot_have_held_changes_nothing(held):
+    run = BenchRun(DESIGN)
+    run.put(output_rows(run)[0], "1.9")
+    before = run.document()
+    with pytest.raises((InvalidReadings, InvalidQuantity)):
+        run.take_up(held)
+    assert run.document() == before

@@ -55,6 +55,24 @@ def test_the_state_comes_back_with_its_history(desk):
     page.close()
 
 
+def test_readings_of_the_bench_are_saved_without_being_asked_and_come_back(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    page.turn_to("bench")
+    bench = page.folds["bench"]
+    row = next(i for i, r in enumerate(bench.show()["rows"]) if r["probe"] == "output" and r["unit"] == "V")
+    bench.handle({"do": "reading", "row": row, "text": "0.5219"})
+    assert not sitting.autosave.clean and sitting.autosave.wait(10)
+    again = page_of(Sitting(desk, sitting.key, 1))
+    again.turn_to("bench")
+    assert again.folds["bench"].show()["rows"][row]["text"] == "0.5219"
+    bench.handle({"do": "clear"})
+    assert sitting.autosave.wait(10)
+    assert Sitting(desk, sitting.key, 1).workbench.readings["taken"] == []
+    page.close()
+    again.close()
+
+
 def test_a_single_change_is_kept_with_its_undo_step_at_the_first_save(desk):
     sitting = Sitting(desk)
     page = page_of(sitting)

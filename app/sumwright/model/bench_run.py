@@ -8,14 +8,15 @@ from __future__ import annotations
 
 import csv
 import io
+import math
 from dataclasses import dataclass, replace
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from sumwright.engine.bench.board import Bench
 from sumwright.engine.bench.plan import Step, plan
-from sumwright.engine.bench.readings import Meter, Readings
+from sumwright.engine.bench.readings import Meter, Readings, parse_meter
 from sumwright.engine.stage import Design
 from sumwright.engine.stage import replace as with_fields
 from sumwright.errors import InvalidReadings
@@ -227,6 +228,32 @@ class BenchRun:
             writer.writerow([f"{x:.9g}" for x in (*volts, y, u)])
         return out.getvalue()
 
+    def document(self) -> dict[str, Any]:
+        """All of it as plain data, to be kept with the sheet."""
+        return {
+            "meter": self.meter.text, "taken": [_plain(t) for t in self.taken.values()],
+            "asked": [_plain(t) for t in self.asked.values()],
+        }  # fmt: skip
+
+    def take_up(self, document: dict[str, Any]) -> None:
+        """The readings and the meter that `document` gave, in place of those here; none at all for `{}`.
+
+        Raises
+        ------
+        InvalidReadings, InvalidQuantity
+            If it is not one; nothing is changed then.
+        """
+        meter = parse_meter(document["meter"]) if isinstance(document.get("meter"), str) else Meter()
+        sides = []
+        for side in ("taken", "asked"):
+            held = document.get(side, [])
+            if not isinstance(held, list) or len(held) > MOST_READINGS:
+                raise InvalidReadings(f"The readings kept hold no list of at most {MOST_READINGS} under {side!r}.")
+            sides.append({t.key: t for t in map(_taken, held)})
+        self.taken, self.asked = sides
+        if meter != self.meter:
+            self.restate(meter)
+
     def restore(self, text: str) -> int:
         """Readings kept earlier as `to_csv` wrote them."""
         count = self.take(parse_readings(text, self.design, "The readings kept"))
@@ -234,3 +261,25 @@ class BenchRun:
             if t.uncertainty is not None:
                 self.taken[key] = replace(t, text=f"{t.value:.6g}")
         return count
+
+
+def _plain(t: Taken) -> dict[str, Any]:
+    return {
+        "apply": dict(t.apply), "probe": t.probe, "unit": t.unit, "text": t.text, "value": t.value, "uncertainty": t.uncertainty,
+    }  # fmt: skip
+
+
+def _taken(held: Any) -> Taken:
+    """One reading kept, checked as if it came from anywhere: it may have come in a notebook file."""
+    try:
+        apply = tuple((str(n), float(v)) for n, v in held["apply"].items())
+        words = [held[k] for k in ("probe", "unit", "text")]
+        u = held["uncertainty"]
+        numbers = [float(held["value"]), *([] if u is None else [float(u)])]
+        if not (all(isinstance(w, str) and len(w) <= 200 for w in words) and len(apply) <= 64):
+            raise ValueError
+        if not all(map(math.isfinite, (*numbers, *(v for _, v in apply)))) or (u is not None and numbers[1] <= 0):
+            raise ValueError
+    except (TypeError, ValueError, KeyError, AttributeError, OverflowError):
+        raise InvalidReadings("One of the readings kept is not understood.") from None
+    return Taken(apply, *words, *numbers)

@@ -49,6 +49,10 @@ class Workbench(param.Parameterized):
     symbols = param.Selector(default=SYMBOLS[0], objects=list(SYMBOLS), doc="Resistor symbols of the drawing.")
     theme = param.Selector(default=THEMES[0], objects=list(THEMES), doc="Light or dark paper.")
 
+    readings = param.Dict(
+        default={}, doc="The bench's readings and meter as plain data; replaced, never changed in place."
+    )
+
     # what follows
     design = param.ClassSelector(class_=Design, constant=True, doc="The choices as one frozen design.")
     analysis = param.ClassSelector(class_=Analysis, constant=True, doc="Of the last design that could be analysed.")

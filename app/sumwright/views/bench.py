@@ -40,7 +40,9 @@ class Bench(Fold):
         self._gone: dict = {}
         self._kept = ""
         self._serial = 0  # of the readings; a changed reading makes what was told old
+        self._on_sheet: dict = {}  # the readings that the sheet holds, as this fold has taken them up
         self.capture = CapturePart(self)
+        self._follow_sheet()
         self._take_up()
 
     def figures(self) -> dict[str, Any]:
@@ -51,6 +53,7 @@ class Bench(Fold):
     def show(self) -> dict[str, Any]:
         """The run as it stands; the suspects come when they have been weighed."""
         design = self.workbench.analysis.design
+        self._follow_sheet()
         if self._run.follow(design):
             self._serial += 1
         rows = self._run.rows()
@@ -125,6 +128,22 @@ class Bench(Fold):
         return _ACTS[do](self, message)
 
     def _changed(self) -> None:
+        """The readings are others: the sheet holds them, so they are saved with it."""
+        self._serial += 1
+        self.context.extras["readings"] = self._run.readings()
+        self._on_sheet = self.workbench.readings = self._run.document()
+
+    def _follow_sheet(self) -> None:
+        """Take up what the sheet holds, when that is not what is here: it was opened again, or somebody else changed it."""
+        held = self.workbench.readings
+        if held is self._on_sheet:
+            return
+        self._on_sheet = held
+        try:
+            self._run.take_up(held)
+        except SumwrightError as error:
+            self.context.say(f"{error} The readings stored with this sheet are not shown.", bad=True)
+            return
         self._serial += 1
         self.context.extras["readings"] = self._run.readings()
 
@@ -149,12 +168,13 @@ class Bench(Fold):
 
     def _meter(self, message):
         self._run.restate(parse_meter(fields.text(message, "text", 120)))
-        self._serial += 1
+        self._changed()
 
     def _next(self, message):
         if not self._told or not self._told["next"]:
             raise InvalidQuantity("The next reading is not known yet.")
         self._now = self._run.ask(self._told["next"])
+        self._changed()
         return {"focus": self._now}
 
     def _clear(self, message):
@@ -206,9 +226,7 @@ class Bench(Fold):
 
         def done(entry):
             self._kept = f"kept as entry {entry.number}"
-            log = getattr(self.context, "log", None)
-            if log is not None:
-                log.news()
+            sitting._fold_news()  # the log, if it is open in another fold, reads again
             self.context.refresh()
 
         sitting.aside(append, done, lambda sentence: self.context.say(sentence, bad=True))
@@ -216,7 +234,7 @@ class Bench(Fold):
     def _take_up(self) -> None:
         """The readings last kept of this sheet, when it is opened again."""
         sitting = self.context.extras.get("sitting")
-        if sitting is None or not sitting.key:
+        if sitting is None or not sitting.key or self.workbench.readings:
             return
         key, number, desk = sitting.key, sitting.number, sitting.desk
 
@@ -231,7 +249,8 @@ class Bench(Fold):
                 count = self._run.restore(entry.body["csv"])
             except SumwrightError:
                 return  # the signals have other names by now; the entry stays in the log
-            self._changed()
+            self._serial += 1  # nothing is new to the sheet: looking at it saves nothing
+            self.context.extras["readings"] = self._run.readings()
             self._kept = f"{count} readings taken up from entry {entry.number}"
             self.context.refresh()
 
