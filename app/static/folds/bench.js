@@ -220,7 +220,7 @@ export function mount(node, sheet) {
     if (!t) { suspects.set([]); return }
     const list = s.taken ? t.suspects.filter((x, i) => i < 1 || x.probability >= .005).slice(0, 6) : t.suspects.slice(0, 1)
     const rest = 1 - list.reduce((sum, x) => sum + x.probability, 0)
-    suspects.set([...list.map(x => [[fixed(x.probability, 2), 'r'], [x.fault === 'none' ? 'nothing wrong' : [x.part, x.fault].filter(Boolean).join(', '), 'who'], [x.estimate === null ? '' : resistor(x.estimate), 'r']]),
+    suspects.set([...list.map(x => [[fixed(x.probability, 2), 'r'], [x.fault === 'none' ? 'nothing wrong' : [x.part, x.fault].filter(Boolean).join(', '), 'who'], [x.estimate === null ? '' : x.unit === 'V' ? `${fixed(x.estimate)}${THIN}V` : resistor(x.estimate), 'r']]),
       ...(rest > .004 ? [[[fixed(rest, 2), 'r'], ['anything else', 'who soft'], ['', '']]] : [])])
     list.forEach((x, i) => { setClass(suspects.body.rows[i], 'lead', i === 0); setClass(suspects.body.rows[i], 'joined', x.group === list[i + 1]?.group) })
     const first = list[0]

@@ -97,6 +97,12 @@ def _leaf(x):
     return None if x is None or not math.isfinite(x) else float(x)
 
 
+def _about(s):
+    if s.estimate is None:
+        return ""
+    return format_fixed(s.estimate, "V", 3) if s.unit == "V" else format_resistor(s.estimate, 3)
+
+
 def _tables(design, report: Report) -> str:
     fit = report.fit
     rows = []
@@ -113,7 +119,7 @@ def _tables(design, report: Report) -> str:
         text.append(f"chi-squared {fit.chi_squared:.3g} on {fit.degrees_of_freedom} degrees of freedom{p}")
     text += [plain(n) for n in report.notes]
     listed = [
-        (f"{s.probability:.3f}", s.fault, s.part, "" if s.estimate is None else format_resistor(s.estimate, 3), str(s.group))
+        (f"{s.probability:.3f}", s.fault, s.part, _about(s), str(s.group))
         for s in report.suspects
     ]  # fmt: skip
     text.append(table(("odds", "suspect", "", "about", "group"), listed, text_columns=3))

@@ -126,6 +126,20 @@ def test_a_fault_no_reading_has_touched_is_not_ruled_out():
     assert groups[case["leg open", "north"]] != groups[case["none", ""]]
 
 
+def test_a_wrong_reference_is_estimated_in_volts():
+    from sumwright.engine.stage import replace
+
+    design = STAGES["mixed-sign"]
+    rng = np.random.default_rng(5)
+    board = drawn_board(replace(design, reference=replace(design.reference, voltage=2.048)), rng)
+    suspects = diagnose(design, read(board, run_of(design), rng), foresee=False).suspects
+    found = next(s for s in suspects if s.fault == "reference wrong")
+    assert found.group == 1
+    assert found.unit == "V"
+    assert found.estimate == pytest.approx(2.048, rel=0.02)
+    assert "2.5" in found.explain
+
+
 def test_one_more_fault_is_one_more_entry():
     """A fault nobody listed: the reference at half its voltage."""
 
@@ -138,7 +152,7 @@ def test_one_more_fault_is_one_more_entry():
     design = STAGES["mixed-sign"]
     faults = (*FAULTS, Fault("reference halved", 3, places, "The reference gives half of what it should."))
     rng = np.random.default_rng(3)
-    from dataclasses import replace
+    from sumwright.engine.stage import replace
 
     board = replace(design, reference=replace(design.reference, voltage=1.25))
     readings = read(board, run_of(design), rng)

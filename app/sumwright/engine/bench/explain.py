@@ -36,17 +36,24 @@ def describe(diagnosis: Diagnosis, most: int, least: float) -> list[Suspect]:
                 fault, part, float(diagnosis.probabilities[c]), estimate, diagnosis.estimate_uncertainty(c),
                 renumber[int(groups[c])], _sentences(diagnosis, c, estimate, effects, misfit),
                 _fill(case.fault.parts_it, case, estimate) if case.fault else "", float(misfit),
+                case.fault.unit if case.fault and estimate is not None else "",
             )
         )  # fmt: skip
     return out
 
 
 def _fill(template, case, estimate):
-    nominal = case.place.nominal
+    nominal, unit = case.place.nominal, case.fault.unit
+
+    def shown(value, none):
+        if value is None:
+            return none
+        if unit == "V":
+            return format_fixed(value, "V", 3)
+        return "0 ohm" if value == 0 else format_resistor(value, 3 if value is estimate else 4)
+
     return template.format(
-        part=case.place.part,
-        estimate="an unknown value" if estimate is None else format_resistor(estimate, 3),
-        nominal="nothing" if nominal is None else "0 ohm" if nominal == 0 else format_resistor(nominal),
+        part=case.place.part, estimate=shown(estimate, "an unknown value"), nominal=shown(nominal, "nothing")
     )
 
 

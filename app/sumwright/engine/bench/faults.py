@@ -62,6 +62,7 @@ class Fault:
     places: Callable[[Bench], Iterator[Place]]
     says: str
     parts_it: str = ""  # the measurement, power off or on, that tells it from its look-alikes
+    unit: str = "Ω"  # of the estimate, where it has one
 
 
 def _cells(bench):
@@ -268,6 +269,20 @@ def _reference_missing(bench):
         yield Place(REFERENCE, (Way(opened, 0.5), Way(_set("reference_volts", (), 0.0), 0.5)))
 
 
+def _reference_wrong(bench):
+    """Another voltage of the same sign, from a twentieth to two and a half times."""
+    reference = bench.design.reference
+    if reference is None or not reference.voltage or not any(leg.source == REFERENCE for leg in bench.legs):
+        return
+
+    def edit(boards, row, volts):
+        boards.reference_volts[row] = np.copysign(volts, reference.voltage)
+
+    size, near = abs(reference.voltage), max(2.0 * reference.tolerance, 0.004)
+    spans = ((0.05 * size, (1 - near) * size, 0.5), ((1 + near) * size, 2.5 * size, 0.5))
+    yield Place(REFERENCE, (Way(edit, 1.0, Values(spans)),), reference.voltage)
+
+
 def _rail_missing(bench):
     """The op amp lives on the other rail and cannot pass 0 V; how close it comes varies."""
     amp, supply = bench.design.op_amp, bench.design.supply
@@ -350,6 +365,10 @@ FAULTS: tuple[Fault, ...] = (
     Fault(
         "reference missing", 6, _reference_missing, "The reference does not reach its leg, or is at 0 V.",
         "Power on: volts at the reference pin, then at the far end of its leg.",
+    ),
+    Fault(
+        "reference wrong", 1.5, _reference_wrong, "The reference gives about {estimate} where {nominal} belongs.",
+        "Power on: volts at the reference pin. {nominal} clears it and blames its leg.", "V",
     ),
     Fault(
         "rail missing", 5, _rail_missing, "The {part} rail does not reach the op amp: the output cannot pass 0 V that way.",

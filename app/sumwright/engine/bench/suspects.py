@@ -43,12 +43,13 @@ class Suspect(NamedTuple):
     fault: str
     part: str
     probability: float
-    estimate: float | None  # ohm
-    estimate_uncertainty: float | None  # ohm, standard
+    estimate: float | None  # ohm, or volts where `unit` says so
+    estimate_uncertainty: float | None  # standard
     group: int
     explain: str
     tell: str  # the measurement that parts it from the rest of its group
     misfit: float  # largest |reading − prediction| in standard deviations
+    unit: str  # of the estimate
 
 
 @dataclass
@@ -147,7 +148,7 @@ class Diagnosis:
         self._alive = np.ones(len(self.cases), dtype=bool)
         if len(self.readings) > SCREEN_ROWS + 6:
             few = condense(self.volts, self.readings, self.meter, SCREEN_ROWS)
-            self._screened = Diagnosis(bench, *few, stated, faults)
+            self._screened = Diagnosis(bench, few[0], few[1], few[2], stated, faults)
             self._alive = self._screened.log_posterior > self._screened.log_posterior.max() - SCREEN_DEPTH
         self._weigh()
 
