@@ -186,13 +186,19 @@ def _fit_note(fit) -> str:
     return said + (f", p = {p:.2g}." if p is not None else ".")
 
 
+def _about(suspect) -> str:
+    """The estimate in its unit: ohm, but volts of a reference."""
+    value = suspect["estimate"]
+    return format_fixed(value, "V") if suspect.get("unit") == "V" else format_resistor(value)
+
+
 def _suspects(suspects) -> Table | None:
     rows = tuple(
         (
             s["fault"],
             s["part"],
             s["probability"],
-            None if s.get("estimate") is None else format_resistor(s["estimate"]),
+            None if s.get("estimate") is None else _about(s),
             s["explain"],
         )
         for s in suspects[:6]
