@@ -180,8 +180,8 @@ export function mount(node, sheet) {
   const take = act('Take it up', () => { wanted = 'large'; send({do: 'next'}) })
   const home = el('details', {hidden: true}, el('summary', {text: 'Bring it home'}))
   const homeTable = table([{text: 'weight'}, {text: 'is', class: 'r'}, {text: 'wanted', class: 'r'}, {text: 'select on test'}, {text: 'or a trimmer'}], 'What brings it home')
-  const soft = el('p', {class: 'note'})
-  home.append(homeTable.node, soft, el('p', {class: 'line'}, act('Take the board as built', () => send({do: 'as built'})),
+  const soft = el('p', {class: 'note'}), cure = el('p', {class: 'note'})
+  home.append(cure, homeTable.node, soft, el('p', {class: 'line'}, act('Take the board as built', () => send({do: 'as built'})),
     el('span', {class: 'soft', text: 'resistor values as the readings have them, onto the sheet; one undo step'})))
   node.append(el('div', {class: 'two'},
     el('div', {}, el('h3', {text: 'Weights the board has'}), el('div', {class: 'fits'}, fits.node), fitNote, home),
@@ -202,8 +202,10 @@ export function mount(node, sheet) {
     setText(fitNote, c.value === null || !s.taken ? (s.taken ? out.trim() : 'No readings of the output yet.')
       : c.freedom === 0 ? `As many readings as unknowns; one more tests the fit.${out}`
         : `χ² = ${fixed(c.value, 1)} on ${c.freedom} ${c.freedom === 1 ? 'degree' : 'degrees'} of freedom, p = ${c.p < .001 ? 'under 0.001' : fixed(c.p, c.p < .1 ? 3 : 2)}.${out}`)
-    home.hidden = !s.home.length
-    if (!s.home.length) return
+    const mend = s.taken && s.told?.cure
+    home.hidden = !s.home.length && !mend
+    if (home.hidden) return
+    setText(cure, mend ? mend.says : ''); cure.hidden = !mend; homeTable.node.hidden = !s.home.length
     homeTable.set(s.home.map(h => {
       const o = h.name === 'offset', say = x => o ? `${fixed(x, 4)}${THIN}V` : signed(x, 4)
       const r = h.resistor, t = h.trimmer

@@ -7,6 +7,7 @@ from typing import Any
 
 from sumwright.engine.bench.capture import fit_capture
 from sumwright.engine.bench.diagnose import diagnose
+from sumwright.engine.bench.home import cure
 from sumwright.files.capture import read_capture
 
 LISTED = 8  # suspects shown
@@ -23,7 +24,9 @@ def weigh(design, readings, meter):
 def told(report) -> dict[str, Any]:
     """What the fold shows of a diagnosis."""
     first = [s for s in report.suspects if s.group == 1]
+    mend = cure(report.diagnosis)
     return {
+        "cure": None if mend is None else mend._asdict(),
         "suspects": [s._asdict() for s in report.suspects[:LISTED]],
         "more": max(0, len(first) - LISTED),
         "tell": next((s.tell for s in first if s.tell), "") if len(first) > 1 else "",

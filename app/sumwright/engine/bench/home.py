@@ -7,9 +7,11 @@ from typing import NamedTuple
 
 import numpy as np
 
+from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.realise.trim import Correction, Trim, select_on_test, trim_for
 from sumwright.engine.stage import REFERENCE, Cell, Design, replace
 from sumwright.errors import SumwrightError
+from sumwright.quantity import format_resistor
 
 from .board import MINUS
 from .fit import Fit
@@ -58,7 +60,7 @@ def software_correction(design: Design, fit: Fit) -> tuple[Coefficient, ...]:
 
 
 def bring_home(design: Design, name: str, measured: float) -> Home:
-    """The parts that bring one measured weight (or the offset, by the name `offset`) to the wanted one.
+    """For a board without a fault (see `cure`): the parts that bring one measured weight (or the offset, by the name `offset`) to the wanted one.
 
     Parameters
     ----------
@@ -83,6 +85,58 @@ def bring_home(design: Design, name: str, measured: float) -> Home:
     except SumwrightError as problem:
         why = why or str(problem)
     return Home(name, wanted, measured, fitted, resistor, trimmer, wanted - measured, why)
+
+
+class Cure(NamedTuple):
+    """What mends the one fault that explains every reading."""
+
+    fault: str
+    part: str
+    resistor: Correction | None  # beside the part that is fitted, where one resistor holds a wrong value; weight in ohm
+    says: str
+
+
+_WRONG_VALUES = {"leg wrong value": "{part} leg", "feedback wrong value": "feedback of {part}"}
+
+
+def cure(diagnosis: Diagnosis) -> Cure | None:
+    """The mend of the likeliest suspect, when that one fault may well give all these readings.
+
+    Weights that share a node move together, so a single wrong resistor puts several out; a part chosen for each of
+    them would leave the fault in and add others. `bring_home` is for boards with nothing but tolerance in them.
+
+    Returns
+    -------
+    Cure or None
+        None without readings, on a healthy board, and where no single fault explains the readings.
+    """
+    lead = int(diagnosis.order[0])
+    case = diagnosis.cases[lead]
+    if case.fault is None or not len(diagnosis.readings) or not diagnosis.fits()[lead]:
+        return None
+    fault, part = case.key
+    fitted, belongs = diagnosis.estimate(lead), case.place.nominal
+    if fault not in _WRONG_VALUES or fitted is None or not belongs:
+        says = f"One fault explains the readings: {', '.join(x for x in (part, fault) if x)}. Mend that, then read again; no other part needs a change."
+        return Cure(fault, part, None, says)
+    what = _WRONG_VALUES[fault].format(part=part)
+    says = f"Replace the {what} by {format_resistor(belongs)}: it holds about {format_resistor(fitted, 3)}."
+    beside = _beside(diagnosis.bench.design.resistor.series, fitted, belongs)
+    if beside is not None:
+        where = "in parallel with" if beside.how == "parallel" else "in series with"
+        says += f" Or put {format_resistor(beside.value)} {where} it, {format_resistor(beside.weight, 3)} together."
+    return Cure(fault, part, beside, says + " That brings every weight home; no other part needs a change.")
+
+
+def _beside(series: str, fitted: float, belongs: float) -> Correction | None:
+    """The preferred value in parallel or in series with a wrong resistor that makes the right one; None if none does."""
+    parallel = belongs < fitted
+    exact = 1.0 / (1.0 / belongs - 1.0 / fitted) if parallel else belongs - fitted
+    if not 0.1 <= exact <= 1e8:
+        return None
+    value = min(map(float, values_within(series, exact / 3, exact * 3)), key=lambda v: abs(v - exact))
+    made = 1.0 / (1.0 / fitted + 1.0 / value) if parallel else fitted + value
+    return Correction("parallel" if parallel else "series", exact, value, made)
 
 
 def as_built(diagnosis: Diagnosis) -> tuple[Cell, ...]:
