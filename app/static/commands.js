@@ -67,7 +67,7 @@ export function saved(state) {
     reader: 'not kept', // its title says why
     changed: `changed elsewhere${s.at ? ' at ' + clock(s.at) : ''}${s.by ? ' by ' + s.by : ''}.`,
   }
-  const lost = state.never ? 'no connection: what you change is not kept' : state.lost ? `no answer from the server since ${state.lost.toTimeString().slice(0, 8)}, trying again` : ''
+  const lost = state.never ? 'no connection: what you change is not kept' : state.lost ? `no answer from the server since ${state.lost.toTimeString().slice(0, 8)}, ${sheet.line.dead ? 'not kept' : 'trying again'}` : ''
   setText(node, lost || (words[s.state] ?? ''))
   setClass(node, 'bad', lost || s.state === 'unsaved' || s.state === 'changed')
   setAttr(node, 'title', state.never ? 'The page could not open its websocket. Look at the server\u2019s allowed origins, and at a proxy in between.' : s.why || null)

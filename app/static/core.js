@@ -1,7 +1,7 @@
 // The sheet in the browser: takes frames from the wire, hands each part its share, turns the folds.
 
 import {el, forgetSizes, setAttr, setText, setClass} from './dom.js'
-import {Line} from './wire.js'
+import {Line, wasAway} from './wire.js'
 import {Blank, isRefused, settle} from './blanks.js'
 import {THIN, fixed} from './format.js'
 import * as strips from './strips.js'
@@ -20,7 +20,7 @@ const folds = new Map() // key -> {node, mounted}
 const PARTS = [strips, stage, plate, margins, drawer, commands, place]
 const NEW = {key: 'new', title: ''}
 
-const line = new Line(apply, silent)
+const line = new Line(apply, silent, gone)
 
 // What every module of the sheet is given.
 export const sheet = {
@@ -128,6 +128,11 @@ function silent(lost, never = false) {
   commands.saved(state)
 }
 
+// the session is over: at once, and again whenever something is typed
+function gone() {
+  note('The server has ended this session: what you change now is not kept. The page opens itself anew when the server answers.', 'server', {bad: true})
+}
+
 // ---------------------------------------------------------------- folds
 
 const tail = {node: el('span', {class: 'tail soft'}), value: el('b', {class: 'n'})}
@@ -197,4 +202,8 @@ apply(start)
 const small = matchMedia('(max-width: 640px)').matches && start.folds.some(f => f.key === 'bench')
 turn(location.hash.slice(1) || (small ? 'bench' : start.folds[0]?.key))
 document.fonts?.ready.then(() => draw(true))
+if (wasAway()) {
+  note('The server was away, and the page has opened itself anew. The sheet is as it was last saved; what was typed meanwhile is not on it.', 'server')
+  noted.at += 10_000 // the first frames do not take it away
+}
 window.sumwright = sheet

@@ -483,6 +483,19 @@ def test_a_lost_answer_does_not_freeze_the_sheet(fresh):
     assert fresh.locator(VALUE.format("north")).input_value() == "1.000"
 
 
+def test_a_session_that_ended_is_said_at_once_and_the_page_opens_itself_anew(fresh):
+    fresh.evaluate(
+        """() => { window.before = true
+             sumwright.line.end() }"""
+    )
+    assert "not kept" in fresh.locator("#note").text_content()
+    assert fresh.locator("#saved").text_content().endswith("not kept")
+    fresh.wait_for_event("load")
+    settled(fresh)
+    assert not fresh.evaluate("window.before")
+    assert "opened itself anew" in fresh.locator("#note").text_content()
+
+
 @pytest.mark.parametrize(("width", "height"), [(1024, 768), (1920, 1080)])
 def test_it_fits_beside_a_scope_and_uses_a_large_screen(server, browser, width, height):
     page = browser.new_page(viewport={"width": width, "height": height})
