@@ -105,6 +105,21 @@ def test_rails_the_wrong_way_round_are_refused_with_both_values():
         edits.with_figure(demo.design(), "supply", "high", -8.0)
 
 
+def test_a_new_sum_starts_from_a_better_set_than_the_nearest_values():
+    design = sums.new_design(sums.read_sum("y = 1/3 left - 2 right + 1 V"), demo.design().op_amp)
+
+    def worst(d):  # by the ideal weights, not by the search
+        made, offset = ideal_weights(d, d.cells)
+        return max(abs(offset - 1.0), *(abs(made[s.name] / s.weight - 1.0) for s in d.signals))
+
+    near, best = edits.realised(design), edits.realised_best(design)
+    assert worst(near) > 0.02 and worst(best) < 0.005
+    series = edits.nearest_in_series(design)
+    cell = best.cells[0]
+    fitted = [leg.resistance for leg in (*cell.minus, *cell.plus)] + [cell.feedback]
+    assert all(series(ohm) == pytest.approx(ohm, rel=1e-9) for ohm in fitted)
+
+
 def test_nearest_values_are_nearest_by_ratio():
     # E24 around 3.3 k (IEC 60063): 3.0, 3.3, 3.6
     design = replace(demo.design(), resistor=replace(demo.design().resistor, series="E24"))

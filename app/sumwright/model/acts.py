@@ -308,7 +308,7 @@ def read_sum(bench: Workbench, message: dict) -> dict:
 def draw_sum(bench: Workbench, message: dict) -> dict:
     """A typed sum takes the sheet's place; undo gives back what was there."""
     wanted = sums.read_sum(fields.text(message, "text", sums.TEXT_MOST * 2))
-    bench.put(checked(edits.realised(sums.new_design(wanted, bench.op_amp))))
+    bench.put(checked(edits.realised_best(sums.new_design(wanted, bench.op_amp))))
     return {"drawn": True}
 
 

@@ -18,6 +18,8 @@ from typing import Any
 import numpy as np
 
 from sumwright.engine.arrangement import able, arrangement_of, exact_cells, wanted_weights
+from sumwright.engine.realise.best_set import search
+from sumwright.engine.realise.choices import MOST_VALUES, weight_errors
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import REFERENCE, Cell, Design, Leg, Reference, Signal, cell_name
 from sumwright.errors import CannotRealise, InvalidDesign, InvalidQuantity
@@ -25,6 +27,7 @@ from sumwright.errors import CannotRealise, InvalidDesign, InvalidQuantity
 FOLLOW = ("nearest", "exact", "kept")
 SIGNALS_MOST = 64  # as many as a design file holds
 NAME_MOST = 64
+BEST_WITHIN = 0.5  # s of work that a new sum's resistors may cost before it is drawn
 _CELL = re.compile(r"cell \d+")
 
 
@@ -211,6 +214,29 @@ def realised(design: Design, follow: str = "nearest") -> Design:
         raise CannotRealise("No arrangement can make these weights.")
     prefer = [a for a in ("inverting", "non-inverting", "mixed-sign") if a in ways]
     return with_arrangement(design, (prefer or ways)[0], follow)
+
+
+def realised_best(design: Design, seconds: float = BEST_WITHIN) -> Design:
+    """The design with the set of its series that errs least, as far as a short search finds it.
+
+    The arrangement is the one `realised` takes; without a better set its nearest values stay.
+    """
+    near = realised(design)
+    arrangement = arrangement_of(near.cells)
+    kind = design.resistor
+    values = values_within(kind.series, kind.least, kind.most)
+    if arrangement is None or not 0 < values.size <= MOST_VALUES:
+        return near
+    try:
+        found = search(design, arrangement, values, seconds=seconds, proof=False).cells
+    except CannotRealise:
+        return near
+    best = min((near.cells, *found), key=lambda cells: _worst(design, cells))
+    return replace(near, cells=best)
+
+
+def _worst(design: Design, cells: tuple[Cell, ...]) -> float:
+    return max(abs(error) for error in weight_errors(design, cells).values())
 
 
 def nearest_in_series(design: Design) -> Callable[[float], float]:

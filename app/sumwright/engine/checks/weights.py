@@ -47,7 +47,11 @@ def checks(analysis) -> tuple[Check, ...]:
         judged(
             KEY, TITLE, "%", 100 * abs(error), 100 * limit, 100 * (limit - abs(error)), 100 * limit,
             f"{what} is {made_text} for {wanted_text}, {format_percent(error, 2, sign=True)} off; "
-            + (f"{format_percent(limit)} uses half the accuracy." if share else f"{format_percent(limit)} is usual."),
+            + (
+                f"the limit {format_percent(limit)} is half the accuracy asked for, at full scale."
+                if share
+                else f"the limit is the usual {format_percent(limit)}, as no accuracy is asked for."
+            ),
             lambda goal: _cure(analysis, name, made, wanted),
         ),
     )  # fmt: skip
