@@ -33,6 +33,7 @@ log = logging.getLogger(__name__)
 FOLDS = ("curves", "choices", "budget", "response", "bench", "log", "report")
 
 ACTS_MOST = 64  # in one message
+FILE_NAME_MOST = 80  # characters of a file's name in a sentence
 LOOK_AROUND = 4000  # ms between looks at what others did to the sheet
 _TEMPLATE = Path(__file__).parent / "views" / "sheet.html"
 
@@ -112,7 +113,7 @@ class Page:
         shown: dict[str, Any] = {
             "title": bench.title,
             "theme": bench.theme,
-            "undo": bool(bench.history.past),
+            "undo": bench.can_undo,
             "redo": bool(bench.history.future),
             "saved": self.saved,
             "place": self.extras.get("place", {}),
@@ -236,7 +237,11 @@ class Page:
             return None
         if name not in acts.FREE:
             self.may(name)
-        return acts.ACTS[name](self.workbench, act)
+        reply = acts.ACTS[name](self.workbench, act)
+        if name == "save" and reply is not None and self.workbench.unplugged:
+            pulled = ", ".join(f"“{n}”" for n in self.workbench.unplugged)
+            reply["note"] = f"Saved with every cable in: a design file has no place for a cable that is out ({pulled})."
+        return reply
 
     # ------------------------------------------------------------ the document
 
@@ -286,7 +291,10 @@ class Page:
 
 def _refusal(act: dict[str, Any], error: SumwrightError) -> dict[str, Any]:
     """One refused act as the browser gets it: its field keeps what was typed, the sentence stands beside it."""
-    refused: dict[str, Any] = {"do": act.get("do"), "field": act.get("field"), "text": str(error)}
+    text = str(error)
+    if act.get("do") == "open" and isinstance(act.get("name"), str):
+        text = f"“{act['name'][:FILE_NAME_MOST]}”: {text.rstrip('.')}. The sheet keeps what it had."
+    refused: dict[str, Any] = {"do": act.get("do"), "field": act.get("field"), "text": text}
     if isinstance(error, CannotRealise) and act.get("do") in acts.RETAKEN:
         refused["able"] = list(error.able)
         refused["act"] = {k: v for k, v in act.items() if isinstance(v, str | int | float | bool)}

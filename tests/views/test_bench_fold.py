@@ -7,6 +7,7 @@ import pytest
 from sumwright.engine.operating_point import operating_point
 from sumwright.errors import SumwrightError
 from sumwright.jobs import Jobs
+from sumwright.model import edits
 from sumwright.model.workbench import Workbench
 from sumwright.views.bench import Bench
 from sumwright.views.fold import Context
@@ -138,3 +139,31 @@ def test_a_capture_comes_in_parts_is_mapped_by_name_and_fitted(fold):
     found = fold.show()["capture"]["fit"]
     np.testing.assert_allclose(found["value"][:2], [point.weights[0], point.weights[4]], rtol=1e-3)
     assert len(fold.capture._measured.data["x"]) > 500
+
+
+def test_undo_after_clear_gives_the_readings_back_and_leaves_the_design(fold):
+    bench = fold.workbench
+    bench.edit(edits.with_value, "north", 1.5)
+    fill(fold, DESIGN)
+    count, design = fold.show()["taken"], bench.design
+    fold.handle({"do": "clear"})
+    assert fold.show()["taken"] == 0 and fold.show()["gone"]
+    assert bench.undo()
+    assert fold.show()["taken"] == count and not fold.show()["gone"]
+    assert bench.design == design
+    assert bench.undo() and bench.design != design
+    assert fold.show()["taken"] == count
+
+
+def test_a_change_of_the_design_after_clear_is_undone_first(fold):
+    fill(fold, DESIGN)
+    count = fold.show()["taken"]
+    fold.handle({"do": "clear"})
+    row = next(i for i, r in enumerate(fold.show()["rows"]) if r["probe"] == "output" and r["unit"] == "V")
+    fold.handle({"do": "reading", "row": row, "text": "0.1234"})
+    fold.workbench.edit(edits.with_value, "north", 1.5)
+    fold.workbench.undo()
+    assert fold.show()["taken"] == 1
+    fold.workbench.undo()
+    shown = fold.show()
+    assert shown["taken"] == count and shown["rows"][row]["text"] == "0.1234"

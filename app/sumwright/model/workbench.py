@@ -60,6 +60,7 @@ class Workbench(param.Parameterized):
 
     def __init__(self, design: Design, **params: Any):
         self.history = History()
+        self._cleared: tuple[Snapshot, dict[str, Any]] | None = None  # readings taken away, and what the sheet was then
         self._styles: dict[str, int] = {}
         design = edits.realised(design)
         choices = {name: getattr(design, name) for name in _DESIGN_FIELDS}
@@ -131,8 +132,32 @@ class Workbench(param.Parameterized):
         rest = tuple(n for n in self.unplugged if n != name)
         self._put(self.design, unplugged=(*rest, name) if out else rest)
 
+    def clear_readings(self, left: dict[str, Any]) -> None:
+        """Take the bench's readings away, leaving `left`; the next undo gives them back."""
+        self._cleared = (self.snapshot, self.readings)
+        self.readings = left
+
+    @property
+    def cleared(self) -> dict[str, Any]:
+        """The readings that were taken away and not given back; `{}` if there are none."""
+        return self._cleared[1] if self._cleared else {}
+
+    def bring_back_readings(self) -> None:
+        """The readings that were taken away, beside those taken since: where both read the same step, the newer one."""
+        gone, self._cleared = self.cleared, None
+        sides = {k: [*gone.get(k, ()), *self.readings.get(k, ())] for k in ("taken", "asked")}
+        self.readings = {**gone, **self.readings, **sides}
+
+    @property
+    def can_undo(self) -> bool:
+        """Whether there is a step to take back."""
+        return bool(self.history.past) or self._cleared is not None
+
     def undo(self) -> bool:
         """Take the last step back; False if there is none."""
+        if self._cleared and (self._cleared[0] == self.snapshot or not self.history.past):
+            self.bring_back_readings()
+            return True
         return self._restore(self.history.undo(self.snapshot))
 
     def redo(self) -> bool:

@@ -37,7 +37,6 @@ class Bench(Fold):
         self._told: dict[str, Any] | None = None
         self._told_for: Any = None
         self._fit: tuple[Any, dict[str, Any]] = (None, {})
-        self._gone: dict = {}
         self._kept = ""
         self._serial = 0  # of the readings; a changed reading makes what was told old
         self._on_sheet: dict = {}  # the readings that the sheet holds, as this fold has taken them up
@@ -71,7 +70,7 @@ class Bench(Fold):
         return {
             "names": design.signal_names, "styles": [self.workbench.style(n) for n in design.signal_names],
             "rows": [_row(r) for r in rows], "now": self._now, "taken": taken, "meter": self._run.meter.text, **fit,
-            "told": self._told, "busy": self.context.jobs.running("bench"), "kept": self._kept, "gone": bool(self._gone),
+            "told": self._told, "busy": self.context.jobs.running("bench"), "kept": self._kept, "gone": bool(self.workbench.cleared),
             "log": self.context.extras.get("sitting") is not None, "capture": self.capture.show(),
         }  # fmt: skip
 
@@ -181,14 +180,14 @@ class Bench(Fold):
         return {"focus": self._now}
 
     def _clear(self, message):
-        self._gone = self._run.clear() or self._gone
-        self._changed()
-        self.context.say("The readings are cleared; Bring back undoes that.")
+        self._run.clear()
+        self.workbench.clear_readings(self._run.document())
+        self._follow_sheet()
+        self.context.say("The readings are cleared; Bring back, or Undo, gives them back.")
 
     def _bring_back(self, message):
-        self._run.taken = {**self._gone, **self._run.taken}
-        self._gone = {}
-        self._changed()
+        self.workbench.bring_back_readings()
+        self._follow_sheet()
 
     def _csv(self, message):
         return {"csv": self._run.to_csv(), "name": "readings.csv"}
