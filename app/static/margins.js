@@ -32,7 +32,7 @@ export function mount(sheet) {
 export function update(state) {
   const checks = state.margins
   const known = checks.filter(c => c.status !== 'unknown')
-  const worst = known[0]
+  const worst = known.find(c => c.first) ?? known[0]
   const count = word => checks.filter(c => c.status === word).length
   head.className = `verdict ${worst?.status ?? 'unknown'}`
   if (state.problem) {

@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from sumwright.engine.analysis import Analysis
-from sumwright.engine.checks import MODULES, Check
+from sumwright.engine.checks import MODULES, Check, headline
 from sumwright.engine.stage import Leg, Load, Reference, Signal, Supply, Target, replace
 from sumwright.files.examples import NAMES, example
 from sumwright.quantity import THIN, parse_quantity
@@ -84,6 +84,16 @@ def test_the_tightest_comes_first_and_unknown_ones_last():
     assert rooms == sorted(rooms)
     statuses = [c.status for c in found]
     assert statuses[-statuses.count("unknown") :] == ["unknown"] * statuses.count("unknown")
+
+
+def test_the_headline_is_what_cannot_work_before_what_misses_a_target():
+    def told(key, status):
+        return Check(key, key, status, 0.0, 0.0, -1.0 if status == "short" else 1.0, "V", "", 1.0, "")
+
+    missed, stuck, fine = told("weights", "short"), told("swing_high_cell_2", "short"), told("supply", "clear")
+    assert headline((missed, stuck, fine)) is stuck
+    assert headline((missed, fine)) is missed
+    assert headline((told("accuracy", "tight"), fine)).key == "accuracy"
 
 
 def test_each_module_of_the_list_gives_its_own_checks():

@@ -25,6 +25,7 @@ from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.boards import draw_boards, shortest_interval, statistics
 from sumwright.engine.budget import POINTS
 from sumwright.engine.cautions import cautions
+from sumwright.engine.checks import headline
 from sumwright.engine.operating_point import ideal_output
 from sumwright.engine.stage import Design
 from sumwright.engine.trace import step, trace
@@ -194,11 +195,16 @@ def equation(design: Design) -> Markup:
 
 def _verdict(analysis: Analysis) -> dict[str, str]:
     checks = analysis.checks
-    worst = checks[0]
+    worst = headline(checks)
     words = [f"{sum(c.status == w for c in checks)} {w}" for w in ("short", "tight", "clear", "unknown")]
     if worst.status == "clear":
         return {
             "status": "clear", "big": "all clear", "title": f"Least margin: {worst.title}", "advice": "",
+            "why": f"{measure(worst.margin, worst.unit, True)}. {worst.why}", "count": ", ".join(words),
+        }  # fmt: skip
+    if worst.status == "tight":
+        return {
+            "status": "tight", "big": "all hold", "title": f"Least margin: {worst.title}", "advice": worst.advice,
             "why": f"{measure(worst.margin, worst.unit, True)}. {worst.why}", "count": ", ".join(words),
         }  # fmt: skip
     big = f"{_roughly(abs(worst.margin), worst.unit)} {worst.status}" if worst.margin is not None else worst.status

@@ -11,6 +11,7 @@ from datetime import UTC, datetime
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.boards import draw_boards, shortest_interval, statistics
 from sumwright.engine.budget import POINTS
+from sumwright.engine.checks import headline
 from sumwright.engine.trace import step
 from sumwright.files.design import write_design
 from sumwright.files.results import to_json
@@ -58,7 +59,7 @@ def summary(analysis: Analysis, author: str | None = None, now: datetime | None 
     """A page of Markdown for a message or a ticket: verdict, signals, weights, margins, parts."""
     design, dc = analysis.design, analysis.dc
     head = about(design, author, now)
-    worst = analysis.checks[0]
+    worst = headline(analysis.checks)
     lines = [
         f"# {plain_markdown(head.title)}", "",
         f"Sumwright {head.version}, {head.made}, {plain_markdown(head.author)}. Design SHA-256 `{head.sha256}`.", "",

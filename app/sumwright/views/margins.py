@@ -5,11 +5,13 @@ from __future__ import annotations
 from typing import Any
 
 from sumwright.engine.cautions import cautions
+from sumwright.engine.checks import headline
 
 
 def show(bench: Any) -> list[dict[str, Any]]:
-    """Every check as plain data; `ratio` is its margin in parts of its allowance."""
-    shown = []
+    """Every check as plain data; `ratio` is its margin in parts of its allowance, `first` marks the headline."""
+    shown: list[dict[str, Any]] = []
+    first = headline(bench.analysis.checks) if bench.analysis.checks else None
     for check in bench.analysis.checks:
         ratio = None
         if check.margin is not None and check.allowance:
@@ -17,6 +19,7 @@ def show(bench: Any) -> list[dict[str, Any]]:
         shown.append({
             "key": check.key, "title": check.title, "status": check.status, "margin": check.margin, "unit": check.unit,
             "ratio": ratio, "why": check.why, "advice": check.advice,
+            "first": check is first,
         })  # fmt: skip
     return shown
 

@@ -64,4 +64,23 @@ def stage_checks(analysis) -> tuple[Check, ...]:
     return tuple(c for module in MODULES if not module.FOLLOWS_VALUES for c in module.checks(analysis))
 
 
-__all__ = ["MODULES", "Check", "run_checks", "stage_checks"]
+# What a stage cannot work without, by the start of the check's key; the others are targets that it misses.
+VITAL = ("swing", "inputs", "output_current", "supply", "resistor_heat", "junction")
+
+
+def headline(checks: tuple[Check, ...]) -> Check:
+    """The check to put first: among those that fall short, what cannot work comes before what misses a target.
+
+    Parameters
+    ----------
+    checks : tuple of Check
+        Least margin first, as `run_checks` gives them; not empty.
+
+    Returns
+    -------
+    Check
+    """
+    return next((c for c in checks if c.status == "short" and c.key.startswith(VITAL)), checks[0])
+
+
+__all__ = ["MODULES", "Check", "headline", "run_checks", "stage_checks"]
