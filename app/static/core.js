@@ -48,7 +48,10 @@ function apply(frame, fields = new Set()) {
   draw(false)
   for (const one of settle(fields, frame.refusals ?? [])) if (one.field === 'sum' && state.open === 'new') folds.get('new').mounted?.refused(one.text)
   else note(one.text, one.field, {bad: true, refusal: one.refusal})
-  if (frame.note) note(frame.note.text, 'server', {bad: frame.note.bad})
+  if (frame.note) {
+    note(frame.note.text, 'server', {bad: frame.note.bad})
+    if (frame.note.bad) noted.at += 15_000 // something went wrong that nobody asked about: time to read it
+  }
   for (const reply of frame.heard ?? []) heard(reply)
   notes()
 }
@@ -119,6 +122,10 @@ export function note(text, field = null, {bad = false, refusal = null} = {}) {
     class: 'act', text: `take ${way}`,
     onclick: () => { const again = {...refusal.act, arrangement: way}; note(null, field); line.act(again) },
   })))
+  // under an open drawer, or many signals, the line may be out of sight: then it stands at the foot of the window
+  setClass(noteLine, 'afloat', false)
+  const {top, bottom} = noteLine.getBoundingClientRect()
+  setClass(noteLine, 'afloat', top < 0 || bottom > innerHeight)
 }
 
 function silent(lost, never = false) {
