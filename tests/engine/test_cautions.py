@@ -60,3 +60,18 @@ def test_the_general_cautions_always_stand():
 def test_those_with_a_reason_come_first():
     order = [c.present for c in cautions(Analysis(stage(rails=40.0)))]
     assert order == sorted(order, reverse=True) and order[0]
+
+
+def test_a_drop_that_the_clipped_output_cannot_reach_is_no_hot_part():
+    # by hand: -1 x 30 V wants 30 V across the feedback; clipped near the 12 V rail at most about 12 V + what the leg adds
+    amp = op_amp()
+    design = stage(low=-30.0, high=30.0, leg=2e4, resistor=ResistorKind(power=0.125))
+    design = dataclasses.replace(design, op_amp=amp, ambient=Ambient(25.0, 10.0, 25.0), supply=Supply(12.0, -12.0, 0.0))
+    cell = dataclasses.replace(design.cells[0], feedback=8e4)
+    design = dataclasses.replace(design, cells=(cell,))
+    analysis = Analysis(design)
+    feedback = next(r for r in analysis.power.resistors if r.name == "feedback")
+    assert feedback.dissipation_most == pytest.approx(120.0**2 / 8e4, rel=1e-3)  # unclipped: 180 mW
+    said = next((c.text for c in cautions(analysis) if c.key == "burn"), "")
+    # clipped: the whole of 30 V + 12 V falls along 20k + 80k, 42 V / 100k through 80k = 14.1 mW
+    assert "feedback takes" not in said

@@ -11,15 +11,21 @@ through the protection of an input, common practice where a data sheet is silent
 from __future__ import annotations
 
 import math
+from functools import lru_cache
+from itertools import product
 from typing import NamedTuple
 
+import numpy as np
+
 from .heat import FULL_POWER_TO, NO_POWER_AT, resistor_rating
-from .nodes import Network
+from .nodes import Network, nominal_limits, solve_clipped
+from .stage import replace
 
 DC_LIMIT = 60.0  # V
 AC_LIMIT = 30.0  # V RMS
 HOT_SURFACE = 60.0  # degC
 PROTECTION_CURRENT = 5e-3  # A
+MOST_CLIPPED = 8  # signals: up to so many, every corner is solved with the outputs at their limits
 
 
 class Caution(NamedTuple):
@@ -85,15 +91,23 @@ def _voltage(design) -> list[Caution]:
 def _heat(analysis) -> list[Caution]:
     design, power = analysis.design, analysis.power
     hot = []
-    rise = (NO_POWER_AT - FULL_POWER_TO) / design.resistor.power  # K/W of a film at its rating
     rating = resistor_rating(design)
-    for r in power.resistors:
-        surface = design.ambient.high + rise * r.dissipation_most
-        if r.dissipation_most > 0.5 * rating:
+    taken = [r.dissipation_most for r in power.resistors]
+    limited = any(c.margin_high < 0 or c.margin_low < 0 for c in analysis.headroom.cells)
+    if (
+        limited
+        and len(design.signals) <= MOST_CLIPPED
+        and any(t > 0.5 * rating or _surface(design, t) > HOT_SURFACE for t in taken)
+    ):
+        at_rest = replace(design, signals=tuple(replace(s, value=0.0) for s in design.signals))
+        taken = [min(a, b) for a, b in zip(taken, _clipped_heat(at_rest, analysis.unplugged), strict=True)]
+    for r, watts in zip(power.resistors, taken, strict=True):
+        surface = _surface(design, watts)
+        if watts > 0.5 * rating:
             hot.append(
-                f"the {r.name} takes {_watts(r.dissipation_most)} of the {_watts(rating)} it may at {design.ambient.high:g} °C"
+                f"the {r.name} takes {_watts(watts)} of the {_watts(rating)} it may at {design.ambient.high:g} °C"
             )
-        elif surface > HOT_SURFACE and r.dissipation_most > 0:
+        elif surface > HOT_SURFACE and watts > 0:
             hot.append(f"the {r.name} may reach {surface:.0f} °C")
     for a in power.op_amps:
         if a.junction is not None and a.junction > HOT_SURFACE:
@@ -105,6 +119,41 @@ def _heat(analysis) -> list[Caution]:
     return [
         Caution("burn", "Hot parts", f"At worst {'; '.join(hot[:most])}{more}. Let them cool before touching.", True)
     ]
+
+
+def _surface(design, watts: float) -> float:
+    """Temperature of a film [degC], from the slope of its derating line."""
+    return design.ambient.high + (NO_POWER_AT - FULL_POWER_TO) / design.resistor.power * watts
+
+
+@lru_cache(maxsize=16)
+def _clipped_heat(design, unplugged) -> tuple[float, ...]:
+    """Worst dissipation of every resistor [W] over the corners of the signals, no output past its limits.
+
+    With an output at its limit the drop across a resistor is still monotone in every
+    signal, so the corners have the worst. Rails at their high tolerance.
+    """
+    net = Network(design, unplugged)
+    supply, n = design.supply, net.signal_count
+    wide = replace(supply, high=supply.high * (1 + supply.tolerance), low=supply.low * (1 + supply.tolerance))
+    corners = np.array(list(product(*((s.low, s.high) for s in design.signals))))
+    sources = np.column_stack([corners, np.full(len(corners), net.values[n])])
+    sol = solve_clipped(net, sources, limits=nominal_limits(replace(design, supply=wide))).solution
+    minus, plus, output = (x[..., 0] for x in (sol.minus, sol.plus, sol.output))
+    found = []
+    for i, part in enumerate(net.parts):
+        c, r = net.cells[part.cell], float(net.resistances[i])
+        node = (plus if part.kind in ("plus", "plus_ground") else minus)[:, part.cell]
+        end, total = np.zeros(len(corners)), r
+        if part.kind == "feedback":
+            end = output[:, part.cell]
+        elif part.kind in ("minus", "plus"):
+            ids, ends = (c.minus_parts, c.minus_sources) if part.kind == "minus" else (c.plus_parts, c.plus_sources)
+            source = int(ends[list(ids).index(i)])
+            end = sources[:, source] if source <= n else output[:, source - n - 1]
+            total = r + float(net._leg_rs[source])
+        found.append(float((((end - node) / total) ** 2 * r).max()) if 0 < total < math.inf else 0.0)
+    return tuple(found)
 
 
 def _watts(power: float) -> str:
