@@ -197,3 +197,22 @@ def test_whatever_a_person_types_the_sheet_answers(steps):
         page.receive({"seq": seq, "acts": [act]})
         assert browser.frames[-1]["seq"] == seq, act
     page.close()
+
+
+def test_a_bad_file_is_refused_by_its_name_and_the_sheet_keeps_what_it_had(page):
+    browser, title = Browser(page), page.workbench.title
+    page.receive({"seq": 1, "acts": [{"do": "open", "text": "{nope", "field": None, "name": "broken.json"}]})
+    (refusal,) = browser.frames[-1]["refusals"]
+    assert refusal["text"].startswith("“broken.json”: ")
+    assert refusal["text"].endswith(". The sheet keeps what it had.")
+    assert page.workbench.title == title
+
+
+def test_saving_with_a_cable_out_says_that_the_file_has_no_place_for_it(page):
+    browser = Browser(page)
+    page.receive({"seq": 1, "acts": [{"do": "save"}]})
+    assert "note" not in browser.frames[-1]["heard"][0]
+    page.receive({"seq": 2, "acts": [{"do": "plug", "signal": "north", "out": True}, {"do": "save"}]})
+    (saved,) = [h for h in browser.frames[-1]["heard"] if h["do"] == "save"]
+    assert "“north”" in saved["note"]
+    assert "cable" in saved["note"]

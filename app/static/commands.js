@@ -47,8 +47,8 @@ export function heard(reply) {
   }
   if (reply.opened !== undefined) {
     if (sheet.state.open === 'new') location.hash = 'curves'
-    if (reply.note) sheet.note(reply.note)
   }
+  if (reply.note && (reply.download || reply.opened !== undefined)) sheet.note(reply.note)
 }
 
 export function update(state) {
