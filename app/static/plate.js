@@ -36,6 +36,11 @@ export function mount(theSheet) {
 
 const pair = (name, ...children) => [el('div', {}, el('dt', {text: name}), el('dd', {}, ...children))]
 
+// an arrangement whose legs are another's is shown under that one's name: say why
+export function heard(reply) {
+  if (reply.arranged && reply.note) sheet.note(reply.note)
+}
+
 export function update(state, resized) {
   const p = state.plate, s = state.stage
   if (!p) return

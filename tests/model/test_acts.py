@@ -106,3 +106,10 @@ def test_whatever_comes_is_done_or_refused_and_the_sheet_stays_whole(act, messag
         assert "\n" not in str(refused)
     assert not SHARED.problem
     assert SHARED.analysis.design == SHARED.design
+
+
+def test_an_arrangement_with_the_legs_of_another_says_so():
+    bench = Workbench(demo.design())
+    do(bench, "draw_sum", text="out = - a - 0.5 b - 0.25 c")
+    assert "where inverting has them" in do(bench, "arrange", arrangement="two-stage")["note"]
+    assert do(bench, "arrange", arrangement="inverting") is None

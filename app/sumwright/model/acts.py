@@ -13,6 +13,7 @@ from dataclasses import replace
 from typing import Any
 
 from sumwright import fields
+from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.catalogue import catalogue
 from sumwright.engine.stage import ARRANGEMENTS, Design
 from sumwright.files.design import design_document, read_design, write_design
@@ -183,10 +184,15 @@ def capacitor(bench: Workbench, message: dict) -> None:
     bench.edit(lambda d: checked(edits.with_feedback_capacitance(d, cell, typed)))
 
 
-def arrange(bench: Workbench, message: dict) -> None:
-    """The stage is realised by another arrangement."""
+def arrange(bench: Workbench, message: dict) -> dict | None:
+    """The stage is realised by another arrangement; a note says so where its legs are those of another."""
     way = fields.one_of(message, "arrangement", ARRANGEMENTS)
     bench.edit(lambda d: checked(edits.with_arrangement(d, way, bench.follow)))
+    made = arrangement_of(bench.design.cells)
+    if made == way or made is None:
+        return None
+    said = f"For these weights the {way} arrangement has its legs where {made} has them, and the sheet calls it that."
+    return {"arranged": made, "note": said}
 
 
 def follow(bench: Workbench, message: dict) -> None:
