@@ -226,11 +226,11 @@ def test_help_and_version_end_well():
         assert done.returncode == 0 and "sumwright" in done.stdout
 
 
-def test_an_output_closed_early_is_one_line(design):
+def test_an_output_closed_early_is_no_fault_to_speak_of(design):
     command = f'"{sys.executable}" -m sumwright.command analyse "{design}" --json | true; exit ${{PIPESTATUS[0]}}'
     done = subprocess.run(["bash", "-c", command], capture_output=True, text=True, check=False)
     assert done.returncode == 2
-    assert len(done.stderr.splitlines()) == 1 and "closed" in done.stderr
+    assert done.stderr == ""  # the reader had enough, as head has
 
 
 def test_a_full_disk_is_one_line(design):

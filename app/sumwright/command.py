@@ -78,9 +78,10 @@ def main(argv: list[str] | None = None) -> int:
     except SumwrightError as problem:
         return _refuse(str(problem))
     except BrokenPipeError:
+        # The reader has had enough (a pager, head): that is no fault to speak of. The status still tells.
         # Python flushes once more at exit; give it somewhere to go.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return _refuse("The output was closed before all of it was written.")
+        return 2
     except OSError as problem:
         return _refuse(f"{problem.strerror or problem}.")
     except KeyboardInterrupt:
