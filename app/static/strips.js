@@ -115,7 +115,8 @@ function makeRow(key, r) {
     const moves = el('span', {class: 'moves'},
       ...[['up', -1], ['down', 1]].map(([word, way]) => el('button', {class: 'act', text: word, 'aria-label': `${name} ${word}`, onclick: () => move(name, way)})),
       el('button', {class: 'act', text: 'remove', 'aria-label': `remove ${name}`, onclick: () => sheet.act({do: 'remove', signal: name})}))
-    node.append(item.slide.input, moves)
+    item.past = el('span', {class: 'past', role: 'status'})
+    node.append(item.slide.input, moves, item.past)
     item.plug = el('button', {class: 'plug', onclick: () => sheet.act({do: 'plug', signal: name, out: !sheet.state.signals.rows.find(x => x.name === name).out})}, plugDrawing)
     node.addEventListener('focusin', () => { if (sheet.state.signals.on !== name) sheet.act({do: 'on', signal: name}) })
   }
@@ -168,7 +169,8 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   if (!(pulled === r.name)) item.value.set(volts(r.value))
   const beyond = !r.reference && (r.value < r.low || r.value > r.high)
   setClass(node, 'beyond', beyond)
-  setAttr(item.value.node, 'title', beyond ? `outside its range, ${fixed(r.low)} to ${fixed(r.high)} V` : helpFor('value'))
+  if (item.past) setText(item.past, beyond ? `past ${brief(r.low)} to ${brief(r.high)}${THIN}V` : '')
+  setAttr(item.value.node, 'title', beyond ? `past its range, ${fixed(r.low)} to ${fixed(r.high)} V: the corners and margins do not cover it` : helpFor('value'))
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u2009)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
   setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : weight(r.made))
@@ -176,7 +178,7 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
     const zero = W * .24, room = W - zero - 2, x = r.share / reach * room * (r.share < 0 ? Math.min(1, zero / room * .95) : 1)
     setAttr(item.zero, 'd', `M${zero} 0V${row}`)
     setAttr(item.bar, 'x', Math.min(zero, zero + x)); setAttr(item.bar, 'y', row / 2 - 13); setAttr(item.bar, 'width', Math.max(1.5, Math.abs(x)))
-    setAttr(item.share, 'x', W); setAttr(item.share, 'y', row / 2 + 13)
+    setAttr(item.share, 'x', W); setAttr(item.share, 'y', row / 2 + (row < 36 ? 11.5 : 13))
     setText(item.share, volts(r.share, signed))
   }
   const y = row / 2, at = plugWidth * .42
@@ -195,6 +197,8 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   setAttr(pin, 'cx', r.out ? 8 : at); setAttr(pin, 'cy', y); setAttr(pin, 'r', r.out ? 4.6 : 5.5)
   setAttr(pin, 'fill', r.out ? 'var(--paper)' : s.colour); setAttr(pin, 'stroke', r.out ? s.colour : 'var(--paper)'); setAttr(pin, 'stroke-width', r.out ? 2 : 1)
 }
+
+const brief = x => String(Number(x.toPrecision(4))).replace('-', '\u2212')
 
 // as many decimals as the weight has, four at least: 0.33333 stays what was asked
 const weightText = r => {
@@ -220,13 +224,17 @@ function fit(n) {
 function writeSum(shown) {
   const order = [...shown.sum.filter(t => t[1] > 0), ...shown.sum.filter(t => t[1] < 0)]
   const parts = JSON.stringify([order, shown.offset])
-  if (sum.dataset.parts === parts) return
+  if (sum.dataset.parts === parts && sum.dataset.width === String(size(box).width)) return
+  sum.dataset.width = size(box).width
   sum.dataset.parts = parts
   const terms = order.map(([name, w], i) => el('span', {class: 'term'},
     el('span', {class: 'op', text: w < 0 ? '\u2212' : i ? '+' : ''}), plainWeight(w) + THIN, el('i', {text: name})))
   if (shown.offset) terms.push(el('span', {class: 'term'}, el('span', {class: 'op', text: shown.offset < 0 ? '\u2212' : '+'}), `${fixed(Math.abs(shown.offset), 2)}${THIN}V`))
   sum.replaceChildren(el('i', {text: 'out'}), el('span', {class: 'op', text: '='}), ...terms.flatMap(t => [t, ' ']))
-  setClass(sum, 'long', order.length > 6)
+  // what does not stand in one line is set smaller, in two
+  setClass(sum, 'long', false)
+  setClass(sum, 'long', sum.scrollHeight > sum.clientHeight + 1)
+  setAttr(sum, 'title', sum.textContent.trim())
   const longest = Math.max(...order.map(t => t[0].length), 9)
   document.documentElement.style.setProperty('--names', `calc(${Math.min(16, longest)} * .52em + 30px)`)
 }
