@@ -6,7 +6,8 @@ from hypothesis import strategies as st
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.operating_point import operating_point
 from sumwright.model import demo, edits, sums
-from sumwright.views.curves import clip_levels, nice_step, ruler
+from sumwright.model.workbench import Workbench
+from sumwright.views.curves import _contributions, clip_levels, nice_step, ruler
 
 
 def stage(text, arrangement):
@@ -67,3 +68,15 @@ def test_steps_are_one_two_or_five_times_a_power_of_ten(least):
     assert least * (1 - 1e-6) <= step <= 2.5 * least * (1 + 1e-6)
     mantissa = float(f"{step:e}".split("e")[0])
     assert mantissa in (1.0, 2.0, 5.0)
+
+
+def test_the_contributions_end_at_the_output_when_it_is_clipped_too():
+    bench = Workbench(edits.with_figure(demo.design(), "supply", "high", 4.0))
+    dc = bench.analysis.dc
+    assert dc.clipped == "high"
+    parts = _contributions(bench, bench.analysis.design, dc)
+    assert parts[-1]["cut"]
+    assert parts[-1]["volts"] < 0
+    assert sum(p["volts"] for p in parts) == pytest.approx(dc.output, abs=1e-9)
+    whole = Workbench(demo.design())
+    assert not any("cut" in p for p in _contributions(whole, whole.analysis.design, whole.analysis.dc))

@@ -90,15 +90,20 @@ export function mount(node, sheet) {
     const parts = shown.contributions
     p.text(a[0], 12 * k, 'Contributions', {class: 'cap'})
     const wide = (a[1] - a[0] - 6) / Math.max(parts.length, 3)
+    // all by name, or all by mark
+    const named = parts.every(part => part.style === null || part.name.length * 6.6 * k <= wide - 1)
     let sum = 0
     parts.forEach((part, i) => {
       const s = style(part.style), x = a[0] + 6 + i * wide
       const from = clamp(sum), to = clamp(sum + part.volts)
-      p.put('rect', {x: x + wide * .14, y: Math.min(from, to), width: wide * .72, height: Math.max(1.5, Math.abs(from - to)), fill: s.colour, class: 'move'})
+      p.put('rect', {x: x + wide * .14, y: Math.min(from, to), width: wide * .72, height: Math.max(1.5, Math.abs(from - to)), ...(part.cut ? {fill: 'none', stroke: 'var(--accent)', 'stroke-width': 1.5, 'stroke-dasharray': '3 2', class: 'move'} : {fill: s.colour, class: 'move'})})
+      // beyond the scale: it goes on that way
+      const end = sum + part.volts
+      if (clamp(end) !== Y(end)) p.path(`M${x + wide / 2} ${clamp(end) + (Y(end) < y0 ? -1 : 1)}l-5 ${Y(end) < y0 ? 7 : -7}h10z`, {class: 'tip'})
       p.path(`M${x + wide * .14} ${to}H${x + wide * (i < parts.length - 1 ? 1.86 : 1)}`, {class: 'axis inked'})
       if (wide > 32 * k) p.text(x + wide / 2, Math.min(Math.max(from, to) + 15 * k, y1 + 14 * k), signed(part.volts, 2), {'text-anchor': 'middle', class: 'halo'})
-      if (part.style !== null && part.name.length * 6.6 * k > wide - 1) p.path(markerAttributes(s, x + wide / 2, y1 + 12 * k).d, {...markerAttributes(s, x + wide / 2, y1 + 12 * k)})
-      else p.text(x + wide / 2, y1 + 18 * k, part.style === null ? 'ref' : part.name, {'text-anchor': 'middle', class: 'soft'})
+      if (part.style !== null && !named) p.path(markerAttributes(s, x + wide / 2, y1 + 12 * k).d, {...markerAttributes(s, x + wide / 2, y1 + 12 * k)})
+      else p.text(x + wide / 2, y1 + 18 * k, part.cut ? wide > 44 * k ? 'cut off' : 'cut' : part.style === null ? 'ref' : part.name, {'text-anchor': 'middle', class: 'soft'})
       sum += part.volts
     })
 
@@ -139,13 +144,16 @@ export function mount(node, sheet) {
   const range = shown => figure ? [figure.x_range.start, figure.x_range.end] : shown.x
 
   // where the signal under the hand meets the limit
+  let marked = null
   function marks(shown, b, Y, k) {
+    marked = null
     const q = shown.clips.find(x => x.name === shown.on && x.at !== null)
     if (!q || q.cell !== null) return
     const [x0, x1] = range(shown)
     if (q.at < x0 || q.at > x1) return
     const x = b[0] + (q.at - x0) / (x1 - x0) * (b[1] - b[0])
     const y = q.side === 'high' ? Y(q.y) - 14 * k : Y(q.y) + 24 * k
+    marked = {x, y}
     above.text(Math.max(b[0] + 18, Math.min(b[1] - 18, x)), y, 'clips', {'text-anchor': 'middle', class: 'node red halo'})
   }
 
@@ -158,7 +166,10 @@ export function mount(node, sheet) {
     const xs = data?.get ? data.get('x') : data?.x, ys = data?.get ? data.get('y') : data?.y
     if (!xs) return 0
     const [x0, x1] = range(shown)
-    let inside = 0
+    // a ruled line through the words counts too, and the word at the mark most
+    const ruled = [...shown.lines.map(l => l.value), shown.output].filter(v => Y(v) > at.top + 2 && Y(v) < at.top + high - 2).length
+    const word = marked && marked.x > at.left - 24 && marked.x < at.left + wide + 24 && marked.y > at.top - 4 && marked.y < at.top + high + 16
+    let inside = 3 * ruled + (word ? 20 : 0)
     for (let q = 0; q < xs.length; q++) for (let j = 1; j < xs[q].length; j++) for (let t = 0; t <= 1; t += .125) {
       const x = b[0] + (xs[q][j - 1] + t * (xs[q][j] - xs[q][j - 1]) - x0) / (x1 - x0) * (b[1] - b[0])
       const y = Y(ys[q][j - 1] + t * (ys[q][j] - ys[q][j - 1]))
@@ -190,17 +201,18 @@ export function mount(node, sheet) {
       setAttr(item.node, 'class', state)
     })
     const rows = Math.ceil(n / (n > 6 ? 2 : 1))
-    setAttr(key, 'class', n > 6 ? 'clips two-columns' : 'clips')
+    const slim = b[1] - b[0] < 220 * k // the strips tell which mark is whose
+    setAttr(key, 'class', n > 6 ? 'clips two-columns' : slim ? 'clips slim' : 'clips')
     const high = (rows + 1) * 16 * k
-    const wide = (n > 6 ? 380 : 232) * k
-    const lefts = [Math.max(b[0] + 8, b[1] - wide), b[0] + 10], tops = [y1 - high - 6, y0 + 4]
+    const wide = (n > 6 ? 380 : slim ? 150 : 232) * k
+    const lefts = [Math.max(b[0] + 8, b[1] - wide), b[0] + 10], tops = [y1 - high - 6, y0 + 4, (y0 + y1 - high) / 2]
     const places = tops.flatMap(top => lefts.map(left => ({left, top})))
     // stay where it is unless the curves run through it there and do so less elsewhere
     const crossed = places.map(at => crossings(at, wide, high, b, Y, shown))
     if (stand >= places.length || crossed[stand] > Math.min(...crossed) + 2) stand = crossed.indexOf(Math.min(...crossed))
     const {left, top} = places[stand]
     key.style.transform = `translate(${Math.round(left)}px,${Math.round(top)}px)`
-    key.hidden = n > 12 || b[1] - b[0] < 220
+    key.hidden = n > 12 || b[1] - b[0] < 160 * k || (slim && n > 6)
   }
 
   function beams(p, list, [c0, c1], Y, clamp, y1, k, shownHigh) {
@@ -223,7 +235,8 @@ export function mount(node, sheet) {
         if (n <= 2 && Y(beam.limit_high) > 0) p.text(right ? x + 21 : x - 21, right && !bad.high ? Math.min(Y(beam.limit_high) + 5, clamp(beam.high) - 8) : Y(beam.limit_high) + 5, fixed(beam.limit_high), {'text-anchor': right ? 'start' : 'end', class: 'soft halo'})
       } else {
         p.text(beam.high > shownHigh ? x + 24 : x, clamp(beam.high) + (beam.high > shownHigh ? 12 : -6), fixed(beam.high, 2), {'text-anchor': 'middle', class: bad.high ? 'node red halo' : 'halo'})
-        if (!close) p.text(x, clamp(beam.low) + 15, fixed(beam.low, 2), {'text-anchor': 'middle', class: bad.low ? 'node red halo' : 'halo'})
+        const deep = clamp(beam.low) + 15 > y1
+        if (!close) p.text(deep ? x + 28 * k : x, clamp(beam.low) + (deep ? -4 : 15), fixed(beam.low, 2), {'text-anchor': 'middle', class: bad.low ? 'node red halo' : 'halo'})
       }
       const label = n > 2 && step < 62 * k ? beam.label.replace('output', 'out').replace('inputs', 'in') : beam.label
       p.text(x, y1 + 18 * k, label, {'text-anchor': 'middle', class: 'soft'})

@@ -240,7 +240,11 @@ def _contributions(bench, design, dc) -> list[dict[str, Any]]:
     reference = []
     if design.reference is not None and (dc.offset or design.target.offset):
         reference = [{"name": REFERENCE, "style": None, "volts": dc.offset, "out": False}]
-    return reference + ups + downs
+    shown = reference + ups + downs
+    cut = dc.output - dc.unclipped_output
+    if abs(cut) > 5e-4:  # so that the bars end where the output is
+        shown.append({"name": "cut off", "style": None, "volts": cut, "out": False, "cut": True})
+    return shown
 
 
 def _clips(bench, analysis) -> list[dict[str, Any]]:
