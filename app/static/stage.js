@@ -116,7 +116,7 @@ function draw(L, s) {
       p.line(`M${x0} ${before.mid}H${to}V${target}`)
       body(xr, before.mid, 18 * k)
       part(`${c}/${node}/${source}`, xr, before.mid, text, `resistor, ${source} to cell ${c + 1}`)
-      current(xr, before.mid + 34 * k, data.legs[source] ?? 0)
+      current(xr, before.mid + 37 * k, data.legs[source] ?? 0)
       if (node === 'minus' && before.mid !== ym) p.dot(to, target)
     }
 
@@ -141,7 +141,7 @@ function draw(L, s) {
       p.line(`M${x} ${y0}v${14 * k}M${x} ${y0 + 48 * k}v${8 * k}`)
       upright(x, y0 + 14 * k)
       ground(x, y0 + 56 * k)
-      part(`${c}/plus_ground`, x + 12 * k, y0 + 31 * k, data.plus_ground, `resistor, plus node of cell ${c + 1} to ground`, 'right')
+      part(`${c}/plus_ground`, x + (rowsP.length || L.many ? 12 : -12) * k, y0 + 31 * k, data.plus_ground, `resistor, plus node of cell ${c + 1} to ground`, rowsP.length || L.many ? 'right' : 'left')
     }
     if (cell.minusGround === 'left') {
       const yg = cell.yMinusGround, to = rowsM.length ? bus : xm
@@ -176,7 +176,7 @@ function draw(L, s) {
       p.line(`M${xm} ${yf}H${out}V${mid}`)
       body(xr, yf, wide)
       p.dot(out, mid)
-      const over = L.many && !cell.onTop && !data.cf
+      const over = !data.cf && (L.many ? !cell.onTop : k < .9 && cell.ym > L.y(cell.first))
       part(`${c}/feedback`, L.many && !cell.onTop && data.cf ? xr + 18 : xr, yf, data.feedback, L.many ? `resistor, feedback of cell ${c + 1}` : 'resistor, feedback', over ? 'above' : 'below')
       if (data.cf) {
         const a = xm + Math.min(20 * k, (out - xm) * .14), b = out - Math.min(20 * k, (out - xm) * .14)
@@ -187,7 +187,9 @@ function draw(L, s) {
       part(`${c}/cf`, data.cf ? xr + 9 : xr + wide + 4, data.cf ? yc - 9 * k : yf - 9 * k, data.cf, `capacitor across the feedback of cell ${c + 1}, farads`, 'right')
       const lift = clip && last ? 32 * k : 0
       if (!still(data.ifb)) arrowUp(out, mid - (L.many ? 26 : 50) * k - lift / 2 + (data.ifb > 0 ? 5 : -5), data.ifb <= 0)
-      current(out + 8, mid - (L.many ? 36 : 46) * k - lift, data.ifb, 'start')
+      // between two cells: in the middle of the gap
+      if (L.many && !last) current((out + L.cells[c + 1].xm) / 2, mid - 36 * k, data.ifb)
+      else current(out + 8, mid - (L.many ? 36 : 46) * k - lift, data.ifb, 'start')
     }
 
     // node voltages
@@ -195,11 +197,11 @@ function draw(L, s) {
     const red = clip ? ' red' : ''
     if (virtual && !L.many) { p.text(xm + 5 * k, ym - 21 * k, 'virtual', {class: 'node halo'}); p.text(xm + 5 * k, ym - 6 * k, 'ground', {class: 'node halo'}) }
     else p.text(xm + (L.many ? 3 : 5) * k, ym - 6 * k, `${fixed(data.vm)}${THIN}V`, {class: 'node halo' + red})
-    if (rowsP.length || cell.plusGround === 'down') p.text(L.many ? xm + 5 * k : xm - 6 * k, yp + 17 * k, `${fixed(data.vp)}${THIN}V`, {class: 'node halo'})
+    if (rowsP.length || cell.plusGround === 'down') p.text(L.many ? xm + 5 * k : rowsP.length ? xm - 6 * k : tri - 20 * k, yp + 17 * k, `${fixed(data.vp)}${THIN}V`, {class: 'node halo', 'text-anchor': L.many || rowsP.length ? 'start' : 'end'})
     if (!last) {
       p.line(`M${tip} ${mid}H${out}`)
-      p.text(out + 4, mid + 18 * k, `${fixed(data.vo)}${THIN}V`, {class: 'node halo' + red})
-      if (clip) p.text(out + 4, mid + 50 * k, `clipped ${data.clipped}`, {class: 'node red'})
+      p.text(out + 4, mid + 22 * k, `${fixed(data.vo)}${THIN}V`, {class: 'node halo' + red})
+      if (clip) p.text(out + 4, mid + 53 * k, `clipped ${data.clipped}`, {class: 'node red'})
     }
   }
 
@@ -218,7 +220,7 @@ function draw(L, s) {
     if (s.load.resistance) current(xl + 13 * k, y0 + 30 * k, s.load.i, 'start')
   }
   p.put('circle', {cx: W - 5, cy: mid, r: 4, class: 'terminal'})
-  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many || fixed(s.output).length > 6 ? ' less' : '')}, fixed(s.output))
+  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many && fixed(s.output).length > 5 ? ' least' : L.many || fixed(s.output).length > 6 ? ' less' : '')}, fixed(s.output))
   p.text(W, mid - 11 * k, 'V', {'text-anchor': 'end', class: 'halo'})
   if (clip) {
     p.text(W, mid - (L.many ? 48 : 56) * k, s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped, {'text-anchor': 'end', class: 'node red halo'})
@@ -252,8 +254,8 @@ function place(spots, s) {
     node.__size ??= [node.offsetWidth, node.offsetHeight]
     const [w, h] = node.__size
     const k = placed.k
-    const left = spot.how === 'right' ? spot.x : spot.x - w / 2
-    const top = spot.how === 'below' ? spot.y + 8 * k : spot.how === 'right' ? spot.y - h / 2 : spot.y - (7 * k + h + 1)
+    const left = spot.how === 'right' ? spot.x : spot.how === 'left' ? spot.x - w : spot.x - w / 2
+    const top = spot.how === 'below' ? spot.y + 8 * k : spot.how === 'right' || spot.how === 'left' ? spot.y - h / 2 : spot.y - (7 * k + h + 1)
     const at = `${Math.round(left)}px,${Math.round(top)}px`
     if (node.__at !== at) { node.style.transform = `translate(${at})`; node.__at = at }
   }
