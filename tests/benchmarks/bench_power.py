@@ -16,10 +16,11 @@ from pathlib import Path
 
 import numpy as np
 from sumwright.engine.bench.board import Bench
+from sumwright.engine.bench.diagnose import near_clipping
 from sumwright.engine.bench.fit import least_squares
 from sumwright.engine.bench.next_reading import next_reading
 from sumwright.engine.bench.plan import plan
-from sumwright.engine.bench.readings import Meter
+from sumwright.engine.bench.readings import Meter, Readings
 from sumwright.engine.bench.suspects import Diagnosis, Trial, list_cases, wire
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
@@ -106,7 +107,10 @@ def campaign(design, meter, boards, seed, *, adaptive, healthy=0.25, **trouble):
         groups, rank = d.groups(), int(np.flatnonzero(d.order == case)[0])
         if case == 0:
             score["healthy"].append(rank == 0)
-            fit = least_squares(np.column_stack([volts, np.ones(len(y))]), y, meter.standard_uncertainty(y))
+            u = meter.standard_uncertainty(y)
+            out = [x.row for x in near_clipping(design, Readings(design.signal_names, volts, y, u), bench)]
+            keep = np.setdiff1d(np.arange(len(y)), out)
+            fit = least_squares(np.column_stack([volts, np.ones(len(y))])[keep], y[keep], u[keep])
             if fit.determined.all():
                 covered += list(np.abs(fit.value[:n] - board.weights()) <= fit.expanded[:n])
         else:
