@@ -142,3 +142,13 @@ def test_no_bytes_do_anything_but_read_or_be_refused(data):
             continue
         assert np.isfinite(got.time).all()
         assert (np.diff(got.time) >= 0).all()
+
+
+@pytest.mark.parametrize(
+    ("rows", "line"), [("0,1,2\n1,2,3\n2,x,4\n", 4), ("0,1,2\n1,2,3\n2,4\n", 4), ("0;1,5\n1;2,5\nend;0\n", 4)]
+)
+def test_a_short_table_that_breaks_off_is_named_by_its_line_and_its_own_name(tmp_path, rows, line):
+    path = tmp_path / "capture-1.csv"
+    path.write_text("time;a;b\n" + rows if ";" in rows else "time,a,b\n" + rows)
+    with pytest.raises(InvalidReadings, match=f"^“scope 7.csv”, line {line} is "):
+        read_capture(path, "“scope 7.csv”")

@@ -167,3 +167,11 @@ def test_a_change_of_the_design_after_clear_is_undone_first(fold):
     fold.workbench.undo()
     shown = fold.show()
     assert shown["taken"] == count and shown["rows"][row]["text"] == "0.1234"
+
+
+def test_a_capture_that_cannot_be_read_is_called_by_its_own_name(fold):
+    part = base64.b64encode(b"nothing of use\n").decode()
+    with pytest.raises(SumwrightError, match=r"“gate scope\.csv” has no table"):
+        fold.handle(
+            {"do": "capture", "step": "part", "data": part, "first": True, "last": True, "name": "gate scope.csv"}
+        )

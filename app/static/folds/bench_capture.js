@@ -33,7 +33,7 @@ export function mountCapture(sheet, send) {
     const last = at >= given.size
     if (last) rest = null
     setText(said, last ? 'reading…' : `${Math.round(100 * at / given.size)}${THIN}% of “${given.name}”`)
-    send({do: 'capture', step: 'part', data, first, last})
+    send({do: 'capture', step: 'part', data, first, last, ...(first ? {name: given.name.slice(-200)} : {})})
   }
   const said = el('span', {class: 'soft', role: 'status'})
   const mapping = el('div', {class: 'mapping'})

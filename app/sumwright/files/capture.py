@@ -9,6 +9,7 @@ name the line and column.
 
 from __future__ import annotations
 
+import itertools
 import os
 import re
 import warnings
@@ -61,12 +62,14 @@ class _Shape(NamedTuple):
     preamble: tuple[str, ...]
 
 
-def read_capture(source: os.PathLike | str | bytes, name: str = "The capture") -> Capture:
+def read_capture(source: os.PathLike | str | bytes, name: str = "") -> Capture:
     """The record in a file.
 
     Parameters
     ----------
     source : path, or bytes
+    name : str, optional
+        What its errors call it; by default its path.
 
     Raises
     ------
@@ -77,10 +80,11 @@ def read_capture(source: os.PathLike | str | bytes, name: str = "The capture") -
     if isinstance(source, bytes):
         import io
 
+        name = name or "The capture"
         if len(source) > MOST_BYTES:
             raise InvalidReadings(f"{name} is {len(source) / 2**20:.0f} MB; at most {MOST_BYTES / 2**20:g} MB is read.")
         return _read(io.BytesIO(source), name)
-    name = shown(os.fspath(source), 120)
+    name = name or shown(os.fspath(source), 120)
     refuse_large(source, MOST_BYTES, name)
     try:
         path = Path(source)
@@ -142,6 +146,11 @@ def _shape(head: bytes, name: str) -> _Shape:
             if found is not None:
                 at, columns = found
                 return _described(lines, at, columns, separator, comma, head, name)
+    if broken := _broken_off(lines):
+        at, what = broken
+        raise InvalidReadings(
+            f"{name}, line {at + 1} is {shown(what, 60)}, which is not a row of numbers like the one before it."
+        )
     if any(line.strip() for line in lines):
         raise InvalidReadings(
             f"{name} has no table of numbers in its first {HEAD // 1024} kB; rows of time and one or more channels are wanted."
@@ -149,17 +158,28 @@ def _shape(head: bytes, name: str) -> _Shape:
     raise InvalidReadings(f"{name} is empty.")
 
 
+def _broken_off(lines):
+    """Where a table that had begun ends too soon: line from 0 and its text, or None."""
+    for separator, comma in (("\t", False), ("\t", True), (";", False), (";", True), (",", False)):
+        for i, (line, after) in enumerate(itertools.pairwise(lines)):
+            count = _numbers(line, separator, comma)
+            if count >= 2 and after.strip() and _numbers(after, separator, comma) != count:
+                return i + 1, after.strip()
+    return None
+
+
 def _first_run(lines, separator, comma):
     """Line and cell count of the first few rows that are all numbers, two cells or more."""
-    run, columns = 0, 0
+    run, columns, longest = 0, 0, 0
     for i, line in enumerate(lines):
         count = _numbers(line, separator, comma)
         if count >= 2 and (run == 0 or count == columns):
             run, columns = run + 1, count
         else:
+            longest = max(longest, run)
             run, columns = (1, count) if count >= 2 else (0, 0)
         last = all(not x.strip() for x in lines[i + 1 :]) if run else False
-        if run >= RUN or (run and last):
+        if run >= RUN or (run and last and run >= longest):
             return i - run + 1, columns
     return None
 

@@ -34,9 +34,9 @@ def told(report) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def look(path: str, signals: tuple[str, ...]):
+def look(path: str, signals: tuple[str, ...], name: str = ""):
     """A job: read a record and say what is in it."""
-    c = read_capture(Path(path), "The capture")
+    c = read_capture(Path(path), name)
     yield None
     return {
         "channels": list(c.channels), "rows": len(c.time), "interval": c.interval, "span": float(c.time[-1] - c.time[0]),
@@ -55,10 +55,10 @@ def guess(channels: tuple[str, ...], signals: tuple[str, ...]) -> dict[str, str]
     return found
 
 
-def fit_record(path: str, design, mapping: dict[str, str]):
+def fit_record(path: str, design, mapping: dict[str, str], name: str = ""):
     """A job: fit a record whose channels are mapped."""
-    c = read_capture(Path(path), "The capture")
+    c = read_capture(Path(path), name)
     yield None
-    output = next(name for name, what in mapping.items() if what == OUTPUT)
-    signals = {what: c.channels[name] for name, what in mapping.items() if what and what != OUTPUT}
+    output = next(channel for channel, what in mapping.items() if what == OUTPUT)
+    signals = {what: c.channels[channel] for channel, what in mapping.items() if what and what != OUTPUT}
     return fit_capture(design, c.time, c.channels[output], signals)

@@ -27,6 +27,7 @@ class CapturePart:
     def __init__(self, fold: Any):
         self._fold = fold
         self._file: Any = None
+        self._name = "The capture"  # what its errors call it
         self._size = 0
         self._about: dict[str, Any] | None = None
         self._fit: Any = None
@@ -81,6 +82,8 @@ class CapturePart:
         text = fields.text(message, "data", PART_MOST)
         if fields.truth(message, "first"):
             self._forget()
+            given = fields.text(message, "name", 200) if "name" in message else ""
+            self._name = f"“{given}”" if given else "The capture"
             self._file = tempfile.NamedTemporaryFile(prefix="capture-", suffix=".csv")  # noqa: SIM115 - lives with the fold
         if self._file is None:
             raise InvalidReadings("A part of a capture came without its beginning; open the file again.")
@@ -96,7 +99,9 @@ class CapturePart:
         self._file.write(data)
         if fields.truth(message, "last"):
             self._file.flush()
-            self._job(look, self._file.name, self._fold.workbench.analysis.design.signal_names, done=self._looked)
+            self._job(
+                look, self._file.name, self._fold.workbench.analysis.design.signal_names, self._name, done=self._looked
+            )
         return {"part": self._size}
 
     def _looked(self, about):
@@ -120,7 +125,9 @@ class CapturePart:
         if len(mapping) < 2:
             raise InvalidReadings("Map at least one channel to a signal.")
         self._about = {**self._about, "map": {c: mapping.get(c, "") for c in self._about["channels"]}}
-        self._job(fit_record, self._file.name, self._fold.workbench.analysis.design, mapping, done=self._fitted)
+        self._job(
+            fit_record, self._file.name, self._fold.workbench.analysis.design, mapping, self._name, done=self._fitted
+        )
 
     def _fitted(self, result):
         self._fit, self._problem, self._fresh = result, "", True
