@@ -76,7 +76,9 @@ def test_the_record_gives_weights_uncertainty_verdicts_and_statement():
     assert "χ² = 5.2 with 6 degrees of freedom" in text
 
 
-@pytest.mark.parametrize(("verdict", "headline"), [("in", "all in"), ("out", "5 out"), ("undecided", "5 undecided")])
+@pytest.mark.parametrize(
+    ("verdict", "headline"), [("in", "all in"), ("out", "5 weights out"), ("undecided", "5 weights undecided")]
+)
 def test_the_headline_is_the_worst_verdict(verdict, headline):
     d = example()
     assert headline in calibration_record(d, diagnosis(d, verdict), readings(d), now=NOON)
@@ -164,7 +166,7 @@ def test_a_board_with_a_wrong_leg_is_out(files):
         == 0
     )
     text = out.read_text(encoding="utf-8")
-    assert re.search(r"\d out", text) and "leg wrong value" in text
+    assert re.search(r"\d weights? (and the offset )?out", text) and "leg wrong value" in text
 
 
 @pytest.mark.parametrize(
@@ -181,3 +183,13 @@ def test_what_does_not_go_together_is_refused_and_nothing_written(files, capsys,
     assert main(["report", str(files / "vent.json"), "-o", str(out), *more]) == 2
     assert capsys.readouterr().err.count("\n") == 1
     assert not out.exists()
+
+
+def test_the_offset_counts_in_the_headline_and_a_reading_that_tells_nothing_is_not_asked_for():
+    d = example()
+    found = diagnosis(d, "in") | {"offset_verdict": "out", "next_reading_bits": 0.0}
+    found["verdicts"]["ridge"] = "out"
+    text = calibration_record(d, found, readings(d), meter="0.1 % + 2 mV", now=NOON)
+    assert "1 weight and the offset out" in text and "0.1 % + 2 mV" in text
+    assert "tell them apart best" not in text
+    assert "tell them apart best" in calibration_record(d, found | {"next_reading_bits": 0.5}, readings(d), now=NOON)

@@ -12,6 +12,7 @@ from datetime import datetime
 from typing import Any
 
 from sumwright.engine.analysis import Analysis
+from sumwright.engine.bench.fit import headline
 from sumwright.engine.cautions import cautions
 from sumwright.engine.stage import Design
 from sumwright.quantity import format_fixed, format_quantity, format_resistor
@@ -23,6 +24,7 @@ from .schematic import SYMBOLS, schematic
 from .tables import Column, Table
 
 VERDICT_WORDS = ("in", "out", "undecided")
+LEAST_BITS = 0.01  # of a next reading: one that tells less is not worth taking
 
 
 def bring_up_sheet(
@@ -116,14 +118,15 @@ def calibration_record(
         tuple(rows),
         marked=frozenset(i for i, r in enumerate(rows) if r[-1] == "out"),
     )
-    counts = {word: sum(v == word for v in verdicts.values()) for word in VERDICT_WORDS}
+    words, offset = [*verdicts.values()], diagnosis.get("offset_verdict", "")
+    counts = {word: sum(v == word for v in (*words, offset)) for word in VERDICT_WORDS}
     passed = counts["out"] == 0 and counts["undecided"] == 0
-    headline = "all in" if passed else f"{counts['out']} out" if counts["out"] else f"{counts['undecided']} undecided"
+    ahead = diagnosis.get("next_reading") if diagnosis.get("next_reading_bits", 1.0) >= LEAST_BITS else None
     return render(
-        "calibration.html", "calibration record", about(design, author, now), board=board, meter=meter, passed=passed, headline=headline,
+        "calibration.html", "calibration record", about(design, author, now), board=board, meter=meter, passed=passed, headline=headline(words, offset),
         count=", ".join(f"{n} {word}" for word, n in counts.items()), statement=_statement(readings, meter), weights=weights,
         fit_note=_fit_note(fit), notes=list(diagnosis.get("notes", ())), chart=_chart(rows[:-1]).svg(), suspects=_suspects(diagnosis.get("suspects", ())),
-        next=_applied(diagnosis.get("next_reading")) if diagnosis.get("next_reading") else "", readings=_readings(design, readings, fit.get("left_out", ())),
+        next=_applied(ahead) if ahead else "", readings=_readings(design, readings, fit.get("left_out", ())),
     )  # fmt: skip
 
 

@@ -9,7 +9,7 @@ from typing import Any
 from sumwright import fields
 from sumwright.engine.bench.board import Bench as BoardBench
 from sumwright.engine.bench.diagnose import diagnose, near_clipping, weight_bands
-from sumwright.engine.bench.fit import least_squares
+from sumwright.engine.bench.fit import headline, least_squares
 from sumwright.engine.bench.home import as_built, bring_home, software_correction
 from sumwright.engine.bench.readings import parse_meter
 from sumwright.engine.stage import replace
@@ -210,11 +210,8 @@ class Bench(Fold):
         sitting.desk.require("write")
         if not self._run.readings().count:
             raise InvalidReadings("There are no readings of the output to keep yet.")
-        words = [r["word"] for r in self._fit[1].get("fit", ())]
-        title = f"{self._run.readings().count} readings: " + (
-            f"{words.count('out')} of {len(words)} out" if "out" in words else
-            f"{words.count('undecided')} undecided" if "undecided" in words else "all in"
-        )  # fmt: skip
+        words = [r["word"] for r in self._fit[1]["fit"]]
+        title = f"{self._run.readings().count} readings: {headline(words[:-1], words[-1])}"
         body = {
             "title": title, "csv": self._run.to_csv(),
             "fit": {"weights": self._fit[1]["fit"], "chi": self._fit[1]["chi"], "meter": self._run.meter.text,

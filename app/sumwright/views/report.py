@@ -108,6 +108,7 @@ class Report(Fold):
         order = {
             "kind": kind, "which": which, "draws": draws, "symbols": _SYMBOLS[self.workbench.symbols], "theme": self.workbench.theme,
             "made": datetime.now(UTC).isoformat(), "author": None, "decisions": [], "readings": readings,
+            "meter": self.workbench.readings.get("meter", ""),
         }  # fmt: skip
         self._making, self._refused, self._ready = token, "", None
         sitting = self.context.extras.get("sitting")
@@ -188,7 +189,9 @@ def make(
 
         readings = order["readings"]
         found = to_json(diagnose(design, readings))
-        text = calibration_record(design, found, readings_rows(readings), author=order["author"], now=now)
+        text = calibration_record(
+            design, found, readings_rows(readings), meter=order["meter"], author=order["author"], now=now
+        )
         return f"{stem}-calibration.html", "text/html", text.encode()
     if kind == "bundle":
         return f"{stem}.zip", "application/zip", bundle(analysis, theme="light", **how)

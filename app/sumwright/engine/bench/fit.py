@@ -11,6 +11,7 @@ JCGM 106:2012, 8.3 and ILAC-G8:09/2019 (guard bands).
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -203,3 +204,16 @@ def guarded_risks(nominal, process, low, high, meter, guard) -> tuple[float, flo
     consumer = integral(low - reach, low, accepted) + integral(high, high + reach, accepted)
     producer = integral(low, high, lambda x: 1.0 - accepted(x))
     return consumer, producer
+
+
+def counted(weights: Sequence[str], offset: str, word: str) -> str:
+    """How many verdicts are `word`, said: `4 weights and the offset out`; empty if none is."""
+    many = sum(w == word for w in weights)
+    said = [f"{many} weight{'' if many == 1 else 's'}"] if many else []
+    said += ["the offset"] if offset == word else []
+    return f"{' and '.join(said)} {word}" if said else ""
+
+
+def headline(weights: Sequence[str], offset: str) -> str:
+    """The verdicts in one line: what is out, else what is undecided, else that all are in."""
+    return counted(weights, offset, "out") or counted(weights, offset, "undecided") or "all in"
