@@ -3,11 +3,13 @@
 import math
 import re
 
+import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.checks import MODULES, Check, headline
+from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import Leg, Load, Reference, Signal, Supply, Target, replace
 from sumwright.files.examples import NAMES, example
 from sumwright.quantity import THIN, parse_quantity
@@ -332,7 +334,18 @@ def test_the_leg_named_makes_the_weight(source):
     legs = tuple(Leg(x.source, ohm if x.source == source else x.resistance) for x in legs)
     cured = Analysis(with_cell(wrong, **{side: legs})).dc
     k = DEMO.signal_names.index(source)
-    assert cured.weights[k] == pytest.approx(DEMO.signals[k].weight, rel=2e-3)
+    assert cured.weights[k] == pytest.approx(DEMO.signals[k].weight, rel=c.limit / 100)
+    assert check(with_cell(wrong, **{side: legs}), "weights").status != "short"
+    series = values_within(DEMO.resistor.series, 1.0, 1e7)
+    assert np.isclose(series, ohm, rtol=1e-6).any()  # a part that can be bought
+
+
+def test_less_offset_than_there_is_is_not_advised():
+    # by hand: with the + rail at 0 V the output's limit is below ground; no smaller offset of 1.15 V brings it there
+    stuck = replace(DEMO, supply=replace(DEMO.supply, high=0.0))
+    for c in Analysis(stuck).checks:
+        if c.key.startswith("swing") and (found := re.search(r"less offset by ([0-9.]+)", c.advice)):
+            assert float(found[1]) <= 1.15
 
 
 def test_with_a_cable_out_the_advice_is_the_cable():

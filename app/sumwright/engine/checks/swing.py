@@ -54,7 +54,9 @@ def _smaller(analysis, k, reach, allowed):
     n = analysis.net.signal_count
     still = float(analysis.linear.output[k, n] * analysis.net.values[n])
     if reach == still or (allowed - still) / (reach - still) <= 0:
-        return f"less offset by {volts(abs(reach - allowed), 2)}" if k == cells - 1 else ""
+        # taking away more offset than there is would only move the trouble to the other rail
+        enough = still * (reach - allowed) > 0 and abs(reach - allowed) <= abs(still)
+        return f"less offset by {volts(abs(reach - allowed), 2)}" if k == cells - 1 and enough else ""
     factor = down((allowed - still) / (reach - still))
     if factor <= 0:
         return ""

@@ -7,7 +7,12 @@ an accuracy it is 1 %, as 1 % resistors could not hold better (common practice).
 
 from __future__ import annotations
 
-from sumwright.engine.stage import REFERENCE
+import numpy as np
+
+from sumwright.engine.operating_point import operating_point
+from sumwright.engine.realise.preferred import values_within
+from sumwright.engine.stage import REFERENCE, replace
+from sumwright.errors import SumwrightError
 from sumwright.quantity import format_fixed, format_percent, format_resistor
 
 from .check import Check, choices, judged, spoken, unknown
@@ -52,7 +57,7 @@ def checks(analysis) -> tuple[Check, ...]:
                 if share
                 else f"the limit is the usual {format_percent(limit)}, as no accuracy is asked for."
             ),
-            lambda goal: _cure(analysis, name, made, wanted),
+            lambda goal: _cure(analysis, name, made, wanted, limit),
         ),
     )  # fmt: skip
 
@@ -62,7 +67,7 @@ def _whole(wanted, largest):
     return abs(wanted) if abs(wanted) > 1e-9 * largest else largest
 
 
-def _cure(analysis, name, made, wanted):
+def _cure(analysis, name, made, wanted, limit):
     """The leg's resistance that would make the weight, its neighbours as they are."""
     if analysis.unplugged:
         out = "', '".join(s for s in analysis.design.signal_names if s in analysis.unplugged)
@@ -74,12 +79,44 @@ def _cure(analysis, name, made, wanted):
         )
     new = _leg(analysis, legs[0], wanted / made)
     part = analysis.net.parts[legs[0]]
-    own = (
-        ""
-        if new is None
-        else f"the {spoken(part.name)} from {format_resistor(part.resistance)} to {format_resistor(new)}"
-    )
+    own = "" if new is None else _fitted(analysis, part, new, limit)
     return choices(own, "a closer set under Choices")
+
+
+def _fitted(analysis, part, ohm, limit):
+    """The leg at the nearest value of the design's series where that clears every weight; else trimmed to the ohm."""
+    said = f"the {spoken(part.name)} from {format_resistor(part.resistance)}"
+    kind = analysis.design.resistor
+    try:
+        values = values_within(kind.series, kind.least, kind.most)
+    except SumwrightError:  # nothing to be bought in that range
+        return ""
+    near = float(values[np.abs(np.log(values / ohm)).argmin()])
+    if near != part.resistance and _worst(analysis.design, part, near) <= limit:
+        return f"{said} to {format_resistor(near)}"
+    if _worst(analysis.design, part, ohm) <= limit:
+        return f"{said} trimmed to {format_resistor(ohm)} (no value of {kind.series} clears it)"
+    return ""
+
+
+def _worst(design, part, ohm):
+    """Worst relative error of any weight or of the offset with one leg changed."""
+
+    def legs(old):
+        return tuple(replace(leg, resistance=ohm) if leg.source == part.source else leg for leg in old)
+
+    cells = list(design.cells)
+    cell = cells[part.cell]
+    cells[part.cell] = replace(cell, **{part.kind: legs(getattr(cell, part.kind))})
+    changed = replace(design, cells=tuple(cells))
+    dc = operating_point(changed)
+    largest = max(abs(s.weight) for s in design.signals) or 1.0
+    errors = [
+        (float(w) - s.weight) / _whole(s.weight, largest) for w, s in zip(dc.weights, design.signals, strict=True)
+    ]
+    if design.target.offset:
+        errors.append((dc.offset - design.target.offset) / abs(design.target.offset))
+    return max(map(abs, errors))
 
 
 def _leg(analysis, i, ratio):
