@@ -10,6 +10,7 @@ import pytest
 from sumwright.engine.bench.readings import Readings
 from sumwright.errors import SumwrightError
 from sumwright.files.examples import example
+from sumwright.model.bench_run import BenchRun
 from sumwright.model.workbench import Workbench
 from sumwright.views.fold import Context
 from sumwright.views.report import PICTURES, TABLES, Report, file_stem, make
@@ -102,6 +103,16 @@ def test_a_record_needs_readings_of_this_stage(fold):
     fold.context.extras["readings"] = dataclasses.replace(taken, names=("other",))
     with pytest.raises(SumwrightError, match="not those of the readings"):
         fold.handle({"ask": "make", "kind": "record", "which": "", "token": "t", "draws": 0})
+
+
+def test_readings_saved_with_the_sheet_make_a_record_before_the_bench_is_opened(fold):
+    run = BenchRun(fold.workbench.design)
+    for i, row in enumerate(run.rows()):
+        if row.step.probe == "output" and row.step.unit == "V":
+            run.put(i, f"{row.step.expect:.4f}")
+    fold.workbench.readings = run.document()
+    assert fold.show()["readings"] == run.readings().count > 0
+    assert run.meter.text.encode() in ordered(fold, "record")[2]
 
 
 @pytest.mark.parametrize(

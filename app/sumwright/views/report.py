@@ -15,6 +15,7 @@ from sumwright import fields
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.stage import Design
 from sumwright.errors import InvalidQuantity, SumwrightError
+from sumwright.model.bench_run import BenchRun
 from sumwright.report.document import DRAWS, Decision
 from sumwright.report.schematic import SYMBOLS
 
@@ -65,7 +66,15 @@ class Report(Fold):
     @property
     def _readings(self) -> Any:
         """What was read on the bench, if anything."""
-        return self.context.extras.get("readings")
+        extras, held = self.context.extras, self.workbench.readings
+        if "readings" not in extras and held:  # the sheet was opened again, and Bench not yet
+            run = BenchRun(self.workbench.analysis.design)
+            try:
+                run.take_up(held)
+            except SumwrightError:
+                return None  # the Bench says why
+            extras["readings"] = run.readings()
+        return extras.get("readings")
 
     def handle(self, message: dict) -> dict | None:
         if message.get("ask") == "take":
