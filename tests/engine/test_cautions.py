@@ -75,3 +75,8 @@ def test_a_drop_that_the_clipped_output_cannot_reach_is_no_hot_part():
     said = next((c.text for c in cautions(analysis) if c.key == "burn"), "")
     # clipped: the whole of 30 V + 12 V falls along 20k + 80k, 42 V / 100k through 80k = 14.1 mW
     assert "feedback takes" not in said
+
+
+def test_a_large_voltage_is_written_out():
+    text = next(c.text for c in cautions(Analysis(stage(high=1050.0, leg=1e6))) if c.key == "voltage")
+    assert "reaches 1050 V" in text

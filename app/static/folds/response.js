@@ -17,9 +17,9 @@ export function mount(node, sheet) {
   const key = el('span', {class: 'soft n'}, el('i', {class: 'keyline'}), 'open loop ', el('i', {class: 'keyline dashed'}), 'noise gain')
   const held = el('button', {class: 'act', text: 'Hold this stage', onclick: () => say({do: held.getAttribute('aria-pressed') === 'true' ? 'let go' : 'hold'}), 'aria-pressed': 'false'})
   const left = el('div', {},
-    el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Gain, dB'}), key, held, takers(sheet, () => gain, 'gain', 'Gain')),
+    el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Gain, dB, over Hz'}), key, held, takers(sheet, () => gain, 'gain', 'Gain')),
     el('div', {class: 'figure', role: 'img', 'aria-label': 'Gain over frequency: open loop, noise gain and each signal; the numbers are under Signals and Loop'}, gain.slot),
-    el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Phase, degrees: each signal against DC; loop gain dashed'}), takers(sheet, () => phase, 'gain', 'Phase')),
+    el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Phase, degrees, over Hz: each signal against DC; loop gain dashed'}), takers(sheet, () => phase, 'gain', 'Phase')),
     el('div', {class: 'figure', role: 'img', 'aria-label': 'Phase over frequency of each signal and of the loop gain'}, phase.slot))
 
   const blank = (label, send, cls = '') => {
@@ -151,7 +151,7 @@ export function mount(node, sheet) {
     if (s.problem || !q) setText(told, s.problem)
     else {
       const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'oscillates; record cut short'].filter(Boolean).join(', ')
-      setText(caption, s.kind === 'step' ? `of ${signed(q.size, 2)}${THIN}V on ${q.signal}; V, ${q.unit}` : `V, ${q.unit}`)
+      setText(caption, s.kind === 'step' ? `of ${signed(q.size, 2)}${THIN}V on ${q.signal}; V, ${q.unit}; ideal dotted` : `V, ${q.unit}; ideal dotted`)
       const time = t => t === null ? 'not in this record' : engineering(t, 's')
       setText(told, s.kind === 'step' && q.at_limit ? 'the output is at its limit; there is no step to measure' : s.kind === 'step'
         ? `settles to 1${THIN}% in ${time(q.settled['0.01'])}, 0.1${THIN}% ${time(q.settled['0.001'])}, 0.01${THIN}% ${time(q.settled['0.0001'])}; overshoot ${percent(q.overshoot)}${q.rise === null ? '' : `, rise ${engineering(q.rise, 's')}`}${busy ? `; ${busy}` : ''}`

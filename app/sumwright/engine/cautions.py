@@ -68,14 +68,14 @@ def _voltage(design) -> list[Caution]:
     s = design.supply
     total = (s.high - s.low) * (1 + s.tolerance)
     if max(total, abs(s.high), abs(s.low)) > DC_LIMIT:
-        over.append(f"{total:.3g} V between the rails")
+        over.append(f"{_three(total)} V between the rails")
     for x in design.signals:
         peak = max(abs(x.low), abs(x.high))
         rms = (x.high - x.low) / 2 / math.sqrt(2) if x.frequency > 0 else 0.0
         if peak > DC_LIMIT:
-            over.append(f"'{x.name}' reaches {peak:.3g} V")
+            over.append(f"'{x.name}' reaches {_three(peak)} V")
         elif rms > AC_LIMIT:
-            over.append(f"'{x.name}' is {rms:.3g} V RMS as a sine over its range")
+            over.append(f"'{x.name}' is {_three(rms)} V RMS as a sine over its range")
     if not over:
         return []
     return [
@@ -156,6 +156,11 @@ def _clipped_heat(design, unplugged) -> tuple[float, ...]:
     return tuple(found)
 
 
+def _three(value: float) -> str:
+    """Three figures, never as a power of ten."""
+    return f"{float(f'{value:.3g}'):.12g}" if abs(value) < 1e9 else f"{value:.3g}"
+
+
 def _watts(power: float) -> str:
     return f"{power * 1e3:.3g} mW" if power < 1 else f"{power:.3g} W"
 
@@ -173,7 +178,7 @@ def _unpowered(design) -> list[Caution]:
         current = math.inf if ohm == 0 else peak / ohm
         if peak and current > PROTECTION_CURRENT:
             strong.append(
-                f"'{x.name}' pushes {current * 1e3:.3g} mA" if ohm else f"'{x.name}' has no resistor in series"
+                f"'{x.name}' pushes {_three(current * 1e3)} mA" if ohm else f"'{x.name}' has no resistor in series"
             )
     if strong:
         text = f"With the rails off, {', '.join(strong)} into the op amp's input protection; switch the rails on first and off last."
