@@ -15,6 +15,7 @@ from typing import NamedTuple
 
 import numpy as np
 
+from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import ARRANGEMENTS, REFERENCE, Cell, Design, Leg, cell_name
 from sumwright.errors import CannotRealise, InvalidDesign
 
@@ -22,34 +23,6 @@ from sumwright.errors import CannotRealise, InvalidDesign
 BALANCE = 1e-12
 # Legs of general summing stages usually lie between 10k and 100k (common practice); their middle.
 USUAL_LEG = 30e3
-# One decade of E24 (IEC 60063), for a default feedback resistor that can be bought.
-_E24 = (
-    1.0,
-    1.1,
-    1.2,
-    1.3,
-    1.5,
-    1.6,
-    1.8,
-    2.0,
-    2.2,
-    2.4,
-    2.7,
-    3.0,
-    3.3,
-    3.6,
-    3.9,
-    4.3,
-    4.7,
-    5.1,
-    5.6,
-    6.2,
-    6.8,
-    7.5,
-    8.2,
-    9.1,
-)
-
 WHAT_IT_MAKES = {
     "inverting": "negative weights only",
     "inverting-pair": "positive weights only",
@@ -163,7 +136,8 @@ def _default_feedback(design: Design, wanted: tuple[Wanted, ...], ground: float)
     if low > high:  # no value keeps all of them inside: miss by the same ratio at both ends, with every leg positive
         return max(math.sqrt(low * high), max(w * (rs + 0.1 * kind.least) for w, rs in scales))
     decade = math.floor(math.log10(usual))
-    shop = [m * 10.0**k for k in range(decade - 2, decade + 3) for m in _E24]
+    # E24: a default feedback resistor that can be bought
+    shop = values_within("E24", 10.0 ** (decade - 2), 9.1 * 10.0 ** (decade + 2))
     inside = [r for r in shop if low <= r <= high] or [min(max(usual, low), high)]
     return float(f"{min(inside, key=lambda r: abs(math.log(r / usual))):.12g}")
 

@@ -62,6 +62,12 @@ def load(text: str, error: type[SumwrightError]) -> Any:
 
 def _refuse_depth(text: str, error: type[SumwrightError]) -> None:
     """A bomb of brackets must not reach the recursive reader."""
+    if deeper_than(text, MOST_DEPTH):
+        raise error(f"The JSON text is nested deeper than {MOST_DEPTH}; a design needs 5.")
+
+
+def deeper_than(text: str, most: int) -> bool:
+    """Whether brackets outside strings nest deeper than `most`; reads the text once, without recursion."""
     depth, inside, escaped = 0, False, False
     for character in text:
         if inside:
@@ -75,7 +81,8 @@ def _refuse_depth(text: str, error: type[SumwrightError]) -> None:
             inside = True
         elif character in "[{":
             depth += 1
-            if depth > MOST_DEPTH:
-                raise error(f"The JSON text is nested deeper than {MOST_DEPTH}; a design needs 5.")
+            if depth > most:
+                return True
         elif character in "]}":
             depth -= 1
+    return False

@@ -11,6 +11,7 @@ import unicodedata
 from typing import Any
 
 from sumwright.errors import SumwrightError
+from sumwright.files.strict_json import deeper_than
 
 TITLE_MOST = 200  # characters
 NOTE_MOST = 100_000  # characters
@@ -101,24 +102,9 @@ def read_json(what: str, data: bytes | str, *, most: int = JSON_BYTES_MOST, dept
 
 
 def _refuse_deep(what: str, text: str, most: int) -> None:
-    """Count brackets outside strings, so that no parser is handed a text that would exhaust its stack."""
-    level, inside, escaped = 0, False, False
-    for character in text:
-        if inside:
-            if escaped:
-                escaped = False
-            elif character == "\\":
-                escaped = True
-            elif character == '"':
-                inside = False
-        elif character == '"':
-            inside = True
-        elif character in "[{":
-            level += 1
-            if level > most:
-                raise InvalidNotebookFile(f"{what} is nested deeper than {most} levels.")
-        elif character in "]}":
-            level -= 1
+    """No parser is handed a text that would exhaust its stack."""
+    if deeper_than(text, most):
+        raise InvalidNotebookFile(f"{what} is nested deeper than {most} levels.")
 
 
 def _refuse_constant(name: str) -> None:
