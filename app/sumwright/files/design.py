@@ -14,6 +14,7 @@ import re
 import unicodedata
 from typing import Any, NamedTuple
 
+from sumwright.engine.realise.preferred import SERIES
 from sumwright.engine.stage import (
     OUTPUT,
     REFERENCE,
@@ -36,7 +37,6 @@ from sumwright.files.text import decode, read_text, write_whole
 from sumwright.quantity import parse_quantity
 
 FORMAT = "sumwright-design/1"
-SERIES = ("E6", "E12", "E24", "E48", "E96", "E192")
 MOST_NAME = 64
 MOST_TITLE = 200
 MOST_SIGNALS = 64

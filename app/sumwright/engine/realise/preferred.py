@@ -8,7 +8,7 @@ import numpy as np
 
 from sumwright.errors import CannotRealise, InvalidQuantity
 
-SERIES = ("E6", "E12", "E24", "E48", "E96", "E192")
+SERIES = ("E3", "E6", "E12", "E24", "E48", "E96", "E192")
 
 # IEC 60063:2015. E24 is older than the rule: eight of its values differ from round(10 ** (k / 24), 1).
 _E24 = ["1.0", "1.1", "1.2", "1.3", "1.5", "1.6", "1.8", "2.0", "2.2", "2.4", "2.7", "3.0", "3.3", "3.6", "3.9", "4.3", "4.7", "5.1", "5.6", "6.2", "6.8", "7.5", "8.2", "9.1"]  # fmt: skip
@@ -16,7 +16,7 @@ _E24 = ["1.0", "1.1", "1.2", "1.3", "1.5", "1.6", "1.8", "2.0", "2.2", "2.4", "2
 
 def _mantissas(series: str) -> list[str]:
     """One decade as decimal texts, so that every value made from them is the nearest double."""
-    if series in ("E6", "E12", "E24"):
+    if series in ("E3", "E6", "E12", "E24"):
         return _E24[:: 24 // int(series[1:])]
     # E192 follows the rule but for 9.20 (the rule gives 9.19); E96 and E48 are every second and every fourth.
     full = [f"{10 ** (k / 192):.2f}" for k in range(192)]
