@@ -224,7 +224,7 @@ def test_zero_is_refused_where_it_makes_no_sense(path):
         (("supply", "high"), -6, "supply.high"), (("supply", "tolerance"), 1, "supply.tolerance"),
         (("ambient", "high"), -40, "ambient.high"), (("ambient", "nominal"), 80, "ambient.nominal"),
         (("ambient", "low"), -300, "ambient.low"), (("resistor", "series"), "E97", "resistor.series"),
-        (("resistor", "series"), "E3", "resistor.series"), (("resistor", "series"), 96, "resistor.series"),
+        (("resistor", "series"), "E5", "resistor.series"), (("resistor", "series"), 96, "resistor.series"),
         (("resistor", "most"), 10, "resistor.most"), (("noise_band",), [10, 10], "noise_band[1]"),
         (("noise_band",), [100, 10], "noise_band[1]"), (("noise_band",), [10], "noise_band"), (("noise_band",), "10", "noise_band"),
         (("op_amp", "supply_least"), 99, "op_amp.supply_most"), (("op_amp", "per_package"), 1.5, "op_amp.per_package"),
