@@ -1,8 +1,9 @@
 """How far off the output can be, and whose fault it is.
 
-Every quantity with a limit is moved alone: to either limit by an exact re-solve
-(`limit_effect`), and by a tiny step for the first derivative, from which its
-standard uncertainty follows. What is known beforehand (rounding to fitted values,
+Every quantity with a limit is moved alone: exactly to either limit (`limit_effect`),
+and by its first derivative, from which its standard uncertainty follows. A resistor
+that changes acts as a current beside it, so both follow from the voltage across it
+and from what a current there does to the output. What is known beforehand (rounding to fitted values,
 source resistance, finite gain) is a shift, not an uncertainty.
 
 Sources: JCGM 101:2008, 6.4.2 (a limit without a distribution is rectangular:
@@ -23,7 +24,6 @@ from .operating_point import ideal_output
 from .stage import REFERENCE, Design
 
 POINTS = ("present", "highest", "lowest")
-_STEP = 1e-5  # relative step of the central difference: truncation and rounding both near 1e-10
 
 
 class Term(NamedTuple):
@@ -126,16 +126,20 @@ def supply_error(design: Design) -> float:
 class Influences(NamedTuple):
     """What every quantity of the budget does, before the signals' values are known.
 
-    `moved` (6, resistors, sources): influence of each source on the output with one
-    resistor at + and - its tolerance, + and - its temperature limit, and a tiny
-    step up and down. `nominal`, `ideal`, `loaded` (sources,): as designed; with an
-    ideal op amp and no source resistance; with source resistance alone added.
-    `op_amp` (cells, 3): output per volt of input error, per ampere of bias current,
-    per ampere of offset current. `plus` (cells, sources): influence on the + pins.
+    `across` (resistors, sources): voltage across each resistor (source resistance in
+    it) per volt of source. `moved` (4, resistors): change of the output per volt
+    across with that resistor at + and - its tolerance, + and - its temperature limit;
+    `slope` (resistors,): per relative change of it. `nominal`, `ideal`, `loaded`
+    (sources,): influence on the output as designed; with an ideal op amp and no source
+    resistance; with source resistance alone added. `op_amp` (cells, 3): output per volt
+    of input error, per ampere of bias current, per ampere of offset current. `plus`
+    (cells, sources): influence on the + pins.
     """
 
     labels: tuple[tuple[str, str, str], ...]
+    across: np.ndarray
     moved: np.ndarray
+    slope: np.ndarray
     nominal: np.ndarray
     ideal: np.ndarray
     loaded: np.ndarray
@@ -151,52 +155,75 @@ def network_of(stage) -> nodes.Network:
 
 
 def influences(net: nodes.Network) -> Influences:
-    """One batched solve for every quantity at its limits and beside its nominal."""
+    """One solve, a column for each source and each place a current can enter; the rest follows.
+
+    Notes
+    -----
+    A conductance that changes by d passes d·u' more than before, u' its new voltage.
+    With u across it before, z the voltage across it and t the output for a current
+    through the place, u' = u / (1 + d z) and the output moves by -d t u': exact for any
+    d (Sherman-Morrison; the compensation theorem).
+    """
     design, kind = net.design, net.design.resistor
     span = temperature_span(design)
     r0, cells, sources = net.resistances, net.cell_count, net.signal_count + 1
     fitted = np.flatnonzero(np.isfinite(r0) & (r0 > 0))
-    count = len(fitted)
-    hot = kind.temperature_coefficient * span.most
-    moves = np.array([kind.tolerance, -kind.tolerance, hot, -hot, _STEP, -_STEP])
-    rows = 6 * count
-    trial = np.tile(r0, (rows + 3, 1))
-    trial[np.arange(rows), np.tile(fitted, 6)] *= 1.0 + np.repeat(moves, count)
-    gain = np.full(rows + 3, float(design.op_amp.open_loop_gain))
+    gain = np.full(3, float(design.op_amp.open_loop_gain))
     if all(c.feedback >= 0 for c in net.cells):  # an open loop has no answer at infinite gain
-        gain[-2:] = np.inf
-    rs = np.tile(net.source_resistances, (rows + 3, 1))
+        gain[1:] = np.inf
+    rs = np.tile(net.source_resistances, (3, 1))
     # a leg of 0 ohm is alone on a + pin, which draws nothing at infinite gain: its source's resistance may stay
     names = {p.source for p in net.parts if p.resistance == 0}
-    rs[-1] = np.where([n in names for n in (*design.signal_names, REFERENCE)], rs[-1], 0.0)
+    rs[2] = np.where([n in names for n in (*design.signal_names, REFERENCE)], rs[2], 0.0)
 
-    # the op amps' errors are right-hand sides, so their slopes are exact
-    columns = sources + 3 * cells
-    drive = np.zeros((sources, columns))
-    drive[:, :sources] = np.eye(sources)
-    error, into_m, into_p = (np.zeros((cells, columns)) for _ in range(3))
-    for k in range(cells):
-        volt, bias, offset = range(sources + 3 * k, sources + 3 * k + 3)
-        error[k, volt] = 1.0
-        into_m[k, bias] = into_p[k, bias] = -1.0
-        into_m[k, offset], into_p[k, offset] = 0.5, -0.5
+    columns = sources + 4 * cells
+    unit = np.eye(columns)
+    error, into_m, into_p, into_o = unit[sources:].reshape(4, cells, columns)
     sol = nodes.solve(
-        net,
-        drive,
-        resistances=trial,
-        gain=gain,
-        source_resistances=rs,
-        error=error,
-        into_minus=into_m,
-        into_plus=into_p,
-    )
+        net, unit[:sources], gain=gain, source_resistances=rs,
+        error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
+    )  # fmt: skip
     out = sol.output[:, -1]
+    by_error, by_minus, by_plus, _ = (out[0, sources + i * cells : sources + (i + 1) * cells] for i in range(4))
+
+    # the voltages that ends of resistors see, a row each: sources, m, p, o of each cell, ground
+    first, other, behind = _ends(net)
+    first, other = first[fitted], other[fitted]
+    volts = np.zeros((sources + 3 * cells + 1, columns))
+    volts[:sources, :sources] = np.eye(sources)
+    volts[sources:-1] = np.concatenate([sol.minus[0], sol.plus[0], sol.output[0]])
+    by_current = np.zeros((len(volts), len(volts)))  # from a current into the place; none moves a source or ground
+    by_current[:, sources:-1] = volts[:, sources + cells :]
+    t = by_current[-2, first] - by_current[-2, other]
+    z = by_current[first, first] - by_current[first, other] - by_current[other, first] + by_current[other, other]
+    hot = kind.temperature_coefficient * span.most
+    r, rs_of = r0[fitted], behind[fitted]
+    g = 1.0 / (r + rs_of)
+    d = 1.0 / (r * (1.0 + np.array([[kind.tolerance], [-kind.tolerance], [hot], [-hot]])) + rs_of) - g
+    across = volts[:, :sources]
     uses_reference = design.reference is not None and any(p.source == REFERENCE for p in net.parts)
     return Influences(
-        _labels(net, fitted, uses_reference), out[:rows, :sources].reshape(6, count, sources), out[rows, :sources],
-        out[rows + 2, :sources], out[rows + 1, :sources], out[rows, sources:].reshape(cells, 3),
-        sol.plus[rows, :, :sources], uses_reference,
+        _labels(net, fitted, uses_reference), across[first] - across[other], -d * t / (1.0 + d * z), t * r * g * g,
+        out[0, :sources], out[2, :sources], out[1, :sources],
+        np.stack([by_error, -by_minus - by_plus, 0.5 * (by_minus - by_plus)], axis=-1), sol.plus[0, :, :sources],
+        uses_reference,
     )  # fmt: skip
+
+
+def _ends(net):
+    """For each part its node, what it comes from (rows as in `influences`) and the source resistance behind it [ohm]."""
+    cells, sources = net.cell_count, net.signal_count + 1
+    m, p, o, ground = (sources + i * cells for i in range(4))
+    first, other, behind = np.full(len(net.parts), m), np.full(len(net.parts), ground), np.zeros(len(net.parts))
+    for k, c in enumerate(net.cells):
+        for node, parts, legs in ((m, c.minus_parts, c.minus_sources), (p, c.plus_parts, c.plus_sources)):
+            first[parts] = node + k
+            other[parts] = np.where(legs < sources, legs, legs + 2 * cells)
+            behind[parts] = net._leg_rs[legs]
+        for part, node, to in ((c.minus_ground, m, ground), (c.plus_ground, p, ground), (c.feedback, m, o + k)):
+            if part >= 0:
+                first[part], other[part] = node + k, to
+    return first, other, behind
 
 
 _OP_AMP_TERMS = ("offset voltage", "offset drift", "bias current", "offset current", "CMRR", "PSRR")
@@ -262,10 +289,10 @@ def error_budgets(stage, points=POINTS) -> dict[str, Budget]:
     hot = kind.temperature_coefficient * span.most
     corners = extreme_corners(net, inf.nominal)
     x = np.stack([corners[p] for p in points], axis=-1)  # (sources, points)
-    out = inf.moved @ x
+    across = inf.across @ x
     nominal, ideal_amp, loaded = inf.nominal @ x, inf.ideal @ x, inf.loaded @ x
     wanted = ideal_output(design, x[:n].T)
-    slope_r = (out[4] - out[5]) / (2 * _STEP)  # V per relative change
+    slope_r = inf.slope[:, None] * across  # V per relative change
     mid = 0.5 * (design.supply.high + design.supply.low)
     per_volt, per_bias, per_offset = inf.op_amp.T[..., None]  # each (cells, 1)
     ones = np.ones(len(points))
@@ -282,7 +309,8 @@ def error_budgets(stage, points=POINTS) -> dict[str, Budget]:
     )  # (cells, 6, points)
     flat = amp_slopes.reshape(-1, len(points))
     blocks = [slope_r * kind.tolerance, slope_r * hot, flat]
-    effects = [np.abs(out[:2] - nominal).max(axis=0), np.abs(out[2:4] - nominal).max(axis=0), np.abs(flat)]
+    by_tolerance, by_heat = np.abs(inf.moved).reshape(2, 2, -1).max(axis=1)[..., None] * np.abs(across)
+    effects = [by_tolerance, by_heat, np.abs(flat)]
     if inf.uses_reference and design.reference is not None:
         by_reference = inf.nominal[n] * design.reference.voltage * design.reference.tolerance * ones[None]
         blocks.append(by_reference)
@@ -293,7 +321,7 @@ def error_budgets(stage, points=POINTS) -> dict[str, Budget]:
     shifts = np.zeros_like(slopes)
     shifts[-3:] = ideal_amp - wanted, loaded - ideal_amp, nominal - loaded
     ratio = np.full(len(slopes), 1.0 / math.sqrt(3.0))
-    r = inf.moved.shape[1]
+    r = len(inf.slope)
     ratio[r : 2 * r] *= span.ratio
     ratio[2 * r + 1 : 2 * r + len(flat) : len(_OP_AMP_TERMS)] *= span.ratio
     u = np.abs(slopes) * ratio[:, None]
@@ -329,7 +357,7 @@ def sensitivities(stage, point: str = "present") -> tuple[Sensitivity, ...]:
     known = getattr(stage, "error_influences", None)
     inf = influences(net) if known is None else known
     x = extreme_corners(net, inf.nominal)[point]
-    slopes = (inf.moved[4] - inf.moved[5]) @ x / (2 * _STEP) * 0.01
+    slopes = inf.slope * (inf.across @ x) * 0.01
     names = [part for _, part, kind in inf.labels if kind == "tolerance"]
     found = [Sensitivity(name, "+1 %", float(v)) for name, v in zip(names, slopes, strict=True)]
     if inf.uses_reference:

@@ -13,9 +13,8 @@ from typing import NamedTuple
 
 import numpy as np
 
-from . import nodes
 from .budget import network_of
-from .statespace import poles
+from .statespace import Transfer, linear_modes, linear_space, poles
 
 BOLTZMANN = 1.380649e-23  # J/K, exact in the SI since 2019
 ZERO_CELSIUS = 273.15  # K
@@ -103,20 +102,34 @@ def noise(stage, *, band=None) -> Noise:
     return Noise(float(np.sqrt(at_1k.sum())), float(np.sqrt((rms**2).sum())), (float(low), float(high)), terms)
 
 
+def _node_transfers(net, f):
+    """To the last output from a voltage in series with each + input and a current into each node, (cells, 4, f).
+
+    The voltage e lies between the node and the pin: the op amp sees it beside the + node's
+    voltage, and what the pin's admittances draw because of it is a current into m and out of p.
+    """
+    ss, amp = linear_space(net), net.design.op_amp
+    cells, last = net.cell_count, ss.output[-1:]
+    through = np.zeros((len(ss.a), 4 * cells))
+    through[ss.first, np.arange(cells)] = 2 * math.pi * amp.gain_bandwidth
+    through[:, cells:] = ss.b_node
+    direct = np.zeros((1, 4 * cells))
+    direct[:, cells:] = ss.d_node[last]
+    h = Transfer(ss.a, through, ss.c[last], direct, linear_modes(net)).curves(f)[0]
+    from_e, from_node = h[:cells], h[cells:].reshape(cells, 3, -1)
+    s = 2j * np.pi * f
+    y_in = net.y_in + s * amp.differential_capacitance
+    y_pin = y_in + s * amp.common_mode_capacitance
+    from_e = from_e + y_in * from_node[:, 0] - y_pin * from_node[:, 1]
+    return np.concatenate([from_e[:, None], from_node], axis=1)
+
+
 def _powers(net, f):
     """Names, kinds and output power densities (terms, f) [V²/Hz]."""
     design = net.design
     amp = design.op_amp
     cells = net.cell_count
-    width = 4 * cells
-    error, into_m, into_p, into_o = (np.zeros((cells, width)) for _ in range(4))
-    for k in range(cells):
-        error[k, 4 * k] = into_m[k, 4 * k + 1] = into_p[k, 4 * k + 2] = into_o[k, 4 * k + 3] = 1.0
-    sol = nodes.solve(
-        net, np.zeros((net.signal_count + 1, width)), s=2j * np.pi * f,
-        error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
-    )  # fmt: skip
-    h = sol.output[..., -1, :].T.reshape(cells, 4, -1)  # to the output from e, m, p, o
+    h = _node_transfers(net, f)  # to the output from e, m, p, o
     # every term is a number times one of a few squared transfers, some with a 1/f part
     bases: list[np.ndarray] = []
     known: dict[tuple, int] = {}

@@ -21,7 +21,7 @@ import numpy as np
 from . import nodes
 from .budget import network_of
 from .stage import Design
-from .statespace import StateSpace, kept_of, linear_space, poles
+from .statespace import StateSpace, Transfer, linear_modes, linear_space, poles
 
 _PER_DECADE = 20
 _HALF_POWER = 1.0 / math.sqrt(2.0)
@@ -77,62 +77,12 @@ def loop_gains(net: nodes.Network, frequencies) -> np.ndarray:
     return np.array(rows)
 
 
-class _Transfer:
-    """Rows of c (sI - a)^-1 b + d, by the modes of a where it has a sound set of them, else by elimination."""
-
-    def __init__(self, a, b, c, d):
-        self.a, self.b, self.c, self.d = a, b, c, d
-        self._modes = None
-        self.poles = np.zeros(0, complex)
-        if not len(a):
-            return
-        values, vectors = np.linalg.eig(a)
-        self.poles = values.astype(complex)
-        with np.errstate(all="ignore"):
-            try:
-                inverse = np.linalg.inv(vectors)
-            except np.linalg.LinAlgError:
-                return
-        # near-coincident poles make the modes useless; elimination does not mind them
-        if np.linalg.norm(vectors) * np.linalg.norm(inverse) < 1e6:
-            self._modes = values, (c @ vectors)[:, None, :] * (inverse @ b).T[None]
-
-    def curves(self, f):
-        """All entries over frequency, (outputs, inputs, f)."""
-        s = 2j * np.pi * f
-        if self._modes is None:
-            if not len(self.a):
-                return np.broadcast_to(self.d[..., None], (*self.d.shape, len(f))).astype(complex)
-            eye = np.eye(len(self.a))
-            inner = np.linalg.solve(s[:, None, None] * eye - self.a, self.b[None].astype(complex))
-            return np.moveaxis(self.c @ inner + self.d, 0, -1)
-        p, residues = self._modes
-        h = residues.reshape(-1, len(p)) @ (1.0 / (s - p[:, None]))
-        return h.reshape(*residues.shape[:2], -1) + self.d[..., None]
-
-    def of(self, i):
-        """The first output from input i as a function of one frequency [Hz]."""
-        d = complex(self.d[0, i])
-        if self._modes is None:
-            if not len(self.a):
-                return lambda f: d
-            eye = np.eye(len(self.a))
-            return lambda f: complex(self.c[0] @ np.linalg.solve(2j * math.pi * f * eye - self.a, self.b[:, i])) + d
-        terms = list(zip(self._modes[1][0, i].tolist(), self._modes[0].tolist(), strict=True))
-
-        def at(f):
-            s = 2j * math.pi * f
-            return sum([r / (s - p) for r, p in terms], d)
-
-        return at
-
-
 def _cut(ss: StateSpace, k: int):
     """The chain with cell k's first op amp state made an input: what reaches its pins, plus minus minus."""
     v = ss.first[k]
     keep = np.arange(len(ss.a)) != v
     row = ss.c[ss.plus[k]] - ss.c[ss.minus[k]]
-    return _Transfer(ss.a[np.ix_(keep, keep)], ss.a[keep, v][:, None], row[None, keep], row[v].reshape(1, 1))
+    return Transfer(ss.a[np.ix_(keep, keep)], ss.a[keep, v][:, None], row[None, keep], row[v].reshape(1, 1))
 
 
 def response(stage, *, frequencies=None) -> Response:
@@ -151,8 +101,8 @@ def response(stage, *, frequencies=None) -> Response:
     net = network_of(stage)
     design, n = net.design, net.signal_count
     ss = linear_space(net)
-    through = _Transfer(ss.a, ss.b[:, : n + 1], ss.c[ss.output[-1:]], ss.d[ss.output[-1:], : n + 1])
-    kept_of(net).setdefault("poles", through.poles)
+    last = ss.output[-1:]
+    through = Transfer(ss.a, ss.b[:, : n + 1], ss.c[last], ss.d[last, : n + 1], linear_modes(net))
     f = _grid(net)
     cuts = [_cut(ss, k) for k in range(net.cell_count)]
     w1 = 2 * math.pi * design.op_amp.gain_bandwidth / design.op_amp.open_loop_gain

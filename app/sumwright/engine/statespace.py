@@ -36,7 +36,8 @@ class StateSpace(NamedTuple):
     x: capacitor coordinates, then the op amp states in `first` and `second`.
     w: sources (n + 1), the constant 1, then one input a cell: the first op amp
     state where it is not in x. y: for each cell m, p, o, then the output current
-    of each cell (3 cells + cells rows).
+    of each cell (3 cells + cells rows). `b_node`, `d_node`: the same from a current
+    into each node (m, p, o of each cell).
     """
 
     a: np.ndarray
@@ -50,6 +51,8 @@ class StateSpace(NamedTuple):
     plus: np.ndarray
     output: np.ndarray
     current: np.ndarray
+    b_node: np.ndarray
+    d_node: np.ndarray
 
 
 def state_space(net: Network, modes=None, limits: Limits | None = None) -> StateSpace:
@@ -70,7 +73,8 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
     nodes = 3 * cells
     inputs = n + 2 + cells
     gmat, cmat = np.zeros((nodes, nodes)), np.zeros((nodes, nodes))
-    drive = np.zeros((nodes, inputs))  # from w
+    drive = np.zeros((nodes, inputs + nodes))  # from w, then from currents into the nodes
+    drive[:, inputs:] = np.eye(nodes)
     inner = np.zeros((nodes, cells))  # from each op amp's internal voltage
     branch = np.zeros(cells)  # conductance of the output branch
     r = net.resistances
@@ -153,7 +157,7 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
         states += has_second
 
     # internal voltages as functions of x and w
-    v_x, v_w = np.zeros((cells, states)), np.zeros((cells, inputs))
+    v_x, v_w = np.zeros((cells, states)), np.zeros((cells, inputs + nodes))
     for k, mode in enumerate(modes):
         if second[k] >= 0:
             v_x[k, second[k]] = 1.0
@@ -166,9 +170,9 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
     free_x[:, :n_cap] += y_a
     c = np.zeros((nodes + cells, states))
     c[:nodes] = same @ free_x
-    d = np.zeros((nodes + cells, inputs))
+    d = np.zeros((nodes + cells, inputs + nodes))
     d[:nodes] = same @ free_w
-    a, b = np.zeros((states, states)), np.zeros((states, inputs))
+    a, b = np.zeros((states, states)), np.zeros((states, inputs + nodes))
     if n_cap:
         inv_c = 1.0 / value[real]
         a[:n_cap] = inv_c[:, None] * (q.T @ (inj_x - gmat @ free_x))
@@ -197,7 +201,8 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
                 d[row, n + 1] += branch[k] * (limits.high if modes[k] > 0 else limits.low)
     base = 3 * np.arange(cells)
     return StateSpace(
-        a, b, c, d, q.T @ (same / same.sum(axis=0)).T, tuple(first), tuple(second), base, base + 1, base + 2, nodes + np.arange(cells)
+        a, b[:, :inputs], c, d[:, :inputs], q.T @ (same / same.sum(axis=0)).T, tuple(first), tuple(second),
+        base, base + 1, base + 2, nodes + np.arange(cells), b[:, inputs:], d[:, inputs:],
     )  # fmt: skip
 
 
@@ -214,9 +219,74 @@ def linear_space(net: Network) -> StateSpace:
     return kept["linear"]
 
 
+class Modes(NamedTuple):
+    """Eigenvalues and vectors of a state matrix; no inverse where near-coincident poles make them useless."""
+
+    values: np.ndarray
+    vectors: np.ndarray
+    inverse: np.ndarray | None
+
+
+def modes_of(a) -> Modes:
+    values, vectors = np.linalg.eig(a)
+    with np.errstate(all="ignore"):
+        try:
+            inverse = np.linalg.inv(vectors)
+        except np.linalg.LinAlgError:
+            return Modes(values, vectors, None)
+    sound = np.linalg.norm(vectors) * np.linalg.norm(inverse) < 1e6
+    return Modes(values, vectors, inverse if sound else None)
+
+
+def linear_modes(net: Network) -> Modes:
+    """Modes of the stage with every op amp linear, kept with the network."""
+    kept = kept_of(net)
+    if "modes" not in kept:
+        kept["modes"] = modes_of(linear_space(net).a)
+    return kept["modes"]
+
+
 def poles(net: Network) -> np.ndarray:
     """Poles of the closed stage [rad/s], complex, every op amp linear."""
-    kept = kept_of(net)
-    if "poles" not in kept:
-        kept["poles"] = np.linalg.eigvals(linear_space(net).a).astype(complex)
-    return kept["poles"]
+    return linear_modes(net).values.astype(complex)
+
+
+class Transfer:
+    """Rows of c (sI - a)^-1 b + d, by the modes of a where it has a sound set of them, else by elimination."""
+
+    def __init__(self, a, b, c, d, modes: Modes | None = None):
+        self.a, self.b, self.c, self.d = a, b, c, d
+        self._residues = None
+        if len(a):
+            self._modes = modes_of(a) if modes is None else modes
+            if self._modes.inverse is not None:
+                self._residues = (c @ self._modes.vectors)[:, None, :] * (self._modes.inverse @ b).T[None]
+
+    def curves(self, f):
+        """All entries over frequency [Hz], (outputs, inputs, f)."""
+        s = 2j * np.pi * f
+        if self._residues is None:
+            if not len(self.a):
+                return np.broadcast_to(self.d[..., None], (*self.d.shape, len(f))).astype(complex)
+            eye = np.eye(len(self.a))
+            inner = np.linalg.solve(s[:, None, None] * eye - self.a, self.b[None].astype(complex))
+            return np.moveaxis(self.c @ inner + self.d, 0, -1)
+        p, residues = self._modes.values, self._residues
+        h = residues.reshape(-1, len(p)) @ (1.0 / (s - p[:, None]))
+        return h.reshape(*residues.shape[:2], -1) + self.d[..., None]
+
+    def of(self, i):
+        """The first output from input i as a function of one frequency [Hz]."""
+        d = complex(self.d[0, i])
+        if self._residues is None:
+            if not len(self.a):
+                return lambda f: d
+            eye = np.eye(len(self.a))
+            return lambda f: complex(self.c[0] @ np.linalg.solve(2j * math.pi * f * eye - self.a, self.b[:, i])) + d
+        terms = list(zip(self._residues[0, i].tolist(), self._modes.values.tolist(), strict=True))
+
+        def at(f):
+            s = 2j * math.pi * f
+            return sum([r / (s - p) for r, p in terms], d)
+
+        return at

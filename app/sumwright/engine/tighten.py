@@ -14,7 +14,6 @@ import numpy as np
 from scipy.optimize import Bounds, LinearConstraint, milp
 
 from .budget import (
-    _STEP,
     POINTS,
     error_budgets,
     extreme_corners,
@@ -184,7 +183,7 @@ def after_trim(stage) -> Remains:
             places.append(flipped)
     x = np.array(places).T  # (sources, places)
     span = temperature_span(design)
-    slope = (inf.moved[4] - inf.moved[5]) / (2 * _STEP)  # (resistors, sources)
+    slope = inf.slope[:, None] * inf.across  # (resistors, sources)
     third = 1 / math.sqrt(3)
     mid = 0.5 * (design.supply.high + design.supply.low)
     ones = np.ones(x.shape[1])
