@@ -16,7 +16,17 @@ from .nodes import Network, Solution
 from .stage import Design, replace
 
 # Answers that depend on the design but not on where the signals are just now.
-_OF_THE_STAGE = ("linear", "headroom", "cable_out", "ac", "noise", "power", "error_influences", "stage_checks")
+_OF_THE_STAGE = (
+    "unit_responses",
+    "linear",
+    "headroom",
+    "cable_out",
+    "ac",
+    "noise",
+    "power",
+    "error_influences",
+    "stage_checks",
+)
 
 
 class Analysis:
@@ -76,9 +86,14 @@ class Analysis:
     @cached_property
     def linear(self) -> Solution:
         """`operating_point.influence`: every node per volt of every source."""
-        from .operating_point import influence
+        return Solution(*(x[0, :, : self.net.signal_count + 1] for x in self.unit_responses))
 
-        return influence(self.net)
+    @cached_property
+    def unit_responses(self) -> Solution:
+        """`budget.unit_responses`: one solution of the node equations that most answers are made of."""
+        from .budget import unit_responses
+
+        return unit_responses(self.net)
 
     @cached_property
     def dc(self):
@@ -116,7 +131,7 @@ class Analysis:
         """`budget.influences`: every quantity at its limits, before the values are known."""
         from .budget import influences
 
-        return influences(self.net)
+        return influences(self.net, self.unit_responses)
 
     @cached_property
     def ac(self):

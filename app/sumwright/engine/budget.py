@@ -154,8 +154,31 @@ def network_of(stage) -> nodes.Network:
     return nodes.Network(stage) if net is None else net
 
 
-def influences(net: nodes.Network) -> Influences:
-    """One solve, a column for each source and each place a current can enter; the rest follows.
+def unit_responses(net: nodes.Network) -> nodes.Solution:
+    """Every node for 1 V of each source, 1 V in series with each + input, 1 A into each m, each p and each o.
+
+    Leading axis: as designed; with an ideal op amp; with ideal sources too. Where a
+    loop is open there is no answer at infinite gain and the op amp's own gain stays.
+    """
+    design, cells, sources = net.design, net.cell_count, net.signal_count + 1
+    gain = np.full(3, float(design.op_amp.open_loop_gain))
+    if all(c.feedback >= 0 for c in net.cells):
+        gain[1:] = np.inf
+    rs = np.tile(net.source_resistances, (3, 1))
+    # a leg of 0 ohm is alone on a + pin, which draws nothing at infinite gain: its source's resistance may stay
+    names = {p.source for p in net.parts if p.resistance == 0}
+    rs[2] = np.where([n in names for n in (*design.signal_names, REFERENCE)], rs[2], 0.0)
+    columns = sources + 4 * cells
+    unit = np.eye(columns)
+    error, into_m, into_p, into_o = unit[sources:].reshape(4, cells, columns)
+    return nodes.solve(
+        net, unit[:sources], gain=gain, source_resistances=rs,
+        error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
+    )  # fmt: skip
+
+
+def influences(net: nodes.Network, unit: nodes.Solution | None = None) -> Influences:
+    """What follows for every quantity from `unit_responses`, the caller's if there are some.
 
     Notes
     -----
@@ -168,28 +191,14 @@ def influences(net: nodes.Network) -> Influences:
     span = temperature_span(design)
     r0, cells, sources = net.resistances, net.cell_count, net.signal_count + 1
     fitted = np.flatnonzero(np.isfinite(r0) & (r0 > 0))
-    gain = np.full(3, float(design.op_amp.open_loop_gain))
-    if all(c.feedback >= 0 for c in net.cells):  # an open loop has no answer at infinite gain
-        gain[1:] = np.inf
-    rs = np.tile(net.source_resistances, (3, 1))
-    # a leg of 0 ohm is alone on a + pin, which draws nothing at infinite gain: its source's resistance may stay
-    names = {p.source for p in net.parts if p.resistance == 0}
-    rs[2] = np.where([n in names for n in (*design.signal_names, REFERENCE)], rs[2], 0.0)
-
-    columns = sources + 4 * cells
-    unit = np.eye(columns)
-    error, into_m, into_p, into_o = unit[sources:].reshape(4, cells, columns)
-    sol = nodes.solve(
-        net, unit[:sources], gain=gain, source_resistances=rs,
-        error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
-    )  # fmt: skip
+    sol = unit_responses(net) if unit is None else unit
     out = sol.output[:, -1]
-    by_error, by_minus, by_plus, _ = (out[0, sources + i * cells : sources + (i + 1) * cells] for i in range(4))
+    by_error, by_minus, by_plus, _ = out[0, sources:].reshape(4, cells)
 
     # the voltages that ends of resistors see, a row each: sources, m, p, o of each cell, ground
     first, other, behind = _ends(net)
     first, other = first[fitted], other[fitted]
-    volts = np.zeros((sources + 3 * cells + 1, columns))
+    volts = np.zeros((sources + 3 * cells + 1, out.shape[-1]))
     volts[:sources, :sources] = np.eye(sources)
     volts[sources:-1] = np.concatenate([sol.minus[0], sol.plus[0], sol.output[0]])
     by_current = np.zeros((len(volts), len(volts)))  # from a current into the place; none moves a source or ground
@@ -204,7 +213,7 @@ def influences(net: nodes.Network) -> Influences:
     uses_reference = design.reference is not None and any(p.source == REFERENCE for p in net.parts)
     return Influences(
         _labels(net, fitted, uses_reference), across[first] - across[other], -d * t / (1.0 + d * z), t * r * g * g,
-        out[0, :sources], out[2, :sources], out[1, :sources],
+        *out[[0, 2, 1], :sources],
         np.stack([by_error, -by_minus - by_plus, 0.5 * (by_minus - by_plus)], axis=-1), sol.plus[0, :, :sources],
         uses_reference,
     )  # fmt: skip

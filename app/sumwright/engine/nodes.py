@@ -53,6 +53,24 @@ class Part(NamedTuple):
     resistance: float
 
 
+class _Legs(NamedTuple):
+    """The legs into one node, told apart by where they come from; None where there are none of that kind."""
+
+    own: np.ndarray | slice | None  # which of them come from signals and the reference
+    sources: np.ndarray  # where those come from
+    ups: tuple[np.ndarray | None, ...]  # which of them come from each earlier cell
+
+    @classmethod
+    def into(cls, k, leg_sources, n_src):
+        """Where the legs of cell k come from, as an array and told apart; from a list of indices."""
+        every = np.array(leg_sources, dtype=int)
+        if leg_sources and max(leg_sources) < n_src:
+            return every, cls(slice(None), every, (None,) * k)
+        own = [i for i, s in enumerate(leg_sources) if s < n_src]
+        ups = ([i for i, s in enumerate(leg_sources) if s == n_src + j] for j in range(k))
+        return every, cls(np.array(own) if own else None, every[own], tuple(np.array(u) if u else None for u in ups))
+
+
 class _CellNet(NamedTuple):
     """Index lists of one cell; -1 where a part is not fitted."""
 
@@ -65,6 +83,8 @@ class _CellNet(NamedTuple):
     feedback: int
     tied: int  # -1 free, -2 tied to ground, else the source the + node is tied to
     capacitance: float
+    into_minus: _Legs
+    into_plus: _Legs
 
 
 class Network:
@@ -144,10 +164,10 @@ class Network:
                     Part(f"{leg.source} leg" + ("" if own else where), kind, k, leg.source, float(leg.resistance))
                 )
                 sources.append(index[leg.source])
-            return np.array(ids, dtype=int), np.array(sources, dtype=int)
+            return np.array(ids, dtype=int), *_Legs.into(k, sources, self.signal_count + 1)
 
-        minus_parts, minus_sources = legs("minus", cell.minus)
-        plus_parts, plus_sources = legs("plus", cell.plus)
+        minus_parts, minus_sources, into_minus = legs("minus", cell.minus)
+        plus_parts, plus_sources, into_plus = legs("plus", cell.plus)
         minus_ground = add("minus_ground", cell.minus_ground) if cell.minus_ground is not None else -1
         plus_ground = -1
         tied = -1
@@ -163,7 +183,7 @@ class Network:
         feedback = add("feedback", cell.feedback) if cell.feedback is not None else -1
         return _CellNet(
             minus_parts, minus_sources, plus_parts, plus_sources, minus_ground, plus_ground, feedback, tied,
-            cell.feedback_capacitance,
+            cell.feedback_capacitance, into_minus, into_plus,
         )  # fmt: skip
 
     def _leg_resistances(self, source_resistances):
@@ -308,13 +328,13 @@ def solve(
         e = None if error is None else np.asarray(error)[..., k, :]
 
         # right-hand sides: the caller's columns, then one for each upstream output
-        rm = _leg_drive(g, c.minus_sources, sources, n_src, k)
+        rm = _leg_drive(g, c.into_minus, sources)
         if c.tied == -1:
             h = 1.0 / (r[..., c.plus_parts] + leg_rs[..., c.plus_sources])
             total_p = h.sum(axis=-1) + y_in + y_cm
             if c.plus_ground >= 0:
                 total_p = total_p + 1.0 / r[..., c.plus_ground]
-            rp = _leg_drive(h, c.plus_sources, sources, n_src, k)
+            rp = _leg_drive(h, c.into_plus, sources)
             y_back = y_in
             if into_plus is not None:
                 rp = _plus_columns(rp, np.asarray(into_plus)[..., k, :], columns)
@@ -322,8 +342,7 @@ def solve(
                 rp = _plus_columns(rp, -col(y_in + y_cm) * e, columns)
         else:
             h, total_p, y_back = None, 1.0, 0.0
-            tie = np.ones(1) if c.tied >= 0 else np.zeros(0)
-            rp = _leg_drive(tie, np.array([c.tied] if c.tied >= 0 else [], dtype=int), sources, n_src, k)
+            rp = _leg_drive(_TIE if c.tied >= 0 else _TIE[:0], c.into_plus, sources)
         if into_minus is not None:
             rm = _plus_columns(rm, np.asarray(into_minus)[..., k, :], columns)
         if e is not None:
@@ -375,7 +394,7 @@ def solve(
         legs[k] = (g, h, y_f)
 
         for j in range(k):
-            pull_m, pull_p = _pull(c, g, h, n_src + j)
+            pull_m, pull_p = _pull(c, g, h, j)
             parts = [
                 -pull_m * m[..., i] - pull_p * p[..., i] + draw[j][k] * o[..., i] for i in range(columns, columns + k)
             ]
@@ -406,7 +425,7 @@ def solve(
             i_out = i_out + outs[k] * col(y_load)
         for q in range(k + 1, count):
             c = net.cells[q]
-            pull_m, pull_p = _pull(c, legs[q][0], legs[q][1], n_src + k)
+            pull_m, pull_p = _pull(c, legs[q][0], legs[q][1], k)
             i_out = i_out + col(pull_m) * (outs[k] - minus[q]) + col(pull_p) * (outs[k] - plus[q])
             if c.tied == n_src + k:
                 pin = plus[q] if error is None else plus[q] + np.asarray(error)[..., q, :]
@@ -427,28 +446,42 @@ def open_loop_gain(design: Design, s):
 
 
 def _stack(arrays):
+    """The cells' arrays (..., columns) as one (..., cells, columns)."""
     if len(arrays) == 1:
         return arrays[0][..., None, :]
-    return np.stack(np.broadcast_arrays(*arrays), axis=-2)
+    *lead, columns = _common_shape(arrays)
+    out = np.empty((*lead, len(arrays), columns), dtype=np.result_type(*arrays))
+    for k, x in enumerate(arrays):
+        out[..., k, :] = x
+    return out
 
 
-def _leg_drive(g, leg_sources, sources, n_src, k):
+def _common_shape(arrays):
+    """The shape that all broadcast to; most often they have it already."""
+    shapes = {x.shape for x in arrays}
+    return shapes.pop() if len(shapes) == 1 else np.broadcast_shapes(*shapes)
+
+
+_TIE = np.ones(1)  # a + pin tied to a source follows it
+
+
+def _leg_drive(g, legs, sources):
     """Σ g v over the legs: the caller's columns, then the factor of each upstream output."""
-    own = leg_sources < n_src
-    if own.all():
-        chosen, weight = leg_sources, g
+    if legs.own is None:
+        base = np.zeros(sources.shape[-1])
     else:
-        chosen, weight = leg_sources[own], g[..., own]
-    v = sources[..., chosen, :]
-    base = weight @ v if v.ndim == 2 else (weight[..., None, :] @ v)[..., 0, :]
-    if not k:
+        weight, v = g[..., legs.own], sources[..., legs.sources, :]
+        base = weight @ v if v.ndim == 2 else (weight[..., None, :] @ v)[..., 0, :]
+    if not legs.ups:
         return base
-    return _join(base, [g[..., leg_sources == n_src + j].sum(axis=-1) for j in range(k)])
+    return _join(base, [0.0 if u is None else g[..., u].sum(axis=-1) for u in legs.ups])
 
 
 def _join(base, extra):
     """`base` (..., columns) with one more column for each of `extra` (...)."""
-    lead = np.broadcast_shapes(base.shape[:-1], *(np.shape(x) for x in extra))
+    lead = base.shape[:-1]
+    if any(np.shape(x) not in ((), lead) for x in extra):
+        lead = np.broadcast_shapes(lead, *(np.shape(x) for x in extra))
     dtype = np.result_type(base, *extra)
     out = np.empty((*lead, base.shape[-1] + len(extra)), dtype=dtype)
     out[..., : base.shape[-1]] = base
@@ -463,16 +496,17 @@ def _plus_columns(full, part, columns):
         return full + part
     part = np.asarray(part)
     lead = np.broadcast_shapes(full.shape[:-1], part.shape[:-1])
-    out = np.array(np.broadcast_to(full, (*lead, full.shape[-1])), dtype=np.result_type(full, part))
+    out = np.empty((*lead, full.shape[-1]), dtype=np.result_type(full, part))
+    out[...] = full
     out[..., :columns] += part
     return out
 
 
-def _pull(c, g, h, source):
-    """Conductances by which cell `c` hangs on `source`: into its minus and its plus node."""
-    pull_m = g[..., c.minus_sources == source].sum(axis=-1)
-    pull_p = h[..., c.plus_sources == source].sum(axis=-1) if h is not None else 0.0
-    return pull_m, pull_p
+def _pull(c, g, h, up):
+    """Conductances by which cell `c` hangs on the output of cell `up`: into its minus and its plus node."""
+    from_m, from_p = c.into_minus.ups[up], c.into_plus.ups[up]
+    pull_m = 0.0 if from_m is None else g[..., from_m].sum(axis=-1)
+    return pull_m, 0.0 if from_p is None or h is None else h[..., from_p].sum(axis=-1)
 
 
 def _limited_row(st, limits, k, a_m, a_p, a_o, a_i, ro):

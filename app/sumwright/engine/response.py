@@ -25,6 +25,7 @@ from .statespace import StateSpace, Transfer, linear_modes, linear_space, poles
 
 _PER_DECADE = 20
 _HALF_POWER = 1.0 / math.sqrt(2.0)
+_SAME_SHAPE = 1e-9  # in ln of a gain around its crossing: two legs into one node differ by rounding
 
 
 class SignalResponse(NamedTuple):
@@ -121,9 +122,11 @@ def response(stage, *, frequencies=None) -> Response:
         SignalResponse(s.name, float(g), b) for s, g, b in zip(design.signals, dc, bandwidths, strict=False)
     )
     cells = []
+    log_f = np.log(f)
+    phases = np.unwrap(np.angle(loops))
     for k, ng in enumerate(net.noise_gains()):
         pins = cuts[k].of(0)
-        margins = _margins(f, loops[k], lambda x, pins=pins: -first_stage(x) * pins(x))
+        margins = _margins(f, loops[k], lambda x, pins=pins: -first_stage(x) * pins(x), log_f, phases[k])
         cells.append(CellResponse(float(ng), *margins))
     if frequencies is not None:
         f = np.asarray(frequencies, dtype=float)
@@ -216,32 +219,38 @@ def _bandwidths(f, gains, dc, gain_of):
     first = below.argmax(axis=1)
     exists = below[np.arange(len(y)), first] & (first > 0) & np.isfinite(y).all(axis=1) & (dc != 0)
     # legs into one node share their shape over frequency, so its crossing is found once
-    looks = np.round(y[:, :: max(1, len(f) // 24)], 10).tolist()
-    found: dict[tuple, float] = {}
+    found: list[tuple[int, np.ndarray, float]] = []
     out: list[float | None] = []
     for i in range(len(dc)):
         if not exists[i]:
             out.append(None)
             continue
-        key = (int(first[i]), *looks[i])
-        if key not in found:
+        shape = y[i, max(first[i] - 4, 0) : first[i] + 3]
+        known = (x for at, other, x in found if at == first[i] and np.abs(other - shape).max() < _SAME_SHAPE)
+        crossing = next(known, None)
+        if crossing is None:
             level, at = math.log(abs(dc[i]) * _HALF_POWER), gain_of(i)
-            found[key] = _refine(f, y[i], first[i] - 1, lambda x, at=at, z=level: math.log(abs(at(x))) - z)
-        out.append(found[key])
+            crossing = _refine(f, y[i], first[i] - 1, lambda x, at=at, z=level: math.log(abs(at(x))) - z)
+            found.append((int(first[i]), shape, crossing))
+        out.append(crossing)
     return out
 
 
-def _margins(f, loop, at):
-    """Crossover [Hz], phase margin [degrees], gain margin [dB] of one cell."""
+def _margins(f, loop, at, log_f=None, phase=None):
+    """Crossover [Hz], phase margin [degrees], gain margin [dB] of one cell.
+
+    `at` is the loop gain at one frequency; `log_f` and the unwrapped `phase` are for a caller who has them.
+    """
     size = np.abs(loop)
     with np.errstate(divide="ignore"):
         y = np.log(size)
-    phase = np.unwrap(np.angle(loop))
-    phase -= 2 * np.pi * np.round(phase[0] / (2 * np.pi))
+    log_f = np.log(f) if log_f is None else log_f
+    phase = np.unwrap(np.angle(loop)) if phase is None else phase
+    phase = phase - 2 * np.pi * np.round(phase[0] / (2 * np.pi))
 
     def near(x, t):
         """Phase of t at x, on the branch that the samples are on."""
-        expect = np.interp(math.log(x), np.log(f), phase)
+        expect = np.interp(math.log(x), log_f, phase)
         raw = math.atan2(t.imag, t.real)
         return raw + 2 * math.pi * round((expect - raw) / (2 * math.pi))
 
