@@ -5,6 +5,8 @@ import gc
 import json
 import posixpath
 import re
+import threading
+import types
 import weakref
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
@@ -216,3 +218,24 @@ def test_saving_with_a_cable_out_says_that_the_file_has_no_place_for_it(page):
     (saved,) = [h for h in browser.frames[-1]["heard"] if h["do"] == "save"]
     assert "“north”" in saved["note"]
     assert "cable" in saved["note"]
+
+
+def test_a_thread_never_touches_the_document_itself(page):
+    """A document that holds its events back while the page sends could lose the wish of a thread that asks it just then."""
+    asked, here = [], threading.get_ident()
+
+    class Document:
+        session_context = object()
+
+        def add_next_tick_callback(self, send):
+            assert threading.get_ident() == here
+            send()
+
+    page._doc, page._loop = Document(), types.SimpleNamespace(add_callback=lambda *call: asked.append(call))
+    browser = Browser(page)
+    with ThreadPoolExecutor(1) as beside:
+        beside.submit(page.say_saved, state="saved", at="").result()
+    assert browser.frames == []
+    for act, *arguments in asked:
+        act(*arguments)
+    assert browser.frames == [{"saved": {"state": "saved", "at": ""}}]

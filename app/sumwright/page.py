@@ -17,6 +17,7 @@ from pathlib import Path
 from typing import Any
 
 import panel as pn
+from tornado.ioloop import IOLoop
 
 from sumwright.errors import CannotRealise, NotAllowed, SumwrightError
 from sumwright.jobs import Jobs
@@ -79,6 +80,7 @@ class Page:
         self.folds: dict[str, Fold] = {}
         self.open = ""
         self._doc: Any = None
+        self._loop: Any = None  # the server's, known once the page is in a document
         self._warned: tuple[Any, list[dict[str, Any]]] | None = None
         self._sent: dict[str, str] = {}  # what the browser has, by key
         self._packed: dict[
@@ -188,6 +190,12 @@ class Page:
 
     def _later(self, send: Callable[[], None]) -> None:
         """Send inside the session's lock; nothing if the session is not there (yet, or any more)."""
+        loop = self._loop
+        if loop is not None:
+            loop.add_callback(self._next, send)
+
+    def _next(self, send: Callable[[], None]) -> None:
+        """On the server's thread: a document that is asked from another one while it holds its events back may lose the wish."""
         doc = self._doc
         if doc is not None and doc.session_context is not None:
             doc.add_next_tick_callback(send)
@@ -270,6 +278,7 @@ class Page:
             self._doc._template_variables.setdefault("dist_url", pn.io.resources.LOCAL_DIST)
         page = self.template()
         if self._doc is not None and self._doc.session_context is not None:
+            self._loop = IOLoop.current()
             pn.state.on_session_destroyed(lambda context: self.close())
             if self.sitting is not None:
                 self._doc.add_periodic_callback(self.sitting.look_around, LOOK_AROUND)
@@ -286,7 +295,7 @@ class Page:
         self.folds.clear()
         self.slots.clear()
         self.wire.receive = None
-        self._doc = None
+        self._doc = self._loop = None
 
 
 def _refusal(act: dict[str, Any], error: SumwrightError) -> dict[str, Any]:
