@@ -139,7 +139,8 @@ def main():
         print(f"  live set while a slider moves: {ours * 1e3:.2f} ms CPU")
         fast = replace(design, op_amp=op_amp(gain_bandwidth=1e7, second_pole=3e7, slew_rate=8e6))
         for name, wave in (("sine 1 kHz", Wave("sine", 5.0, 4.0, 1e3)), ("square 1 kHz", Wave("square", 5.0, 4.0, 1e3)),
-                           ("sine 1 kHz, clipped", Wave("sine", 5.0, 200.0, 1e3))):  # fmt: skip
+                           ("sine 1 kHz, clipped", Wave("sine", 5.0, 200.0, 1e3)),
+                           ("sine 100 kHz, clipped", Wave("sine", 5.0, 200.0, 1e5))):  # fmt: skip
             took = cpu(lambda d=fast, w=wave: trace(d, {"s0": w}, 10e-3))
             r = trace(fast, {"s0": wave}, 10e-3)
             print(f"  record of 10 ms, 10 MHz op amp, {name}: {took * 1e3:.1f} ms CPU, {r.events} events")

@@ -2,8 +2,9 @@
 
 import numpy as np
 import pytest
+from sumwright.engine import events
 from sumwright.engine.trace import step, trace
-from sumwright.engine.waves import Wave, pieces, sample
+from sumwright.engine.waves import Wave, common_period, pieces, sample
 from sumwright.errors import InvalidQuantity
 from support.stages import one_cell, op_amp
 
@@ -35,6 +36,22 @@ def test_periods_follow_each_other_without_a_seam():
             )
 
 
+def test_a_jump_between_periods_is_no_steep_ramp():
+    """Rounding must not part the end of one period from the start of the next."""
+    for kind in ("square", "ramp"):
+        p = pieces(Wave(kind, 0.0, 1.0, 1e5, 77.0), 3e-3)
+        assert np.diff(p.starts).min() > 1e-6
+        assert np.abs(p.slopes).max() < 3e5
+
+
+def test_waves_come_round_together():
+    sine, square = Wave("sine", 0.0, 1.0, 2e4), Wave("square", 0.0, 1.0, 3e4)
+    assert common_period([sine, square, Wave("dc", 1.0)]) == (pytest.approx(1e-4), 0.0)
+    assert common_period([sine, Wave("step", 0.0, 1.0, delay=2e-3)]) == (pytest.approx(5e-5), 2e-3)
+    assert common_period([sine, Wave("sine", 0.0, 1.0, 2e4 * 2**0.5)]) is None
+    assert common_period([Wave("dc", 1.0)]) is None
+
+
 def test_points_run_straight_and_hold_their_ends():
     w = Wave("points", times=(0.2, 0.4, 0.4, 0.6), volts=(1.0, 2.0, 5.0, 3.0))
     np.testing.assert_allclose(seen(w, [0.0, 0.2, 0.3, 0.4, 0.5, 0.6, 0.9]), [1, 1, 1.5, 5, 4, 3, 3])
@@ -54,6 +71,27 @@ def test_points_run_straight_and_hold_their_ends():
 def test_an_impossible_wave_is_refused(wrong, says):
     with pytest.raises(InvalidQuantity, match=says):
         Wave(**wrong)
+
+
+@pytest.mark.parametrize(
+    "waves",
+    [
+        {"a": Wave("sine", 0.0, 30.0, 1e5)}, {"a": Wave("square", 1.0, 3.0, 1e5, 33.0), "b": Wave("sine", 0.0, 20.0, 2e4)},
+        {"a": Wave("step", 0.0, 2.0, delay=1.23e-4), "b": Wave("triangle", 0.0, 30.0, 1e5)},
+    ],
+)  # fmt: skip
+def test_a_period_that_repeats_is_the_record_worked_out_event_by_event(waves, monkeypatch):
+    """Clipped, slewing, mixed periods, after a step: the reused period is the one that would come."""
+    design = stage(gain_bandwidth=1e7, second_pole=3e7, slew_rate=8e6)
+    quick = trace(design, waves, 4e-4, samples=1601)
+    monkeypatch.setattr(events, "_BUSY", 10**9)
+    whole = trace(design, waves, 4e-4, samples=1601)
+    assert whole.complete and whole.events > 60
+    np.testing.assert_allclose(quick.outputs, whole.outputs, atol=1e-6)
+    assert quick.events == pytest.approx(whole.events, abs=6)
+    assert quick.slewing == pytest.approx(whole.slewing, abs=2e-3) and quick.clipping == pytest.approx(
+        whole.clipping, abs=2e-3
+    )
 
 
 def stage(**figures):

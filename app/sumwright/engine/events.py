@@ -20,6 +20,7 @@ from . import nodes
 from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, kept_of, state_space
 
 MOST_EVENTS = 3000
+_BUSY = 12  # segments: a record with fewer is not worth looking for its period
 _FROM_STATIC = {
     nodes.LINEAR: LINEAR,
     nodes.SWING: SWING,
@@ -106,8 +107,9 @@ FRACTIONS = np.arange(1, 49) / 48.0
 class Course:
     """One record under way."""
 
-    def __init__(self, net, sources, duration, limits):
+    def __init__(self, net, sources, duration, limits, period=None):
         self.net, self.limits = net, limits
+        self.period, self.since = period or (math.inf, 0.0)
         self.cells, self.n = net.cell_count, net.signal_count
         self.amp = net.design.op_amp
         self.w1 = 2 * math.pi * self.amp.gain_bandwidth / self.amp.open_loop_gain
@@ -121,6 +123,7 @@ class Course:
         ]
         self.cache: dict[tuple[int, ...], Mode] = kept_of(net).setdefault(("modes", limits), {})
         self.segments: list[Segment] = []
+        self.close = 1e-6 / (2 * math.pi * self.amp.gain_bandwidth)  # s, to which an event's moment is found
 
     def mode(self, key):
         m = self.cache.get(key)
@@ -260,12 +263,15 @@ class Course:
         events = 0
         fastest = max(self.sines, default=0.0)
         most_step = math.pi / (24 * fastest) if fastest else np.inf
+        mark, last = math.inf, None  # where the state is compared next, and what it was a period before
         for j in range(len(starts)):
             t, stop = edges[j], edges[j + 1]
             while t < stop:
+                if mark == math.inf and len(self.segments) >= _BUSY and self.period < self.duration:
+                    mark = self.since + self.period * math.ceil(max(t - self.since, 0.0) / self.period)
                 m = self.mode(key)
                 seg = self._segment(m, key, t, x, v1)
-                end, left = self._follow(seg, key, stop, times, at_sample, most_step)
+                end, left = self._follow(seg, key, min(stop, max(mark, t)), times, at_sample, most_step)
                 # samples up to the end of the segment; a jump's sample belongs to what follows
                 upto = int(np.searchsorted(times, end, side="right" if end >= self.duration else "left"))
                 if upto > at_sample:
@@ -283,7 +289,36 @@ class Course:
                         return out, at_sample, slewing, clipping, events, False
                     key, x, v1 = self._change(m, key, seg, end - t, x, v1, v2)
                 t = end
+                if t >= mark:
+                    if last is not None and self._same(last[0], (key, x, v1)):
+                        period = [q for q in self.segments[last[1] :] if q.end > q.start]
+                        self._repeat(period, times, at_sample, out)
+                        periods = (self.duration - t) / (t - last[2][0])
+                        totals = zip((slewing, clipping, events), last[2][1:], strict=True)
+                        slewing, clipping, events = (now + (now - was) * periods for now, was in totals)
+                        return out, len(times), slewing, clipping, round(events), True
+                    last = ((key, x, v1), len(self.segments), (t, slewing, clipping, events))
+                    mark = t + self.period
         return out, at_sample, slewing, clipping, events, True
+
+    def _same(self, before, now):
+        """Whether two states differ by no more than the moments of events are known to."""
+        if before[0] != now[0]:
+            return False
+        slack = self.amp.slew_rate * self.close
+        return all(
+            (np.abs(a - b) <= slack + 1e-10 * np.abs(b).max(initial=0.0)).all()
+            for a, b in zip(before[1:], now[1:], strict=True)
+        )
+
+    def _repeat(self, period, times, at, out):
+        """Fill in the samples from `at` on from the segments of one period, over and over."""
+        first, length = period[0].start, period[-1].end - period[0].start
+        tau = np.mod(times[at:] - first, length) + first
+        which = np.searchsorted([q.start for q in period], tau, side="right") - 1
+        for i, seg in enumerate(period):
+            mine = np.flatnonzero(which == i)
+            out[:, at + mine] = seg.watch(tau[mine] - seg.start)[: self.cells]
 
     def _change(self, m, key, seg, tau, x, v1, v2):
         """Mode and state after an event."""
@@ -337,13 +372,12 @@ class Course:
 
     def _pin_down(self, seg, key, lo, hi):
         """First moment of the event between `lo` and `hi`, on its far side."""
-        close = 1e-6 / (2 * math.pi * self.amp.gain_bandwidth)  # a millionth of the fastest loop's time constant
         for _ in range(8):
             t = lo + (hi - lo) * FRACTIONS
             bad = self._leaving(key, seg.watch(t))
             i = int(bad.argmax()) if bad.any() else len(t) - 1
             lo, hi = (t[i - 1] if i else lo), t[i]
-            if hi - lo <= close:
+            if hi - lo <= self.close:  # a millionth of the fastest loop's time constant
                 break
         return hi
 

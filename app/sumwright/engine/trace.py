@@ -5,7 +5,8 @@ its course is known in closed form: a particular solution plus decaying modes. I
 is evaluated where the record wants it and watched for the next event: an op amp
 starts or stops slewing, an output meets a limit or leaves it, a source turns a
 corner. A record of milliseconds with a fast op amp so costs its events and its
-samples, not its nanoseconds.
+samples, not its nanoseconds; once its state comes back after the sources' common
+period, the rest is that period over again.
 
 The op amp's first pole is the stage that slews, and is held while the output is
 at a limit, so recovery starts from there. Sources: variation of constants for
@@ -24,7 +25,7 @@ from . import nodes
 from .budget import network_of
 from .events import FRACTIONS, Course
 from .statespace import poles
-from .waves import Wave, pieces, sample
+from .waves import Wave, common_period, pieces, sample
 
 
 class Trace(NamedTuple):
@@ -32,7 +33,7 @@ class Trace(NamedTuple):
 
     `times` (t,) [s]; `inputs` (signals, t) and `outputs` (cells, t) [V]. `slewing`,
     `clipping`: share of the record that some op amp slews, or sits at a limit.
-    `events` counts the changes on the way. `complete` is False where there were too
+    `events` counts the changes on the way (periods that repeat as their like). `complete` is False where there were too
     many (a stage that oscillates): the record then ends early.
     """
 
@@ -90,7 +91,7 @@ def _start(stage, waves, duration, samples):
             raise InvalidQuantity(f"{name!r} is not a signal of this stage; it has {', '.join(names)}.")
     sources = [pieces(waves.get(n, Wave(offset=float(net.values[i]))), duration) for i, n in enumerate(names)]
     sources.append(pieces(Wave(offset=float(net.values[-1])), duration))
-    run = Course(net, sources, duration, nodes.nominal_limits(net.design))
+    run = Course(net, sources, duration, nodes.nominal_limits(net.design), common_period(waves.values()))
     return run, np.linspace(0.0, duration, samples)
 
 

@@ -12,6 +12,7 @@ from ..errors import InvalidQuantity
 
 KINDS = ("dc", "sine", "square", "triangle", "ramp", "step", "points")
 MOST_PIECES = 20000
+_MOST_PERIODS = 64  # of the slowest wave, in which all of them may come round together
 
 
 @dataclass(frozen=True)
@@ -102,6 +103,29 @@ def pieces(wave: Wave, duration: float) -> Pieces:
     return _from_corners(t * period, v, period, (wave.phase / 360.0 % 1.0) * period, duration)
 
 
+def common_period(waves) -> tuple[float, float] | None:
+    """The period [s] after which all the waves repeat, and the time from which they do; None where they never do.
+
+    Frequencies count as commensurate if their common period is at most 64 of the slowest one.
+    """
+    rates, since = [], 0.0
+    for w in waves:
+        if w.kind == "step":
+            since = max(since, w.delay)
+        elif w.kind == "points" and not w.repeat:
+            since = max(since, w.times[-1])
+        elif w.kind == "points":
+            rates.append(1.0 / (w.times[-1] - w.times[0]))
+        elif w.kind != "dc" and w.amplitude:
+            rates.append(w.frequency)
+    slowest = min(rates, default=0.0)
+    for periods in range(1, _MOST_PERIODS + 1) if slowest > 0 else ():
+        rounds = [periods * rate / slowest for rate in rates]
+        if all(abs(x - round(x)) <= 1e-12 * x for x in rounds):
+            return periods / slowest, since
+    return None
+
+
 def _straight(starts, values, slopes, before):
     return Pieces(np.array(starts), np.array(values), np.array(slopes), 0.0, 0j, float(before))
 
@@ -115,7 +139,8 @@ def _from_corners(t, v, period, shift, duration):
                 f"{rounds} periods in {duration:g} s are too many for one record; at most {MOST_PIECES // len(t)} fit. "
                 "Take a shorter record."
             )
-        t = (t[None, :] + period * np.arange(rounds)[:, None]).ravel() - shift
+        # the end of a period and the start of the next are one moment, to the last bit: between them is a jump, no ramp
+        t = ((t / period)[None, :] + np.arange(rounds)[:, None]).ravel() * period - shift
         v = np.tile(v, rounds)
     elif len(t) > MOST_PIECES:
         raise InvalidQuantity(f"a wave of points may have at most {MOST_PIECES} points; it has {len(t)}.")
