@@ -17,6 +17,7 @@ from sumwright.quantity import (
     parse_colour_bands,
     parse_quantity,
     parse_resistor_code,
+    unbroken,
 )
 
 READ = [
@@ -136,6 +137,13 @@ def test_what_rounds_to_zero_has_no_sign():
     assert format_fixed(-0.0001, "V", sign=True) == f"0.000{THIN}V"
     assert format_fixed(-4.2, "V") == f"{MINUS}4.200{THIN}V"
     assert format_quantity(-0.0, "V") == f"0.00{THIN}V"
+
+
+def test_a_number_in_a_sentence_keeps_its_unit_on_its_line():
+    said = "Lowest 0.050 V, 4 signals, 5 kΩ at 25 °C, 13 V/µs, 5 % of 3 s1; 2 ppm/K."
+    kept = "Lowest 0.050_V, 4 signals, 5_kΩ at 25_°C, 13_V/µs, 5_% of 3 s1; 2_ppm/K."
+    assert unbroken(said) == kept.replace("_", THIN)
+    assert parse_quantity(unbroken("5 kΩ"), "Ω") == parse_quantity("5\u2009kΩ", "Ω") == 5000.0
 
 
 def test_percent_drops_zeros_and_keeps_figures():

@@ -50,7 +50,7 @@ export class Blank {
     this.waiting = null
     setAttr(this.node, 'aria-invalid', 'true')
     setAttr(this.node, 'aria-describedby', 'note')
-    return `${text.replace(/\.$/, '')}; the sheet keeps ${this.good || 'it empty'}${this.unit && this.good ? '\u2009' + this.unit : ''}.`
+    return `${text.replace(/\.$/, '')}; the sheet keeps ${this.good || 'it empty'}${this.unit && this.good ? '\u202f' + this.unit : ''}.`
   }
 
   // What the sheet holds; a text being typed, or refused, is left alone.

@@ -63,7 +63,7 @@ export function saved(state) {
   const node = document.getElementById('saved')
   const s = state.saved ?? {}
   const words = {
-    none: '', saving: 'saving…', saved: `saved ${clock(s.at)}`, unsaved: `not saved since ${clock(s.at)}${s.again ? `, trying again in ${s.again}\u2009s` : ''}`,
+    none: '', saving: 'saving…', saved: `saved ${clock(s.at)}`, unsaved: `not saved since ${clock(s.at)}${s.again ? `, trying again in ${s.again}\u202fs` : ''}`,
     reader: 'not kept', // its title says why
     changed: `changed elsewhere${s.at ? ' at ' + clock(s.at) : ''}${s.by ? ' by ' + s.by : ''}.`,
   }

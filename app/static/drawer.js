@@ -173,6 +173,6 @@ function cableOut(node, found) {
   const line = ([name, ...values], write) => el('tr', {}, el('th', {scope: 'row', text: name}),
     ...values.map((v, i) => el('td', {class: `r${i && Math.abs(v - values[0]) > 1e-4 * Math.max(1e-9, Math.abs(values[0])) ? ' moved' : ''}`, text: write(v)})))
   node.replaceChildren(el('h3', {text: 'if this cable goes'}), el('table', {},
-    el('thead', {}, el('tr', {}, el('th'), el('th', {class: 'r', text: 'now'}), el('th', {class: 'r', text: 'pulled out'}), el('th', {class: 'r', text: 'source dead, 0\u2009V'}))),
+    el('thead', {}, el('tr', {}, el('th'), el('th', {class: 'r', text: 'now'}), el('th', {class: 'r', text: 'pulled out'}), el('th', {class: 'r', text: 'source dead, 0\u202fV'}))),
     el('tbody', {}, ...found.weights.map(w => line(w, v => signed(v, 4))), line(['offset, V', ...found.offset], v => signed(v)), line(['noise gain', ...found.noise_gain], v => fixed(v)))))
 }

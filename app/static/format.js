@@ -1,7 +1,7 @@
-// How numbers are written: tabular figures, a true minus, a thin space before the unit, zero without a sign.
+// How numbers are written: tabular figures, a true minus, a narrow no-break space before the unit, zero without a sign.
 // The numbers come from the server; here they are only written down.
 
-export const THIN = '\u2009'
+export const THIN = '\u202f'
 const minus = text => text.replace('-', '\u2212')
 const missing = x => x === null || x === undefined || !Number.isFinite(x)
 

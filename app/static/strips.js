@@ -171,7 +171,7 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   setClass(node, 'beyond', beyond)
   if (item.past) setText(item.past, beyond ? `past ${brief(r.low)} to ${brief(r.high)}${THIN}V` : '')
   setAttr(item.value.node, 'title', beyond ? `past its range, ${fixed(r.low)} to ${fixed(r.high)} V: the corners and margins do not cover it` : helpFor('value'))
-  setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u2009)/, '')}` : '')
+  setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u202f)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
   setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : weight(r.made))
   if (W) {

@@ -23,6 +23,7 @@ from sumwright.errors import CannotRealise, NotAllowed, SumwrightError
 from sumwright.jobs import Jobs
 from sumwright.model import acts, demo
 from sumwright.model.workbench import Workbench
+from sumwright.quantity import unbroken
 from sumwright.sitting import Sitting, begin
 from sumwright.views import margins, plate, signals, stage
 from sumwright.views.fold import Context, Fold
@@ -119,7 +120,7 @@ class Page:
             "redo": bool(bench.history.future),
             "saved": self.saved,
             "place": self.extras.get("place", {}),
-            "problem": bench.problem,
+            "problem": unbroken(bench.problem),
             "signals": signals.show(bench),
             "stage": stage.show(bench),
             "plate": plate.show(bench),
@@ -176,7 +177,7 @@ class Page:
 
     def say(self, text: str, bad: bool = False) -> None:
         """One sentence in the line under the strips."""
-        self._later(lambda: self._send(lambda: {"note": {"text": text, "bad": bad}}))
+        self._later(lambda: self._send(lambda: {"note": {"text": unbroken(text), "bad": bad}}))
 
     def say_saved(self, **state: Any) -> None:
         """What stands beside the title: `state` is none, saving, saved, unsaved or changed; `at`, `by` with it."""
@@ -300,7 +301,7 @@ class Page:
 
 def _refusal(act: dict[str, Any], error: SumwrightError) -> dict[str, Any]:
     """One refused act as the browser gets it: its field keeps what was typed, the sentence stands beside it."""
-    text = str(error)
+    text = unbroken(str(error))
     if act.get("do") == "open" and isinstance(act.get("name"), str):
         text = f"“{act['name'][:FILE_NAME_MOST]}”: {text.rstrip('.')}. The sheet keeps what it had."
     refused: dict[str, Any] = {"do": act.get("do"), "field": act.get("field"), "text": text}

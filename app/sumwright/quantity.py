@@ -3,8 +3,9 @@
 Reading follows IEC 60062: a letter may stand where the decimal point would
 (4k7, 2M2, 0R47, p33), or behind the number as an SI prefix (4.7k, 100n). Case
 carries meaning only where it must: `m` is milli and `M` is mega; `K` is read as
-`k`, as resistors are marked. Writing uses a true minus (U+2212) and a thin space
-(U+2009) before the unit, so that columns of figures align and never break.
+`k`, as resistors are marked. Writing uses a true minus (U+2212) and a narrow
+no-break space (U+202F) before the unit, so that columns of figures align and a
+number never parts from its unit at the end of a line.
 
 General libraries for quantities read prefixes but not the letter codes, take
 "0x10" for zero and "1e400" for infinity; the sheet must refuse those, so the
@@ -15,12 +16,13 @@ from __future__ import annotations
 
 import math
 import re
+from functools import lru_cache
 from typing import NamedTuple
 
 from sumwright.errors import InvalidQuantity, shown
 
 MINUS = "\u2212"
-THIN = "\u2009"
+THIN = "\u202f"
 
 PREFIXES = {
     "f": -15, "p": -12, "n": -9, "u": -6, "µ": -6, "m": -3, "k": 3, "K": 3, "M": 6, "G": 9, "T": 12,
@@ -51,11 +53,15 @@ _ANY_UNIT = {spelling for spellings in _UNITS.values() for spelling in spellings
 _SAME = str.maketrans({
     MINUS: "-", "\u2010": "-", "\u2011": "-", "\u2013": "-",  # minus, hyphens, en dash
     "\u03bc": "µ", "\u2126": "Ω",  # Greek mu, the ohm sign
-    THIN: " ", "\u00a0": " ", "\u202f": " ",
+    "\u2009": " ", "\u00a0": " ", THIN: " ",
 })  # fmt: skip
 _PLAIN = re.compile(r"([+-]?)(\d+(?:[.,]\d*)?|[.,]\d+)(?:[eE]([+-]?\d{1,5}))? ?(.*)", re.ASCII)
 _LETTER = re.compile(r"([+-]?)(\d*)([RfpnuµmkKMGT])(\d+) ?(.*)", re.ASCII)
 _THOUSANDS = re.compile(r"[1-9]\d{0,2},\d{3}", re.ASCII)
+# A number and its unit in a sentence, parted by a space that may end a line.
+_PARTED = re.compile(
+    rf"(?<=\d) (?=[fpnuµmkMGT]?(?:{'|'.join(re.escape(u) for u in sorted(_ANY_UNIT, key=len, reverse=True))})(?!\w))"
+)
 _EXAMPLES = f"write for example 4k7, 4.7k, 100n, 25m, {MINUS}12 or 1e-3"
 
 
@@ -294,7 +300,7 @@ def format_quantity(
     value : float or None
         In base units. None and what is not finite is written as an en dash.
     unit : str, optional
-        Stands behind a thin space, with the prefix.
+        Stands behind a narrow no-break space, with the prefix.
     digits : int, optional
         Significant figures, 1 to 15.
     sign : bool, optional
@@ -352,6 +358,12 @@ def format_percent(fraction: float | None, digits: int = 2, *, sign: bool = Fals
     return f"{_signed(text, sign)}{THIN}%"
 
 
+@lru_cache(maxsize=1024)
+def unbroken(text: str) -> str:
+    """A sentence whose numbers never part from their units at the end of a line."""
+    return _PARTED.sub(THIN, text)
+
+
 def format_resistor(value: float | None, digits: int = 4) -> str:
     """A resistance [ohm] as it is marked and said: `4.7k`, `470R`, `2.2M`, `0.47R`."""
     if value is None or not math.isfinite(value):
@@ -387,5 +399,5 @@ def format_exact(value: float) -> str:
 __all__ = [
     "MINUS", "PREFIXES", "THIN", "TOLERANCE_LETTERS", "ResistorCode", "format_exact", "format_fixed",
     "format_percent", "format_quantity", "format_resistor", "parse_colour_bands", "parse_quantity",
-    "parse_resistor_code",
+    "parse_resistor_code", "unbroken",
 ]  # fmt: skip

@@ -119,7 +119,7 @@ def test_note_decision_freeze_compare_correct_search_verify(context, server):
     page.get_by_role("button", name="Compare frozen A with the sheet").click()
     page.wait_for_function("() => document.querySelector('.compared').innerText.includes('north, value')")
     told = page.locator(".compared").inner_text()
-    assert re.search(r"north, value\s+5\sV\s+4\sV", told.replace("\u2009", " "))
+    assert re.search(r"north, value\s+5\sV\s+4\sV", told.replace("\u202f", " "))
     assert "output" in told
     page.get_by_role("button", name="Put frozen A on the sheet").click()
     page.wait_for_function("() => window.sumwright.state.signals.rows.find(r => r.name === 'north').value === 5")

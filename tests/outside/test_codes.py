@@ -96,5 +96,5 @@ def test_plain_notation_is_written_as_an_independent_library_writes_it(number, n
     theirs = Quantity(number, "V").render(
         prec=digits - 1, strip_zeros=False, form="si"
     )  # fmt: skip
-    ours = format_quantity(number, "V", digits).replace("\u2212", "-").replace("\u2009", " ").replace("µ", "u")
+    ours = format_quantity(number, "V", digits).replace("\u2212", "-").replace("\u202f", " ").replace("µ", "u")
     assert ours == theirs.replace("µ", "u")

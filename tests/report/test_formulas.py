@@ -34,6 +34,6 @@ def test_a_reader_can_put_the_numbers_in():
     d = one_cell({"a": 1.0}, minus={"a": 9900.0}, feedback=2e4, plus_ground=0.0)
     d = dataclasses.replace(d, signals=(dataclasses.replace(d.signals[0], source_resistance=100.0),))
     line = next(x for x in derivation(d) if x.name == "w")
-    assert line.formula == "−R2/(R1 + 100\u2009Ω)"
+    assert line.formula == "−R2/(R1 + 100\u202fΩ)"
     assert line.numbers == "−20k/(9.9k + 100R)"
     assert line.result == "−2.00000"

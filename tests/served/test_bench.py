@@ -115,7 +115,7 @@ def test_a_record_is_opened_mapped_and_laid_over(fresh):
     )
     wait(
         page,
-        "document.querySelector('.bench').innerText.includes('3 000 rows') || document.querySelector('.bench').innerText.includes('3\\u2009000 rows')",
+        "document.querySelector('.bench').innerText.includes('3 000 rows') || document.querySelector('.bench').innerText.includes('3\\u202f000 rows')",
         60,
     )
     page.click("text=Lay it over the prediction")

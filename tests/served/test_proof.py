@@ -109,4 +109,4 @@ def test_a_frozen_design_is_held_beside_the_sheet(sheet):
     differences = sheet.evaluate(
         "[...document.querySelectorAll('.budget .page tbody td:last-child')].map(d => d.textContent)"
     )
-    assert all(d == "–" or float(d.replace("−", "-").split("\u2009")[0].rstrip("°%")) == 0 for d in differences)
+    assert all(d == "–" or float(d.replace("−", "-").split("\u202f")[0].rstrip("°%")) == 0 for d in differences)

@@ -18,7 +18,7 @@ VALUE = '[aria-label="{}, typed value"]'
 
 
 def number(text):
-    return float(text.replace("\u2212", "-").replace("\u2009", "").rstrip("V%"))
+    return float(text.replace("\u2212", "-").replace("\u202f", "").rstrip("V%"))
 
 
 def output(page):
@@ -153,7 +153,7 @@ def test_a_wrong_entry_stays_as_typed_with_one_sentence_and_the_sheet_keeps_what
     assert field.get_attribute("aria-invalid") == "true"
     note = sheet.locator("#note")
     assert note.get_attribute("role") == "alert"
-    assert re.search(r"8\.5\.1.*the sheet keeps 8\.500\u2009V", note.text_content())
+    assert re.search(r"8\.5\.1.*the sheet keeps 8\.500\u202fV", note.text_content())
     assert output(sheet) == before
     field.press("Escape")
     assert field.input_value() == "8.500"
@@ -524,8 +524,8 @@ def test_the_job_from_a_file_to_the_same_numbers_on_the_command_line(fresh, tmp_
     type_in(page, '[aria-label="plus rail"]', "5")
     drag(page, "front", 0.99)
     assert page.locator("#drawing .red", has_text="clipped high").count() == 1
-    assert re.match(r"by \d\.\d{3}\u2009V", page.locator("#drawing .red", has_text="by ").text_content())
-    assert re.search(r"at \d\.\d\d\u2009V", page.locator(".clips .on").text_content())
+    assert re.match(r"by \d\.\d{3}\u202fV", page.locator("#drawing .red", has_text="by ").text_content())
+    assert re.search(r"at \d\.\d\d\u202fV", page.locator(".clips .on").text_content())
     page.get_by_label("pull the rear cable out").click()
     settled(page)
     undo, redo = (page.locator("#commands button", has_text=t) for t in ("Undo", "Redo"))

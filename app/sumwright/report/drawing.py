@@ -21,7 +21,7 @@ INK, SOFT, LINE, HAIR, RED, PAPER, RAISED = (
 )
 SIZE = 14  # px, the smallest type of the tokens
 # Advance widths of a grotesque in thousandths of the em, near enough to keep labels apart.
-_NARROW = dict.fromkeys("iljI.,:;|'!ft()[] \u2009", 0.3) | dict.fromkeys("mwMW@%", 0.86)
+_NARROW = dict.fromkeys("iljI.,:;|'!ft()[] \u2009\u202f", 0.3) | dict.fromkeys("mwMW@%", 0.86)
 
 
 def text_width(text: str, size: float = SIZE, bold: bool = False) -> float:

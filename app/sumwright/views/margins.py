@@ -6,6 +6,7 @@ from typing import Any
 
 from sumwright.engine.cautions import cautions
 from sumwright.engine.checks import headline
+from sumwright.quantity import unbroken
 
 
 def show(bench: Any) -> list[dict[str, Any]]:
@@ -18,7 +19,7 @@ def show(bench: Any) -> list[dict[str, Any]]:
             ratio = float(check.margin / abs(check.allowance))
         shown.append({
             "key": check.key, "title": check.title, "status": check.status, "margin": check.margin, "unit": check.unit,
-            "ratio": ratio, "why": check.why, "advice": check.advice,
+            "ratio": ratio, "why": unbroken(check.why), "advice": unbroken(check.advice),
             "first": check is first,
         })  # fmt: skip
     return shown
@@ -26,4 +27,4 @@ def show(bench: Any) -> list[dict[str, Any]]:
 
 def warnings(analysis: Any) -> list[dict[str, Any]]:
     """The usual cautions: those this design gives reason for first, then those that hold of any."""
-    return [{"title": c.title, "text": c.text, "present": c.present} for c in cautions(analysis)]
+    return [{"title": c.title, "text": unbroken(c.text), "present": c.present} for c in cautions(analysis)]
