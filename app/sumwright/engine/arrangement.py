@@ -337,3 +337,13 @@ def _plus_voltage(cell, voltage, series, where, n):
     if siemens == 0:
         raise InvalidDesign(f"The non-inverting node of {where} is connected to nothing.")
     return current / siemens
+
+
+def weight_errors(design: Design, cells: tuple[Cell, ...]) -> dict[str, float]:
+    """made / wanted - 1 of every signal, and of the offset under the name `reference`, with ideal op amps."""
+    made, offset = ideal_weights(design, cells)
+    goal = {w.source: w.weight for w in wanted_weights(design)}
+    if REFERENCE in goal:
+        goal[REFERENCE] = design.target.offset
+    values = made | {REFERENCE: offset}
+    return {source: values[source] / w - 1.0 for source, w in goal.items()}

@@ -213,7 +213,7 @@ def influences(net: nodes.Network, unit: nodes.Solution | None = None) -> Influe
     uses_reference = design.reference is not None and any(p.source == REFERENCE for p in net.parts)
     return Influences(
         _labels(net, fitted, uses_reference), across[first] - across[other], -d * t / (1.0 + d * z), t * r * g * g,
-        *out[[0, 2, 1], :sources],
+        out[0, :sources], out[2, :sources], out[1, :sources],
         np.stack([by_error, -by_minus - by_plus, 0.5 * (by_minus - by_plus)], axis=-1), sol.plus[0, :, :sources],
         uses_reference,
     )  # fmt: skip

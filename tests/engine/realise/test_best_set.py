@@ -12,9 +12,14 @@ from support.wanted import design_for, least_error_by_trying_all, rounded_cells
 
 def least(design, arrangement, values):
     outcome = search(design, arrangement, values)
-    errors = [max(abs(e) for e in weight_errors(design, cells).values()) for cells in outcome.cells]
-    assert all(set(resistors(cells)) <= set(values) for cells in outcome.cells)
-    return min(errors), outcome
+    for cells in outcome.cells:
+        assert set(resistors(cells)) <= set(values)
+    good = search(design, arrangement, values, proof=False)
+    for found in (outcome, good):
+        errors = [max(abs(e) for e in weight_errors(design, cells).values()) for cells in found.cells]
+        np.testing.assert_allclose(errors, np.sort(errors), rtol=1e-11, atol=1e-12)  # best first, each once
+        assert len(set(found.cells)) == len(found.cells)
+    return max(abs(e) for e in weight_errors(design, outcome.cells[0]).values()), outcome
 
 
 def resistors(cells):

@@ -18,7 +18,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from sumwright.engine.arrangement import USUAL_LEG, Wanted, check_able
+from sumwright.engine.arrangement import USUAL_LEG, Wanted, check_able, weight_errors
 from sumwright.engine.realise.legs import Legs, Ratios, Sets, error_at
 from sumwright.engine.stage import Cell, Design, Leg, cell_name
 from sumwright.errors import CannotRealise, SumwrightError
@@ -165,6 +165,21 @@ def search(
         If the arrangement cannot make the signs.
     """
     task = Task(design, arrangement, values, least_input, seconds, watch, proof)
+    found = _searched(task, arrangement)
+    return found._replace(cells=_ranked(design, found.cells))
+
+
+def _ranked(design: Design, found) -> list[tuple[Cell, ...]]:
+    """Each set once, by its own worst weight error; what is equal to twelve figures stays in the order it came."""
+
+    def worst(cells):
+        error = max(abs(e) for e in weight_errors(design, cells).values())
+        return float(f"{error:.12g}") if error > 1e-13 else 0.0  # below is rounding of the arithmetic
+
+    return sorted(dict.fromkeys(found), key=worst)
+
+
+def _searched(task: Task, arrangement: str) -> Outcome:
     if arrangement in ("non-inverting", "mixed-sign") and any(w.weight > 0 for w in task.wanted):
         from sumwright.engine.realise.one_node import search_single
 

@@ -17,7 +17,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from sumwright.engine.arrangement import USUAL_LEG, able, check_able, ideal_weights, wanted_weights
+from sumwright.engine.arrangement import USUAL_LEG, able, check_able, ideal_weights, wanted_weights, weight_errors
 from sumwright.engine.realise.best_set import Outcome, Watch, search
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.realise.single_supply import biased_cells, is_single
@@ -92,17 +92,6 @@ def resistors_of(cells: Iterable[Cell]) -> list[float]:
         every += [leg.resistance for leg in (*cell.minus, *cell.plus)]
         every += [r for r in (cell.minus_ground, cell.plus_ground, cell.feedback) if r is not None]
     return [r for r in every if r > 0]
-
-
-def weight_errors(design: Design, cells) -> dict[str, float]:
-    """made / wanted - 1 of every signal, and of the offset under the name `reference`, with ideal op amps."""
-    made, offset = ideal_weights(design, cells)
-    wanted = wanted_weights(design)
-    values = made | {REFERENCE: offset}
-    goal = {w.source: w.weight for w in wanted}
-    if REFERENCE in goal:
-        goal[REFERENCE] = design.target.offset
-    return {source: values[source] / w - 1.0 for source, w in goal.items()}
 
 
 def assess(design: Design, arrangement: str, cells: tuple[Cell, ...], parts: tuple[Pair, ...] = ()) -> Choice:

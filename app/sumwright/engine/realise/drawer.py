@@ -9,7 +9,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from sumwright.engine.arrangement import exact_cells
+from sumwright.engine.arrangement import exact_cells, weight_errors
 from sumwright.engine.realise.best_set import Outcome, Pool, Task, _fitted, nearest_value, search
 from sumwright.engine.realise.legs import Legs, error_at
 from sumwright.engine.realise.preferred import values_within
@@ -118,7 +118,6 @@ def search_drawer(
         0.5 * seconds,
         None if watch is None else lambda s: watch(0.5 + 0.5 * s),
     )
-    from sumwright.engine.realise.choices import weight_errors
 
     def worst(cells):
         return max(abs(e) for e in weight_errors(design, cells).values())
@@ -439,7 +438,7 @@ def _grouped(pairs):
 
 def _mixtures(design: Design, arrangement: str, counts, shop, goal: float):
     """The recipe at every scale there is, each resistor from the drawer where one is near enough and from the shop where not."""
-    from sumwright.engine.realise.choices import resistors_of, weight_errors
+    from sumwright.engine.realise.choices import resistors_of
 
     stock = np.array(list(counts))
     stock = stock[(stock >= design.resistor.least * (1 - 1e-9)) & (stock <= design.resistor.most * (1 + 1e-9))]

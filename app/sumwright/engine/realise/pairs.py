@@ -11,8 +11,8 @@ from dataclasses import replace
 
 import numpy as np
 
-from sumwright.engine.arrangement import Wanted, ideal_weights, wanted_weights
-from sumwright.engine.realise.choices import Pair, weight_errors
+from sumwright.engine.arrangement import Wanted, ideal_weights, wanted_weights, weight_errors
+from sumwright.engine.realise.choices import Pair
 from sumwright.engine.stage import REFERENCE, Cell, Design
 
 TRIED = 24  # sets of one arrangement that pairs are tried on
