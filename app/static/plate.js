@@ -24,7 +24,7 @@ export function mount(theSheet) {
   const ways = words.ways = el('select', {class: 'blank ways', 'aria-label': 'Arrangement', onchange: () => { asked = true; sheet.act({do: 'arrange', arrangement: ways.value, field: 'arrangement'}) }})
   const symbols = words.symbols = ['IEC 60617', 'IEEE 315'].map(name => el('button', {text: name, onclick: () => sheet.act({do: 'symbols', symbols: name})}))
   box = el('dl', {class: 'plate', id: 'plate'},
-    ...pair('stage', ways),
+    ...pair('stage', ways, words.made = el('span', {class: 'soft made'})),
     ...pair('rails', figure('supply', 'high', 'plus rail', 'V'), `${THIN}V `, figure('supply', 'low', 'minus rail', 'V'), `${THIN}V `, word('tolerance', 'surroundings', 'rails, ambient and what is asked of the output')),
     ...pair('load', figure('load', 'resistance', 'load resistance', 'Ω'), `${THIN}Ω `, el('span', {class: 'soft', text: '∥ '}), figure('load', 'capacitance', 'load capacitance', 'F'), `${THIN}F`),
     ...pair('op amp', word('op_amp', 'op amp', 'op amp, every figure')),
@@ -35,11 +35,6 @@ export function mount(theSheet) {
 }
 
 const pair = (name, ...children) => [el('div', {}, el('dt', {text: name}), el('dd', {}, ...children))]
-
-// an arrangement whose legs are another's is shown under that one's name: say why
-export function heard(reply) {
-  if (reply.arranged && reply.note) sheet.note(reply.note)
-}
 
 export function update(state, resized) {
   const p = state.plate, s = state.stage
@@ -58,10 +53,14 @@ export function update(state, resized) {
 }
 
 function fillWays(s) {
-  const key = JSON.stringify([s.arrangements, s.able, s.arrangement])
+  const key = JSON.stringify([s.arrangements, s.able, s.arrangement, s.made])
   if (words.ways.dataset.key !== key) {
     words.ways.dataset.key = key
     const ways = s.arrangements.map(way => el('option', {value: way, text: way + (s.able.includes(way) ? '' : ', cannot make these weights')}))
+    // chosen, but with the legs of another for these weights
+    const other = s.made && s.arrangement !== s.made
+    setText(words.made, other ? `as ${s.made}` : '')
+    setAttr(words.made, 'title', other ? `For these weights the ${s.arrangement} arrangement has its legs where ${s.made} has them` : null)
     if (!s.arrangement) ways.unshift(el('option', {value: '', text: 'of its own', disabled: true}))
     words.ways.replaceChildren(...ways)
   }

@@ -14,6 +14,7 @@ from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
+from sumwright.engine.stage import ARRANGEMENTS
 from sumwright.errors import NotAllowed, SumwrightError
 from sumwright.files.design import design_document, read_design
 from sumwright.files.results import to_json
@@ -34,7 +35,7 @@ log = logging.getLogger("sumwright.sitting")
 
 STATE_FORMAT = "sumwright-sheet/1"
 STEPS_MOST = 100  # undo steps kept through a reload
-_WATCHED = ("design", "unplugged", "follow", "symbols", "readings")
+_WATCHED = ("design", "unplugged", "follow", "chosen", "symbols", "readings")
 _ID = re.compile(r"[a-z2-7]{16}")
 
 _beside = ThreadPoolExecutor(4, thread_name_prefix="notebook")
@@ -303,7 +304,14 @@ class Sitting:
         step, symbols = read_state(sheet.state)
         past, future = read_history(sheet.history)
         readings = readings_of(sheet.state)
-        bench = Workbench(step.design, unplugged=step.unplugged, follow=step.follow, symbols=symbols, readings=readings)
+        bench = Workbench(
+            step.design,
+            unplugged=step.unplugged,
+            follow=step.follow,
+            chosen=step.chosen,
+            symbols=symbols,
+            readings=readings,
+        )
         bench.history.past[:], bench.history.future[:] = past, future
         return bench
 
@@ -340,7 +348,8 @@ def readings_of(state: dict[str, Any]) -> dict[str, Any]:
 
 def step_document(step: Step) -> dict[str, Any]:
     """One state of the sheet as JSON."""
-    return {"design": design_document(step.design), "unplugged": list(step.unplugged), "follow": step.follow}
+    held = {"design": design_document(step.design), "unplugged": list(step.unplugged), "follow": step.follow}
+    return {**held, "chosen": step.chosen} if step.chosen else held
 
 
 def read_state(state: dict[str, Any]) -> tuple[Step, str]:
@@ -373,7 +382,8 @@ def read_step(held: dict[str, Any]) -> Step:
         raise InvalidNotebookFile(
             f"follow of the stored sheet is {str(follow)[:40]!r}; it is one of {', '.join(FOLLOW)}."
         )
-    return Step(design, tuple(unplugged), follow)
+    chosen = held.get("chosen", "")
+    return Step(design, tuple(unplugged), follow, chosen if chosen in ARRANGEMENTS else "")
 
 
 def read_history(history: dict[str, Any]) -> tuple[list[Step], list[Step]]:

@@ -5,11 +5,13 @@ import json
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.stage import ARRANGEMENTS
 from sumwright.errors import CannotRealise, SumwrightError
 from sumwright.files.design import read_design, write_design
 from sumwright.model import acts, demo
 from sumwright.model.workbench import Workbench
+from sumwright.sitting import read_step, step_document
 
 
 @pytest.fixture
@@ -108,8 +110,21 @@ def test_whatever_comes_is_done_or_refused_and_the_sheet_stays_whole(act, messag
     assert SHARED.analysis.design == SHARED.design
 
 
-def test_an_arrangement_with_the_legs_of_another_says_so():
+def test_the_arrangement_that_was_chosen_stays_shown_where_its_legs_are_anothers():
     bench = Workbench(demo.design())
     do(bench, "draw_sum", text="out = - a - 0.5 b - 0.25 c")
-    assert "where inverting has them" in do(bench, "arrange", arrangement="two-stage")["note"]
-    assert do(bench, "arrange", arrangement="inverting") is None
+    assert bench.arrangement == "inverting"
+    do(bench, "arrange", arrangement="mixed-sign")
+    assert (bench.arrangement, arrangement_of(bench.cells)) == ("mixed-sign", "inverting")
+    do(bench, "undo")
+    assert bench.arrangement == "inverting"
+    do(bench, "redo")
+    do(bench, "signal", signal="a", figure="value", text="1")
+    assert read_step(step_document(bench.snapshot)) == bench.snapshot
+    # what only the chosen one can make is made by it, without asking
+    do(bench, "weight", signal="a", text="0.5")
+    assert bench.arrangement == arrangement_of(bench.cells) == "mixed-sign"
+    do(bench, "arrange", arrangement="two-stage")
+    assert bench.arrangement == "two-stage"
+    do(bench, "undo")
+    assert bench.arrangement == "mixed-sign"

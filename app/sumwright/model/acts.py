@@ -16,6 +16,7 @@ from sumwright import fields
 from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.catalogue import catalogue
 from sumwright.engine.stage import ARRANGEMENTS, Design
+from sumwright.errors import CannotRealise
 from sumwright.files.design import design_document, read_design, write_design
 from sumwright.files.examples import NAMES as EXAMPLES
 from sumwright.files.examples import example
@@ -163,10 +164,18 @@ def on(bench: Workbench, message: dict) -> None:
 def _wish(bench: Workbench, message: dict, change: Callable[[Design], Design]) -> None:
     """Do `change`; with an `arrangement` in the message, realised anew by that one."""
     if message.get("arrangement") is None:
-        bench.edit(lambda d: checked(change(d)))
-        return
-    way = fields.one_of(message, "arrangement", ARRANGEMENTS)
-    bench.edit(lambda d: checked(edits.with_arrangement(change(replace(d, cells=())), way, bench.follow)))
+        shown = bench.arrangement or ""
+        try:
+            bench.edit(lambda d: checked(change(d)))
+            return
+        except CannotRealise as refused:
+            # the arrangement that was chosen may make what the legs it has just now cannot
+            if shown == arrangement_of(bench.cells) or shown not in refused.able:
+                raise
+            way = shown
+    else:
+        way = fields.one_of(message, "arrangement", ARRANGEMENTS)
+    bench.arrange(lambda d: checked(edits.with_arrangement(change(replace(d, cells=())), way, bench.follow)), way)
 
 
 def part(bench: Workbench, message: dict) -> None:
@@ -184,15 +193,10 @@ def capacitor(bench: Workbench, message: dict) -> None:
     bench.edit(lambda d: checked(edits.with_feedback_capacitance(d, cell, typed)))
 
 
-def arrange(bench: Workbench, message: dict) -> dict | None:
-    """The stage is realised by another arrangement; a note says so where its legs are those of another."""
+def arrange(bench: Workbench, message: dict) -> None:
+    """The stage is realised by another arrangement."""
     way = fields.one_of(message, "arrangement", ARRANGEMENTS)
-    bench.edit(lambda d: checked(edits.with_arrangement(d, way, bench.follow)))
-    made = arrangement_of(bench.design.cells)
-    if made == way or made is None:
-        return None
-    said = f"For these weights the {way} arrangement has its legs where {made} has them, and the sheet calls it that."
-    return {"arranged": made, "note": said}
+    bench.arrange(lambda d: checked(edits.with_arrangement(d, way, bench.follow)), way)
 
 
 def follow(bench: Workbench, message: dict) -> None:

@@ -204,6 +204,16 @@ def with_arrangement(design: Design, arrangement: str, follow: str = "nearest") 
     return replace(design, cells=cells if follow == "exact" else rounded(design, cells))
 
 
+def same_legs(design: Design, chosen: str, made: str | None) -> bool:
+    """Whether `chosen` has its legs, for these weights, where `made` has them."""
+    if not chosen or made is None or chosen == made:
+        return chosen == made
+    try:
+        return arrangement_of(exact_cells(design, chosen)) == made
+    except CannotRealise:
+        return False
+
+
 def realised(design: Design, follow: str = "nearest") -> Design:
     """The design with cells: as it is, or by the first arrangement that can make the weights."""
     if design.cells:

@@ -16,6 +16,7 @@ class Snapshot(NamedTuple):
     design: Design
     unplugged: tuple[str, ...] = ()
     follow: str = "nearest"
+    chosen: str = ""  # the arrangement the person chose, where its cells have another's legs
 
 
 @dataclass

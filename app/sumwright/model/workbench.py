@@ -15,6 +15,7 @@ from typing import Any
 import param
 
 from sumwright.engine.analysis import Analysis
+from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.stage import Ambient, Design, Load, OpAmp, Reference, ResistorKind, Supply, Target
 from sumwright.errors import InvalidDesign, SumwrightError
 from sumwright.model import edits
@@ -45,6 +46,7 @@ class Workbench(param.Parameterized):
     # the sheet
     unplugged = param.ClassSelector(class_=tuple, default=(), doc="Signals whose cable is out.")
     follow = param.Selector(default="nearest", objects=list(edits.FOLLOW), doc="How resistors follow a weight.")
+    chosen = param.String("", doc="The arrangement chosen; shown as long as the cells are what it makes.")
     on = param.String("", doc="The signal under the hand.")
     symbols = param.Selector(default=SYMBOLS[0], objects=list(SYMBOLS), doc="Resistor symbols of the drawing.")
     theme = param.Selector(default=THEMES[0], objects=list(THEMES), doc="Light or dark paper.")
@@ -108,7 +110,13 @@ class Workbench(param.Parameterized):
     @property
     def snapshot(self) -> Snapshot:
         """Every choice that undo gives back."""
-        return Snapshot(self.design, self.unplugged, self.follow)
+        return Snapshot(self.design, self.unplugged, self.follow, self.chosen)
+
+    @property
+    def arrangement(self) -> str | None:
+        """The arrangement the sheet shows: the one chosen, if these cells are what it makes, else what they are."""
+        made = arrangement_of(self.cells)
+        return self.chosen if edits.same_legs(self.design, self.chosen, made) else made
 
     def edit(self, change: Callable[..., Design], *args: Any, hand: str = "") -> None:
         """Replace the design by `change(design, *args)`, as one undo step.
@@ -120,7 +128,11 @@ class Workbench(param.Parameterized):
 
     def put(self, design: Design) -> None:
         """Another whole design on the sheet (a file, a new sum), as one undo step."""
-        self._put(edits.realised(design), unplugged=())
+        self._put(edits.realised(design), unplugged=(), chosen="")
+
+    def arrange(self, change: Callable[[Design], Design], arrangement: str) -> None:
+        """`change` the design to cells of `arrangement`, and remember that it was chosen."""
+        self._put(change(self.design), chosen=arrangement)
 
     def follow_weights(self, follow: str) -> None:
         """Choose how resistors follow; `exact` and `nearest` change none by themselves."""
@@ -168,10 +180,12 @@ class Workbench(param.Parameterized):
         """Show another state without an undo step (a stored sheet, another person's change)."""
         self._restore(snapshot)
 
-    def _put(self, design: Design, *, unplugged=None, follow=None, hand: str = "") -> None:
+    def _put(self, design: Design, *, unplugged=None, follow=None, chosen=None, hand: str = "") -> None:
         before = self.snapshot
         unplugged = self.unplugged if unplugged is None else unplugged
-        after = Snapshot(design, unplugged, self.follow if follow is None else follow)
+        after = Snapshot(
+            design, unplugged, self.follow if follow is None else follow, self.chosen if chosen is None else chosen
+        )
         gone = set(after.unplugged) - set(design.signal_names)
         if gone and len(design.signals) == len(before.design.signals):  # renamed: the cable stays out
             names = dict(zip(before.design.signal_names, design.signal_names, strict=True))
@@ -209,7 +223,7 @@ class Workbench(param.Parameterized):
             for was, now in zip(old, s.design.signal_names, strict=True):
                 if was not in s.design.signal_names and was in self._styles:
                     self._styles[now] = self._styles[was]
-        choices.update(unplugged=s.unplugged, follow=s.follow, on=on)
+        choices.update(unplugged=s.unplugged, follow=s.follow, chosen=s.chosen, on=on)
         changed = {n: v for n, v in choices.items() if v is not getattr(self, n)}
         if len(changed) == 1:
             ((name, value),) = changed.items()

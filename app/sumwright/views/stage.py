@@ -20,7 +20,7 @@ def show(bench: Any) -> dict[str, Any]:
         "load": {"fitted": design.load.resistance is not None or design.load.capacitance > 0,
                  "resistance": design.load.resistance is not None},
         "supply": [design.supply.high, design.supply.low], "symbols": bench.symbols,
-        "arrangement": arrangement_of(design.cells), "arrangements": list(ARRANGEMENTS),
+        "arrangement": bench.arrangement, "made": arrangement_of(design.cells), "arrangements": list(ARRANGEMENTS),
         "able": list(_able(_Wishes(tuple((s.name, s.weight, s.source_resistance) for s in design.signals),
                                    design.target.offset, design.reference), design)),
         "unplugged": list(bench.unplugged),
