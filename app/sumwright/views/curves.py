@@ -179,6 +179,8 @@ def ruler(design, dc, head) -> tuple[float, float, list[float]]:
         top = max(top, design.supply.high)
     if design.supply.low >= bottom - 0.12 * span:
         bottom = min(bottom, design.supply.low)
+    if top - bottom < 1e-3:  # every cable out and no window: nothing moves
+        top, bottom = top + 0.5, bottom - 0.5
     span = top - bottom
     step = nice_step(span / 6)
     top += 0.055 * span
