@@ -5,6 +5,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.operating_point import operating_point
+from sumwright.engine.stage import Target, replace
 from sumwright.model import demo, edits, sums
 from sumwright.model.workbench import Workbench
 from sumwright.views.curves import _contributions, clip_levels, nice_step, ruler
@@ -34,6 +35,14 @@ def test_it_holds_the_window_the_present_output_and_all_the_output_can_do_within
     assert low < max(a.headroom.cells[-1].lowest, design.supply.low)
     assert 3 <= len(ticks) <= 12
     assert all(low <= t <= high for t in ticks)
+
+
+def test_it_stands_where_nothing_moves():
+    """Every cable out, no window and rails far away leave nothing to scale by."""
+    far = replace(STAGES[1], supply=replace(STAGES[1].supply, high=90.0, low=-90.0), target=Target())
+    a = Analysis(far, ("a", "b"))
+    low, high, ticks = ruler(a.design, a.dc, a.headroom)
+    assert low < 0 < high and ticks
 
 
 def test_it_stands_still_while_a_signal_moves_within_its_range():

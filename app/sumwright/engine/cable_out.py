@@ -56,9 +56,13 @@ def cable_out(design: Design, *, unplugged=(), net: Network | None = None) -> Ca
                 resistances[i, j] = np.inf
     opened = influence(net, resistances=resistances)
     rs = np.tile(net.source_resistances, (n, 1))
-    rs[np.arange(n), np.arange(n)] = 0.0
-    dead = influence(net, source_resistances=rs)
-    dead_weights = dead.output[:, -1, :n].copy()
+    bare = [i for i, name in enumerate(names) if any(p.source == name and p.resistance == 0 for p in net.parts)]
+    led = np.array([i for i in range(n) if i not in bare], dtype=int)
+    rs[led, led] = 0.0
+    dead = influence(net, source_resistances=rs).output[:, -1]
+    for i in bare:  # without its source's resistance such a leg ties the + node to ground
+        dead[i] = influence(Network(design, net.unplugged, shorted=(names[i],))).output[-1]
+    dead_weights = dead[:, :n].copy()
     dead_weights[np.arange(n), np.arange(n)] = 0.0
     reference = net.values[n]
     return CableOut(
@@ -67,6 +71,6 @@ def cable_out(design: Design, *, unplugged=(), net: Network | None = None) -> Ca
         opened.output[:, -1, n] * reference,
         net.noise_gains(resistances),
         dead_weights,
-        dead.output[:, -1, n] * reference,
+        dead[:, n] * reference,
         net.noise_gains(source_resistances=rs),
     )

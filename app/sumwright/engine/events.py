@@ -13,13 +13,15 @@ it chatter where the limit moves with the current.
 from __future__ import annotations
 
 import math
+from typing import NamedTuple
 
 import numpy as np
 
 from . import nodes
 from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, kept_of, state_space
 
-MOST_EVENTS = 3000
+MOST_EVENTS = 1500
+_GROWN_MOST = 500.0  # nepers: beyond it a number overflows
 _BUSY = 12  # segments: a record with fewer is not worth looking for its period
 _FROM_STATIC = {
     nodes.LINEAR: LINEAR,
@@ -102,6 +104,17 @@ def _watch_grid(lam):
 
 
 FRACTIONS = np.arange(1, 49) / 48.0
+
+
+class _Passed(NamedTuple):
+    """A moment of a record: the state then, and what had happened until then."""
+
+    state: tuple
+    segments: int
+    time: float
+    slewing: float
+    clipping: float
+    events: int
 
 
 class Course:
@@ -263,7 +276,9 @@ class Course:
         events = 0
         fastest = max(self.sines, default=0.0)
         most_step = math.pi / (24 * fastest) if fastest else np.inf
-        mark, last = math.inf, None  # where the state is compared next, and what it was a period before
+        mark, last = math.inf, None  # when the state is compared next, and what it was a period before
+        alone = not self.sines and all(p.slopes[-1] == 0 for p in self.sources)
+        cycle, due = None, 2 * _BUSY
         for j in range(len(starts)):
             t, stop = edges[j], edges[j + 1]
             while t < stop:
@@ -289,16 +304,16 @@ class Course:
                         return out, at_sample, slewing, clipping, events, False
                     key, x, v1 = self._change(m, key, seg, end - t, x, v1, v2)
                 t = end
-                if t >= mark:
-                    if last is not None and self._same(last[0], (key, x, v1)):
-                        period = [q for q in self.segments[last[1] :] if q.end > q.start]
-                        self._repeat(period, times, at_sample, out)
-                        periods = (self.duration - t) / (t - last[2][0])
-                        totals = zip((slewing, clipping, events), last[2][1:], strict=True)
-                        slewing, clipping, events = (now + (now - was) * periods for now, was in totals)
-                        return out, len(times), slewing, clipping, round(events), True
-                    last = ((key, x, v1), len(self.segments), (t, slewing, clipping, events))
-                    mark = t + self.period
+                here = _Passed((key, x, v1), len(self.segments), t, slewing, clipping, events)
+                earlier = None
+                if t >= mark:  # the sources begin anew
+                    earlier, last, mark = last, here, t + self.period
+                elif left and alone and j == len(starts) - 1:  # an oscillation of its own: Brent's search for a cycle
+                    earlier = cycle
+                    if events >= due:
+                        cycle, due = here, 2 * events
+                if earlier is not None and self._same(earlier.state, here.state):
+                    return self._repeat(earlier, here, times, at_sample, out)
         return out, at_sample, slewing, clipping, events, True
 
     def _same(self, before, now):
@@ -311,14 +326,18 @@ class Course:
             for a, b in zip(before[1:], now[1:], strict=True)
         )
 
-    def _repeat(self, period, times, at, out):
-        """Fill in the samples from `at` on from the segments of one period, over and over."""
-        first, length = period[0].start, period[-1].end - period[0].start
+    def _repeat(self, earlier, here, times, at, out):
+        """What `run` gives where all that follows is the stretch between two equal states, over and over."""
+        period = [q for q in self.segments[earlier.segments : here.segments] if q.end > q.start]
+        first, length = earlier.time, here.time - earlier.time
         tau = np.mod(times[at:] - first, length) + first
         which = np.searchsorted([q.start for q in period], tau, side="right") - 1
         for i, seg in enumerate(period):
             mine = np.flatnonzero(which == i)
             out[:, at + mine] = seg.watch(tau[mine] - seg.start)[: self.cells]
+        rounds = (self.duration - here.time) / length
+        slewing, clipping, events = (now + (now - was) * rounds for was, now in zip(earlier[3:], here[3:], strict=True))
+        return out, len(times), slewing, clipping, round(events), True
 
     def _change(self, m, key, seg, tau, x, v1, v2):
         """Mode and state after an event."""
@@ -412,6 +431,14 @@ def _looks(grid, times, at_sample, t0, length, most_step):
         width = min(2 * width, 4096)
 
 
+def _modes_at(lam, tau):
+    """exp(lam τ); an unstable mode, which an event ends long before, stops growing short of overflow."""
+    power = lam * tau
+    if power.size and power.real.max() > _GROWN_MOST:
+        power = np.minimum(power.real, _GROWN_MOST) + 1j * power.imag
+    return np.exp(power)
+
+
 class Segment:
     """Closed form of the course between two events."""
 
@@ -441,7 +468,7 @@ class Segment:
         """Watched rows at `tau` [s] after the start, (5 cells, times)."""
         out = self.y0[:, None] + self.y1[:, None] * tau
         if len(self.c):
-            out += (self.l @ np.exp(self.mode.lam[:, None] * tau)).real
+            out += (self.l @ _modes_at(self.mode.lam[:, None], tau)).real
         for om, y in zip(self.omegas, self.ys, strict=True):
             out += (y[:, None] * np.exp(1j * om * tau)).real
         return out
@@ -451,7 +478,7 @@ class Segment:
         m = self.mode
         x = self.p0 + self.p1 * tau
         if len(self.c):
-            x = x + (m.v @ (self.c * np.exp(m.lam * tau))).real
+            x = x + (m.v @ (self.c * _modes_at(m.lam, tau))).real
         for om, z in zip(self.omegas, self.z, strict=True):
             x = x + (z * np.exp(1j * om * tau)).real
         frozen = self.w0[-len(m.ss.first) :] + self.w1[-len(m.ss.first) :] * tau
