@@ -34,7 +34,9 @@ export function mount(theSheet) {
   document.querySelector('.work').append(box)
 }
 
-const pair = (name, ...children) => [el('div', {}, el('dt', {text: name}), el('dd', {}, ...children))]
+// where there is little room the words that their values explain are left to those who hear the sheet
+const SAID = ['load', 'target']
+const pair = (name, ...children) => [el('div', {}, el('dt', {text: name, class: SAID.includes(name) ? null : 'plain'}), el('dd', {}, ...children))]
 
 export function update(state, resized) {
   const p = state.plate, s = state.stage
@@ -68,22 +70,25 @@ function fillWays(s) {
   asked = false
 }
 
-// beside the drawing if it fits there, else across the foot of the drawing
+// under the op amps if it fits there, slimmer if it must, else across the foot of the drawing
+const WAYS = [[0, ''], [1, 'slim'], [0, 'slim'], [1, 'slim tight']]
 let stood = ''
 function stand(resized) {
   const work = box.parentNode
   if (!placed || !size(work).width) return
-  const {left, top, bottom, above} = placed.free
-  const key = [left, top, bottom, above, placed.width, box.textContent.length, words.ways.value].join()
+  const {places, bottom} = placed.free
+  const key = [JSON.stringify(places), bottom, placed.width, box.textContent.length, words.ways.value].join()
   if (key === stood && !resized) return
   stood = key
   const strip = size(document.getElementById('strips')).width
-  box.classList.remove('flat')
-  const w = box.scrollWidth, h = box.offsetHeight, room = placed.width - left + 4
   let at = null
-  if (w <= room && h <= bottom - top) at = {left: strip + left, top: bottom - h}
-  else if (w <= room && h <= above - 4) at = {left: strip + left, top: 4}
-  setClass(box, 'flat', !at)
+  for (const [k, way] of WAYS) {
+    if (at || !places[k]) continue
+    box.className = `plate ${way}`
+    const {left, top} = places[k]
+    if (box.scrollWidth <= placed.width - left + 4 && box.offsetHeight <= bottom - top) at = {left: strip + left, top: bottom - box.offsetHeight}
+  }
+  if (!at) box.className = 'plate flat'
   box.style.left = at ? `${at.left}px` : '0px'
   box.style.top = `${at ? at.top : bottom + 6}px`
   const margin = at ? '0px' : `${box.offsetHeight + 4}px`

@@ -101,9 +101,10 @@ function draw(L, s) {
     // plus node
     const rowsP = cell.plus.map(L.y)
     if (rowsP.length) {
-      const ends = [...rowsP, yp, ...(cell.plusGround === 'left' ? [cell.yPlusGround] : [])]
-      p.line(`M${bus} ${Math.min(...ends)}V${Math.max(...ends)}M${bus} ${yp}H${tri}`)
-      for (const yy of new Set([...rowsP, yp])) if (ends.length > 1) p.dot(bus, yy)
+      const ends = [...rowsP, ...(cell.jog ? [] : [yp]), ...(cell.plusGround === 'left' ? [cell.yPlusGround] : [])]
+      const top = Math.min(...rowsP)
+      p.line(`M${bus} ${Math.min(...ends)}V${Math.max(...ends)}` + (cell.jog ? `M${bus} ${top}H${cell.jog}V${yp}H${tri}` : `M${bus} ${yp}H${tri}`))
+      for (const yy of new Set(cell.jog ? rowsP : [...rowsP, yp])) if (ends.length > 1) p.dot(bus, yy)
     }
 
     // links from earlier cells: on the line of that cell's output
@@ -112,7 +113,7 @@ function draw(L, s) {
       if (!from) continue
       const before = L.cells[from[1] - 1]
       const x0 = before.out, to = node === 'minus' ? xm : bus
-      const xr = x0 + 24 * L.q, target = node === 'minus' ? ym : yp
+      const xr = x0 + 29 * L.q, target = node === 'minus' ? ym : yp
       p.line(`M${x0} ${before.mid}H${to}V${target}`)
       body(xr, before.mid, 18 * k)
       part(`${c}/${node}/${source}`, xr, before.mid, text, `resistor, ${source} to cell ${c + 1}`)
@@ -138,10 +139,10 @@ function draw(L, s) {
       const x = rowsP.length ? bus : tri - 13 * k
       const y0 = rowsP.length ? Math.max(...rowsP, yp) : yp
       if (!rowsP.length) p.line(`M${tri} ${yp}H${x}`)
-      p.line(`M${x} ${y0}v${14 * k}M${x} ${y0 + 48 * k}v${8 * k}`)
-      upright(x, y0 + 14 * k)
-      ground(x, y0 + 56 * k)
-      part(`${c}/plus_ground`, x + (rowsP.length || L.many ? 12 : -12) * k, y0 + 31 * k, data.plus_ground, `resistor, plus node of cell ${c + 1} to ground`, rowsP.length || L.many ? 'right' : 'left')
+      p.line(`M${x} ${y0}v${10 * k}M${x} ${y0 + 40 * k}v${6 * k}`)
+      upright(x, y0 + 10 * k, 30 * k)
+      ground(x, y0 + 46 * k)
+      part(`${c}/plus_ground`, x + (rowsP.length || L.many ? 12 : -12) * k, y0 + (rowsP.length || L.many ? 25 : 32) * k, data.plus_ground, `resistor, plus node of cell ${c + 1} to ground`, rowsP.length || L.many ? 'right' : 'left')
     }
     if (cell.minusGround === 'left') {
       const yg = cell.yMinusGround, to = rowsM.length ? bus : xm
@@ -163,10 +164,9 @@ function draw(L, s) {
     p.path(`M${tri} ${mid - half}V${mid + half}L${tip} ${mid}Z`, {class: 'body heavy'})
     p.line(`M${tri + 6 * k} ${ym}h${10 * k}M${tri + 6 * k} ${yp}h${10 * k}m${-5 * k} ${-5 * k}v${10 * k}`)
     const w = tip - tri, rx = tri + w * .35, ry = half * .65
-    if (last) {
+    if (last && !L.many) {
       p.line(`M${rx} ${mid - ry}V${mid - half - k}M${rx - 7} ${mid - half - k}h14M${rx} ${mid + ry}V${mid + half + 4 * k}M${rx - 7} ${mid + half + 4 * k}h14`)
-      if (!L.many) p.text(rx + 12, mid - half + 6 * k, `${signed(s.supply[0], 2)}${THIN}V`, {class: 'halo'})
-      if (!L.many) p.text(rx + 12, mid + half + 8 * k, `${signed(s.supply[1], 2)}${THIN}V`, {class: 'halo'})
+      s.supply.forEach((rail, i) => p.text(rx + 12, mid + (i ? half + 8 * k : 6 * k - half), railText(rail, out - rx - 16, L.type), {class: 'halo'}))
     }
     if (L.many) p.text(tri + w * .52, mid + 5 * k, String(c + 1), {class: 'soft', 'text-anchor': 'middle'})
 
@@ -176,8 +176,9 @@ function draw(L, s) {
       p.line(`M${xm} ${yf}H${out}V${mid}`)
       body(xr, yf, wide)
       p.dot(out, mid)
-      const over = !data.cf && (L.many ? !cell.onTop : k < .9 && cell.ym > L.y(cell.first))
-      part(`${c}/feedback`, L.many && !cell.onTop && data.cf ? xr + 18 : xr, yf, data.feedback, L.many ? `resistor, feedback of cell ${c + 1}` : 'resistor, feedback', over ? 'above' : 'below')
+      // inside the loop of two cells the node's voltage needs the room
+      const aside = L.many && !cell.onTop && data.cf
+      part(`${c}/feedback`, aside ? out + 3 : xr, yf, data.feedback, L.many ? `resistor, feedback of cell ${c + 1}` : 'resistor, feedback', aside ? 'right' : L.many ? data.cf ? 'under' : 'above' : 'below')
       if (data.cf) {
         const a = xm + Math.min(20 * k, (out - xm) * .14), b = out - Math.min(20 * k, (out - xm) * .14)
         p.line(`M${a} ${yf}V${yc}H${xr - 3}M${xr + 3} ${yc}H${b}V${yf}`)
@@ -196,12 +197,13 @@ function draw(L, s) {
     const virtual = cell.plusGround === 'tied' && !rowsP.length && !clip && data.feedback !== null
     const red = clip ? ' red' : ''
     if (virtual && !L.many) { p.text(xm + 5 * k, ym - 21 * k, 'virtual', {class: 'node halo'}); p.text(xm + 5 * k, ym - 6 * k, 'ground', {class: 'node halo'}) }
-    else p.text(xm + (L.many ? 3 : 5) * k, ym - 6 * k, `${fixed(data.vm)}${THIN}V`, {class: 'node halo' + red})
-    if (rowsP.length || cell.plusGround === 'down') p.text(L.many ? xm + 5 * k : rowsP.length ? xm - 6 * k : tri - 20 * k, yp + 17 * k, `${fixed(data.vp)}${THIN}V`, {class: 'node halo', 'text-anchor': L.many || rowsP.length ? 'start' : 'end'})
+    else p.text(xm + (L.many ? 4 : 5) * k, L.many ? mid - half - 3 * k : ym - 6 * k, `${fixed(data.vm)}${THIN}V`, {class: 'node halo' + red})
+    if (rowsP.length || (cell.plusGround === 'down' && !L.many)) p.text(cell.jog ? tri - 4 : L.many ? xm + 5 * k : rowsP.length ? xm - 6 * k : tri - 24 * k, yp + 17 * k, `${fixed(data.vp)}${THIN}V`, {class: 'node halo', 'text-anchor': (L.many || rowsP.length) && !cell.jog ? 'start' : 'end'})
     if (!last) {
       p.line(`M${tip} ${mid}H${out}`)
-      p.text(out + 4, mid + 22 * k, `${fixed(data.vo)}${THIN}V`, {class: 'node halo' + red})
-      if (clip) p.text(out + 4, mid + 53 * k, `clipped ${data.clipped}`, {class: 'node red'})
+      const before = L.cells[c + 1].xm - 3
+      p.text(before, mid + 22 * k, `${fixed(data.vo)}${THIN}V`, {class: 'node halo' + red, 'text-anchor': 'end'})
+      if (clip) p.text(before, mid + (cell.plusGround === 'down' ? 71 : 53) * k, data.limited ? 'current limit' : `clipped ${data.clipped}`, {class: 'node red halo', 'text-anchor': 'end'})
     }
   }
 
@@ -209,7 +211,7 @@ function draw(L, s) {
   const end = L.cells[L.cells.length - 1], W = L.inner, mid = end.mid
   const clip = s.clipped !== 'no'
   p.line(`M${end.tip} ${mid}H${W - 9}`)
-  const xl = L.many ? Math.max(end.out + 10 * k, W - 56 * k) : Math.min(W - 62 * k, end.out + 24 * k + (W - end.out) * .12)
+  const xl = L.many ? Math.max(end.out + 10 * k, W - 66 * k) : Math.min(W - 62 * k, end.out + 24 * k + (W - end.out) * .12)
   if (s.load.fitted) {
     const y0 = mid + 14 * k
     p.line(`M${xl} ${mid}V${y0}M${xl} ${y0 + 34 * k}v${9 * k}`)
@@ -220,7 +222,8 @@ function draw(L, s) {
     if (s.load.resistance) current(xl + 13 * k, y0 + 30 * k, s.load.i, 'start')
   }
   p.put('circle', {cx: W - 5, cy: mid, r: 4, class: 'terminal'})
-  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (L.many && fixed(s.output).length > 5 ? ' least' : L.many || fixed(s.output).length > 6 ? ' less' : '')}, fixed(s.output))
+  const volts = fixed(s.output), fits = name => volts.length * px(name) * .556 <= W - 13 * k - end.out - 6
+  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (!L.many && fits('--t-5') ? '' : fits('--t-4') ? ' less' : ' least')}, volts)
   p.text(W, mid - 11 * k, 'V', {'text-anchor': 'end', class: 'halo'})
   if (clip) {
     p.text(W, mid - (L.many ? 48 : 56) * k, s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped, {'text-anchor': 'end', class: 'node red halo'})
@@ -230,6 +233,11 @@ function draw(L, s) {
   return spots
 }
 
+// a rail's volts, with decimals where they fit before the feedback
+const railText = (volts, room, type) => {
+  const text = `${signed(volts, 2)}${THIN}V`
+  return text.length * type * .54 <= room ? text : text.replace(/\.?0+(?=\u202f)/, '')
+}
 const nearest = (list, y) => list.reduce((a, b) => Math.abs(b - y) < Math.abs(a - y) ? b : a)
 const topOf = (cell, top) => Math.min(cell.ym, top)
 
@@ -255,7 +263,7 @@ function place(spots, s) {
     const [w, h] = node.__size
     const k = placed.k
     const left = spot.how === 'right' ? spot.x : spot.how === 'left' ? spot.x - w : spot.x - w / 2
-    const top = spot.how === 'below' ? spot.y + 8 * k : spot.how === 'right' || spot.how === 'left' ? spot.y - h / 2 : spot.y - (7 * k + h + 1)
+    const top = spot.how === 'below' ? spot.y + 8 * k : spot.how === 'under' ? spot.y + 6 * k : spot.how === 'right' || spot.how === 'left' ? spot.y - h / 2 : spot.y - (7 * k + h + 1)
     const at = `${Math.round(left)}px,${Math.round(top)}px`
     if (node.__at !== at) { node.style.transform = `translate(${at})`; node.__at = at }
   }
