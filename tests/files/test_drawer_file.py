@@ -36,6 +36,11 @@ def test_without_counts_there_are_as_many_as_wanted():
     assert bins("value\n1k\n")[0].count is None
 
 
+def test_a_bare_list_and_other_headings_in_use():
+    assert bins("4k7\n10k\n4R7\n") == (Bin(4.7, None, None), Bin(4700.0, None, None), Bin(10000.0, None, None))
+    assert bins("Resistance;Qty\n4,7k;5\n") == (Bin(4700.0, None, 5),)
+
+
 def test_a_marking_gives_value_and_tolerance():
     assert bins("value,count\n4K7J,2\n") == (Bin(4700.0, 0.05, 2),)
 
@@ -46,7 +51,7 @@ def test_a_marking_gives_value_and_tolerance():
         ("", "is empty"),
         ("value,count\n", "no resistors"),
         ("4k7,3\n", r"Line 1 .*column .4k7.*value, tolerance, count, note"),
-        ("resistance,count\n4k7,3\n", r"Line 1 .*resistance"),
+        ("resistor,count\n4k7,3\n", r"Line 1 .*resistor"),
         ("count,note\n3,x\n", "no column 'value'"),
         ("value,value\n1k,1k\n", "twice"),
         ("value,count\n1k,1\n4.7 V,3\n", 'Line 3 of the drawer, value: "4.7 V"'),

@@ -1,4 +1,4 @@
-"""A drawer of resistors as CSV: value, tolerance, count, note.
+"""A drawer of resistors as CSV: value, tolerance, count, note; or a bare list, one value a line.
 
 Read as people write it: comma, semicolon or tab between the cells, decimal point or
 comma, `4k7` or `4700`, a byte order mark or none. A line that cannot be meant is refused
@@ -16,6 +16,13 @@ from sumwright.files.text import decode, read_text
 from sumwright.quantity import parse_quantity, parse_resistor_code
 
 COLUMNS = ("value", "tolerance", "count", "note")
+ALSO = {
+    "resistance": "value",
+    "ohm": "value",
+    "ohms": "value",
+    "quantity": "count",
+    "qty": "count",
+}  # as people head them
 MOST_BYTES = 32 * 1024 * 1024
 MOST_LINES = 1_000_000
 MOST_COUNT = 10**9
@@ -52,7 +59,10 @@ def read_drawer(source: os.PathLike | str | bytes) -> Drawer:
         )
     head = lines[start]
     separator = max(",;\t", key=head.count) if any(s in head for s in ",;\t") else ","
-    columns = _columns(next(csv.reader([head], delimiter=separator)), start + 1)
+    if _bare(head):
+        columns, start = ["value"], start - 1
+    else:
+        columns = _columns(next(csv.reader([head], delimiter=separator)), start + 1)
     if len(lines) > MOST_LINES:
         raise InvalidReadings(f"The drawer has {len(lines)} lines; at most {MOST_LINES} are read.")
 
@@ -85,8 +95,19 @@ def read_drawer(source: os.PathLike | str | bytes) -> Drawer:
     return Drawer(tuple(Bin(value, tolerance, *found[value, tolerance]) for value, tolerance in order))
 
 
+def _bare(line: str) -> bool:
+    """Whether the first line is a value already: a list without a heading. A comma there could part two cells."""
+    if "," in line:
+        return False
+    try:
+        _kind(line.strip(), "", 1)
+    except InvalidReadings:
+        return False
+    return True
+
+
 def _columns(names: list[str], line: int) -> list[str]:
-    columns = [n.strip().lower() for n in names]
+    columns = [ALSO.get(n.strip().lower(), n.strip().lower()) for n in names]
     while columns and not columns[-1]:
         columns.pop()
     for name in columns:
