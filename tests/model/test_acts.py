@@ -10,6 +10,7 @@ from sumwright.engine.stage import ARRANGEMENTS
 from sumwright.errors import CannotRealise, SumwrightError
 from sumwright.files.design import read_design, write_design
 from sumwright.model import acts, demo
+from sumwright.model.typed import SPANS
 from sumwright.model.workbench import Workbench
 from sumwright.sitting import read_step, step_document
 
@@ -45,6 +46,40 @@ def test_values_are_typed_as_engineers_write_them(bench):
 def test_typing_half_of_what_is_wrong_says_what_is_allowed(bench):
     with pytest.raises(SumwrightError, match=r"8\.5\.1"):
         do(bench, "signal", signal="east", figure="value", text="8.5.1")
+
+
+@pytest.mark.parametrize(
+    ("act", "message", "says"),
+    [
+        ("part", {"part": "0/feedback", "text": "1e30"}, r"resistor: 10.mΩ to 1.TΩ"),
+        ("part", {"part": "0/feedback", "text": "1e-29"}, r"10.mΩ to 1.TΩ"),
+        ("figure", {"group": "supply", "figure": "high", "text": "1e9"}, r"1.GV .* a rail: −1.kV to 1.kV"),
+        ("weight", {"signal": "north", "text": "1e12"}, r"1e12 .* a weight, either sign: 0.00001 to 100000"),
+        ("weight", {"signal": "tare", "text": "-1e12"}, r"a weight"),
+        ("signal", {"signal": "north", "figure": "high", "text": "1e20"}, r"10.kV"),
+        ("capacitor", {"cell": 0, "text": "1e-30"}, r"1.fF to 1.mF"),
+        ("figure", {"group": "resistor", "figure": "tolerance", "text": "400"}, r"400.% .* 0.% to 50.%"),
+        ("figure", {"group": "op_amp", "figure": "per_package", "text": "1e9"}, r"1 to 64"),
+        ("draw_sum", {"text": "out = 1e12 a"}, r"a weight"),
+        ("offset", {"text": "1e9"}, r"an offset"),
+    ],
+)
+def test_a_slip_of_the_keyboard_is_told_what_is_allowed(bench, act, message, says):
+    before = bench.snapshot
+    with pytest.raises(SumwrightError, match=says):
+        do(bench, act, **message)
+    assert bench.snapshot == before
+    assert not bench.history.past
+
+
+def test_every_figure_that_can_be_typed_has_its_span(bench):
+    assert {(g, f) for g, figures in acts.UNITS.items() for f in figures} <= set(SPANS)
+    assert {("signal", f) for f in acts.SIGNAL_UNITS} <= set(SPANS)
+    # a legal file is opened whatever it holds
+    document = json.loads(write_design(bench.design))
+    document["cells"][0]["feedback"] = 1e15
+    do(bench, "open", text=json.dumps(document))
+    assert bench.cells[0].feedback == 1e15
 
 
 def test_a_refused_weight_can_be_taken_with_another_arrangement(bench):

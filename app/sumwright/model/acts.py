@@ -21,6 +21,7 @@ from sumwright.files.design import design_document, read_design, write_design
 from sumwright.files.examples import NAMES as EXAMPLES
 from sumwright.files.examples import example
 from sumwright.model import edits, sums
+from sumwright.model.typed import in_span
 from sumwright.model.workbench import SYMBOLS, THEMES, Workbench, renamed
 from sumwright.quantity import parse_quantity
 
@@ -93,7 +94,7 @@ def signal(bench: Workbench, message: dict) -> None:
     name = _signal(bench, message)
     figure = fields.one_of(message, "figure", SIGNAL_UNITS)
     bench.on = name
-    typed = _typed(message, SIGNAL_UNITS[figure], "")
+    typed = in_span("signal", figure, _typed(message, SIGNAL_UNITS[figure], ""), SIGNAL_UNITS[figure])
     bench.edit(lambda d: checked(_with_source(d, name, figure, typed, bench.follow)))
 
 
@@ -105,14 +106,14 @@ def _with_source(design: Design, name: str, figure: str, typed: float, follow: s
 def weight(bench: Workbench, message: dict) -> None:
     """A wanted weight is typed; the resistors follow as the sheet says."""
     name = _signal(bench, message)
-    typed = _typed(message, "", "")
+    typed = in_span("signal", "weight", _typed(message, "", ""), "")
     bench.on = name
     _wish(bench, message, lambda d: edits.with_weight(d, name, typed, bench.follow))
 
 
 def offset(bench: Workbench, message: dict) -> None:
     """The wanted offset is typed."""
-    typed = _typed(message, "V", "")
+    typed = in_span("target", "offset", _typed(message, "V", ""), "V")
     _wish(bench, message, lambda d: edits.with_offset(d, typed, bench.follow))
 
 
@@ -181,7 +182,7 @@ def _wish(bench: Workbench, message: dict, change: Callable[[Design], Design]) -
 def part(bench: Workbench, message: dict) -> None:
     """A resistor's value is typed on the drawing."""
     key = fields.text(message, "part", 120)
-    typed = _typed(message, "Ω", "")
+    typed = in_span("part", "resistor", _typed(message, "Ω", ""), "Ω")
     bench.edit(lambda d: checked(edits.with_resistance(d, key, typed)))
 
 
@@ -189,7 +190,7 @@ def capacitor(bench: Workbench, message: dict) -> None:
     """The capacitor across a feedback is typed; empty or 0 takes it out."""
     cell = fields.whole(message, "cell", 0, 15)
     text = fields.text(message, "text", TYPED_MOST).strip()
-    typed = parse_quantity(text, "F") if text else 0.0
+    typed = in_span("part", "capacitor", parse_quantity(text, "F"), "F") if text else 0.0
     bench.edit(lambda d: checked(edits.with_feedback_capacitance(d, cell, typed)))
 
 
@@ -220,6 +221,7 @@ def figure(bench: Workbench, message: dict) -> None:
             typed /= 100.0  # a bare number of a tolerance is in per cent, as it is shown
         if what == "temperature_coefficient" and re.fullmatch(r"[\d.,]+", text):
             typed *= 1e-6  # ppm/K, as it is shown
+        in_span(group, what, typed, UNITS[group][what])
         if what == "per_package":
             typed = int(typed)
     bench.edit(lambda d: checked(edits.with_figure(d, group, what, typed)))
@@ -233,14 +235,14 @@ def series(bench: Workbench, message: dict) -> None:
 
 def stray(bench: Workbench, message: dict) -> None:
     """The board's capacitance at the inverting nodes is typed."""
-    typed = _typed(message, "F", "")
+    typed = in_span("board", "stray", _typed(message, "F", ""), "F")
     bench.edit(lambda d: checked(replace(d, stray_capacitance=typed)))
 
 
 def band(bench: Workbench, message: dict) -> None:
     """An end of the noise band is typed."""
     end = fields.whole(message, "end", 0, 1)
-    typed = _typed(message, "Hz", "")
+    typed = in_span("board", "band", _typed(message, "Hz", ""), "Hz")
     low, high = (typed, bench.noise_band[1]) if end == 0 else (bench.noise_band[0], typed)
     bench.edit(lambda d: checked(replace(d, noise_band=(low, high))))
 

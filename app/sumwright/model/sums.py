@@ -24,6 +24,7 @@ from sumwright.engine.stage import (
 )
 from sumwright.errors import InvalidDesign, InvalidQuantity
 from sumwright.model.edits import SIGNALS_MOST, check_name
+from sumwright.model.typed import in_span
 from sumwright.quantity import parse_quantity
 
 TEXT_MOST = 10_000
@@ -137,6 +138,13 @@ def _add(signals, name, weight, low=USUAL_RANGE[0], high=USUAL_RANGE[1], resista
         raise InvalidDesign(f"“{name}” weighs 0; leave it out or give it a weight.", "sum")
     if resistance < 0:
         raise InvalidDesign(f"“{name}”: a source resistance is 0 or more; it is {resistance:g} Ω.", "sum")
+    for figure, typed, unit in (
+        ("weight", weight, ""),
+        ("low", low, "V"),
+        ("high", high, "V"),
+        ("source_resistance", resistance, "Ω"),
+    ):
+        in_span("signal", figure, typed, unit)
     signals.append(Signal(name, weight, low, high, min(max(low, (low + high) / 2), high), resistance))
 
 
@@ -145,7 +153,7 @@ def _made(signals: list[Signal], offset: float) -> Sum:
         raise InvalidDesign("The sum names no signal; a stage needs at least one.", "sum")
     if len(signals) > SIGNALS_MOST:
         raise InvalidDesign(f"A sheet holds {SIGNALS_MOST} signals; this sum has {len(signals)}.", "sum")
-    return Sum(tuple(signals), offset)
+    return Sum(tuple(signals), in_span("target", "offset", offset, "V"))
 
 
 def new_design(wanted: Sum, op_amp: OpAmp, title: str = "Untitled sum") -> Design:
