@@ -13,8 +13,9 @@ from typing import NamedTuple
 
 import numpy as np
 
+from . import nodes
 from .budget import network_of
-from .statespace import Transfer, linear_modes, linear_space, poles
+from .statespace import Transfer, is_exact, linear_modes, linear_space, poles
 
 BOLTZMANN = 1.380649e-23  # J/K, exact in the SI since 2019
 ZERO_CELSIUS = 273.15  # K
@@ -108,6 +109,15 @@ def _node_transfers(net, f):
     The voltage e lies between the node and the pin: the op amp sees it beside the + node's
     voltage, and what the pin's admittances draw because of it is a current into m and out of p.
     """
+    if not is_exact(net):
+        width = 4 * net.cell_count
+        injected = np.eye(width).reshape(net.cell_count, 4, width)
+        error, into_m, into_p, into_o = np.moveaxis(injected, 1, 0)
+        sol = nodes.solve(
+            net, np.zeros((net.signal_count + 1, width)), s=2j * np.pi * f,
+            error=error, into_minus=into_m, into_plus=into_p, into_output=into_o,
+        )  # fmt: skip
+        return sol.output[:, -1].T.reshape(net.cell_count, 4, -1)
     ss, amp = linear_space(net), net.design.op_amp
     cells, last = net.cell_count, ss.output[-1:]
     through = np.zeros((len(ss.a), 4 * cells))

@@ -4,7 +4,8 @@ Curves are evaluated from the modes of the stage's state equations, crossings ar
 found on a grid that reaches far below the lowest and far above the highest pole
 and refined on the equations themselves; the lowest crossing counts. What does not
 exist is None. `source_gains` and `loop_gains` answer the same questions from the
-node equations at complex frequency: slower, and the check on the modes.
+node equations at complex frequency: slower, the check on the modes, and used where
+those would have to stand for an output or a source without resistance.
 
 Source: loop gain as the return ratio of the op amp's controlled source (Bode,
 Network Analysis and Feedback Amplifier Design, 1945), phase margin as
@@ -21,7 +22,7 @@ import numpy as np
 from . import nodes
 from .budget import network_of
 from .stage import Design
-from .statespace import StateSpace, Transfer, linear_modes, linear_space, poles
+from .statespace import StateSpace, Transfer, is_exact, linear_modes, linear_space, poles
 
 _PER_DECADE = 20
 _HALF_POWER = 1.0 / math.sqrt(2.0)
@@ -86,6 +87,40 @@ def _cut(ss: StateSpace, k: int):
     return Transfer(ss.a[np.ix_(keep, keep)], ss.a[keep, v][:, None], row[None, keep], row[v].reshape(1, 1))
 
 
+def _by_modes(net):
+    """Gains and loop gains over frequency, and each as a function of one frequency, from the modes."""
+    amp, ss = net.design.op_amp, linear_space(net)
+    last, n = ss.output[-1:], net.signal_count
+    through = Transfer(ss.a, ss.b[:, : n + 1], ss.c[last], ss.d[last, : n + 1], linear_modes(net))
+    cuts = [_cut(ss, k) for k in range(net.cell_count)]
+    w1 = 2 * math.pi * amp.gain_bandwidth / amp.open_loop_gain
+
+    def first_stage(x):
+        return amp.open_loop_gain / (1.0 + 2j * math.pi * x / w1)
+
+    def curves(x):
+        return through.curves(x)[0], np.array([-first_stage(x) * cut.curves(x)[0, 0] for cut in cuts])
+
+    def loop_of(k):
+        pins = cuts[k].of(0)
+        return lambda x: -first_stage(x) * pins(x)
+
+    return curves, through.of, loop_of
+
+
+def _by_nodes(net):
+    """The same from the node equations, where the state equations are not quite the stage's own."""
+
+    def curves(x):
+        return source_gains(net, x), loop_gains(net, x)
+
+    return (
+        curves,
+        lambda i: lambda x: complex(source_gains(net, [x])[i, 0]),
+        lambda k: lambda x: complex(loop_gains(net, [x])[k, 0]),
+    )
+
+
 def response(stage, *, frequencies=None) -> Response:
     """Gain and phase of every signal, loop gain and margins of every cell.
 
@@ -101,23 +136,12 @@ def response(stage, *, frequencies=None) -> Response:
     """
     net = network_of(stage)
     design, n = net.design, net.signal_count
-    ss = linear_space(net)
-    last = ss.output[-1:]
-    through = Transfer(ss.a, ss.b[:, : n + 1], ss.c[last], ss.d[last, : n + 1], linear_modes(net))
     f = _grid(net)
-    cuts = [_cut(ss, k) for k in range(net.cell_count)]
-    w1 = 2 * math.pi * design.op_amp.gain_bandwidth / design.op_amp.open_loop_gain
-
-    def first_stage(x):
-        return design.op_amp.open_loop_gain / (1.0 + 2j * math.pi * x / w1)
-
-    def curves(x):
-        return through.curves(x)[0], np.array([-first_stage(x) * cut.curves(x)[0, 0] for cut in cuts])
-
+    curves, gain_of, loop_of = (_by_modes if is_exact(net) else _by_nodes)(net)
     gains, loops = curves(f)
     linear = getattr(stage, "linear", None)  # an analysis knows the influences already
     dc = (nodes.solve(net, np.eye(n + 1)) if linear is None else linear).output[-1]
-    bandwidths = _bandwidths(f, gains[:n], dc[:n], through.of)
+    bandwidths = _bandwidths(f, gains[:n], dc[:n], gain_of)
     signals = tuple(
         SignalResponse(s.name, float(g), b) for s, g, b in zip(design.signals, dc, bandwidths, strict=False)
     )
@@ -125,8 +149,7 @@ def response(stage, *, frequencies=None) -> Response:
     log_f = np.log(f)
     phases = np.unwrap(np.angle(loops))
     for k, ng in enumerate(net.noise_gains()):
-        pins = cuts[k].of(0)
-        margins = _margins(f, loops[k], lambda x, pins=pins: -first_stage(x) * pins(x), log_f, phases[k])
+        margins = _margins(f, loops[k], loop_of(k), log_f, phases[k])
         cells.append(CellResponse(float(ng), *margins))
     if frequencies is not None:
         f = np.asarray(frequencies, dtype=float)

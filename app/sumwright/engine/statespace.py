@@ -26,8 +26,11 @@ SWING = 2  # output at the voltage limit, current flowing the way that costs dro
 CURRENT = 3  # output at the current limit
 SWING_IDLE = 4  # output at the voltage limit, current flowing the other way
 
-_LEAST_OUTPUT_RESISTANCE = 1e-4  # ohm: an ideal output still needs a branch to write the equation of
-_LEAST_TIE_RESISTANCE = 1e-3  # ohm, of a + pin tied straight to a source: far below anything it could load
+# An ideal branch still needs a resistance to write the equation of. Smaller ones make poles so far out that the modes
+# lose digits; see `is_exact`.
+_LEAST_OUTPUT_RESISTANCE = 1e-2  # ohm, behind a loop that takes its effect away
+_LEAST_LIMIT_RESISTANCE = 1e-4  # ohm, of an output at a limit that does not yield
+_LEAST_TIE_RESISTANCE = 0.1  # ohm, of a + pin tied straight to a source: far below anything it could load
 
 
 class StateSpace(NamedTuple):
@@ -125,7 +128,7 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
             branch[k] = 1.0 / r_out
             inner[o, k] = branch[k]
         elif abs(mode) in (SWING, SWING_IDLE):
-            least = _LEAST_OUTPUT_RESISTANCE
+            least = _LEAST_LIMIT_RESISTANCE
             branch[k] = 1.0 / (max(amp.dropout_resistance, least) if abs(mode) == SWING else least)
             drive[o, n + 1] += branch[k] * (limits.high if mode > 0 else limits.low)
         else:
@@ -204,6 +207,12 @@ def state_space(net: Network, modes=None, limits: Limits | None = None) -> State
         a, b[:, :inputs], c, d[:, :inputs], q.T @ (same / same.sum(axis=0)).T, tuple(first), tuple(second),
         base, base + 1, base + 2, nodes + np.arange(cells), b[:, inputs:], d[:, inputs:],
     )  # fmt: skip
+
+
+def is_exact(net: Network) -> bool:
+    """Whether these equations are the stage's own; an output without resistance, or a + pin on a source, is given some."""
+    tied_to_source = any(0 <= c.tied <= net.signal_count for c in net.cells)
+    return net.design.op_amp.output_resistance >= _LEAST_OUTPUT_RESISTANCE and not tied_to_source
 
 
 def kept_of(net: Network) -> dict:

@@ -212,7 +212,7 @@ def best_choices(
         ("fewest parts", lambda c: c.resistor_count),
         ("fewest different values", lambda c: c.different_values),
         ("least noise", lambda c: c.noise_density),
-        ("kindest to the sources", lambda c: -c.least_input_resistance),
+        ("lightest load on the sources", lambda c: -c.least_input_resistance),
     ):
         k = min((0, *front), key=lambda k: (key(ranked[k]), ranked[k].worst_weight_error, k))
         kept.setdefault(k, []).append(merit)
