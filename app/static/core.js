@@ -83,6 +83,7 @@ function draw(resized) {
   if (document.documentElement.dataset.theme !== theme) document.documentElement.dataset.theme = theme
   title.set(state.title)
   if (document.title !== `${state.title} · Sumwright`) document.title = `${state.title} · Sumwright`
+  setText(invented, state.invented ? 'an invented demonstration' : '')
   for (const part of PARTS) part.update?.(state, resized)
   const fold = folds.get(state.open)
   const shown = state.shown?.[state.open]
@@ -144,6 +145,7 @@ function gone() {
 
 const tail = {node: el('span', {class: 'tail soft'}), value: el('b', {class: 'n'})}
 tail.node.append(el('i', {class: 'serif', text: 'out'}), ' = ', tail.value)
+const invented = document.getElementById('invented')
 const title = new Blank(sheet, {
   field: 'title', label: 'Title of the sheet', send: text => ({do: 'title', text}), cls: 'title', placeholder: 'Untitled sheet',
 })

@@ -6,6 +6,10 @@ import {margin, verdict} from './format.js'
 
 const TIGHT = .1 // of the allowance: where the hatched strip ends
 const WORDS = ['short', 'tight', 'clear', 'unknown']
+const MEANS = {
+  short: 'short: the limit is passed, by the number in red', tight: 'tight: less than a tenth of the whole room is left',
+  clear: 'clear: more than a tenth of the whole room is left', unknown: 'unknown: something is not given; open it to see what to type',
+}
 let box, head, big, what, why, cure, live, counts, plumb, tip, warned, usual
 const gauges = new Map()
 let open = null, spoken = '', speak = 0
@@ -18,7 +22,7 @@ export function mount(sheet) {
   cure = el('p')
   live = el('p', {class: 'vh', 'aria-live': 'polite', role: 'status'})
   head = el('div', {class: 'verdict'}, big, what, why, cure)
-  counts = WORDS.map(word => el('span', {}, el('b'), ' ' + word))
+  counts = WORDS.map(word => el('span', {title: MEANS[word]}, el('b'), ' ' + word))
   plumb = el('div', {class: 'plumb'})
   tip = svg('svg', {width: '100%', height: 26, 'aria-hidden': 'true', class: 'bob'}, svg('path', {stroke: 'var(--ink)'}), svg('path', {fill: 'var(--ink)'}))
   const hatch = svg('svg', {width: 0, height: 0, 'aria-hidden': 'true', class: 'defs'}, svg('defs', {},
@@ -103,7 +107,7 @@ function drawGauges(checks) {
   const W = size(plumb).width - 84 * scale, z = px('--gut', box) + .5, H = scale > 1.1 ? (dense ? 16 : 20) : dense ? 12 : 15, mid = H / 2
   for (const c of checks) {
     const item = gauges.get(c.key)
-    setText(item.t, c.title); setText(item.w, c.status)
+    setText(item.t, c.title); setText(item.w, c.status); setAttr(item.w, 'title', MEANS[c.status])
     setText(item.m, c.status === 'unknown' ? 'not given' : margin(c.margin, c.unit))
     setClass(item.button, 'tight', c.status === 'tight'); setClass(item.button, 'short', c.status === 'short'); setClass(item.button, 'unknown', c.status === 'unknown')
     item.check = c

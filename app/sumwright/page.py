@@ -115,6 +115,7 @@ class Page:
         bench = self.workbench
         shown: dict[str, Any] = {
             "title": bench.title,
+            "invented": demo.is_demo(bench.design),
             "theme": bench.theme,
             "undo": bench.can_undo,
             "redo": bool(bench.history.future),

@@ -230,6 +230,8 @@ export function mount(node, sheet) {
     const {block, put} = placer([...shown.lines.map(l => Y(l.value)), Y(shown.output)], k)
     const at = i => c0 + step * (i + (n > 2 ? .36 : i === 0 ? .3 : .42))
     list.forEach((beam, i) => block(at(i) - 8, clamp(beam.high) - 2, at(i) + 8, clamp(beam.low) + 2))
+    for (const [i, beam] of list.entries()) for (const y of [Y(beam.limit_high), Y(beam.limit_low)]) block(at(i) - 19, y - 1, at(i) + 19, y + 1)
+    block(c1 + 6, -1e4, 1e4, 1e4)
     const labels = []
     list.forEach((beam, i) => {
       const x = at(i)

@@ -18,6 +18,14 @@ from sumwright.engine.stage import (
 )
 
 
+TITLE = "Grain hopper, four corners"
+
+
+def is_demo(design: Design) -> bool:
+    """Whether this is still the invented hopper: the sheet says so until it gets a title of its own."""
+    return design.title == TITLE
+
+
 def op_amp() -> OpAmp:
     """The generic JFET-input class of the list that comes with the project."""
     entry = find("JFET input, 3 MHz")
@@ -26,9 +34,12 @@ def op_amp() -> OpAmp:
 
 
 def design() -> Design:
-    """Four load cells under the corners of a grain hopper and a tare wheel, summed for a 0 to 5 V logger."""
+    """Four load cells under the corners of a grain hopper and a tare wheel, summed for a 0 to 5 V logger.
+
+    Invented: there is no such hopper, and its weights, ranges and readings are nobody's data.
+    """
     return Design(
-        title="Grain hopper, four corners",
+        title=TITLE,
         signals=(
             Signal("tare", -0.18, 0.0, 2.5, 0.42, 100.0, 10.0),
             Signal("north", 0.14, 0.0, 10.0, 7.6, 100.0, 10.0),
