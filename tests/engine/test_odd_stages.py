@@ -7,7 +7,7 @@ import pytest
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import exact_cells
 from sumwright.engine.boards import monte_carlo
-from sumwright.engine.response import at_signal_frequencies
+from sumwright.engine.response import at_signal_frequencies, source_gains
 from sumwright.engine.stage import (
     Ambient,
     Cell,
@@ -79,3 +79,22 @@ def test_every_analysis_answers(design):
                 assert all(np.isfinite(d.standard_deviation) for d in drawn.values())
             run = trace(a, {design.signals[0].name: Wave("sine", 0.0, 1.0, 1e4)}, 1e-3, samples=101)
             assert np.isfinite(run.outputs).all()
+
+
+@pytest.mark.parametrize("arrangement", ["mixed-sign", "two-stage"])
+def test_an_output_without_resistance_has_no_pole_of_its_own(arrangement):
+    """A load's capacitance then does nothing: neither to the margins, nor to the bandwidth, nor to the noise."""
+    bare = stage(arrangement, op_amp=op_amp(output_resistance=0.0, second_pole=None), load=Load(None, 0.0))
+    loaded = replace(bare, load=Load(1e4, 2e-9))
+    a, b = Analysis(bare), Analysis(loaded)
+    for one, other in ((a.ac.cells, b.ac.cells), (a.ac.signals, b.ac.signals)):
+        for x, y in zip(one, other, strict=True):
+            assert [type(v) for v in x] == [type(v) for v in y]
+            assert [v for v in x if isinstance(v, float)] == pytest.approx(
+                [v for v in y if isinstance(v, float)], rel=1e-5
+            )
+    assert a.ac.cells[-1].gain_margin_db is None
+    assert a.noise.rms == pytest.approx(b.noise.rms, rel=1e-12)
+    for k, s in enumerate(b.ac.signals):
+        half = abs(source_gains(b.net, [s.bandwidth_3db])[k, 0]) / abs(s.dc_gain)
+        assert half == pytest.approx(0.5**0.5, rel=1e-9)
