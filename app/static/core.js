@@ -174,6 +174,7 @@ async function turn(key) {
   for (const [k, f] of folds) f.node.hidden = k !== key
   if (key !== 'new') line.act({do: 'turn', fold: key})
   draw(true)
+  folds.get(key).mounted.focus?.()
 }
 
 function mountFolds() {

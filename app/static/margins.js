@@ -108,7 +108,7 @@ function drawGauges(checks) {
   for (const c of checks) {
     const item = gauges.get(c.key)
     setText(item.t, c.title); setText(item.w, c.status); setAttr(item.w, 'title', MEANS[c.status])
-    setText(item.m, c.status === 'unknown' ? 'not given' : margin(c.margin, c.unit))
+    setText(item.m, c.status === 'unknown' ? 'not given' : c.margin === null ? 'no limit' : margin(c.margin, c.unit))
     setClass(item.button, 'tight', c.status === 'tight'); setClass(item.button, 'short', c.status === 'short'); setClass(item.button, 'unknown', c.status === 'unknown')
     item.check = c
     if (!item.why.hidden) explain(item.why, c)
@@ -116,7 +116,7 @@ function drawGauges(checks) {
     setAttr(item.line, 'd', `M${z} ${mid}H${W}`)
     setAttr(item.line, 'class', c.status === 'unknown' ? 'dotted' : 'axis faint')
     setAttr(item.zero, 'd', `M${z} -25V${H + 2}`)
-    const size = c.ratio === null || c.ratio === undefined ? 0 : Math.min(1, Math.sqrt(Math.abs(c.ratio)))
+    const size = c.ratio === null || c.ratio === undefined ? c.status === 'clear' ? 1 : 0 : Math.min(1, Math.sqrt(Math.abs(c.ratio)))
     if (c.status === 'unknown') { setAttr(item.bar, 'width', 0); setAttr(item.end, 'd', ''); continue }
     if (c.status === 'short') {
       const x = Math.max(4, Math.min(1, size * 1.5) * (z - 2))

@@ -2,7 +2,8 @@
 
 import pytest
 from sumwright.errors import SumwrightError
-from sumwright.model.sums import read_sum
+from sumwright.model import demo
+from sumwright.model.sums import new_design, read_sum
 
 
 def terms(text):
@@ -23,6 +24,23 @@ def test_a_sum_over_several_lines_and_without_a_left_side():
 
 def test_names_of_several_words_stand_in_quotes():
     assert terms('y = 2 "left tank" + 1 "right tank"')[0] == {"left tank": 2.0, "right tank": 1.0}
+
+
+@pytest.mark.parametrize("sum_", ["out = 0.5 a - 0.25 b", "a 0.5\nb -0.25"])
+def test_what_is_asked_of_the_output_stands_in_lines_of_its_own(sum_):
+    wanted = read_sum(f"{sum_}\nwindow 0 to 5 V\naccuracy ±20m\nrails: 15 V, -15 V".replace("±", ""))
+    assert {s.name: s.weight for s in wanted.signals} == {"a": 0.5, "b": -0.25}
+    assert (wanted.window, wanted.accuracy, wanted.rails) == ((0.0, 5.0), 0.02, (15.0, -15.0))
+    design = new_design(wanted, demo.op_amp())
+    assert (design.target.low, design.target.high, design.target.accuracy) == (0.0, 5.0, 0.02)
+    assert (design.supply.high, design.supply.low) == (15.0, -15.0)
+    assert read_sum(f"{sum_}\nwindow -5 5\nrails 0 24").window == (-5.0, 5.0)
+    for wrong, says in (("window 5 0", "below its top"), ("accuracy 0", "more than 0"), ("rails 5 5", "different"),
+                        ("window 0 5x", "window"), ("rails 12 1e9", "a rail")):  # fmt: skip
+        with pytest.raises(SumwrightError, match=says):
+            read_sum(f"{sum_}\n{wrong}")
+    # and a signal may still be called so
+    assert read_sum("window 0.5\nrails, 0.25, 0, 10").signals[0].name == "window"
 
 
 def test_names_of_other_scripts_are_names():

@@ -72,10 +72,16 @@ def test_from_a_sum_to_a_proven_board_and_its_report(hands):
     hands.tab_to("New")
     hands.press("Enter")
     wait(page, "sumwright.state.open === 'new'")
-    hands.tab_to("The sum")
+    wait(page, "document.activeElement.getAttribute('aria-label') === 'The sum'")
     page.keyboard.type("out = 0.2 left + 0.3 right - 0.1 zero + 0.5 V")
-    hands.press("Control+Enter")
-    wait(page, "sumwright.state.open === 'curves' && sumwright.state.signals.order.length === 3")
+    hands.tab_to("window of the output, from")
+    page.keyboard.type("-2")
+    hands.tab_to("window of the output, to")
+    hands.type("8")
+    wait(
+        page,
+        "sumwright.state.open === 'curves' && sumwright.state.signals.order.length === 3 && sumwright.state.plate.target.high === '8'",
+    )
     # move a signal, type a value, pull and plug a cable
     hands.tab_to("left(, volts.*)?", "INPUT")
     before = page.evaluate("sumwright.state.stage.output")

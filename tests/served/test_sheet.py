@@ -71,6 +71,7 @@ def test_the_first_paint_is_the_finished_demonstration(fresh):
     assert fresh.locator("#title").input_value() == "Grain hopper, four corners"
     assert output(fresh) == pytest.approx(operating_point(demo.design()).output, abs=6e-4)
     assert fresh.locator(".verdict .big").text_content() == "all hold"
+    assert fresh.locator("#invented").text_content() == "an invented demonstration"
     assert [strip(fresh, n).count() for n in ("tare", "north", "east", "south", "west", "reference")] == [1] * 6
 
 
@@ -161,6 +162,21 @@ def test_a_wrong_entry_stays_as_typed_with_one_sentence_and_the_sheet_keeps_what
     assert note.text_content() == ""
 
 
+def test_a_value_past_its_range_is_taken_and_flagged_in_words(sheet):
+    field = type_in(sheet, VALUE.format("east"), "12")
+    assert field.input_value() == "12.000"
+    row = strip(sheet, "east")
+    assert row.locator(".past").text_content() == "past 0 to 10\u202fV"
+    assert row.locator(".past").is_visible()
+    assert "margins do not cover it" in field.get_attribute("title")
+    type_in(sheet, VALUE.format("east"), "10")
+    assert row.locator(".past").text_content() == ""
+    # far outside anything that is built: refused with what is allowed
+    field = type_in(sheet, '[aria-label="resistor, feedback"]', "1e30")
+    assert field.input_value() == "1e30"
+    assert re.search(r"10\u202fmΩ to 1\u202fTΩ; the sheet keeps 12\.3k", sheet.locator("#note").text_content())
+
+
 def test_a_wrong_entry_put_right_is_taken(sheet):
     type_in(sheet, VALUE.format("east"), "8.5.1")
     field = type_in(sheet, VALUE.format("east"), "8.25")
@@ -231,6 +247,28 @@ def test_an_arrangement_chosen_that_cannot_is_put_back(sheet):
     sheet.locator("#note").get_by_role("button", name="take two-stage").click()
     settled(sheet)
     assert sheet.locator('[aria-label="Arrangement"]').input_value() == "two-stage"
+    # chosen, but with the legs of another: the choice stays, what the legs are stands beside it
+    open_design(sheet, drawn("out = - 0.5 a - 0.25 b", "inverting"))
+    sheet.locator('[aria-label="Arrangement"]').select_option("mixed-sign")
+    settled(sheet)
+    assert sheet.locator('[aria-label="Arrangement"]').input_value() == "mixed-sign"
+    assert sheet.locator("#plate .made").text_content() == "as inverting"
+    sheet.keyboard.press("Control+z")
+    settled(sheet)
+    assert sheet.locator('[aria-label="Arrangement"]').input_value() == "inverting"
+
+
+# Pairs of texts of the drawing, or of the curves, whose letters lie on each other.
+OVERLAPS = """() => { const hits = []
+  for (const root of ['.stage', '.curves']) { const boxes = []
+    const add = (text, b) => boxes.push({text, left: b.left + 1, right: b.right - 1, top: b.top + b.height * .24, bottom: b.bottom - b.height * .2})
+    for (const t of document.querySelectorAll(root + ' text')) if (t.textContent.trim()) add(t.textContent, t.getBoundingClientRect())
+    for (const i of document.querySelectorAll(root + ' .rv')) if (i.value) {
+      const b = i.getBoundingClientRect(), wide = Math.min(b.width, i.value.length * 8), left = i.classList.contains('cap') ? b.left : b.left + (b.width - wide) / 2
+      add(i.value, {left, right: left + wide, top: b.top, bottom: b.bottom, height: b.height}) }
+    boxes.forEach((p, k) => boxes.slice(k + 1).forEach(q => {
+      if (p.left < q.right && p.right > q.left && p.top < q.bottom && p.bottom > q.top) hits.push(p.text + ' × ' + q.text) })) }
+  return hits }"""
 
 
 def drawn(text, arrangement, title="A test stage"):
@@ -246,6 +284,9 @@ def drawn(text, arrangement, title="A test stage"):
         ("out = 0.5 a + 0.25 b + 0.5 V", "non-inverting", 1),
         ("out = 2.5 a + 2 b - 0.5 c", "mixed-sign", 1),
         ("out = 0.5 a + 0.25 b - 0.3 c + 0.5 V", "two-stage", 2),
+        ("out = 1.5 a + 1.25 b - 0.3 c - 0.1 d - 0.1 e", "two-stage", 2),
+        ("out = 0.5 a + 0.25 b - 0.3 c - 0.2 d + 0.5 V", "mixed-sign", 1),
+        ("out = 1.5 a + 1.25 b", "inverting-pair", 2),
     ],
 )
 @pytest.mark.parametrize("symbols", ["IEC 60617", "IEEE 315"])
@@ -263,6 +304,10 @@ def test_each_arrangement_is_drawn_with_all_its_resistors(sheet, text, arrangeme
     bodies = sheet.locator("#drawing rect.body").count()
     assert bodies == (len(fitted) + 1 if symbols == "IEC 60617" else 0)  # and the load
     assert output(sheet) == pytest.approx(operating_point(design).output, abs=6e-4)
+    # drawing and plate fit, whatever the arrangement, and no two texts lie on each other
+    assert sheet.locator(".plate.flat").count() == 0
+    assert sheet.evaluate("document.documentElement.scrollHeight") <= 720
+    assert sheet.evaluate(OVERLAPS) == []
 
 
 @pytest.mark.parametrize("count", [1, 16])
@@ -378,6 +423,7 @@ def test_a_new_sum_is_read_as_it_is_written_and_drawn(sheet):
     wait(sheet, "location.hash === '#curves'")
     settled(sheet)
     assert sheet.locator(".sig").count() == 4
+    assert sheet.locator("#invented").text_content() == ""
     assert number(strip(sheet, "drift").locator(".made").text_content()) == pytest.approx(-0.1, rel=0.02)
     sheet.keyboard.press("Control+z")
     settled(sheet)

@@ -2,11 +2,11 @@
 
 import {el, setAttr, setClass, setText} from '../dom.js'
 import {THIN, engineering, fixed, margin, signed} from '../format.js'
-import {Figure, saveText, table, takers, words} from './figures.js'
+import {Figure, column, saveText, table, takers, words} from './figures.js'
 
 export const styles = true
 
-const mV = (x, decimals = 2) => fixed(x * 1e3, decimals)
+const volts = (x, figures = 3) => engineering(x, 'V', figures)
 const percent = (x, decimals = 1) => `${fixed(x * 100, decimals)}${THIN}%`
 const grade = x => `±${+(x * 100).toPrecision(3)}${THIN}%`.replace('-', '−')
 const WHERE = {present: 'where the signals are', highest: 'at the highest corner', lowest: 'at the lowest corner'}
@@ -43,14 +43,16 @@ export function mount(node, sheet) {
     const bars = []
     return {node: el('div', {}, t.node, el('p', {}, csv)), update(s) {
       const most = s.terms[0]?.[4] || 1
+      const v = column(s.terms.flatMap(r => [r[2], r[3], r[5]]), 'V', {least: 2})
+      t.heads(['term', `limit, ${v.unit}`, `u, ${v.unit}`, 'share of variance'])
       t.set(s.terms.map((r, i) => {
         const known = r[1] === 'rounding' || r[1] === 'source resistance' || r[1] === 'finite gain'
-        if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${signed(r[5] * 1e3, 2)}${THIN}mV`]
+        if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${r[5] > 0 ? '+' : ''}${v.say(r[5])}`]
         bars[i] ??= (() => { const bar = el('div', {class: 'bar'}), text = el('span', {class: 'n'}); return {bar, text, node: el('div', {class: 'share'}, bar, text)} })()
         const width = `${(r[4] / most * 58).toFixed(1)}%`
         if (bars[i].bar.style.width !== width) bars[i].bar.style.width = width
         setText(bars[i].text, percent(r[4]))
-        return [r[0], [mV(r[2]), 'r'], [mV(r[3]), 'r'], [bars[i].node, '']]
+        return [r[0], [v.write(r[2]), 'r'], [v.write(r[3]), 'r'], [bars[i].node, '']]
       }))
     }}
   }
@@ -58,27 +60,33 @@ export function mount(node, sheet) {
   const tighten = () => {
     const told = el('p', {class: 'note'}), rest = el('p', {class: 'soft'})
     const t = table([{text: 'resistor'}, {text: 'fit one of', class: 'r'}, {text: 'coefficient', class: 'r'}], 'Resistors to tighten')
-    const trims = table([{text: 'after'}, {text: '|shift| + 95 %, mV', class: 'r'}], 'What remains')
+    const trims = table([{text: 'after'}, {text: '|shift| + 95 %', class: 'r'}], 'What remains')
     const all = el('p', {}, 'All resistors at ', ...[[0.01, '1'], [0.005, '0.5'], [0.001, '0.1'], [0.0001, '0.01']].flatMap(([v, text]) => [
       el('button', {class: 'act', text: `${text}${THIN}%`, onclick: () => sheet.fold({do: 'tolerance', tolerance: v})}), ' ']))
-    const slopes = table([{text: 'sensitivity'}, {text: 'for', class: 'r'}, {text: 'output moves, mV', class: 'r'}], 'Sensitivities')
-    return {node: el('div', {}, told, t.node, rest, all, el('h3', {text: 'Sensitivities'}), slopes.node, el('h3', {text: 'What remains'}), trims.node,
-      el('p', {class: 'soft', text: 'Trimmed at nominal temperature and supply, offset with the signals at 0 V, gain at the farthest corner. Software corrects every weight.'})),
+    const slopes = table([{text: 'quantity'}, {text: 'for', class: 'r'}, {text: 'output moves', class: 'r'}], 'Sensitivities')
+    const places = el('p', {class: 'soft'})
+    return {node: el('div', {}, told, t.node, rest, all, el('h3', {text: 'What remains after a trim'}), trims.node, places,
+      el('h3', {text: 'Sensitivities'}), slopes.node),
     update(s) {
       const m = s.more, plan = m.plan
       t.node.hidden = !plan?.changes?.length
       if (plan) {
-        const worst = Math.max(...Object.values(plan.errors))
-        setText(told, !plan.possible ? `Better resistors alone do not reach ±${mV(plan.wanted)}${THIN}mV: ${mV(worst)} would be left. In the way: ${plan.obstacle}.`
-          : plan.changes.length ? `${plan.changes.length === 1 ? 'One better resistor is' : `${plan.changes.length} better resistors are`} enough for ±${mV(plan.wanted)}${THIN}mV: ${mV(worst)} would be left.`
-            : `±${mV(plan.wanted)}${THIN}mV is met as it is: ${mV(worst)} at the worst point.`)
+        const [at, worst] = Object.entries(plan.errors).reduce((a, b) => b[1] > a[1] ? b : a)
+        const left = `${volts(worst)} ${WHERE[at]}`
+        setText(told, !plan.possible ? `Better resistors alone do not reach ±${volts(plan.wanted)}: ${left} would be left. In the way: ${plan.obstacle}.`
+          : plan.changes.length ? `${plan.changes.length === 1 ? 'One better resistor is' : `${plan.changes.length} better resistors are`} enough for ±${volts(plan.wanted)}: ${left} would be left.`
+            : `±${volts(plan.wanted)} is met as it is: |shift| + 95${THIN}% is ${left}.`)
         t.set(plan.changes.map(c => [c.part, grade(c.tolerance), `${fixed(c.temperature_coefficient * 1e6, 0)}${THIN}ppm/K`]).map(r => [r[0], [r[1], 'r'], [r[2], 'r']]))
         setText(rest, plan.possible && plan.changes.length ? `Costs about ${fixed(plan.extra_cost, 1)} more 1${THIN}% resistors: representative prices, ask your supplier.` : '')
       } else { setText(told, m.problem); setText(rest, '') }
-      slopes.set(m.slopes.map(q => [q.part, [q.per, 'r'], [signed(q.volts * 1e3, 3), 'r']]))
-      const trim = m.trim
-      trims.set([['nothing', trim.untrimmed], ['an offset trim', trim.offset], ['offset and gain', trim.offset_and_gain], ['software correction', trim.software]]
-        .map(([name, v]) => [name, [mV(v), s.accuracy !== null && v > s.accuracy ? 'r bad' : 'r']]))
+      const d = column(m.slopes.map(q => q.volts), 'V', {plus: true})
+      slopes.heads(['quantity', 'for', `output moves, ${d.unit}`])
+      slopes.set(m.slopes.map(q => [q.part, [q.per, 'r'], [d.write(q.volts), 'r']]))
+      const trim = m.trim, v = column(Object.values(trim), 'V')
+      trims.heads(['after', `|shift| + 95${THIN}%, ${v.unit}`])
+      trims.set([['no trim', trim.untrimmed], ['an offset trim', trim.offset], ['offset and gain', trim.offset_and_gain], ['software correction', trim.software]]
+        .map(([name, x]) => [name, [v.write(x), s.accuracy !== null && x > s.accuracy ? 'r bad' : 'r']]))
+      setText(places, `The worst over both corners, either with one signal at its other end, and where the signals are: after a trim the corners alone say too little, and without one it can be more than at the three points above. Trimmed at nominal temperature and supply, offset with the signals at 0${THIN}V, gain at the farthest corner; software corrects every weight.`)
     }}
   }
 
@@ -93,26 +101,47 @@ export function mount(node, sheet) {
     const take = name => { if (!buttons.has(name)) buttons.set(name, el('button', {class: 'act', text: 'take', 'aria-label': `take ${name}`, onclick: () => sheet.fold({do: 'take', name})})); return buttons.get(name) }
     const names = new Map()
     const look = name => { if (!names.has(name)) names.set(name, el('button', {class: 'act', text: name, 'aria-label': `figures of ${name} and their sources`, onclick: () => sheet.fold({do: 'entry', name})})); return names.get(name) }
+    // columns that tell the op amps apart; what is clear or alike with every one is said in a sentence
+    let every = false, rows = null
+    const wide = el('button', {class: 'act', 'aria-pressed': 'false', text: 'all checks', onclick: () => { every = !every; setAttr(wide, 'aria-pressed', String(every)); drawRows() }})
+    const alike = el('p', {class: 'soft'}), scroll = el('div', {class: 'sideways', tabindex: 0, role: 'region', 'aria-label': 'Op amps against the checks'}, t.node)
+    const MARK = {tight: '◦', short: '✕'}
+    function drawRows() {
+      const m = rows, seen = m.columns.map(([key, title]) => {
+        const all = m.rows.map(r => r.checks[key] ?? null), margins = all.map(c => c?.[2] ?? null).filter(x => x !== null)
+        const statuses = new Set(all.map(c => c?.[1] ?? ''))
+        const spread = margins.length ? Math.max(...margins) - Math.min(...margins) : 0, size = Math.max(0, ...margins.map(Math.abs))
+        const unit = all.find(Boolean)?.[3] ?? ''
+        return {key, title, clear: statuses.size === 1 && statuses.has('clear'), same: statuses.size === 1 && spread <= .03 * size, status: [...statuses][0],
+          margin: margins[0] ?? null, unit, col: column(margins, unit, {plus: true, most: 3})}
+      })
+      const shown = every || m.rows.length < 2 ? seen : seen.filter(c => !c.clear && !c.same)
+      const clear = seen.filter(c => c.clear).map(c => c.title.toLowerCase()), same = seen.filter(c => c.same && !c.clear)
+      setText(alike, every || m.rows.length < 2 ? '' : [clear.length ? `Clear with every one: ${clear.join(', ')}.` : '',
+        same.length ? `The same with every one: ${same.map(c => `${c.title.toLowerCase()} ${c.margin === null ? c.status : `${margin(c.margin, c.unit)} (${c.status})`}`).join(', ')}.` : ''].filter(Boolean).join(' '))
+      t.heads(['op amp', '', 'short ✕', 'tight ◦', ...shown.map(c => c.col.unit ? `${c.title}, ${c.col.unit}` : c.title)])
+      t.set(m.rows.map(r => [
+        [look(r.name), r.name === m.now ? 'now' : ''], [take(r.name), ''], [String(r.short), r.short ? 'r short' : 'r'], [String(r.tight), r.tight ? 'r tight' : 'r'],
+        ...shown.map(({key, col}) => { const c = r.checks[key]; return c ? [c[1] === 'unknown' ? '–' : c[2] === null ? c[1] : `${MARK[c[1]] ? `${MARK[c[1]]} ` : ''}${col.write(c[2])}`, `r ${c[1]}`] : ['', ''] }),
+      ]))
+      m.rows.forEach((r, i) => setAttr(t.body.rows[i], 'title', [r.note, m.sources[r.name]].filter(Boolean).join('. ')))
+    }
     const head = el('h3'), about = el('p', {class: 'soft'}), figures = table([{text: 'figure'}, {text: 'value', class: 'r'}, {text: 'source'}], 'Figures and their sources')
     const back = el('button', {class: 'act', text: 'Back to the table', onclick: () => sheet.fold({do: 'entry', name: head.textContent})})
     const card = el('div', {}, el('p', {class: 'heads'}, head, about, back), figures.node)
-    return {wide: true, node: el('div', {class: 'op-amps'}, el('p', {class: 'heads'}, told, el('label', {class: 'act'}, 'Your own list, CSV', file),
-      el('button', {class: 'act', text: 'CSV', 'aria-label': 'This table as CSV', onclick: () => sheet.fold({do: 'csv', what: 'op amps'})})), card, t.node,
+    return {wide: true, node: el('div', {class: 'op-amps'}, el('p', {class: 'heads'}, told, wide, el('label', {class: 'act'}, 'Your own list, CSV', file),
+      el('button', {class: 'act', text: 'CSV', 'aria-label': 'This table as CSV', onclick: () => sheet.fold({do: 'csv', what: 'op amps'})})), card, alike, scroll,
       el('p', {class: 'soft', text: 'Classes are invented and representative; types are from published or remembered figures. Check your data sheet before you build.'})),
     update(s) {
       const m = s.more
       setText(told, m.tried < m.of ? `${m.tried} of ${m.of} tried` : `${m.of} tried in this stage; the fewest that fall short first`)
-      t.heads(['op amp', '', 'short', 'tight', ...m.columns.map(c => c[1])])
-      t.set(m.rows.map(r => [
-        [look(r.name), r.name === m.now ? 'now' : ''], [take(r.name), ''], [String(r.short), r.short ? 'r short' : 'r'], [String(r.tight), r.tight ? 'r tight' : 'r'],
-        ...m.columns.map(([key]) => { const c = r.checks[key]; return c ? [c[1] === 'unknown' ? '–' : c[2] === null ? c[1] : `${margin(c[2], c[3])}${c[1] === 'clear' ? '' : ` ${c[1]}`}`, `r ${c[1]}`] : ['', ''] }),
-      ]))
+      rows = m
+      drawRows()
       card.hidden = !m.entry
       if (m.entry) {
         setText(head, m.entry.name); setText(about, m.entry.note)
         figures.set(m.entry.rows.map(([name, value, unit, source]) => [name, [value === null ? 'none' : ['°C', 'K/W', 'V/V', ''].includes(unit) ? `${+value.toPrecision(4)}${THIN}${unit}`.replace('-', '−') : engineering(value, unit), 'r'], source]))
       }
-      m.rows.forEach((r, i) => setAttr(t.body.rows[i], 'title', [r.note, m.sources[r.name]].filter(Boolean).join('. ')))
     }}
   }
 
@@ -124,9 +153,11 @@ export function mount(node, sheet) {
       el('p', {class: 'soft', text: 'Estimated with silicon junctions of 0.6 V at the inputs; 10 mA is the usual most into an input. The data sheet in hand decides.'})),
     update(s) {
       const m = s.more, rows = m.heat.resistors.map(r => [r.name, r.dissipation_most, r.rating]).sort((a, b) => b[1] - a[1])
-      const amps = m.heat.op_amps.map(a => [`op amp, ${a.name}`, [engineering(a.dissipation_most, 'W'), 'r'],
+      const w = column([...m.heat.op_amps.map(a => a.dissipation_most), ...rows.slice(0, 8).map(r => r[1])], 'W')
+      hot.heads(['part', `most, ${w.unit}`, 'of its rating'])
+      const amps = m.heat.op_amps.map(a => [`op amp, ${a.name}`, [w.write(a.dissipation_most), 'r'],
         a.junction === null ? ['junction: thermal resistance not given', 'r soft'] : [`junction ${fixed(a.junction, 0)}${THIN}°C`, m.junction_most !== null && a.junction > m.junction_most ? 'r bad' : 'r']])
-      hot.set([...amps, ...rows.slice(0, 8).map(([n, w, most]) => [n, [engineering(w, 'W'), 'r'], [most > 0 ? percent(w / most) : 'none left', w > most ? 'r bad' : w > most / 2 ? 'r tight' : 'r']])])
+      hot.set([...amps, ...rows.slice(0, 8).map(([n, p, most]) => [n, [w.write(p), 'r'], [most > 0 ? percent(p / most) : 'none left', p > most ? 'r bad' : p > most / 2 ? 'r tight' : 'r']])])
       const burns = rows.filter(r => r[1] > r[2] / 2)
       setText(caution, burns.length ? `Caution, burns: ${burns.map(r => r[0]).join(', ')} ${burns.length > 1 ? 'pass' : 'passes'} half the derated rating.` : '')
       const mA = x => engineering(x, 'A')
@@ -172,12 +203,13 @@ export function mount(node, sheet) {
     const share = Math.round(100 * s.boards.draws / s.boards.wanted)
     progress.firstChild.style.width = `${Math.min(100, share)}%`
     setAttr(progress, 'aria-valuenow', Math.min(100, share))
-    setText(ran, `95${THIN}% of them from ${signed(s.boards.low * 1e3, 2)} to ${signed(s.boards.high * 1e3, 2)}${THIN}mV${s.holds ? '' : `; the first-order ±${mV(s.budget.expanded)} is not good to two figures here`}`)
+    const ends = column([s.boards.low, s.boards.high], 'V', {plus: true})
+    setText(ran, `95${THIN}% of them from ${ends.write(s.boards.low)} to ${ends.say(s.boards.high)}${s.holds ? '' : `; the first-order ±${volts(s.budget.expanded)} is not good to two figures here`}`)
     stop.disabled = !s.running
-    setText(facts['known shift'], `${signed(s.budget.shift * 1e3, 2)}${THIN}mV`)
-    setText(facts['95 %'], `±${mV(s.budget.expanded)}${THIN}mV`)
-    setText(facts['worst case'], `${mV(s.budget.worst)}${THIN}mV`)
-    setText(facts.yield, s.boards.yield === null ? 'type an accuracy' : `${percent(s.boards.yield, 2)} in ±${mV(s.accuracy)}${THIN}mV`)
+    setText(facts['known shift'], (s.budget.shift > 0 ? '+' : '') + volts(s.budget.shift))
+    setText(facts['95 %'], `±${volts(s.budget.expanded)}`)
+    setText(facts['worst case'], volts(s.budget.worst))
+    setText(facts.yield, s.boards.yield === null ? 'type an accuracy' : `${percent(s.boards.yield, 2)} in ±${volts(s.accuracy)}`)
   }
 
   return {update, heard(reply) { if (reply?.csv !== undefined) saveText(reply.csv, reply.name) }}

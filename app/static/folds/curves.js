@@ -201,7 +201,7 @@ export function mount(node, sheet) {
     key.style.width = `${Math.round(R - L)}px`
   }
   const words = q => q.out ? 'cable out' : q.at === null ? (latest?.clipped === 'no' ? '' : 'clipped all through') : `clips ${q.side}${q.cell !== null ? ` in cell ${q.cell + 1}` : ''} at ${fixed(q.at, 2)}${THIN}V`
-  const end = shown => shown.clipped === 'no' && shown.clips.every(q => q.at === null) ? 'none clips within its range' : ''
+  const end = shown => shown.clipped === 'no' && shown.clips.every(q => q.at === null) && !shown.clips.every(q => q.out) ? 'none clips within its range' : ''
 
   // what no label may lie on: ruled lines, the beams themselves, labels that stand already
   function placer(lines, k) {

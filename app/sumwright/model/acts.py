@@ -313,6 +313,9 @@ def read_sum(bench: Workbench, message: dict) -> dict:
             "signals": [[s.name, s.weight, s.low, s.high] for s in wanted.signals],
             "offset": wanted.offset,
             "able": list(edits.able(design)),
+            "window": list(wanted.window),
+            "accuracy": wanted.accuracy,
+            "rails": list(wanted.rails),
         }
     }
 

@@ -17,7 +17,6 @@ from sumwright.engine.stage import (
     Target,
 )
 
-
 TITLE = "Grain hopper, four corners"
 
 

@@ -3,13 +3,14 @@
 `out = 0.14 north + 1/3 east - 0.18 tare + 500 mV` is a sum; a name of several words
 stands in quotes; a term without a number weighs 1. A list has one signal a line:
 `name weight`, or `name, weight, low, high, source resistance`; a line `offset 0.5`
-gives the offset; a lone weight gets a name.
+gives the offset; a lone weight gets a name. With either may stand what is asked of the
+output and what feeds it, a line each: `window 0 5`, `accuracy 20m`, `rails 12 -12`.
 """
 
 from __future__ import annotations
 
 import re
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 from sumwright.engine.stage import (
     Ambient,
@@ -29,6 +30,7 @@ from sumwright.quantity import parse_quantity
 
 TEXT_MOST = 10_000
 USUAL_RANGE = (0.0, 10.0)  # V, until the person says otherwise
+USUAL_RAILS = (12.0, -12.0)  # V
 _TERM = re.compile(
     r"""\s*(?P<sign>[+-])?\s*
         (?P<number>(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?(?:\s*/\s*\d+(?:\.\d*)?)?)?\s*
@@ -36,7 +38,9 @@ _TERM = re.compile(
         (?P<name>"[^"]*"|“[^”]*”|[^\W\d][\w.]*)?""",
     re.VERBOSE,
 )
+_ASKED = re.compile(r"(window|accuracy|rails)\b[\s:=,;]*(.*)", re.IGNORECASE)
 _VOLT = re.compile(r"[munµ]?V")
+_SPAN_OF = {"window": ("target", "low"), "accuracy": ("target", "accuracy"), "rails": ("supply", "high")}
 _SAME = str.maketrans({"\u2212": "-", "\u2013": "-", "\u2009": " ", "\u00a0": " ", "\u202f": " "})
 
 
@@ -45,6 +49,9 @@ class Sum(NamedTuple):
 
     signals: tuple[Signal, ...]
     offset: float  # V
+    window: tuple[float | None, float | None] = (None, None)  # V
+    accuracy: float | None = None  # V
+    rails: tuple[float, float] = USUAL_RAILS  # V
 
 
 def read_sum(text: str) -> Sum:
@@ -60,10 +67,41 @@ def read_sum(text: str) -> Sum:
     plain = text.translate(_SAME).strip()
     if not plain:
         raise InvalidDesign("There is no sum yet: write for example out = 0.5 left + 0.5 right.", "sum")
-    lines = [line.strip() for line in plain.splitlines() if line.strip()]
-    if "=" in plain or (len(lines) == 1 and _is_sum(lines[0])):
-        return _sum(plain)
-    return _list(lines)
+    lines, asked = _apart([line.strip() for line in plain.splitlines() if line.strip()])
+    plain = "\n".join(lines)
+    wanted = _sum(plain) if "=" in plain or (len(lines) == 1 and _is_sum(lines[0])) else _list(lines)
+    return wanted._replace(**asked)
+
+
+def _apart(lines: list[str]) -> tuple[list[str], dict[str, Any]]:
+    """The lines that name signals, and what the others ask: a window, an accuracy, rails."""
+    kept: list[str] = []
+    asked: dict[str, Any] = {}
+    for line in lines:
+        found = _ASKED.fullmatch(line)
+        numbers = re.split(r"\s+to\s+|\s*[,;]\s*|(?<=[\dV])\s+(?=[+\-.\d])", found[2].strip()) if found else []
+        numbers = [n for n in numbers if n]
+        word = found[1].lower() if found else ""
+        # a signal may be called so: then it has its weight, or its weight, range and source
+        if not found or len(numbers) != (1 if word == "accuracy" else 2):
+            kept.append(line)
+            continue
+        values = [in_span(*_SPAN_OF[word], parse_quantity(n, "V", word), "V") for n in numbers]
+        if word == "accuracy":
+            if values[0] <= 0:
+                raise InvalidDesign(f"accuracy is more than 0 V; it is {numbers[0]}.", "sum")
+            asked[word] = values[0]
+        elif word == "window":
+            if values[0] >= values[1]:
+                raise InvalidDesign(
+                    f"window: its bottom, {values[0]:g} V, must be below its top, {values[1]:g} V.", "sum"
+                )
+            asked[word] = (values[0], values[1])
+        else:
+            if values[0] == values[1]:
+                raise InvalidDesign(f"rails: two different voltages are wanted; both are {values[0]:g} V.", "sum")
+            asked[word] = (max(values), min(values))
+    return kept, asked
 
 
 def _is_sum(line: str) -> bool:
@@ -157,13 +195,13 @@ def _made(signals: list[Signal], offset: float) -> Sum:
 
 
 def new_design(wanted: Sum, op_amp: OpAmp, title: str = "Untitled sum") -> Design:
-    """A design for that sum in usual surroundings: 12 V rails, 10 kΩ load, E96 1 % resistors, 10 to 40 °C."""
+    """A design for that sum in usual surroundings, where it says nothing else: 12 V rails, 10 kΩ load, E96 1 % resistors, 10 to 40 °C."""
     return Design(
         title=title,
         signals=wanted.signals,
-        target=Target(offset=wanted.offset),
+        target=Target(wanted.offset, *wanted.window, wanted.accuracy),
         reference=Reference(2.5, 0.0, 0.002) if wanted.offset else None,
-        supply=Supply(12.0, -12.0, 0.05),
+        supply=Supply(*wanted.rails, 0.05),
         load=Load(1e4, 1e-10),
         ambient=Ambient(25.0, 10.0, 40.0),
         resistor=ResistorKind(),
