@@ -200,9 +200,9 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
 
 const brief = x => String(Number(x.toPrecision(4))).replace('-', '\u2212')
 
-// as many decimals as the weight has, four at least: 0.33333 stays what was asked
+// as many decimals as the weight has, four at least: 0.33333 stays what was asked, 0.060000000000000005 is 0.06
 const weightText = r => {
-  const decimals = (String(r.weight).split('.')[1] ?? '').length
+  const decimals = (String(Number(r.weight.toPrecision(12))).split('.')[1] ?? '').length
   return Math.abs(r.weight) >= 1e-4 && decimals <= 4 ? signed(r.weight, 4) : (r.weight > 0 ? '+' : '') + r.weight_text.replace('-', '\u2212')
 }
 
