@@ -117,7 +117,8 @@ def broken(design: Design, fault: str, part: str, value: float = 10.0) -> Design
             for mine, other in ((minus, plus), (plus, minus)):
                 for x in [x for x in mine if x.source == part]:
                     mine.remove(x)
-                    other.append(x)
+                    if other is not plus or c.plus_ground != 0:  # a leg to the tied node goes to ground
+                        other.append(x)
                     return replace(c, minus=tuple(minus), plus=tuple(plus))
             return c
 

@@ -32,7 +32,7 @@ FAULTY = [
     ("inverting", "legs swapped", "north, west", 1), ("inverting-pair", "feedback wrong value", "cell 2", 2),
     ("inverting-pair", "leg open", "cell 1", 1), ("inverting-pair", "leg wrong value", "reference", 3),
     ("two-stage", "leg shorted", "north", 1), ("two-stage", "feedback open", "cell 2", 1), ("two-stage", "wrong input", "south", 1),
-    ("two-stage", "legs swapped", "north, south", 1),
+    ("two-stage", "legs swapped", "north, south", 1), ("two-stage", "legs swapped", "north, cell 1", 1),
 ]  # fmt: skip
 
 
@@ -67,6 +67,20 @@ def test_the_true_fault_is_in_the_first_group(name, fault, part, value):
         assert found.estimate == pytest.approx(nominal[part] * value, rel=0.06)
     if fault == "source resistance high":
         assert found.estimate == pytest.approx(value, rel=0.06)
+
+
+def test_a_dead_output_that_is_not_a_hard_zero_is_known_all_the_same():
+    """A dead amplifier held at ground through 75 ohm passes a little of the signals on: Kirchhoff at both nodes, by hand."""
+    design = STAGES["inverting"]
+    cell, volts = design.cells[0], run_of(design)
+    legs = np.array([1 / (x.resistance + 50.0) for x in cell.minus])
+    back, pins = 1 / cell.feedback, 1 / design.op_amp.input_resistance
+    g = np.array([[legs.sum() + back + pins, -back], [-back, back + 1 / 75.0 + 1 / design.load.resistance]])
+    y = np.linalg.solve(g, np.stack([volts @ legs, np.zeros(len(volts))]))[1]
+    u = METER.standard_uncertainty(y)
+    noisy = y + np.random.default_rng(3).normal(size=len(y)) * u
+    first = diagnose(design, Readings(design.signal_names, volts, noisy, u), foresee=False).suspects[0]
+    assert (first.fault, first.part, first.estimate) == ("op amp dead", "cell 1", None)
 
 
 def test_probabilities_add_up_and_are_in_order():

@@ -36,6 +36,7 @@ LIMIT_FLOOR = 0.005  # V
 FLOOR_VOLTS = 1e-4
 FLOOR_SHARE = 3e-5
 TORN = 0.3  # below this chance of a reading between the limits the output is one or the other
+BEYOND = 100.0  # V: a limit that far off is none
 NORMAL = np.nan  # `stuck` of an amplifier that works
 
 
@@ -58,6 +59,7 @@ class Boards:
     latch: np.ndarray  # (B,) with inputs exchanged: where the output came from, -1, 0 or +1
     stuck: np.ndarray  # (B, K) V, NORMAL where the amplifier works
     stuck_spread: np.ndarray  # (B, K) V
+    stuck_ohm: np.ndarray  # (B, K) in series with what a stuck output holds
     undriven: np.ndarray  # (B, K) bool: the output pin is connected to nothing inside
     drift: np.ndarray  # (B, K) A pushed into the + node, to say which way a floating node goes
     nudge: np.ndarray  # (B, K) V of offset beyond the ordinary, to say which way a comparator tips
@@ -151,6 +153,7 @@ class Bench:
             stuck=np.full((1, k), NORMAL),
             undriven=np.zeros((1, k), dtype=bool),
             stuck_spread=np.zeros((1, k)),
+            stuck_ohm=np.zeros((1, k)),
             drift=np.zeros((1, k)),
             nudge=np.zeros((1, k)),
             unrest=np.ones(1),
@@ -251,6 +254,10 @@ class Bench:
             for j in range(k):
                 drive += into[..., n + 1 + j, None] * outs[j][:, :, None, :]
             y_f = 1.0 / np.maximum(boards.feedback_ohm[:, None, k] * (1.0 + self.d_feedback[None, :p, k]), LEAST_OHM)
+            # a leg that was exchanged may bring the cell its own output: one more feedback
+            own = into[:, :, MINUS, n + 1 + k]
+            total[..., MINUS] -= own
+            y_f = y_f + own
             i_m, i_p = drive[:, :, MINUS], drive[:, :, PLUS]
             unrest = boards.unrest[:, None]
             i_m = i_m - (unrest * (self.bias[:p, k] - 0.5 * self.difference[:p, k]))[..., None]
@@ -272,7 +279,7 @@ class Bench:
             y_out = np.zeros((b, 1))
             if k == k_all - 1:
                 y_out = y_out + (1.0 / np.maximum(boards.load_ohm, LEAST_OHM))[:, None]
-            later = boards.leg_source == n + 1 + k
+            later = (boards.leg_source == n + 1 + k) & (boards.leg_cell > k)
             y_out = y_out + np.where(later[:, None, :], g_leg, 0.0).sum(axis=-1)
             y_t = y_out + y_f - y_f * a1  # current out of the amplifier: y_t o - y_f a0
             u = (gain * d0 + (r_o * y_f)[..., None] * a0) / (1.0 + r_o * y_t - gain * d1)[..., None]
@@ -287,9 +294,14 @@ class Bench:
                 u[flipped] = gain * (d0[flipped] + d1[flipped][..., None] * start)
             held = ~np.isnan(boards.stuck[:, k])
             if held.any():
-                u[held] = (
-                    boards.stuck[held, k, None] + boards.stuck_spread[held, k, None] * self.d_stuck[None, :p, k]
-                )[..., None]
+                at = boards.stuck[held, k, None] + boards.stuck_spread[held, k, None] * self.d_stuck[None, :p, k]
+                y_s = 1.0 / np.maximum(boards.stuck_ohm[held, k, None], LEAST_OHM)
+                u[held] = ((y_s * at)[..., None] + y_f[held, :, None] * a0[held]) / (y_s + y_t[held])[..., None]
+                # no swing limit holds an output that is not driven by its inputs
+                high[held], low[held] = (
+                    np.maximum(u[held] + BEYOND, high[held]),
+                    np.minimum(u[held] - BEYOND, low[held]),
+                )
             unclipped = u
             if k < k_all - 1:
                 outs.append(np.clip(u, low, high))

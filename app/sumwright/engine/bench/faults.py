@@ -35,6 +35,7 @@ class Values(NamedTuple):
     spans: tuple[tuple[float, float, float], ...]  # from, to, share
     likely: tuple[float, ...] = ()
     likely_share: float = 0.0
+    told: bool = True  # whether the estimate says anything to a person
 
 
 class Way(NamedTuple):
@@ -176,14 +177,17 @@ def _legs_swapped(bench):
     for a, first in enumerate(order):
         for second in order[a + 1 :]:
             p, q = bench.legs[first], bench.legs[second]
-            if p.source == q.source or _feeds(bench, p, q) or _feeds(bench, q, p):
+            if p.source == q.source:
                 continue
             same_node = (p.cell, p.node) == (q.cell, q.node)
             ways = []
             if p.resistance != q.resistance:
                 ways.append(_both(_set("leg_ohm", (first,), q.resistance), _set("leg_ohm", (second,), p.resistance)))
             src = bench.healthy.leg_source[0]
-            if not same_node or (p.resistance != q.resistance and _series(bench, first) != _series(bench, second)):
+            back = _feeds(bench, p, q) or _feeds(bench, q, p)
+            if not back and (
+                not same_node or (p.resistance != q.resistance and _series(bench, first) != _series(bench, second))
+            ):
                 ways.append(_both(_set("leg_source", (first,), src[second]), _set("leg_source", (second,), src[first])))
             if ways:
                 yield Place(f"{p.source}, {q.source}", tuple(Way(w, 1 / len(ways)) for w in ways))
@@ -195,8 +199,11 @@ def _series(bench, i):
 
 
 def _feeds(bench, p, q):
-    """Whether exchanging would send an output back into its own cell or an earlier one."""
-    return p.source.startswith("cell ") and p.source not in bench.names and int(p.source[5:]) - 1 >= q.cell
+    """Whether exchanging would send an output into an earlier cell, or its own where that is no feedback."""
+    if not p.source.startswith("cell ") or p.source in bench.names:
+        return False
+    cell = int(p.source[5:]) - 1
+    return cell > q.cell or (cell == q.cell and q.node != MINUS)
 
 
 def _feedback_open(bench):
@@ -246,20 +253,22 @@ def _inputs_swapped(bench):
 
 
 def _op_amp_dead(bench):
-    """Stuck firmly or loosely where dead outputs are found, or not driven at all."""
+    """Stuck firmly, loosely or through some resistance where dead outputs are found, or not driven at all."""
     supply, amp = bench.design.supply, bench.design.op_amp
     middle = 0.5 * (supply.high + supply.low)
     rest = [(0.0, 0.001, 2), (0.0, 0.2, 1)]
     if middle:
         rest += [(middle, 0.001, 1), (middle, 0.2, 1)]
     for rail, dropout in ((supply.high, amp.dropout_high), (supply.low, -amp.dropout_low)):
-        rest += [(rail, 0.02, 0.5), (rail - dropout, 0.3, 1)]
+        rest += [(rail, np.hypot(0.02, supply.tolerance * rail / np.sqrt(3)), 0.5), (rail - dropout, 0.3, 1)]
+    weak = Values(((5.0, 5e3, 1.0),), (amp.output_resistance,) if amp.output_resistance > 0 else (), 0.3, told=False)
     for k, part in _cells(bench):
         ways = [
             Way(_both(_set("stuck", (k,), volts), _set("stuck_spread", (k,), spread)), share)
             for volts, spread, share in rest
         ]
-        yield Place(part, (*ways, Way(_set("undriven", (k,), True), 1.5)))
+        behind = Way(_both(_set("stuck", (k,), 0.0), _set("stuck_ohm", (k,))), 1.0, weak)
+        yield Place(part, (*ways, behind, Way(_set("undriven", (k,), True), 1.5)))
 
 
 def _reference_missing(bench):
@@ -284,21 +293,22 @@ def _reference_wrong(bench):
 
 
 def _rail_missing(bench):
-    """The op amp lives on the other rail and cannot pass 0 V; how close it comes varies."""
+    """The op amp lives on the other rail and cannot pass 0 V; how close it comes varies. Without another rail it is dead."""
     amp, supply = bench.design.op_amp, bench.design.supply
-    for part, at, field, volts, dropout in (
-        ("high", 0, "rail_high", supply.high, amp.dropout_high),
-        ("low", 1, "rail_low", supply.low, -amp.dropout_low),
+    for part, at, field, volts, other, dropout in (
+        ("high", 0, "rail_high", supply.high, supply.low, amp.dropout_high),
+        ("low", 1, "rail_low", supply.low, supply.high, -amp.dropout_low),
     ):
-        if volts != 0:
-            gone = _set(field, (), 0.0)
-            yield Place(
-                part,
-                (
-                    Way(gone, 0.5),
-                    Way(_both(_set(field, (), dropout), _set("rail_spread", (at,), 0.4)), 0.5),
-                ),
-            )
+        if not volts:
+            continue
+        gone = _set(field, (), 0.0)
+        ways = [Way(gone, 0.5), Way(_both(_set(field, (), dropout), _set("rail_spread", (at,), 0.4)), 0.5)]
+        if not other:
+            every = slice(None)
+            for spread, share in ((0.001, 0.3), (max(abs(dropout), 0.05), 0.2), (0.4, 0.1)):
+                ways.append(Way(_both(_set("stuck", (every,), 0.0), _set("stuck_spread", (every,), spread)), share))
+            ways.append(Way(_set("undriven", (every,), True), 0.3))
+        yield Place(part, tuple(ways))
 
 
 def _output_overloaded(bench):

@@ -300,8 +300,9 @@ class Diagnosis:
 
     def estimate(self, case: int) -> float | None:
         """The likeliest value [ohm] of the quantity the fault leaves unknown, or None."""
-        value = self.evidence.trials[self.best_trial[case]].value
-        return None if np.isnan(value) or not len(self.readings) else float(value)
+        best = self.evidence.trials[self.best_trial[case]]
+        values = self.cases[case].ways[best.way][0].values
+        return None if values is None or not values.told or not len(self.readings) else float(best.value)
 
     def groups(self) -> np.ndarray:
         """(cases,) group numbers, 1 for the group of the likeliest suspect.
@@ -334,8 +335,7 @@ class Diagnosis:
         return group
 
     def _valued(self):
-        values = np.array([self.evidence.trials[t].value for t in self.best_trial])
-        return ~np.isnan(values)
+        return np.array([self.estimate(c) is not None for c in range(len(self.cases))])
 
     def fits(self) -> np.ndarray:
         """(cases,) whether each at its best may well give these readings (chi-squared, 99 %).
@@ -360,9 +360,8 @@ class Diagnosis:
 
     def estimate_uncertainty(self, case: int) -> float | None:
         """Standard uncertainty [ohm] of the estimate, from the posterior of its logarithm; None without one."""
-        at = self.best_trial[case]
-        best = self.evidence.trials[at]
-        if np.isnan(best.value) or not len(self.readings):
+        best = self.evidence.trials[self.best_trial[case]]
+        if self.estimate(case) is None:
             return None
         e = self.evidence
         mine = [i for i, t in enumerate(e.trials) if t.case == case and t.way == best.way]
