@@ -13,6 +13,8 @@ import importlib
 import importlib.util
 import logging
 from collections.abc import Callable
+from contextlib import nullcontext
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -38,6 +40,19 @@ ACTS_MOST = 64  # in one message
 FILE_NAME_MOST = 80  # characters of a file's name in a sentence
 LOOK_AROUND = 4000  # ms between looks at what others did to the sheet
 _TEMPLATE = Path(__file__).parent / "views" / "sheet.html"
+
+
+class _Paper(pn.Template):
+    """The document's template. Panel spells out the whole page anew for each panel that is added; a word will do."""
+
+    def __repr__(self, *_: Any) -> str:
+        return "the sheet"
+
+
+@lru_cache(maxsize=1)
+def _paper() -> Any:
+    """The template read and compiled, once a process."""
+    return _Paper(_TEMPLATE.read_text(encoding="utf-8")).template
 
 
 def fold_classes() -> dict[str, type[Fold]]:
@@ -257,7 +272,7 @@ class Page:
 
     def template(self) -> pn.Template:
         """The document, with the first frame in it, so that the sheet is drawn before the session answers."""
-        page = pn.Template(_TEMPLATE.read_text(encoding="utf-8"))
+        page = _Paper(_paper())
         page.add_panel("wire", self.wire)
         for name, row in self.slots.items():
             page.add_panel(name, row)
@@ -284,7 +299,9 @@ class Page:
             pn.state.on_session_destroyed(lambda context: self.close())
             if self.sitting is not None:
                 self._doc.add_periodic_callback(self.sitting.look_around, LOOK_AROUND)
-        return page.servable(title=f"{self.workbench.title} · Sumwright")
+        # all roots at once: each by itself would have the whole document's models gathered anew
+        with self._doc.models.freeze() if self._doc is not None else nullcontext():
+            return page.servable(title=f"{self.workbench.title} · Sumwright")
 
     def close(self) -> None:
         """The session is over: stop its jobs and break what would keep it in memory."""
