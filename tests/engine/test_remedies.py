@@ -12,6 +12,7 @@ from sumwright.engine.budget import error_budgets
 from sumwright.engine.catalogue import catalogue
 from sumwright.engine.compensation import (
     crosstalk,
+    cures,
     feedback_capacitor,
     isolated_margin,
     isolating_resistor,
@@ -141,6 +142,21 @@ def test_the_isolating_resistor_is_that_of_python_control():
     assert crossover == pytest.approx(w_c / 2 / math.pi, rel=1e-6)
     assert cure.gain_loss == pytest.approx(cure.value / (cure.value + 2e3))
     assert isolating_resistor(replace(design, load=Load(2e3)), 45.0) is None
+
+
+def test_where_no_part_alone_is_enough_two_are_named_and_keep_their_promise():
+    """22 kilohm at the inverting node and 10 nF on the output: the capacitor for one, the resistor for the other."""
+    design = replace(summer(), load=Load(1e4, 1e-8))
+    cell = design.cells[0]
+    large = replace(cell, minus=tuple(replace(leg, resistance=leg.resistance * 3) for leg in cell.minus), feedback=3e4)
+    design = replace(design, cells=(large,))
+    assert isolating_resistor(design, 45.0) is None and feedback_capacitor(design, 0, 45.0) is None
+    *_, found = cures(design)
+    both = found[-1]
+    fitted = with_capacitor(design, 0, both.value)
+    assert isolated_margin(fitted, both.resistor)[0] == pytest.approx(both.phase_margin) and both.phase_margin >= 45
+    advice = next(c.advice for c in Analysis(design).checks if c.key == "phase_margin")
+    assert "across the feedback" in advice and "between the output and its" in advice
 
 
 def test_a_cable_is_one_more_pole_of_its_source():

@@ -1,7 +1,7 @@
 // Budget: error terms with their share, the boards as a histogram in the allowed band, and what can be done about it.
 
 import {el, setAttr, setClass, setText} from '../dom.js'
-import {THIN, engineering, fixed, margin, signed} from '../format.js'
+import {THIN, engineering, fixed, margin} from '../format.js'
 import {Figure, column, saveText, table, takers, words} from './figures.js'
 
 export const styles = true
@@ -43,8 +43,8 @@ export function mount(node, sheet) {
     const bars = []
     return {node: el('div', {}, t.node, el('p', {}, csv)), update(s) {
       const most = s.terms[0]?.[4] || 1
-      const v = column(s.terms.flatMap(r => [r[2], r[3], r[5]]), 'V', {least: 2})
-      t.heads(['term', `limit, ${v.unit}`, `u, ${v.unit}`, 'share of variance'])
+      const v = column(s.terms.flatMap(r => [r[2], r[3], r[5]]), 'V', {least: 2, most: 2})
+      t.heads(['term', v.head('limit'), v.head('u'), 'share of variance'])
       t.set(s.terms.map((r, i) => {
         const known = r[1] === 'rounding' || r[1] === 'source resistance' || r[1] === 'finite gain'
         if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${r[5] > 0 ? '+' : ''}${v.say(r[5])}`]
@@ -80,10 +80,10 @@ export function mount(node, sheet) {
         setText(rest, plan.possible && plan.changes.length ? `Costs about ${fixed(plan.extra_cost, 1)} more 1${THIN}% resistors: representative prices, ask your supplier.` : '')
       } else { setText(told, m.problem); setText(rest, '') }
       const d = column(m.slopes.map(q => q.volts), 'V', {plus: true})
-      slopes.heads(['quantity', 'for', `output moves, ${d.unit}`])
-      slopes.set(m.slopes.map(q => [q.part, [q.per, 'r'], [d.write(q.volts), 'r']]))
+      slopes.heads(['quantity', 'for', d.head('output moves')])
+      slopes.set(m.slopes.map(q => [q.part, [q.per.replace(' ', THIN), 'r'], [d.write(q.volts), 'r']]))
       const trim = m.trim, v = column(Object.values(trim), 'V')
-      trims.heads(['after', `|shift| + 95${THIN}%, ${v.unit}`])
+      trims.heads(['after', v.head(`|shift| + 95${THIN}%`)])
       trims.set([['no trim', trim.untrimmed], ['an offset trim', trim.offset], ['offset and gain', trim.offset_and_gain], ['software correction', trim.software]]
         .map(([name, x]) => [name, [v.write(x), s.accuracy !== null && x > s.accuracy ? 'r bad' : 'r']]))
       setText(places, `The worst over both corners, either with one signal at its other end, and where the signals are: after a trim the corners alone say too little, and without one it can be more than at the three points above. Trimmed at nominal temperature and supply, offset with the signals at 0${THIN}V, gain at the farthest corner; software corrects every weight.`)
@@ -105,7 +105,7 @@ export function mount(node, sheet) {
     let every = false, rows = null
     const wide = el('button', {class: 'act', 'aria-pressed': 'false', text: 'all checks', onclick: () => { every = !every; setAttr(wide, 'aria-pressed', String(every)); drawRows() }})
     const alike = el('p', {class: 'soft'}), scroll = el('div', {class: 'sideways', tabindex: 0, role: 'region', 'aria-label': 'Op amps against the checks'}, t.node)
-    const MARK = {tight: '◦', short: '✕'}
+    const MARK = {tight: '△', short: '✕'}
     function drawRows() {
       const m = rows, seen = m.columns.map(([key, title]) => {
         const all = m.rows.map(r => r.checks[key] ?? null), margins = all.map(c => c?.[2] ?? null).filter(x => x !== null)
@@ -113,13 +113,13 @@ export function mount(node, sheet) {
         const spread = margins.length ? Math.max(...margins) - Math.min(...margins) : 0, size = Math.max(0, ...margins.map(Math.abs))
         const unit = all.find(Boolean)?.[3] ?? ''
         return {key, title, clear: statuses.size === 1 && statuses.has('clear'), same: statuses.size === 1 && spread <= .03 * size, status: [...statuses][0],
-          margin: margins[0] ?? null, unit, col: column(margins, unit, {plus: true, most: 3})}
+          margin: margins[0] ?? null, unit, col: column(margins, unit, {plus: true, most: unit === '°' ? 1 : unit === '°C' ? 0 : 3})}
       })
       const shown = every || m.rows.length < 2 ? seen : seen.filter(c => !c.clear && !c.same)
       const clear = seen.filter(c => c.clear).map(c => c.title.toLowerCase()), same = seen.filter(c => c.same && !c.clear)
       setText(alike, every || m.rows.length < 2 ? '' : [clear.length ? `Clear with every one: ${clear.join(', ')}.` : '',
         same.length ? `The same with every one: ${same.map(c => `${c.title.toLowerCase()} ${c.margin === null ? c.status : `${margin(c.margin, c.unit)} (${c.status})`}`).join(', ')}.` : ''].filter(Boolean).join(' '))
-      t.heads(['op amp', '', 'short ✕', 'tight ◦', ...shown.map(c => c.col.unit ? `${c.title}, ${c.col.unit}` : c.title)])
+      t.heads(['op amp', '', 'short ✕', 'tight △', ...shown.map(c => c.col.head(c.title))])
       t.set(m.rows.map(r => [
         [look(r.name), r.name === m.now ? 'now' : ''], [take(r.name), ''], [String(r.short), r.short ? 'r short' : 'r'], [String(r.tight), r.tight ? 'r tight' : 'r'],
         ...shown.map(({key, col}) => { const c = r.checks[key]; return c ? [c[1] === 'unknown' ? '–' : c[2] === null ? c[1] : `${MARK[c[1]] ? `${MARK[c[1]]} ` : ''}${col.write(c[2])}`, `r ${c[1]}`] : ['', ''] }),
@@ -154,7 +154,7 @@ export function mount(node, sheet) {
     update(s) {
       const m = s.more, rows = m.heat.resistors.map(r => [r.name, r.dissipation_most, r.rating]).sort((a, b) => b[1] - a[1])
       const w = column([...m.heat.op_amps.map(a => a.dissipation_most), ...rows.slice(0, 8).map(r => r[1])], 'W')
-      hot.heads(['part', `most, ${w.unit}`, 'of its rating'])
+      hot.heads(['part', w.head('most'), 'of its rating'])
       const amps = m.heat.op_amps.map(a => [`op amp, ${a.name}`, [w.write(a.dissipation_most), 'r'],
         a.junction === null ? ['junction: thermal resistance not given', 'r soft'] : [`junction ${fixed(a.junction, 0)}${THIN}°C`, m.junction_most !== null && a.junction > m.junction_most ? 'r bad' : 'r']])
       hot.set([...amps, ...rows.slice(0, 8).map(([n, p, most]) => [n, [w.write(p), 'r'], [most > 0 ? percent(p / most) : 'none left', p > most ? 'r bad' : p > most / 2 ? 'r tight' : 'r']])])
@@ -199,7 +199,7 @@ export function mount(node, sheet) {
     now.update(s)
     const right = drawn.clientWidth
     if (right) figure.fit(right, Math.max(200, H - drawn.firstChild.offsetHeight - drawn.lastChild.offsetHeight - 14), {left: 12, bottom: 32, right: 12})
-    setText(caption, `Error ${WHERE[s.point]}, mV: ${s.boards.draws.toLocaleString('en').replaceAll(',', THIN)} boards${s.accuracy === null ? '' : ', allowed band'}`)
+    setText(caption, `Error ${WHERE[s.point]}, ${s.unit}: ${s.boards.draws.toLocaleString('en').replaceAll(',', THIN)} boards${s.accuracy === null ? '' : ', allowed band'}`)
     const share = Math.round(100 * s.boards.draws / s.boards.wanted)
     progress.firstChild.style.width = `${Math.min(100, share)}%`
     setAttr(progress, 'aria-valuenow', Math.min(100, share))

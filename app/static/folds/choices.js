@@ -4,6 +4,7 @@
 import {el, svg, setAttr, setText, setClass, keyed} from '../dom.js'
 import {THIN, engineering, fixed, margin, signed} from '../format.js'
 import {Blank} from '../blanks.js'
+import {column} from './figures.js'
 
 export const styles = true
 
@@ -45,7 +46,9 @@ export function mount(node, sheet) {
     prog, el('div', {class: 'line'}, where, stop, again), proof)
 
   // ---------------------------------------------------------------- right: the table and the panes
-  const head = el('tr', {}, ...['(mark)', 'arrangement', 'worst weight', 'offset', 'R', 'op amps', 'noise gain', 'noise', 'sources see', 'Rf'].map((t, i) => heading(t, i > 1 && i < 9 ? 'r' : null)))
+  const heads = ['(mark)', 'arrangement', 'weight,\u00a0%', 'offset,\u00a0%', 'R', 'op amps', 'noise gain', 'noise', 'sources see', 'Rf']
+  const head = el('tr', {}, ...heads.map((t, i) => heading(t, i > 1 && i < 9 ? 'r' : null)))
+  setAttr(head.children[2], 'title', 'worst weight error'); setAttr(head.children[3], 'title', 'error of the offset')
   const body = el('tbody')
   const table = el('div', {class: 'rows', tabindex: '-1'}, el('table', {}, el('thead', {}, head), body))
   const empty = el('p', {class: 'note'})
@@ -79,6 +82,7 @@ export function mount(node, sheet) {
     return Object.assign(item, {mark, name, merit, bad, cells, pick})
   }
 
+  let scale = {}
   function drawRow(item, row, word) {
     const outline = item.mark.firstChild
     setAttr(outline, 'd', OUTLINE[SHAPES[row.arrangement] ?? 'cross'])
@@ -86,11 +90,11 @@ export function mount(node, sheet) {
     setText(item.name, (row.arrangement === 'own' ? 'your own' : row.arrangement) + (row.paired ? ', paired' : ''))
     setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + (MERITS[row.merits[0]] ?? row.merits[0]) : ''))
     setAttr(item.merit, 'title', row.merits.join(', ') || null)
-    setText(item.bad, row.short.length ? ` short: ${row.short[0]}${row.short.length > 1 ? ` and ${row.short.length - 1} more` : ''}` : '')
-    setAttr(item.bad, 'title', row.short.join(', ') || null)
+    setText(item.bad, row.short.length ? ` ${row.short.length} short` : '')
+    setAttr(item.bad, 'title', row.short.length ? `falls short: ${row.short.join(', ')}` : null)
     const texts = [
-      percent(row.error), row.offset === null ? '–' : plus(row.offset), String(row.resistors), String(row.op_amps), fixed(row.noise_gain, 2),
-      `${small(row.noise * 1e9, 3)}${THIN}nV/√Hz`, ohms(row.sees), row.feedback,
+      scale.error.write(row.error * 100), row.offset === null ? '–' : scale.offset.write(row.offset * 100), String(row.resistors), String(row.op_amps), fixed(row.noise_gain, 2),
+      scale.noise.write(row.noise), row.sees === null ? 'all' : scale.sees.write(row.sees), row.feedback,
     ]
     texts.forEach((text, i) => setText(item.cells[i], text))
   }
@@ -101,6 +105,12 @@ export function mount(node, sheet) {
   function drawTable(shown) {
     const keys = shown.now ? ['now', ...shown.rows.map(row => row.id)] : shown.rows.map(row => row.id)
     const store = keyed(body, keys, key => key === 'now' ? present : makeRow(key))
+    const every = [...(shown.now ? [shown.now] : []), ...shown.rows]
+    scale = {
+      error: column(every.map(r => r.error * 100), '%', {low: 3, most: 5}), offset: column(every.map(r => r.offset === null ? null : r.offset * 100), '%', {plus: true, most: 4}),
+      noise: column(every.map(r => r.noise), 'V/√Hz', {most: 1}), sees: column(every.map(r => r.sees), 'Ω', {most: 1}),
+    }
+    setText(head.children[7], scale.noise.head('noise')); setText(head.children[8], scale.sees.head('sources see'))
     if (shown.now) drawRow(present, shown.now, ' now')
     shown.rows.forEach((row, i) => {
       const item = store.get(row.id)
@@ -206,15 +216,22 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- parts list
   function partsPane() {
     const of = el('span'), save = el('button', {class: 'act', text: 'Save as CSV', onclick: () => say({do: 'csv'})})
-    const lines = grid(['(designators)', 'count', 'part', 'value', 'rating', 'use', 'note'], 7, [1])
+    const lines = grid(['(designators)', 'count', 'part', 'value', 'rating', 'use'], 6, [1])
+    lines.node.classList.add('parts')
+    const notes = el('ul', {class: 'note balance'})
     const balance = el('ul', {class: 'note balance'})
     const problem = el('p', {class: 'err'})
-    const box = el('div', {}, el('div', {class: 'line'}, of, save), problem, lines.node, balance)
+    const box = el('div', {}, el('div', {class: 'line'}, of, save), problem, lines.node, notes, balance)
     return {node: box, update(open) {
       setText(problem, open.problem ?? '')
       if (open.problem) return
       setText(of, open.of === 'now' ? 'Parts of the stage on the sheet' : 'Parts of the set in preview')
-      lines.fill(open.lines.map(line => line.map(String)))
+      lines.fill(open.lines.map(line => line.slice(0, 6).map(text => String(text).replace(/ (?=%|W\b|ppm)/g, THIN))))
+      // what is said of a part stands under the table; what is said of several, once
+      const said = new Map()
+      for (const [marks, , , , , , note] of open.lines) if (note) said.set(note, [...(said.get(note) ?? []), marks])
+      const kept = keyed(notes, [...said.keys()], () => ({node: el('li')}))
+      for (const [note, marks] of said) setText(kept.get(note).node, `${marks.join(', ')}: ${note}.`)
       const store = keyed(balance, open.balance.map(b => b.cell), k => {
         const text = el('span'), fit = el('button', {class: 'act', text: 'Fit it', onclick: () => say({do: 'balance', cell: k})})
         return {node: el('li', {}, text, ' ', fit), text, fit}

@@ -65,17 +65,17 @@ export function words(label, all, chosen) {
   return {node, set(value) { all.forEach(([v], i) => { const on = String(v === value); if (buttons[i].getAttribute('aria-pressed') !== on) buttons[i].setAttribute('aria-pressed', on) }) }}
 }
 
-// How a column of numbers is written: one unit, the largest in three figures, the small ones still told apart.
-// `unit` has its prefix; `write` gives the number alone, `say` with its unit.
-export function column(values, unit, {figures = 3, plus = false, least = 0, most = 3} = {}) {
+// How a column of numbers is written: one unit and as many decimals, the largest in `figures` figures, the smallest in `low`
+// as far as `most` decimals go. `unit` has its prefix; `write` gives the number alone, `say` with its unit, `head` a heading.
+export function column(values, unit, {figures = 3, low = 2, plus = false, least = 0, most = 3} = {}) {
   const sizes = values.filter(x => Number.isFinite(x) && x !== 0).map(Math.abs)
   const large = Math.max(0, ...sizes), small = Math.min(large, ...sizes)
   const prefixed = ['%', '°', '°C', 'K', ''].includes(unit) ? unit : engineering(large, unit).split(THIN)[1]
   const power = prefixed === unit || !large ? 0 : Math.floor(Math.log10(Number((large).toPrecision(figures))) / 3) * 3
   const digit = x => Math.floor(Math.log10(x / 10 ** power))
-  const decimals = large ? Math.max(least, Math.min(most, Math.max(figures - 1 - digit(large), 1 - digit(small)))) : least
+  const decimals = large ? Math.max(least, Math.min(most, Math.max(figures - 1 - digit(large), low - 1 - digit(small)))) : least
   const write = x => x === null || x === undefined ? '–' : (plus ? signed : fixed)(x / 10 ** power, decimals)
-  return {unit: prefixed, write, say: x => x === null || x === undefined ? '–' : `${write(x)}${prefixed === '°' ? '' : THIN}${prefixed}`}
+  return {unit: prefixed, write, head: text => prefixed ? `${text},\u00a0${prefixed.replace('/', '\u2060/\u2060')}` : text, say: x => x === null || x === undefined ? '–' : `${write(x)}${prefixed === '°' ? '' : THIN}${prefixed}`}
 }
 
 // A table whose rows are kept in place; cells are texts or [text, class].

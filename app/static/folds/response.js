@@ -1,9 +1,9 @@
 // Response: gain over phase, the scope, and the numbers that they lead to.
 
 import {el, setAttr, setText} from '../dom.js'
-import {THIN, engineering, fixed, signed} from '../format.js'
+import {THIN, engineering, fixed} from '../format.js'
 import {style, swatch} from '../marks.js'
-import {Figure, saveText, table, takers, words} from './figures.js'
+import {Figure, column, saveText, table, takers, words} from './figures.js'
 
 export const styles = true
 
@@ -56,18 +56,21 @@ export function mount(node, sheet) {
     const csv = el('button', {class: 'act', text: 'CSV', 'aria-label': 'Noise as CSV', onclick: () => say({do: 'csv', what: 'noise'})})
     return {node: el('div', {}, sum, t.node, el('p', {}, csv)), update(s) {
       const m = s.more, most = m.terms[0]?.rms || 1
-      const over = m.to_noise ? `; a sine that fills ${fixed(m.span, 2)}${THIN}V stands ${fixed(m.to_noise.decibels, 1)}${THIN}dB over it, ${fixed(m.to_noise.bits, 1)} bits` : ''
+      const over = m.to_noise ? `; a sine that fills ${engineering(m.span, 'V')} stands ${fixed(m.to_noise.decibels, 1)}${THIN}dB over it, ${fixed(m.to_noise.bits, 1)} bits` : ''
       setText(sum, `${engineering(m.rms, 'V')} RMS from ${engineering(m.band[0], 'Hz')} to ${engineering(m.band[1], 'Hz')}, ${engineering(m.density, 'V/√Hz')} at 1${THIN}kHz${over}`)
-      t.set(m.terms.map((r, i) => [r.name, [fixed(r.density_1khz * 1e9, 1), 'r'], [fixed(r.rms * 1e6, 2), 'r'], [bar(i, r.rms / most * 100), '']]))
+      const d = column(m.terms.map(r => r.density_1khz), 'V/√Hz', {most: 2}), v = column(m.terms.map(r => r.rms), 'V', {most: 2})
+      t.heads(['noise', d.head(`1${THIN}kHz`), v.head('RMS'), ''])
+      t.set(m.terms.map((r, i) => [r.name, [d.write(r.density_1khz), 'r'], [v.write(r.rms), 'r'], [bar(i, r.rms / most * 100), '']]))
     }}
   }
 
   const signals = () => {
-    const t = table([{text: 'signal'}, {text: '−3 dB', class: 'r'}, {text: 'peaking', class: 'r'}, {text: 'at', class: 'r'}, {text: 'amplitude', class: 'r'}, {text: 'phase', class: 'r'}, {text: 'with cables', class: 'r'}], 'Signals over frequency')
+    const t = table([{text: 'signal'}, {text: '−3 dB', class: 'r'}, {text: 'peak', class: 'r'}, {text: 'at', class: 'r'}, {text: 'error', class: 'r'}, {text: 'phase', class: 'r'}], 'Signals over frequency')
     const cable = blank('capacitance of every cable', text => say({do: 'cable', text}))
     const at = blank('frequency for crosstalk', text => say({do: 'frequency', text}))
     const cross = el('span')
-    return {node: el('div', {}, t.node,
+    const own = el('p', {class: 'soft', text: 'Error and phase at the signal’s own frequency, against DC.'})
+    return {node: el('div', {}, t.node, own,
       el('p', {class: 'heads'}, el('label', {}, 'a cable of ', cable.node, ' on every input')),
       el('p', {class: 'heads'}, el('label', {}, 'crosstalk at ', at.node), cross)), update(s) {
       const m = s.more
@@ -75,45 +78,51 @@ export function mount(node, sheet) {
       at.set(engineering(s.frequency, 'Hz'))
       const [size, to, from] = m.crosstalk
       setText(cross, size > 0 ? `worst: ${from} leaves ${engineering(size, 'V')} a volt on ${to}'s terminals (${fixed(20 * Math.log10(size), 0)}${THIN}dB)` : 'none: no source has a resistance')
+      const f = column(m.signals.map(r => r.bandwidth_3db), 'Hz'), q = column(m.at.map(x => x.frequency), 'Hz', {most: 1})
+      const a = column(m.at.map(x => x.amplitude_error * 100), '%', {least: 3}), p = column(m.at.map(x => x.phase), '°', {least: 2})
+      const c = m.cabled ? column(m.cabled.bandwidths, 'Hz') : null
+      t.heads(['signal', f.head(`−3${THIN}dB`), 'peak,\u00a0dB', q.head('at'), 'error,\u00a0%', 'phase,\u00a0°', ...(c ? [c.head('with cables')] : [])])
       t.set(m.signals.map((r, i) => {
-        const q = m.at[i]
-        return [r.name, r.bandwidth_3db === null ? none('no end') : [engineering(r.bandwidth_3db, 'Hz'), 'r'], [`${fixed(m.peaking[i], 2)}${THIN}dB`, 'r'],
-          [q.frequency ? engineering(q.frequency, 'Hz') : 'DC', 'r'], [q.frequency ? percent(q.amplitude_error, 3) : '–', 'r'], [q.frequency ? `${signed(q.phase, 2)}°` : '–', 'r'],
-          m.cabled ? m.cabled.bandwidths[i] === null ? none('no end') : [engineering(m.cabled.bandwidths[i], 'Hz'), 'r'] : none('no cable')]
+        const x = m.at[i], moves = x.frequency > 0
+        return [r.name, r.bandwidth_3db === null ? none('no end') : [f.write(r.bandwidth_3db), 'r'], [fixed(m.peaking[i], 2), 'r'],
+          [moves ? q.write(x.frequency) : 'DC', 'r'], [moves ? a.write(x.amplitude_error * 100) : '–', 'r'], [moves ? p.write(x.phase) : '–', 'r'],
+          ...(c ? [m.cabled.bandwidths[i] === null ? none('no end') : [c.write(m.cabled.bandwidths[i]), 'r']] : [])]
       }))
     }}
   }
 
   const loop = () => {
-    const t = table([{text: ''}, {text: 'noise gain', class: 'r'}, {text: 'crosses at', class: 'r'}, {text: 'phase margin', class: 'r'}, {text: 'gain margin', class: 'r'}, {text: 'with cables', class: 'r'}], 'Loops')
-    const head = el('h3', {text: 'Cures for less than 60°'}), c = table([{text: 'part'}, {text: 'value', class: 'r'}, {text: 'margin then', class: 'r'}, {text: 'bandwidth', class: 'r'}, {text: ''}], 'Cures')
+    const t = table([{text: ''}, {text: 'noise gain', class: 'r'}, {text: 'crosses at', class: 'r'}, {text: 'phase margin', class: 'r'}, {text: 'gain margin', class: 'r'}], 'Loops')
+    const head = el('h3', {text: 'Cures for less than 60°'}), c = table([{text: 'part'}, {text: 'value', class: 'r'}, {text: 'margin then', class: 'r'}, {text: 'bandwidth then (now)', class: 'r'}, {text: ''}], 'Cures')
     const word = el('p', {class: 'soft'})
     const fits = new Map()
     return {node: el('div', {}, t.node, head, c.node, word), update(s) {
       const m = s.more
-      t.set(m.cells.map((q, k) => [m.cells.length > 1 ? `cell ${k + 1}` : 'the loop', [fixed(q.noise_gain, 3), 'r'], q.crossover === null ? none('never') : [engineering(q.crossover, 'Hz'), 'r'],
-        q.phase_margin === null ? none('–') : [`${fixed(q.phase_margin, 1)}°`, q.phase_margin < 45 ? 'r bad' : 'r'], q.gain_margin_db === null ? none('no end') : [`${fixed(q.gain_margin_db, 1)}${THIN}dB`, 'r'],
-        m.cabled ? m.cabled.phase_margins[k] === null ? none('–') : [`${fixed(m.cabled.phase_margins[k], 1)}°`, m.cabled.phase_margins[k] < 45 ? 'r bad' : 'r'] : none('no cable')]))
+      t.heads(['', 'noise gain', 'crosses at', 'phase margin', 'gain margin', ...(m.cabled ? ['margin with cables'] : [])])
+      t.set(m.cells.map((q, k) => [m.cells.length > 1 ? `cell ${k + 1}` : 'loop', [engineering(q.noise_gain, '', 4).trimEnd(), 'r'], q.crossover === null ? none('never') : [engineering(q.crossover, 'Hz'), 'r'],
+        q.phase_margin === null ? none('–') : [`${fixed(q.phase_margin, 1)}°`, q.phase_margin < 45 ? 'r bad' : 'r'], q.gain_margin_db === null ? none('no end') : [`${fixed(q.gain_margin_db, 1)}${THIN}dB`, q.gain_margin_db < 0 ? 'r bad' : 'r'],
+        ...(m.cabled ? [m.cabled.phase_margins[k] === null ? none('–') : [`${fixed(m.cabled.phase_margins[k], 1)}°`, m.cabled.phase_margins[k] < 45 ? 'r bad' : 'r']] : [])]))
       c.node.hidden = !m.cures?.length
-      setText(word, m.cures === null ? 'looking for parts…' : m.cures.length ? 'The smallest part that reaches 60° (or 52°, or 45°), and the bandwidth it costs. The resistor sits between the output and its load, the feedback before it.' : 'Nothing to cure, or no single part does it.')
+      setText(word, m.cures === null ? 'looking for parts…' : m.cures.length ? 'The smallest part that reaches 60° (or 52°, or 45°), or the two that do together, and the bandwidth it costs. The resistor sits between the output and its load, the feedback before it.' : 'Nothing to cure, or these parts do not do it: smaller resistors, or another op amp.')
       c.set((m.cures ?? []).map(q => {
         const cap = q.kind === 'feedback capacitor', id = `${q.cell}:${q.value}`
         if (cap && !fits.has(id)) fits.set(id, el('button', {class: 'act', text: 'fit it', onclick: () => say({do: 'fit', cell: q.cell, value: q.value})}))
-        const band = q.bandwidth === null ? '–' : `${engineering(q.bandwidth, 'Hz')}, was ${engineering(q.bandwidth_before, 'Hz')}`
-        return [`${q.kind}, cell ${q.cell + 1}${q.gain_loss ? `; costs ${percent(q.gain_loss, 2)} of gain` : ''}`, [engineering(q.value, cap ? 'F' : 'Ω'), 'r'], [`${fixed(q.phase_margin, 0)}°`, 'r'], [band, 'r'], [cap ? fits.get(id) : '', '']]
+        const band = q.bandwidth === null ? '–' : `${engineering(q.bandwidth, 'Hz')}${q.bandwidth_before === null ? '' : ` (${engineering(q.bandwidth_before, 'Hz')})`}`
+        const where = m.cells.length > 1 ? `, cell ${q.cell + 1}` : ''
+        const both = q.resistor > 0
+        return [`${both ? 'feedback capacitor and isolating resistor' : q.kind}${where}${q.gain_loss ? `; costs ${percent(q.gain_loss, 2)} of gain` : ''}`, [both ? `${engineering(q.value, 'F', 2)}, ${engineering(q.resistor, 'Ω', 2)}` : engineering(q.value, cap ? 'F' : 'Ω'), 'r'], [`${fixed(q.phase_margin, 0)}°`, 'r'], [band, 'r'], [cap ? fits.get(id) : '', '']]
       }))
     }}
   }
 
   const waves = () => {
     const rows = new Map()
-    const t = table([{text: 'signal'}, {text: 'wave'}, {text: 'middle, V', class: 'r'}, {text: 'peak, V', class: 'r'}, {text: 'frequency', class: 'r'}, {text: ''}], 'Waves on the signals')
+    const t = table([{text: 'signal'}, {text: 'wave'}, {text: 'middle,\u00a0V', class: 'r'}, {text: 'peak,\u00a0V', class: 'r'}, {text: 'frequency', class: 'r'}, {text: ''}], 'Waves on the signals')
     const row = name => {
       if (rows.has(name)) return rows.get(name)
-      const select = el('select', {class: 'blank', 'aria-label': `wave of ${name}`, onchange: () => say({do: 'wave', name, figure: 'kind', kind: select.value})},
+      const select = el('select', {class: 'blank kind', 'aria-label': `wave of ${name}`, onchange: () => say({do: 'wave', name, figure: 'kind', kind: select.value})},
         ['dc', 'sine', 'square', 'triangle', 'ramp', 'csv'].map(k => el('option', {value: k, text: k === 'dc' ? 'as it stands' : k, hidden: k === 'csv'})))
-      select.style.width = '104px'
-      const figure = f => blank(`${f} of ${name}`, text => say({do: 'wave', name, figure: f, text}), 'wave')
+        const figure = f => blank(`${f} of ${name}`, text => say({do: 'wave', name, figure: f, text}), 'wave')
       const file = el('input', {type: 'file', class: 'file', accept: '.csv,text/csv', 'aria-label': `CSV for ${name}`, onchange: async () => { if (file.files[0]) say({do: 'wave file', name, text: await file.files[0].text()}); file.value = '' }})
       const made = {select, offset: figure('offset'), amplitude: figure('amplitude'), frequency: figure('frequency'), file: el('label', {class: 'act'}, 'CSV', file)}
       rows.set(name, made)
@@ -150,12 +159,14 @@ export function mount(node, sheet) {
     const q = s.scope
     if (s.problem || !q) setText(told, s.problem)
     else {
-      const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'oscillates; record cut short'].filter(Boolean).join(', ')
-      setText(caption, s.kind === 'step' ? `of ${signed(q.size, 2)}${THIN}V on ${q.signal}; V, ${q.unit}; ideal dotted` : `V, ${q.unit}; ideal dotted`)
-      const time = t => t === null ? 'not in this record' : engineering(t, 's')
-      setText(told, s.kind === 'step' && q.at_limit ? 'the output is at its limit; there is no step to measure' : s.kind === 'step'
-        ? `settles to 1${THIN}% in ${time(q.settled['0.01'])}, 0.1${THIN}% ${time(q.settled['0.001'])}, 0.01${THIN}% ${time(q.settled['0.0001'])}; overshoot ${percent(q.overshoot)}${q.rise === null ? '' : `, rise ${engineering(q.rise, 's')}`}${busy ? `; ${busy}` : ''}`
-        : busy || 'linear throughout')
+      const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'too many changes to follow (it oscillates, or is driven too hard); record cut short'].filter(Boolean).join(', ')
+      setText(caption, s.kind === 'step' ? `of ${q.size > 0 ? '+' : ''}${engineering(q.size, 'V')} on ${q.signal}; V, ${q.unit}; ideal dotted` : `V, ${q.unit}; ideal dotted`)
+      const time = (band, t) => t === null ? `${band} not in this record` : `${band} in ${engineering(t, 's')}`
+      const settling = () => `settles to ${[[`1${THIN}%`, '0.01'], [`0.1${THIN}%`, '0.001'], [`0.01${THIN}%`, '0.0001']].map(([band, k]) => time(band, q.settled[k])).join(', ')}`
+      setText(told, q.unstable ? `unstable: it oscillates${busy ? `; ${busy}` : ''}. Gains, bandwidths and noise are those of the equations, not of a stage that works.`
+        : s.kind !== 'step' ? busy || 'linear throughout'
+          : q.at_limit ? 'the output is at its limit; there is no step to measure'
+            : `${settling()}; overshoot ${percent(q.overshoot)}${q.rise === null ? '' : `, rise ${engineering(q.rise, 's')}`}${busy ? `; ${busy}` : ''}`)
     }
     built[s.page] ??= makers[s.page]()
     const now = built[s.page]

@@ -27,16 +27,18 @@ class Cure(NamedTuple):
 
     `value` in F or ohm. `bandwidth` is the lowest −3 dB frequency of any signal
     with it, `bandwidth_before` without [Hz]. `gain_loss`: relative, at DC, of an
-    isolating resistor into a resistive load.
+    isolating resistor into a resistive load. Where it takes both parts, `value` is the
+    capacitor's and `resistor` the other's.
     """
 
-    kind: str  # feedback capacitor, isolating resistor
+    kind: str  # feedback capacitor, isolating resistor, capacitor and resistor
     cell: int
     value: float
     phase_margin: float
     bandwidth: float | None
     bandwidth_before: float | None
     gain_loss: float
+    resistor: float = 0.0  # ohm
 
 
 def with_capacitor(design: Design, cell: int, capacitance: float) -> Design:
@@ -172,6 +174,43 @@ def isolating_resistor(stage, wanted: float = WANTED_MARGIN) -> Cure | None:
     return Cure("isolating resistor", k, high, margin(high), _isolated_bandwidth(design, high), before, loss)
 
 
+ISOLATING = (10.0, 22.0, 47.0, 100.0, 220.0, 470.0)  # ohm: usual values tried beside a capacitor
+
+
+def both_parts(stage, wanted: float = WANTED_MARGIN) -> Cure | None:
+    """A feedback capacitor in the last cell with an isolating resistor, of those tried the pair that keeps most bandwidth.
+
+    For a load that leaves too little margin for either alone: the capacitor cancels what
+    the inverting node loses, the resistor parts the output from its load.
+    """
+    net = network_of(stage)
+    design = net.design
+    k = len(design.cells) - 1
+    cell = design.cells[k]
+    base = response(design)
+    now = base.cells[k].phase_margin
+    if not design.load.capacitance or cell.feedback is None or now is None or now >= wanted:
+        return None
+    amp = design.op_amp
+    c_in = amp.differential_capacitance + amp.common_mode_capacitance + design.stray_capacitance
+    neutral = max(c_in / max(base.cells[k].noise_gain - 1.0, 1e-3), 1e-13)
+    best: Cure | None = None
+    for share in (0.25, 0.5, 1.0, 2.0, 4.0, 8.0):
+        capacitance = float(f"{cell.feedback_capacitance + neutral * share:.2g}")
+        fitted = with_capacitor(design, k, capacitance)
+        for r in ISOLATING:
+            margin, _ = isolated_margin(fitted, r)
+            if margin is None or margin < wanted:
+                continue
+            band = _isolated_bandwidth(fitted, r)
+            if best is None or (band or math.inf) > (best.bandwidth or math.inf):
+                loss = r / (r + design.load.resistance) if design.load.resistance else 0.0
+                before = _slowest(base.signals)
+                best = Cure("capacitor and resistor", k, capacitance, margin, band, before, loss, r)
+            break  # a larger resistor costs more and does no better
+    return best
+
+
 def _isolated_bandwidth(design, r_iso):
     """Lowest −3 dB frequency [Hz] at the load behind the resistor."""
     bare = nodes.Network(replace(design, load=replace(design.load, resistance=None, capacitance=0.0)))
@@ -252,7 +291,7 @@ def cabled_margins(stage, capacitances) -> CabledMargins:
 
 
 def cures(design: Design, wanted: tuple[float, ...] = (WANTED_MARGIN, 52.0, 45.0)):
-    """Single parts that help: a generator of the list so far, returning it.
+    """Parts that help, one or, where none does alone, two together: a generator of the list so far, returning it.
 
     Of the margins `wanted` [degrees], best first, each part is tried for the best it reaches.
     """
@@ -267,6 +306,11 @@ def cures(design: Design, wanted: tuple[float, ...] = (WANTED_MARGIN, 52.0, 45.0
             if cure is not None:
                 found.append(cure)
                 yield found
+    if not any(c.cell == last for c in found):
+        cure = next((c for c in map(partial(both_parts, design), wanted) if c is not None), None)
+        if cure is not None:
+            found.append(cure)
+            yield found
     return found
 
 

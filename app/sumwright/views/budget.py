@@ -57,7 +57,8 @@ class Budget(Fold):
         self._spread = ColumnDataSource({"x": [], "y": []})
         self._held = ColumnDataSource({"x": [], "y": []})
         self._held_of: tuple[Any, Any, Any] = (None, None, None)
-        self._theme = ""
+        self._theme = self._unit = ""
+        self._scale = 1.0  # volts to the histogram's unit
         self.point = "highest"
         self.page = "terms"
         self.size = SIZES[1]
@@ -79,9 +80,8 @@ class Budget(Fold):
         self._bars = f.quad("left", "right", "top", 0, source=self._bins, line_color=None)
         self._outline = f.step("x", "y", source=self._held, mode="before", line_width=2, line_dash=[2, 3])
         self._bracket = f.line("x", "y", source=self._spread, line_width=2)
-        f.add_tools(
-            HoverTool(renderers=[self._bars], tooltips=[("", "@left{+0.0} to @right{+0.0} mV"), ("", "@share{0.00} %")])
-        )
+        self._hover = HoverTool(renderers=[self._bars])
+        f.add_tools(self._hover)
         return {"boards": f}
 
     # ------------------------------------------------------------ showing
@@ -105,6 +105,10 @@ class Budget(Fold):
             self.context.jobs.stop("budget boards")
             self._soon()
         progress = self._drawn[1]
+        unit, self._scale = _volt_unit(half)
+        if unit != self._unit:
+            self._unit = unit
+            self._hover.tooltips = [("", f"@left{{+0.0}} to @right{{+0.0}} {unit}"), ("", "@share{0.00} %")]
         self._paint(bench.theme)
         self._draw(budget, progress, edges, design.target.accuracy)
         self._draw_held(edges)
@@ -112,7 +116,7 @@ class Budget(Fold):
             "point": self.point, "page": self.page, "budget": _summary(budget), "accuracy": design.target.accuracy,
             "terms": _rows(budget), "boards": _told(progress), "running": self.context.jobs.running("budget boards"),
             "sizes": list(SIZES), "size": self.size, "points": _three(analysis.errors),
-            "holds": boards.first_order_holds(budget, progress.statistics), "half": half * 1e3,
+            "holds": boards.first_order_holds(budget, progress.statistics), "unit": unit,
         }  # fmt: skip
         shown["more"] = getattr(self, "_page_" + self.page.replace(" ", "_"))(analysis)
         return shown
@@ -135,21 +139,21 @@ class Budget(Fold):
         put(
             self._bins,
             {
-                "left": (1e3 * edges[:-1]).astype(np.float32), "right": (1e3 * edges[1:]).astype(np.float32),
+                "left": (self._scale * edges[:-1]).astype(np.float32), "right": (self._scale * edges[1:]).astype(np.float32),
                 "top": (share / top).astype(np.float32), "share": share.astype(np.float32),
             },
         )  # fmt: skip
-        move(self._x, 1e3 * float(edges[0]), 1e3 * float(edges[-1]))
+        move(self._x, self._scale * float(edges[0]), self._scale * float(edges[-1]))
         move(self._y, 0.0, 1.16)
         allowed = accuracy is not None
         self._band.visible = allowed
         for line in self._limits:
             line.visible = allowed
         if allowed:
-            self._band.update(left=-1e3 * accuracy, right=1e3 * accuracy)
+            self._band.update(left=-self._scale * accuracy, right=self._scale * accuracy)
             for line, sign in zip(self._limits, (-1, 1), strict=True):
-                line.location = sign * 1e3 * accuracy
-        a, b = 1e3 * progress.statistics.low_95, 1e3 * progress.statistics.high_95
+                line.location = sign * self._scale * accuracy
+        a, b = self._scale * progress.statistics.low_95, self._scale * progress.statistics.high_95
         put(self._spread, {"x": [a, a, a, b, b, b], "y": [1.05, 1.13, 1.09, 1.09, 1.05, 1.13]})
 
     def _draw_held(self, edges) -> None:
@@ -162,7 +166,7 @@ class Budget(Fold):
         if self._held_of[0] != key:
             drawn = boards.draw_boards(held, COARSE, SEED, points=(self.point,)).errors[0]
             counts = np.histogram(drawn, BINS, (edges[0], edges[-1]))[0] / max(len(drawn), 1)
-            x = (1e3 * edges).astype(np.float32)
+            x = (self._scale * edges).astype(np.float32)
             y = np.concatenate([[0.0], counts / max(counts.max(), 1e-12)]).astype(np.float32)
             self._held_of = (key, x, y)
         put(self._held, {"x": self._held_of[1], "y": self._held_of[2]})
@@ -371,6 +375,14 @@ def _reach(budget: ErrorBudget, accuracy: float | None) -> float:
     need = max(abs(budget.shift) + 1.9 * budget.expanded_95, 1.2 * (accuracy or 0.0), 1e-9)
     power = 10.0 ** math.floor(math.log10(need))
     return next(m * power for m in (1, 1.25, 1.6, 2, 2.5, 3.2, 4, 5, 6.3, 8, 10) if m * power >= need * (1 - 1e-9))
+
+
+def _volt_unit(most: float) -> tuple[str, float]:
+    """The unit in which errors up to `most` [V] are drawn, and what a volt is in it."""
+    for unit, scale, least in (("kV", 1e-3, 2e3), ("V", 1.0, 2.0), ("mV", 1e3, 2e-3), ("µV", 1e6, 2e-6)):
+        if most >= least:
+            return unit, scale
+    return "nV", 1e9
 
 
 def _summary(b: ErrorBudget) -> dict[str, float]:

@@ -14,6 +14,7 @@ from bokeh.models import Span as Line
 
 from sumwright import fields
 from sumwright.engine import compensation, noise, response, trace
+from sumwright.engine.statespace import poles
 from sumwright.engine.waves import Wave
 from sumwright.errors import InvalidQuantity, SumwrightError
 from sumwright.files.waves import read_wave
@@ -30,6 +31,7 @@ KINDS = ("step", "dc", "sine", "square", "triangle", "ramp", "csv")
 DASHED = (7, 4)
 _DECADES = {10**k: f"{10 ** (k % 3)}{('', 'k', 'M', 'G')[k // 3]}" for k in range(12)}
 LOWEST = 1.0  # Hz, left end of the frequency plots
+LINE = 18.0  # px from one crossing's words to those of the next
 
 
 class Response(Fold):
@@ -45,7 +47,7 @@ class Response(Fold):
             return ColumnDataSource({"x": [], "y": [], "name": [], "colour": [], "dash": [], "width": []})
 
         self._gain, self._phase, self._scope = lines(), lines(), lines()
-        self._cross = ColumnDataSource({"x": [], "y": [], "text": [], "align": [], "shift": []})
+        self._cross = ColumnDataSource({"x": [], "y": [], "text": [], "align": [], "shift": [], "rise": []})
         self._f = Range1d(LOWEST, 1e8)
         self._db, self._degrees = Range1d(-40.0, 120.0), Range1d(-270.0, 30.0)
         self._t, self._v = Range1d(0.0, 1.0), Range1d(0.0, 1.0)
@@ -77,7 +79,7 @@ class Response(Fold):
             f.add_tools(HoverTool(renderers=[drawn], tooltips=tip, line_policy="interp", mode="mouse"))
         gain.add_layout(self._down)
         self._ring = gain.scatter("x", "y", source=self._cross, marker="circle", size=10, line_width=2)
-        self._label = gain.text("x", "y", "text", source=self._cross, text_align="align", x_offset="shift", y_offset=-10,
+        self._label = gain.text("x", "y", "text", source=self._cross, text_align="align", x_offset="shift", y_offset="rise",
                                 text_font_size="14px", text_font_style="bold")  # fmt: skip
         gain.yaxis[0].ticker.desired_num_ticks = 7
         for f in (gain, phase):
@@ -162,11 +164,17 @@ class Response(Fold):
         at = [c.crossover for c, _ in marks]
         level = [20 * math.log10(max(abs(_at(ac.frequencies, ac.noise_gains[k], c.crossover)), 1e-9)) for c, k in marks]
         left = [c > math.sqrt(LOWEST * top) for c in at]
+        which = [f"cell {k + 1}: " if len(ac.cells) > 1 else "" for _, k in marks]
         put(
             self._cross,
             {
                 "x": at, "y": level, "align": ["right" if q else "left" for q in left], "shift": [-9 if q else 9 for q in left],
-                "text": [f"{format_quantity(c.crossover, 'Hz')}, phase margin {c.phase_margin:.0f}°" for c, _ in marks],
+                # the loops of a chain cross near each other: their words stand above one another
+                "rise": [-10.0 - LINE * (len(at) - 1 - i) for i in range(len(at))],
+                "text": [
+                    f"{cell}{format_quantity(c.crossover, 'Hz')}, phase margin {c.phase_margin:.0f}°".replace("-", "−")
+                    for cell, (c, _) in zip(which, marks, strict=True)
+                ],
             },
         )  # fmt: skip
         self._down.visible = bool(at)
@@ -224,6 +232,7 @@ class Response(Fold):
         move(self._t, 0.0, float(t[-1]))
         told.update(
             unit=unit, slewing=record.slewing, clipping=record.clipping, complete=record.complete, events=record.events,
+            unstable=bool(poles(analysis.net).real.max(initial=-1.0) > 0),
         )  # fmt: skip
         return told
 

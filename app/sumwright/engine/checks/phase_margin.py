@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from functools import partial
 
+from sumwright.engine.compensation import ISOLATING, both_parts, isolated_margin
 from sumwright.engine.stage import replace
 from sumwright.quantity import format_quantity
 
@@ -27,25 +28,39 @@ def checks(analysis) -> tuple[Check, ...]:
         found.append(
             judged(
                 key, title, "°", cell.phase_margin, WANTED, cell.phase_margin - WANTED, WANTED,
-                f"{cell.phase_margin:.0f}° at {format_quantity(cell.crossover, 'Hz')}; wanted {WANTED:.0f}°.",
+                f"{_degrees(cell.phase_margin)} at {format_quantity(cell.crossover, 'Hz')}; wanted {WANTED:.0f}°.",
                 partial(_cure, analysis, k),
             )
         )  # fmt: skip
     return tuple(found)
 
 
+def _degrees(margin):
+    return f"{margin:.0f}°".replace("-", "−")
+
+
 def _cure(analysis, k, goal):
-    """A feedback capacitor, tried out on the stage; the isolating resistor is common practice."""
+    """A feedback capacitor, a resistor before the load, or both: each tried out on the stage."""
     design = analysis.design
     ways = []
     if size := _capacitor(analysis, k, WANTED + goal):
         capacitance, margin = size
-        ways.append(
-            f"{format_quantity(capacitance, 'F', 2, trim=True)} across the feedback of cell {k + 1}: {margin:.0f}°"
-        )
+        ways.append(f"{_farads(capacitance)} across the feedback of cell {k + 1}: {_degrees(margin)}")
     if design.load.capacitance and k == len(design.cells) - 1:
-        ways.append(f"20 to 100 Ω between the output and its {format_quantity(design.load.capacitance, 'F')} load")
+        load = f"between the output and its {format_quantity(design.load.capacitance, 'F')} load"
+        tried = ((r, isolated_margin(design, r)[0]) for r in ISOLATING)
+        if found := next(((r, m) for r, m in tried if m is not None and m >= WANTED + goal), None):
+            ways.append(f"{format_quantity(found[0], 'Ω', 2, trim=True)} {load}: {_degrees(found[1])}")
+        elif not ways and (both := both_parts(design, WANTED + goal)):
+            ohms = format_quantity(both.resistor, "Ω", 2, trim=True)
+            ways.append(
+                f"{_farads(both.value)} across the feedback of cell {k + 1} and {ohms} {load}: {_degrees(both.phase_margin)}"
+            )
     return choices(*ways) or "smaller resistors at the inverting node, or an op amp of less gain-bandwidth"
+
+
+def _farads(capacitance):
+    return format_quantity(capacitance, "F", 2, trim=True)
 
 
 def _capacitor(analysis, k, wanted):
