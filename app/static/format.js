@@ -12,6 +12,12 @@ export function fixed(x, decimals = 3) {
 
 // volts where they stand in a column: three decimals, fewer where the number is large
 export const volts = (x, write = fixed) => write(x, Math.abs(x) < 999.9995 ? 3 : Math.abs(x) < 99999.95 ? 1 : 0)
+// volts where there is room for so many characters: fewer decimals rather than over the edge
+export const within = (x, characters, decimals = 2, write = fixed) => {
+  let text = write(x, decimals)
+  for (let d = decimals; text.length > characters && d; text = write(x, --d)) { /* one less */ }
+  return text
+}
 // a weight: four decimals; a large one in four figures
 export const weight = x => missing(x) || Math.abs(x) < 99.99995 ? signed(x, 4) : (x > 0 ? '+' : '') + engineering(x, '', 4).replace(THIN, '')
 
@@ -32,17 +38,19 @@ export function engineering(x, unit = '', figures = 3) {
 export function margin(x, unit) {
   if (missing(x)) return 'not given'
   const plus = x > 0 ? '+' : ''
-  if (unit === 'V') return Math.abs(x) < 0.02 ? plus + engineering(x, 'V') : signed(x) + THIN + 'V'
+  if (unit === 'V') return Math.abs(x) < 0.02 || Math.abs(x) >= 1e4 ? plus + engineering(x, 'V') : signed(x) + THIN + 'V'
   if (unit === '°') return signed(x, Math.abs(x) < 1 ? 1 : 0) + '°'
   if (unit === '°C' || unit === 'K') return signed(x, 0) + THIN + unit
   if (unit === '') return plus + engineering(x, '').replace(THIN, '')
-  if (unit === '%') return signed(x, 2) + THIN + '%'
+  if (unit === '%') return (Math.abs(x) < 1e5 ? signed(x, 2) : plus + minus(x.toExponential(1).replace('e+', 'e'))) + THIN + '%'
   return plus + engineering(x, unit)
 }
 
 // The verdict, two decimals or two figures, without a sign: "0.68 V".
 export function verdict(x, unit) {
   const size = Math.abs(x)
+  if (unit === 'V' && size >= 9999.5) return engineering(size, 'V')
+  if (unit === '%' && size >= 1e5) return size.toExponential(1).replace('e+', 'e') + THIN + '%'
   if (['V', '%'].includes(unit) && size >= 99.95) return fixed(size, 0) + THIN + unit
   if (unit === 'V') return size >= 0.0995 ? fixed(size, 2) + THIN + 'V' : engineering(size, 'V', 2)
   if (unit === '°') return fixed(size, size < 1 ? 1 : 0) + '°'

@@ -28,7 +28,7 @@ export function mount(sheet) {
   const hatch = svg('svg', {width: 0, height: 0, 'aria-hidden': 'true', class: 'defs'}, svg('defs', {},
     svg('pattern', {id: 'hatch', width: 4, height: 4, patternUnits: 'userSpaceOnUse', patternTransform: 'rotate(45)'},
       svg('path', {d: 'M0 0V4', stroke: 'var(--line)', 'stroke-width': 1}))))
-  warned = el('div', {class: 'cautions now', role: 'alert'})
+  warned = el('div', {class: 'cautions now', role: 'alert', tabindex: '0', 'aria-label': 'Cautions'})
   usual = el('div', {class: 'cautions'})
   box.append(live, head, el('div', {class: 'count'}, ...counts), warned, plumb, tip, usual, hatch)
 }
@@ -65,6 +65,7 @@ function caution(node, list) {
   const key = JSON.stringify(list)
   if (node.dataset.key === key) return
   node.dataset.key = key
+  node.hidden = !list.length
   node.replaceChildren(...list.map(c => el('p', {}, el('b', {text: `${c.title}.`}), ' ' + c.text)))
 }
 

@@ -17,9 +17,9 @@ export function mount(node, sheet) {
   const wrong = el('p', {class: 'told err', role: 'alert'})
   const text = el('textarea', {'aria-label': 'The sum', spellcheck: 'false', placeholder: EXAMPLE})
   // what may be left empty: each becomes a line of the text that is read
-  const blank = (label, placeholder) => el('input', {class: 'blank', 'aria-label': label, placeholder, autocomplete: 'off', spellcheck: 'false'})
-  const asked = {window: [blank('window of the output, from', 'any'), blank('window of the output, to', 'any')], accuracy: [blank('accuracy of the output, either side', 'any')],
-    rails: [blank('plus rail of the new sheet', '12'), blank('minus rail of the new sheet', '\u221212')]}
+  const blank = (label, placeholder, title) => el('input', {class: 'blank', 'aria-label': label, placeholder, title, autocomplete: 'off', spellcheck: 'false'})
+  const asked = {window: [blank('window of the output, from', 'any', 'Lower end of what the output must keep to. In V. From what is asked.'), blank('window of the output, to', 'any', 'Upper end of what the output must keep to. In V. From what is asked.')], accuracy: [blank('accuracy of the output, either side', 'any', 'How far the output may be off, to either side, at 95 %. In V. From what is asked.')],
+    rails: [blank('plus rail of the new sheet', '12', 'The + rail, nominal. In V. From your supply.'), blank('minus rail of the new sheet', '\u221212', 'The − rail, nominal; 0 for a single supply. In V. From your supply.')]}
   const fields = Object.values(asked).flat()
   const wants = el('p', {class: 'wants soft'}, el('span', {}, 'output kept within ', asked.window[0], ' to ', asked.window[1], `${THIN}V`),
     el('span', {}, 'accurate to ± ', asked.accuracy[0], `${THIN}V`), el('span', {}, 'rails ', asked.rails[0], `${THIN}V and `, asked.rails[1], `${THIN}V`))

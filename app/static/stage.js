@@ -2,7 +2,7 @@
 
 import {el, svg, setAttr, setClass, keyed, Pool, px, size} from './dom.js'
 import {Blank} from './blanks.js'
-import {THIN, engineering, fixed, signed} from './format.js'
+import {THIN, engineering, fixed, signed, volts} from './format.js'
 import {layout} from './layout.js'
 
 let sheet, box, drawing, pool, values
@@ -222,12 +222,12 @@ function draw(L, s) {
     if (s.load.resistance) current(xl + 13 * k, y0 + 30 * k, s.load.i, 'start')
   }
   p.put('circle', {cx: W - 5, cy: mid, r: 4, class: 'terminal'})
-  const volts = fixed(s.output), fits = name => volts.length * px(name) * .556 <= W - 13 * k - end.out - 6
-  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (!L.many && fits('--t-5') ? '' : fits('--t-4') ? ' less' : ' least')}, volts)
+  const shown = fixed(s.output), fits = name => shown.length * px(name) * .556 <= W - 13 * k - end.out - 6
+  p.put('text', {x: W - 13 * k, y: mid - 11 * k, 'text-anchor': 'end', class: 'out-volts halo' + (clip ? ' red' : '') + (!L.many && fits('--t-5') ? '' : fits('--t-4') ? ' less' : ' least')}, shown)
   p.text(W, mid - 11 * k, 'V', {'text-anchor': 'end', class: 'halo'})
   if (clip) {
     p.text(W, mid - (L.many ? 48 : 56) * k, s.cells[s.cells.length - 1].limited ? 'current limit' : 'clipped ' + s.clipped, {'text-anchor': 'end', class: 'node red halo'})
-    p.text(W, mid - (L.many ? 33 : 40) * k, `by ${fixed(s.over)}${THIN}V`, {'text-anchor': 'end', class: 'node red halo'})
+    p.text(W, mid - (L.many ? 33 : 40) * k, `by ${volts(s.over)}${THIN}V`, {'text-anchor': 'end', class: 'node red halo'})
   }
   p.end()
   return spots

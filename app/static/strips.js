@@ -173,7 +173,7 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   setAttr(item.value.node, 'title', beyond ? `past its range, ${fixed(r.low)} to ${fixed(r.high)} V: the corners and margins do not cover it` : helpFor('value'))
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u202f)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
-  setText(item.made, r.out ? 'cable out' : r.reference ? `${signed(r.share)}${THIN}V` : weight(r.made))
+  setText(item.made, r.out ? 'cable out' : r.reference ? `${volts(r.share, signed)}${THIN}V` : weight(r.made))
   if (W) {
     const zero = W * .24, room = W - zero - 2, x = r.share / reach * room * (r.share < 0 ? Math.min(1, zero / room * .95) : 1)
     setAttr(item.zero, 'd', `M${zero} 0V${row}`)

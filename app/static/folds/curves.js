@@ -2,7 +2,7 @@
 // whose frame is set on the same volts, so the rail, the window and the output are single lines through all three.
 
 import {el, svg, setAttr, setText, Pool, px, size} from '../dom.js'
-import {THIN, fixed, signed} from '../format.js'
+import {THIN, fixed, signed, within} from '../format.js'
 import {style, markerAttributes} from '../marks.js'
 
 const SIDE = 8 // px of the figure left and right of its frame, so that markers at the ends are whole
@@ -76,6 +76,7 @@ export function mount(node, sheet) {
       p.path(`M${L} ${Y(v)}H${R}`, {class: 'grid'})
       if (Math.abs(Y(v) - Y(shown.output)) > 15 * k) p.text(L - 8, Y(v) + 5, fixed(v, decimals), {class: 'soft', 'text-anchor': 'end'})
     }
+    const fine = Math.max(2, decimals + 1) // one more than the scale has
     p.path(`M${L} ${y1}V${y0}`, {class: 'axis'})
     for (const [x, anchor] of [[L - 8, 'end'], [W, 'end']]) p.text(x, 12 * k, 'V', {class: 'soft', 'text-anchor': anchor})
     let lowest = -99
@@ -95,8 +96,8 @@ export function mount(node, sheet) {
     // all by name, or all by mark
     const named = parts.every(part => part.style === null || part.name.length * 6.6 * k <= wide - 1)
     // their volts: two decimals, one, or written upward, as the room is
-    const longest = d => Math.max(...parts.map(part => signed(part.volts, d).length)) * 7.3 * k
-    const places = longest(2) <= wide ? 2 : 1, upward = longest(places) > wide + 3
+    const longest = d => Math.max(...parts.map(part => signed(part.volts, d).length)) * 7.6 * k
+    const places = longest(fine) <= wide ? fine : fine - 1, upward = longest(places) > wide + 5
     let sum = 0
     parts.forEach((part, i) => {
       const s = style(part.style), x = a[0] + 6 + i * wide
@@ -139,7 +140,7 @@ export function mount(node, sheet) {
     const red = shown.clipped !== 'no'
     p.put('rect', {x: 0, y: Y(shown.output) - 10 * k, width: L - 5, height: 20 * k, fill: 'var(--paper)'})
     p.path(`M${L} ${Y(shown.output)}l-6 -4v8z`, {class: 'tip'})
-    p.text(L - 8, Y(shown.output) + 5, fixed(shown.output, 2), {'text-anchor': 'end', class: red ? 'node red' : 'node'})
+    p.text(L - 8, Y(shown.output) + 5, within(shown.output, 6, fine), {'text-anchor': 'end', class: red ? 'node red' : 'node'})
     p.end()
 
     marks(shown, b, Y, k)
@@ -244,7 +245,7 @@ export function mount(node, sheet) {
       for (const limit of [beam.limit_high, beam.limit_low]) if (Y(limit) >= 0 && Y(limit) <= y1 + 4) p.path(`M${x - 18} ${Y(limit)}h36`, {class: 'limit'})
       p.put('circle', {cx: x, cy: clamp(beam.now), r: 4.2, class: 'now'})
       // the extremes: beside their ends, or beyond them; one number where the two are one
-      const write = v => fixed(v, n <= 2 ? 3 : 2)
+      const write = v => within(v, n <= 2 ? 8 : 7, n <= 2 ? 3 : 2)
       const floor = y => Math.max(y0 + 11 * k, Math.min(y1 - 2, y))
       const near = (v, out) => {
         const y = clamp(v), ys = [y + 5 * k, y + out * 9 * k, y - out * 7 * k + 5 * k, y + out * 16 * k, y + out * 26 * k].map(floor)
