@@ -1,6 +1,8 @@
 """For every test: nothing is kept in the data folder of whoever runs them, no setting of theirs reaches in, no clock decides."""
 
+import atexit
 import os
+import shutil
 import tempfile
 
 from hypothesis import HealthCheck, settings
@@ -8,6 +10,7 @@ from hypothesis import HealthCheck, settings
 for _name in [n for n in os.environ if n.startswith("SUMWRIGHT_")]:
     del os.environ[_name]
 os.environ["SUMWRIGHT_DATA"] = tempfile.mkdtemp(prefix="sumwright-test-")
+atexit.register(shutil.rmtree, os.environ["SUMWRIGHT_DATA"], ignore_errors=True)
 os.environ["XDG_CONFIG_HOME"] = os.environ["SUMWRIGHT_DATA"]
 
 # The same examples every time, and no clock: a busy machine must not fail a test, nor luck pass one.
