@@ -190,6 +190,12 @@ def test_a_list_of_ones_own_joins_and_a_bad_one_changes_nothing():
     with pytest.raises(InvalidDesign):
         fold.handle({"do": "own", "text": "rubbish"})
     assert fold.show()["more"]["own"] == 1
+    # the list given back is one that can be given; a name of the catalogue's now means the person's figures
+    text = fold.handle({"do": "csv", "what": "list"})["csv"].replace("mine", "TL072").replace(",", ";")
+    assert "1 op amp " in fold.handle({"do": "own", "text": text})["said"]
+    assert fold.show()["more"]["of"] == len(catalogue())
+    fold.handle({"do": "take", "name": "TL072"})
+    assert bench.design.op_amp == replace(mine, name="TL072")
 
 
 def test_who_may_not_change_the_sheet_may_not_take():

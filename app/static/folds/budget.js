@@ -130,6 +130,7 @@ export function mount(node, sheet) {
     const back = el('button', {class: 'act', text: 'Back to the table', onclick: () => sheet.fold({do: 'entry', name: head.textContent})})
     const card = el('div', {}, el('p', {class: 'heads'}, head, about, back), figures.node)
     return {wide: true, node: el('div', {class: 'op-amps'}, el('p', {class: 'heads'}, told, wide, el('label', {class: 'act'}, 'Your own list, CSV', file),
+      el('button', {class: 'act', text: 'A list to fill in', title: 'Your own op amps, or the one on the sheet, with every column that a list needs', onclick: () => sheet.fold({do: 'csv', what: 'list'})}),
       el('button', {class: 'act', text: 'CSV', 'aria-label': 'This table as CSV', onclick: () => sheet.fold({do: 'csv', what: 'op amps'})})), card, alike, scroll,
       el('p', {class: 'soft', text: 'Classes are invented and representative; types are from published or remembered figures. Check your data sheet before you build.'})),
     update(s) {
@@ -140,10 +141,14 @@ export function mount(node, sheet) {
       card.hidden = !m.entry
       if (m.entry) {
         setText(head, m.entry.name); setText(about, m.entry.note)
-        figures.set(m.entry.rows.map(([name, value, unit, source]) => [name, [value === null ? 'none' : ['°C', 'K/W', 'V/V', ''].includes(unit) ? `${+value.toPrecision(4)}${THIN}${unit}`.replace('-', '−') : engineering(value, unit), 'r'], source]))
+        figures.set(m.entry.rows.map(([name, value, unit, source]) => [name, [value === null ? 'none' : asPrinted(value, unit), 'r'], source]))
       }
     }}
   }
+
+  // a gain in decibels, a slew rate by the microsecond, as data sheets give them
+  const asPrinted = (value, unit) => unit === 'V/V' ? `${fixed(20 * Math.log10(value), 0)}${THIN}dB` : unit === 'V/s' ? `${+(value / 1e6).toPrecision(3)}${THIN}V/µs`
+    : ['°C', 'K/W', ''].includes(unit) ? `${+value.toPrecision(4)}${THIN}${unit}`.replace('-', '−').trimEnd() : engineering(value, unit)
 
   const heat = () => {
     const hot = table([{text: 'part'}, {text: 'most', class: 'r'}, {text: 'of its rating', class: 'r'}], 'Dissipation')
@@ -178,7 +183,10 @@ export function mount(node, sheet) {
       const m = s.more
       setText(told, m.held === null ? 'Hold a stage, change it, and see here and in the plots of Response what moved.' : `Held: ${m.held}`)
       t.node.hidden = m.held === null
-      t.set(m.rows.map(([title, unit, old, was, now, is, d]) => [title, [margin(old, unit), `r ${was}`], [margin(now, unit), `r ${is}`], [d === null ? '–' : margin(d, unit), 'r']]))
+      t.set(m.rows.map(([title, unit, old, was, now, is, d]) => {
+        const v = column([old, now], unit, {plus: true, most: unit === '°' ? 1 : unit === '°C' ? 0 : 3}), said = (x, status) => status === 'unknown' ? 'not given' : v.say(x)
+        return [title, [said(old, was), `r ${was}`], [said(now, is), `r ${is}`], [v.say(d), 'r']]
+      }))
     }}
   }
   const makers = {terms, tighten, 'op amps': opAmps, heat, compare}
@@ -212,5 +220,5 @@ export function mount(node, sheet) {
     setText(facts.yield, s.boards.yield === null ? 'type an accuracy' : `${percent(s.boards.yield, 2)} in ±${volts(s.accuracy)}`)
   }
 
-  return {update, heard(reply) { if (reply?.csv !== undefined) saveText(reply.csv, reply.name) }}
+  return {update, heard(reply) { if (reply?.csv !== undefined) saveText(reply.csv, reply.name); if (reply?.said) sheet.note(reply.said) }}
 }

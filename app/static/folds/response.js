@@ -14,7 +14,8 @@ export function mount(node, sheet) {
   node.className = 'response'
   const gain = new Figure(sheet, 'response', 'gain'), phase = new Figure(sheet, 'response', 'phase'), scope = new Figure(sheet, 'response', 'scope')
   const say = message => sheet.fold(message)
-  const key = el('span', {class: 'soft n'}, el('i', {class: 'keyline'}), 'open loop ', el('i', {class: 'keyline dashed'}), 'noise gain')
+  const old = el('span', {}, el('i', {class: 'keyline dotted'}), 'held')
+  const key = el('span', {class: 'soft n'}, el('i', {class: 'keyline'}), 'open loop ', el('i', {class: 'keyline dashed'}), 'noise gain ', old)
   const held = el('button', {class: 'act', text: 'Hold this stage', onclick: () => say({do: held.getAttribute('aria-pressed') === 'true' ? 'let go' : 'hold'}), 'aria-pressed': 'false'})
   const left = el('div', {},
     el('div', {class: 'heads'}, el('span', {class: 'cap', text: 'Gain, dB, over Hz'}), key, held, takers(sheet, () => gain, 'gain', 'Gain')),
@@ -81,6 +82,7 @@ export function mount(node, sheet) {
       const f = column(m.signals.map(r => r.bandwidth_3db), 'Hz'), q = column(m.at.map(x => x.frequency), 'Hz', {most: 1})
       const a = column(m.at.map(x => x.amplitude_error * 100), '%', {least: 3}), p = column(m.at.map(x => x.phase), '°', {least: 2})
       const c = m.cabled ? column(m.cabled.bandwidths, 'Hz') : null
+      t.node.classList.toggle('cabled', !!c)
       t.heads(['signal', f.head(`−3${THIN}dB`), 'peak,\u00a0dB', q.head('at'), 'error,\u00a0%', 'phase,\u00a0°', ...(c ? [c.head('with cables')] : [])])
       t.set(m.signals.map((r, i) => {
         const x = m.at[i], moves = x.frequency > 0
@@ -154,13 +156,15 @@ export function mount(node, sheet) {
     scope.fit(narrow, tall, {left: 56, bottom: 26, right: 12, top: 6})
     kinds.set(s.kind); pages.set(s.page)
     setAttr(held, 'aria-pressed', s.held !== null ? 'true' : 'false')
+    old.hidden = s.held === null
     setText(held, s.held !== null ? 'Let the held stage go' : 'Hold this stage')
     length.set(s.duration === null ? '' : engineering(s.duration, 's'))
     const q = s.scope
     if (s.problem || !q) setText(told, s.problem)
     else {
       const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'too many changes to follow (it oscillates, or is driven too hard); record cut short'].filter(Boolean).join(', ')
-      setText(caption, s.kind === 'step' ? `of ${q.size > 0 ? '+' : ''}${engineering(q.size, 'V')} on ${q.signal}; V, ${q.unit}; ideal dotted` : `V, ${q.unit}; ideal dotted`)
+      const grey = s.held !== null ? ', held grey' : ''
+      setText(caption, s.kind === 'step' ? `of ${q.size > 0 ? '+' : ''}${engineering(q.size, 'V')} on ${q.signal}; V, ${q.unit}; ideal dotted${grey}` : `V, ${q.unit}; ideal dotted${grey}`)
       const time = (band, t) => t === null ? `${band} not in this record` : `${band} in ${engineering(t, 's')}`
       const settling = () => `settles to ${[[`1${THIN}%`, '0.01'], [`0.1${THIN}%`, '0.001'], [`0.01${THIN}%`, '0.0001']].map(([band, k]) => time(band, q.settled[k])).join(', ')}`
       setText(told, q.unstable ? `unstable: it oscillates${busy ? `; ${busy}` : ''}. Gains, bandwidths and noise are those of the equations, not of a stage that works.`
@@ -176,5 +180,5 @@ export function mount(node, sheet) {
     now.update(s)
   }
 
-  return {update, heard(reply) { if (reply?.csv !== undefined) saveText(reply.csv, reply.name) }}
+  return {update, heard(reply) { if (reply?.csv !== undefined) saveText(reply.csv, reply.name); if (reply?.said) sheet.note(reply.said) }}
 }

@@ -26,7 +26,9 @@ def read_wave(text: str, *, repeat: bool = False) -> Wave:
         mark = next((m for m in (";", "\t", ",") if m in line), ",")
         fields = [f.strip() for f in line.split(mark)]
         if len(fields) != 2:
-            raise InvalidQuantity(f"line {number} has {len(fields)} fields; a wave has two, time and volts.")
+            raise InvalidQuantity(
+                f"line {number} has {len(fields)} field{'s' if len(fields) > 1 else ''}; a wave has two, time in seconds and volts."
+            )
         try:
             t, v = parse_quantity(fields[0], "s"), parse_quantity(fields[1], "V")
         except InvalidQuantity as error:

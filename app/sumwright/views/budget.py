@@ -18,7 +18,7 @@ from sumwright.engine import abuse, boards, catalogue, tighten, which_op_amp
 from sumwright.engine.budget import POINTS, sensitivities
 from sumwright.engine.budget import Budget as ErrorBudget
 from sumwright.errors import InvalidQuantity, SumwrightError
-from sumwright.files.op_amps import read_op_amps
+from sumwright.files.op_amps import read_op_amps, write_op_amps
 
 from .figures import move, paint, put, ruled_figure
 from .fold import Context, Fold
@@ -34,12 +34,18 @@ PAGES = ("terms", "tighten", "op amps", "heat", "compare")
 
 def try_op_amps(design, own):
     """A job: every op amp of the catalogue and of the person's own list tried in the stage."""
-    entries = (*catalogue.catalogue(), *own)
+    entries = listed(own)
     rows = []
     for trial in which_op_amp.try_all(design, entries):
         rows.append(trial)
         yield rows
     return rows
+
+
+def listed(own) -> tuple[catalogue.Entry, ...]:
+    """The catalogue with the person's own op amps; their figures stand for one of the same name."""
+    taken = {e.name.casefold() for e in own}
+    return (*(e for e in catalogue.catalogue() if e.name.casefold() not in taken), *own)
 
 
 class Budget(Fold):
@@ -201,16 +207,16 @@ class Budget(Fold):
         rows = which_op_amp.ranked(self._trials[1])
         keys = list(dict.fromkeys(k for t in rows for k in t.checks))
         titles = {k: t.checks[k][0] for t in rows for k in t.checks}
-        every = len(catalogue.catalogue()) + len(self._own)
+        every = len(listed(self._own))
         return {
             "rows": rows, "columns": [[k, titles[k]] for k in keys], "now": analysis.design.op_amp.name,
             "tried": len(rows), "of": every, "own": len(self._own),
-            "sources": {e.name: _sources(e) for e in (*catalogue.catalogue(), *self._own)}, "entry": self._figures(),
+            "sources": {e.name: _sources(e) for e in listed(self._own)}, "entry": self._figures(),
         }  # fmt: skip
 
     def _figures(self) -> dict[str, Any] | None:
         """Every figure of the op amp looked at, with its source."""
-        entry = catalogue.find(self._entry, (*catalogue.catalogue(), *self._own)) if self._entry else None
+        entry = catalogue.find(self._entry, listed(self._own)) if self._entry else None
         if entry is None:
             return None
         rows = [
@@ -306,6 +312,8 @@ class Budget(Fold):
         elif do == "own":
             self._own = read_op_amps(fields.text(message, "text", 1_000_000))
             self.page = "op amps"
+            count = len(self._own)
+            return {"said": f"{count} op amp{'s' if count != 1 else ''} of your own in the table."}
         elif do == "tolerance":
             self._all_resistors(fields.number(message, "tolerance", 1e-6, 0.5))
         elif do == "hold":
@@ -313,11 +321,11 @@ class Budget(Fold):
         elif do == "let go":
             let_go(self.context)
         elif do == "csv":
-            return self._csv(fields.one_of(message, "what", ("terms", "boards", "op amps")))
+            return self._csv(fields.one_of(message, "what", ("terms", "boards", "op amps", "list")))
         return None
 
     def _take(self, name: str) -> None:
-        entry = catalogue.find(name, (*catalogue.catalogue(), *self._own))
+        entry = catalogue.find(name, listed(self._own))
         if entry is None:
             raise InvalidQuantity(f"{name!r} is in neither list of op amps.")
         self.context.may("figure")
@@ -335,6 +343,8 @@ class Budget(Fold):
         out = io.StringIO()
         w = csv.writer(out, lineterminator="\n")
         analysis = self.workbench.analysis
+        if what == "list":  # the person's own, or the op amp on the sheet as a line to copy
+            return {"csv": write_op_amps(self._own or (analysis.design.op_amp,)), "name": "my-op-amps.csv"}
         if what == "terms":
             budget = analysis.errors[self.point]
             w.writerow(

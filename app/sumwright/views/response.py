@@ -154,8 +154,8 @@ class Response(Fold):
             row = [name, colour(bench.theme, style), list(dash(style)), 3.0 if name == bench.on else 1.6]
             gain.append([f, _db(ac.gains[i][inside]), *row])
             phase.append([f, _phase(ac.gains[i], ac.signals[i].dc_gain)[inside], *row])
-        _fill(self._gain, gain)
-        _fill(self._phase, phase)
+        _fill(self._gain, [_from_left(row) for row in gain])
+        _fill(self._phase, [_from_left(row) for row in phase])
         highest = 20 * math.ceil(20 * math.log10(analysis.design.op_amp.open_loop_gain) / 20)
         move(self._f, LOWEST, float(top))
         move(self._db, -40.0, float(min(highest, 160)))
@@ -322,8 +322,9 @@ class Response(Fold):
             self._set_wave(message)
         elif do == "wave file":
             name = self._signal(message)
-            self.waves[name] = read_wave(fields.text(message, "text", 2_000_000))
+            self.waves[name] = wave = read_wave(fields.text(message, "text", 2_000_000))
             self.kind = "waves"
+            return {"said": f"{name} follows {len(wave.times)} points, to {format_quantity(wave.times[-1], 's')}."}
         elif do == "duration":
             typed = fields.text(message, "text", 40).strip()
             length = parse_quantity(typed, "s", "record length") if typed else None
@@ -413,6 +414,14 @@ def _within(text: str, unit: str, name: str, low: float, high: float) -> float:
     if not low <= value <= high:
         raise InvalidQuantity(f"{name} must be from {low:g} to {high:g} {unit}; it is {value:g}.")
     return value
+
+
+def _from_left(row):
+    """A line drawn from the left end on: the search for poles may begin above it, where all is flat still."""
+    f, y, *rest = row
+    if len(f) and f[0] > LOWEST:
+        f, y = np.insert(f, 0, np.float32(LOWEST)), np.insert(y, 0, y[0])
+    return [f, y, *rest]
 
 
 def _db(h) -> np.ndarray:
