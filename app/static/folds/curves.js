@@ -96,7 +96,7 @@ export function mount(node, sheet) {
     // all by name, or all by mark
     const named = parts.every(part => part.style === null || part.name.length * 6.6 * k <= wide - 1)
     // their volts: two decimals, one, or written upward, as the room is
-    const longest = d => Math.max(...parts.map(part => signed(part.volts, d).length)) * 7.6 * k
+    const longest = d => Math.max(...parts.map(part => signed(part.volts, d).length)) * 7.2 * k
     const places = longest(fine) <= wide ? fine : fine - 1, upward = longest(places) > wide + 5
     let sum = 0
     parts.forEach((part, i) => {
@@ -130,7 +130,7 @@ export function mount(node, sheet) {
       p.path(`M${x} ${y1}v5`, {class: 'axis'})
       p.text(x, y1 + 18 * k, fixed(n * step, digits), {class: 'soft', 'text-anchor': 'middle'})
     }
-    p.text(b[1] + 12 * k, y1 + 18 * k, 'V', {class: 'soft'})
+    p.text(b[1] + (fixed(x1, digits).length * 4 + 7) * k, y1 + 18 * k, 'V', {class: 'soft'})
 
     // headroom
     p.text(c[0], 12 * k, narrow ? 'Headroom' : 'Headroom, all corners', {class: 'cap'})
@@ -228,7 +228,7 @@ export function mount(node, sheet) {
 
   function beams(p, shown, [c0, c1], Y, clamp, y0, y1, k) {
     const list = shown.beams, n = list.length, step = (c1 - c0) / n
-    const {block, put} = placer([...shown.lines.map(l => Y(l.value)), Y(shown.output)], k)
+    const {block, put} = placer(shown.lines.map(l => Y(l.value)), k)
     const at = i => c0 + step * (i + (n > 2 ? .36 : i === 0 ? .3 : .42))
     list.forEach((beam, i) => block(at(i) - 8, clamp(beam.high) - 2, at(i) + 8, clamp(beam.low) + 2))
     for (const [i, beam] of list.entries()) for (const y of [Y(beam.limit_high), Y(beam.limit_low)]) block(at(i) - 19, y - 1, at(i) + 19, y + 1)
