@@ -107,7 +107,7 @@ export function mount(node, sheet) {
     const store = keyed(body, keys, key => key === 'now' ? present : makeRow(key))
     const every = [...(shown.now ? [shown.now] : []), ...shown.rows]
     scale = {
-      error: column(every.map(r => r.error * 100), '%', {low: 3, most: 5}), offset: column(every.map(r => r.offset === null ? null : r.offset * 100), '%', {plus: true, most: 4}),
+      error: column(every.map(r => r.error * 100), '%', {low: 3, most: 4}), offset: column(every.map(r => r.offset === null ? null : r.offset * 100), '%', {plus: true, most: 4}),
       noise: column(every.map(r => r.noise), 'V/√Hz', {most: 1}), sees: column(every.map(r => r.sees), 'Ω', {most: 1}),
     }
     setText(head.children[7], scale.noise.head('noise')); setText(head.children[8], scale.sees.head('sources see'))

@@ -18,6 +18,7 @@ import numpy as np
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import ARRANGEMENTS, REFERENCE, Cell, Design, Leg, cell_name
 from sumwright.errors import CannotRealise, InvalidDesign
+from sumwright.quantity import format_quantity
 
 # Sums closer to balance than this need no ground leg: 0.1 taken ten times is not quite 1 in binary.
 BALANCE = 1e-12
@@ -211,6 +212,11 @@ def _leg(design: Design, w: Wanted, feedback: float) -> float:
     return resistance
 
 
+def ohms(value: float) -> str:
+    """A resistance in a sentence: `1 MΩ`, `4.75 kΩ`."""
+    return format_quantity(float(value), "Ω", 4, trim=True)
+
+
 def out_of_range(design: Design, cells: tuple[Cell, ...]) -> tuple[str, ...]:
     """One sentence for each resistor outside the design's least and most; empty if all can be bought."""
     kind = design.resistor
@@ -219,8 +225,8 @@ def out_of_range(design: Design, cells: tuple[Cell, ...]) -> tuple[str, ...]:
     def look(name: str, ohm: float | None) -> None:
         if ohm is None or ohm == 0 or kind.least * (1 - 1e-9) <= ohm <= kind.most * (1 + 1e-9):
             return
-        side = f"below the least, {kind.least:g} ohm" if ohm < kind.least else f"above the most, {kind.most:g} ohm"
-        said.append(f"The {name} would be {ohm:.6g} ohm, {side}.")
+        side = f"below the least, {ohms(kind.least)}" if ohm < kind.least else f"above the most, {ohms(kind.most)}"
+        said.append(f"The {name} would be {ohms(ohm)}, {side}.")
 
     for k, cell in enumerate(cells):
         where = f", {cell_name(k)}" if len(cells) > 1 else ""

@@ -65,7 +65,7 @@ def test_refusals_name_the_reason():
 
 def test_a_range_too_wide_to_search_is_narrowed_and_said():
     result = realise(design_for([-1.0, -2.0], series="E192", least=1e-6, most=1e12), arrangement="inverting")
-    assert "The design allows 1e-06 to 1e+12 ohm; searched were" in result.notes[0]
+    assert "The design allows 1\u202fµΩ to 1\u202fTΩ; searched were" in result.notes[0]
     assert not result.proved["inverting"] and result.choices[0].worst_weight_error < 1e-3
 
 

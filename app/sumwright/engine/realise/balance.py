@@ -14,6 +14,7 @@ from typing import NamedTuple
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import REFERENCE, Design, cell_name
 from sumwright.errors import InvalidDesign
+from sumwright.quantity import format_quantity
 
 CANCELLED = 0.5  # an offset current past this share of the bias current: the part cancels its own bias
 WORTH = 0.1  # below this share of the offset-voltage error the saving does not show
@@ -86,7 +87,7 @@ def _cell(design: Design, k: int, cell, series) -> Balance:
     if bias_error < WORTH * offset_error:
         return result(
             None, "pointless",
-            f"Bias current makes {bias_error * 1e6:.3g} µV beside {offset_error * 1e6:.3g} µV of offset voltage; balancing would not show, "
+            f"Bias current makes {_volts(bias_error)} beside {_volts(offset_error)} of offset voltage; balancing would not show, "
             "as with FET inputs.",
         )  # fmt: skip
     if op_amp.offset_current >= CANCELLED * op_amp.bias_current:
@@ -105,9 +106,13 @@ def _cell(design: Design, k: int, cell, series) -> Balance:
         return result(None, "pointless", "A balancing resistor would save nothing here.")
     return result(
         value, "worth it",
-        f"{value:g} ohm from the non-inverting input to ground brings the currents' error from {(bias_error + current_error) * 1e3:.3g} mV to "
-        f"{balanced * 1e3:.3g} mV; bypass it with a capacitor against its noise.",
+        f"{format_quantity(value, 'Ω', 4, trim=True)} from the non-inverting input to ground brings the currents' error from "
+        f"{_volts(bias_error + current_error)} to {_volts(balanced)}; bypass it with a capacitor against its noise.",
     )  # fmt: skip
+
+
+def _volts(value: float) -> str:
+    return format_quantity(value, "V", 3)
 
 
 def _nearest(design: Design, ohm: float) -> float | None:

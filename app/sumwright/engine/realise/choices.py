@@ -17,7 +17,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from sumwright.engine.arrangement import USUAL_LEG, able, check_able, ideal_weights, wanted_weights, weight_errors
+from sumwright.engine.arrangement import USUAL_LEG, able, check_able, ideal_weights, ohms, wanted_weights, weight_errors
 from sumwright.engine.realise.best_set import Outcome, Watch, search
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.realise.single_supply import biased_cells, is_single
@@ -303,7 +303,7 @@ def realise(
             values = np.sort(values[usual])
             narrowed = True
             notes.append(
-                f"The design allows {kind.least:g} to {kind.most:g} ohm; searched were {values[0]:g} to {values[-1]:g} ohm. Narrow the range for a proof."
+                f"The design allows {ohms(kind.least)} to {ohms(kind.most)}; searched were {ohms(values[0])} to {ohms(values[-1])}. Narrow the range for a proof."
             )
     else:
         from sumwright.engine.realise.drawer import usable

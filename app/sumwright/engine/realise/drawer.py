@@ -9,12 +9,13 @@ from typing import NamedTuple
 
 import numpy as np
 
-from sumwright.engine.arrangement import exact_cells, weight_errors
+from sumwright.engine.arrangement import exact_cells, ohms, weight_errors
 from sumwright.engine.realise.best_set import Outcome, Pool, Task, _fitted, nearest_value, search
 from sumwright.engine.realise.legs import Legs, error_at
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import Cell, Design, Leg, cell_name
 from sumwright.errors import CannotRealise
+from sumwright.quantity import format_percent
 
 MOST_VALUES = 60  # distinct values up to which every trio of scaling resistors is looked at
 MOST_TRIED = 20_000  # scales whose legs are dealt out one by one
@@ -67,7 +68,7 @@ def usable(drawer: Drawer, least: float, most: float) -> tuple[np.ndarray, list[
     left = len(counts) - len(inside)
     said = (
         [
-            f"{left} value{'s' if left > 1 else ''} of the drawer outside {least:g} to {most:g} ohm {'are' if left > 1 else 'is'} left out."
+            f"{left} value{'s' if left > 1 else ''} of the drawer outside {ohms(least)} to {ohms(most)} {'are' if left > 1 else 'is'} left out."
         ]
         if left
         else []
@@ -410,7 +411,7 @@ def to_buy(design: Design, result, drawer: Drawer, goal: float) -> list[Purchase
     options += [c.cells for c in bought.choices if c.worst_weight_error <= goal]
     if not options:
         raise CannotRealise(
-            f"No set from {kind.series} within {kind.least:g} to {kind.most:g} ohm errs less than {bought.choices[0].worst_weight_error:.3g}; {goal:g} was wanted."
+            f"No set from {kind.series} within {ohms(kind.least)} to {ohms(kind.most)} errs less than {format_percent(bought.choices[0].worst_weight_error, 3)}; {format_percent(goal, 3)} was wanted."
         )
 
     def missing(cells):
