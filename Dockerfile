@@ -17,8 +17,7 @@ RUN useradd --create-home --uid 10001 sumwright \
 WORKDIR /srv
 COPY pyproject.toml README.md ./
 COPY app ./app
-# Editable, since the served folder stands beside the package.
-RUN pip install --no-cache-dir -e '.[postgres]'
+RUN pip install --no-cache-dir '.[postgres]'
 
 USER sumwright
 ENV PYTHONUNBUFFERED=1 \

@@ -21,10 +21,14 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--port", metavar="PORT", help="port to listen on (5006)")
     parser.add_argument("--processes", metavar="N", help="server processes (1)")
     parser.add_argument("--show", action="store_true", help="open the sheet in this machine's browser")
+    parser.add_argument("--folder", action="store_true", help="print the folder that panel serve would take, then end")
     parser.add_argument("--check", action="store_true", help="check the settings and the store, then end")
 
 
 def run(args: argparse.Namespace) -> int:
+    if args.folder:
+        print(app_folder())
+        return 0
     ours = read_settings()
     if args.address is not None:
         ours = replace(ours, address=args.address)
@@ -39,13 +43,13 @@ def run(args: argparse.Namespace) -> int:
 
 
 def app_folder() -> Path:
-    """The folder that is served: beside the package in a checkout, or `app` where the command is run."""
+    """The folder that is served: in a checkout `app` itself, else what the package holds under the same name."""
     package = Path(sumwright.__file__).parent
-    for folder in (package.parent, Path.cwd() / "app"):
+    for folder in (package.parent, package / "app"):  # in a checkout the second only links to the first
         if (folder / "main.py").is_file() and (folder / "static").is_dir():
             return folder
     raise SumwrightError(
-        f"The served folder (main.py and static) is neither {package.parent} nor {Path.cwd() / 'app'}; serve from a checkout."
+        f"The page (main.py and static) is neither in {package.parent} nor in {package / 'app'}; install Sumwright again."
     )
 
 
