@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from sumwright.engine.nodes import Network, solve, solve_clipped
+from sumwright.engine.clipping import solve_clipped
+from sumwright.engine.nodes import Network, solve
 from sumwright.engine.stage import Load, replace
 from support.stages import dense_solution, one_cell, random_chain
 

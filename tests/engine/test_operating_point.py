@@ -6,9 +6,10 @@ import numpy as np
 import pytest
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.cable_out import cable_out
+from sumwright.engine.clipping import solve_clipped
 from sumwright.engine.curves import transfer_curves
 from sumwright.engine.headroom import headroom
-from sumwright.engine.nodes import Network, solve, solve_clipped
+from sumwright.engine.nodes import Network, solve
 from sumwright.engine.operating_point import operating_point
 from sumwright.engine.stage import Leg, replace
 from support.stages import one_cell, random_chain

@@ -11,7 +11,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from . import nodes
+from . import clipping
 from .budget import network_of
 
 JUNCTION_DROP = 0.6  # V, from an input to a rail: common practice
@@ -99,7 +99,7 @@ def overdrive(stage, factor: float = 2.0) -> tuple[Overdrive, ...]:
     net = network_of(stage)
     n = net.signal_count
     names = net.design.signal_names
-    calm = nodes.solve_clipped(net, net.values)
+    calm = clipping.solve_clipped(net, net.values)
     quiet = _source_currents(net, net.values, calm.solution)
     out = []
     for i in range(n):
@@ -108,7 +108,7 @@ def overdrive(stage, factor: float = 2.0) -> tuple[Overdrive, ...]:
         for v in (net.highs[i] + (factor - 1) * span, net.lows[i] - (factor - 1) * span):
             x = net.values.copy()
             x[i] = v
-            found = nodes.solve_clipped(net, x)
+            found = clipping.solve_clipped(net, x)
             change = np.abs(_source_currents(net, x, found.solution) - quiet)
             change[i] = 0.0
             moved = np.abs(

@@ -17,8 +17,9 @@ from typing import NamedTuple
 
 import numpy as np
 
+from .clipping import solve_clipped
 from .heat import FULL_POWER_TO, NO_POWER_AT, resistor_rating
-from .nodes import Network, nominal_limits, solve_clipped
+from .nodes import Network, nominal_limits
 from .stage import replace
 
 DC_LIMIT = 60.0  # V

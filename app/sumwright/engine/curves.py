@@ -12,6 +12,7 @@ from typing import NamedTuple
 
 import numpy as np
 
+from .clipping import solve_clipped, within_limits
 from .nodes import (
     CURRENT,
     LINEAR,
@@ -23,8 +24,6 @@ from .nodes import (
     _of_cell,
     nominal_limits,
     solve,
-    solve_clipped,
-    within_limits,
 )  # fmt: skip
 from .operating_point import influence
 from .stage import Design

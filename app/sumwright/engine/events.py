@@ -17,7 +17,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from . import nodes
+from . import clipping, nodes
 from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, kept_of, state_space
 
 MOST_EVENTS = 1500
@@ -146,7 +146,7 @@ class Course:
 
     def rest(self, volts):
         """State of the stage at rest with constant sources: modes, node voltages, first states."""
-        found = nodes.solve_clipped(self.net, volts, limits=self.limits)
+        found = clipping.solve_clipped(self.net, volts, limits=self.limits)
         sol = found.solution
         modes = tuple(int(np.sign(s)) * _FROM_STATIC[abs(int(s))] for s in found.state)
         y = np.stack([sol.minus[:, 0], sol.plus[:, 0], sol.output[:, 0]], axis=-1).ravel()

@@ -13,7 +13,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from . import nodes
+from . import clipping, nodes
 from .budget import network_of
 from .stage import Design
 
@@ -131,7 +131,7 @@ def _output_stage(net, k, sol, high, low):
             up = output[:n] >= 0
             ends = [np.append(np.where(up == side, net.highs, net.lows), net.values[n:]) for side in (True, False)]
             limits = nodes.Limits(top, bottom, drop, amp.output_current)
-            held = nodes.solve_clipped(net, np.array(ends), limits=limits).solution
+            held = clipping.solve_clipped(net, np.array(ends), limits=limits).solution
             polygon = np.stack([held.current[:, k, 0], held.output[:, k, 0]], axis=-1)
             break
 

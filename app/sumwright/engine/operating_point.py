@@ -6,7 +6,8 @@ from typing import NamedTuple
 
 import numpy as np
 
-from .nodes import Limits, Network, Solution, nominal_limits, solve, solve_clipped, within_limits
+from .clipping import solve_clipped, within_limits
+from .nodes import Limits, Network, Solution, nominal_limits, solve
 from .stage import Design
 
 CLIP_WORDS = ("no", "high", "low")  # by the sign of a state: 0, 1, -1

@@ -23,6 +23,7 @@ import numpy as np
 
 from . import nodes
 from .budget import network_of
+from .clipping import solve_clipped
 from .events import FRACTIONS, Course
 from .statespace import poles
 from .waves import Wave, common_period, pieces, sample
@@ -149,7 +150,7 @@ def step(stage, signal: str, size: float, *, start: float | None = None, duratio
     low, high = net.values.copy(), net.values.copy()
     low[i], high[i] = at, at + size
     limits = nodes.nominal_limits(net.design)
-    both = nodes.solve_clipped(net, np.stack([low, high]), limits=limits).solution.output
+    both = solve_clipped(net, np.stack([low, high]), limits=limits).solution.output
     initial, final = float(both[0, -1, 0]), float(both[1, -1, 0])
     change = final - initial
     unlimited = nodes.solve(net, np.stack([low, high])[..., None]).output
