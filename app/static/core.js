@@ -83,7 +83,7 @@ function draw(resized) {
   if (document.documentElement.dataset.theme !== theme) document.documentElement.dataset.theme = theme
   title.set(state.title)
   if (document.title !== `${state.title} · Sumwright`) document.title = `${state.title} · Sumwright`
-  setText(invented, state.invented ? 'an invented demonstration' : '')
+  invented.hidden = !state.invented
   for (const part of PARTS) part.update?.(state, resized)
   const fold = folds.get(state.open)
   const shown = state.shown?.[state.open]
