@@ -19,12 +19,13 @@ from sumwright.errors import NotAllowed, SumwrightError
 from sumwright.files.design import design_document, read_design
 from sumwright.files.results import to_json
 from sumwright.model import demo
+from sumwright.model.bench_run import as_text
 from sumwright.model.edits import FOLLOW
 from sumwright.model.history import Snapshot as Step
 from sumwright.model.workbench import SYMBOLS, Workbench
 from sumwright.notebook.autosave import Autosave, Mark, Snapshot
 from sumwright.notebook.compare import key_results
-from sumwright.notebook.desk import Desk
+from sumwright.notebook.desk import SET_ASIDE, Desk
 from sumwright.notebook.settings import settings
 from sumwright.notebook.shelf import the_store
 from sumwright.notebook.sign_in import who_for
@@ -276,8 +277,11 @@ class Sitting:
         autosave = self.autosave
         if autosave is None or autosave.mark.theirs is None:
             return
+        mine = self.workbench.readings
         if self.show(autosave.mark.theirs):
             autosave.take_theirs()
+            if mine.get("taken") and mine != self.workbench.readings:
+                self.workbench.lay_aside(mine)
 
     def keep_mine(self) -> None:
         """After a conflict: theirs is set aside in the log as a frozen design, then mine is saved. In a thread."""
@@ -285,7 +289,19 @@ class Sitting:
         if autosave is not None and (theirs := autosave.mark.theirs) is not None:
             self.desk.require("save")
             self.desk.set_aside(theirs)
+            self._set_readings_aside(theirs)
             autosave.keep_mine()
+
+    def _set_readings_aside(self, theirs: Sheet) -> None:
+        """What they read on the bench, into the log as well, unless it is what stands here."""
+        held = readings_of(theirs.state)
+        if held.get("taken") and held != self.workbench.readings:
+            title = f"{SET_ASIDE}: readings as {theirs.saved_by} left them"
+            of_output, others = as_text(held)
+            if of_output:
+                self.desk.append(theirs.notebook, "readings", {"title": title, "csv": of_output}, sheet=theirs.number)
+            if others:
+                self.desk.append(theirs.notebook, "note", {"text": f"{title}\n{others}"}, sheet=theirs.number)
 
     # ------------------------------------------------------------ contents
 

@@ -201,3 +201,55 @@ def test_any_value_anywhere_in_a_stored_sheet_is_taken_or_refused(data):
 @given(st.dictionaries(st.sampled_from(["past", "future", "x"]), _ANY | st.lists(st.text(max_size=20), max_size=4)))
 def test_any_history_is_read_or_left_out(held):
     assert read_history(held) == ([], [])
+
+
+def test_readings_of_either_side_outlive_a_conflict(desk):
+    """Kept mine: theirs go to the log, those of the output as a file and the others as a note. Taken theirs: mine are one undo away."""
+
+    def taken(probe, unit, value):
+        return {
+            "apply": {"north": 1.0},
+            "probe": probe,
+            "unit": unit,
+            "text": f"{value}",
+            "value": value,
+            "uncertainty": None,
+        }
+
+    first = Sitting(desk)
+    page = page_of(first)
+    moved(first, 1.0)
+    second = Sitting(desk, first.key, 1)
+    other = page_of(second)
+    theirs = {
+        "meter": "0.05 % + 0.5 mV",
+        "taken": [taken("output", "V", 1.25), taken("current into the + rail", "A", 0.002)],
+        "asked": [],
+    }
+    mine = {**theirs, "taken": [taken("output", "V", 3.5)]}
+    first.workbench.readings = theirs
+    assert first.autosave.wait(10)
+
+    def conflict(sitting):
+        for _ in range(200):
+            if sitting.autosave.mark.theirs is not None:
+                return
+            threading.Event().wait(0.05)
+        raise AssertionError("no conflict")
+
+    second.workbench.readings = mine
+    conflict(second)
+    second.keep_mine()
+    assert second.autosave.wait(10)
+    by_kind = {e.kind: e.body for e in desk.entries(first.key)}
+    assert by_kind["readings"]["csv"] == "north,output\n1,1.25\n"
+    assert "current into the + rail: 0.002" in by_kind["note"]["text"]
+    assert desk.sheet(first.key, 1).state["readings"] == mine
+    first.workbench.readings = {**theirs, "taken": [taken("output", "V", 9.0)]}
+    conflict(first)
+    first.take_theirs()
+    assert first.workbench.readings == mine
+    first.workbench.undo()
+    assert [t["value"] for t in first.workbench.readings["taken"]] == [3.5, 9.0]  # mine last: it counts
+    page.close()
+    other.close()

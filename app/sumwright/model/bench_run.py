@@ -263,6 +263,29 @@ class BenchRun:
         return count
 
 
+def as_text(document: dict[str, Any]) -> tuple[str, str]:
+    """Readings that a sheet holds, for the log: those of the output as a readings file, the others a line each.
+
+    Raises
+    ------
+    InvalidReadings
+        If `document` holds no readings.
+    """
+    held = [_taken(t) for t in document.get("taken", ()) or ()]
+    ours = [t for t in held if t.probe == OUTPUT_PROBE and t.unit == "V"]
+    names = list(dict.fromkeys(n for t in ours for n, _ in t.apply))
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    stated = any(t.uncertainty is not None for t in ours)
+    writer.writerow([*names, "output", *(["uncertainty"] if stated else [])])
+    for t in ours:
+        volts = dict(t.apply)
+        u = Meter().standard_uncertainty(t.value) if t.uncertainty is None else t.uncertainty
+        writer.writerow([f"{x:.9g}" for x in (*(volts.get(n, 0.0) for n in names), t.value, *([u] if stated else []))])
+    others = [t for t in held if t not in ours]
+    return out.getvalue() if ours else "", "\n".join(f"{t.probe}: {t.text} ({t.value:.6g} {t.unit})" for t in others)
+
+
 def _plain(t: Taken) -> dict[str, Any]:
     return {
         "apply": dict(t.apply), "probe": t.probe, "unit": t.unit, "text": t.text, "value": t.value, "uncertainty": t.uncertainty,

@@ -63,6 +63,7 @@ class Workbench(param.Parameterized):
     def __init__(self, design: Design, **params: Any):
         self.history = History()
         self._cleared: tuple[Snapshot, dict[str, Any]] | None = None  # readings taken away, and what the sheet was then
+        self._first = False  # whether those come before what was read since
         self._styles: dict[str, int] = {}
         design = edits.realised(design)
         choices = {name: getattr(design, name) for name in _DESIGN_FIELDS}
@@ -146,8 +147,12 @@ class Workbench(param.Parameterized):
 
     def clear_readings(self, left: dict[str, Any]) -> None:
         """Take the bench's readings away, leaving `left`; the next undo gives them back."""
-        self._cleared = (self.snapshot, self.readings)
+        self._cleared, self._first = (self.snapshot, self.readings), False
         self.readings = left
+
+    def lay_aside(self, readings: dict[str, Any]) -> None:
+        """Readings that another person's version replaced: the next undo brings them back, before theirs where both read a step."""
+        self._cleared, self._first = (self.snapshot, readings), True
 
     @property
     def cleared(self) -> dict[str, Any]:
@@ -155,9 +160,12 @@ class Workbench(param.Parameterized):
         return self._cleared[1] if self._cleared else {}
 
     def bring_back_readings(self) -> None:
-        """The readings that were taken away, beside those taken since: where both read the same step, the newer one."""
+        """The readings that were taken away, beside those taken since: where both read the same step, the later in the list counts."""
         gone, self._cleared = self.cleared, None
-        sides = {k: [*gone.get(k, ()), *self.readings.get(k, ())] for k in ("taken", "asked")}
+        sides = {}
+        for k in ("taken", "asked"):
+            both = [gone.get(k, ()), self.readings.get(k, ())]
+            sides[k] = [t for side in (reversed(both) if self._first else both) for t in side]
         self.readings = {**gone, **self.readings, **sides}
 
     @property
