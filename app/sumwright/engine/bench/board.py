@@ -21,7 +21,7 @@ from dataclasses import dataclass, fields, replace
 from typing import NamedTuple
 
 import numpy as np
-from scipy.special import ndtr
+from scipy.special import log_ndtr, ndtr
 
 from ..stage import REFERENCE, Design, cell_name
 
@@ -37,6 +37,11 @@ FLOOR_VOLTS = 1e-4
 FLOOR_SHARE = 3e-5
 TORN = 0.3  # below this chance of a reading between the limits the output is one or the other
 BEYOND = 100.0  # V: a limit that far off is none
+EITHER = 2.0
+SLACK, CLIP_SHARE = (
+    3.0,
+    1e-3,
+)  # standard deviations, and share of a reading, before one counts as beyond the unlimited output
 NORMAL = np.nan  # `stuck` of an amplifier that works
 
 
@@ -56,7 +61,7 @@ class Boards:
     ground_ohm: np.ndarray  # (B, K, 2) inf = not fitted
     feedback_ohm: np.ndarray  # (B, K) inf = open
     swapped: np.ndarray  # (B, K) bool: the op amp's inputs exchanged
-    latch: np.ndarray  # (B,) with inputs exchanged: where the output came from, -1, 0 or +1
+    latch: np.ndarray  # (B,) with inputs exchanged: where the output came from, -1, 0 or +1, or EITHER way each time
     stuck: np.ndarray  # (B, K) V, NORMAL where the amplifier works
     stuck_spread: np.ndarray  # (B, K) V
     stuck_ohm: np.ndarray  # (B, K) in series with what a stuck output holds
@@ -359,6 +364,8 @@ class Bench:
         mean = mean + mid
         floor = FLOOR_VOLTS**2 + (FLOOR_SHARE * np.abs(mean)) ** 2
         own = own + floor + (p_high + p_low) * LIMIT_FLOOR**2
+        # so does an amplifier that died at a rail: it follows that rail
+        own = own + np.where(np.abs(np.nan_to_num(boards.stuck[:, -1:])) > 0, LIMIT_FLOOR**2, 0.0)
         columns = step * p_in[:, None, :]
         columns += (highs[:, 1:] - highs[:, :1]) * p_high[:, None, :]
         columns += (lows[:, 1:] - lows[:, :1]) * p_low[:, None, :]
@@ -375,7 +382,36 @@ class Bench:
                 columns = np.where(down[:, None], lows[:, 1:] - lows[:, :1], columns)
                 odds = np.where(up, p_high, np.where(down, p_low, 1.0))
                 log_odds = np.log(odds).sum(axis=1)
-        return Prediction(mean, columns, own, p_high, p_low, log_odds)
+            # No limit pushes an output beyond where it would stand without one: a reading out there
+            # says that the limit, known only roughly, is farther off than was thought.
+            slack = SLACK * (s + LIMIT_FLOOR + CLIP_SHARE * np.abs(y))
+            for share, edge, sign in ((p_high, highs, 1.0), (p_low, lows, -1.0)):
+                free = (share > 0.5) & (sign * (y - u[:, 0]) > slack)
+                if free.any():
+                    reach = np.sqrt(np.square(edge[:, 1:] - edge[:, :1]).sum(axis=1)) + LIMIT_FLOOR
+                    log_odds = log_odds + np.where(free, log_ndtr(sign * (edge[:, 0] - u[:, 0]) / reach), 0.0).sum(
+                        axis=1
+                    )
+                    mean = np.where(free, u[:, 0], mean)
+                    own = np.where(free, floor, own)
+                    columns = np.where(free[:, None], step, columns)
+        told = Prediction(mean, columns, own, p_high, p_low, log_odds)
+        if readings is not None and (either := np.flatnonzero(boards.latch == EITHER)).size:
+            self._unlatch(told, boards.take(either), either, volts, np.asarray(readings, dtype=float))
+        return told
+
+    def _unlatch(self, told: Prediction, boards: Boards, at, volts, readings):
+        """Write into `told`, at boards `at`, the rail of an output with exchanged inputs that each reading is nearer to."""
+        boards.latch[:] = -1.0
+        low = self.predict(boards, volts, readings)
+        boards.latch[:] = 1.0
+        high = self.predict(boards, volts, readings)
+        up = np.abs(readings - high.mean) < np.abs(readings - low.mean)
+        for name in ("mean", "own", "share_high", "share_low"):
+            getattr(told, name)[at] = np.where(up, getattr(high, name), getattr(low, name))
+        told.columns[at] = np.where(up[:, None], high.columns, low.columns)
+        free = (np.abs(high.mean - low.mean) > LIMIT_FLOOR) & ~np.isnan(readings)
+        told.log_odds[at] = np.minimum(high.log_odds, low.log_odds) - np.log(2.0) * free.sum(axis=1)
 
 
 def log_likelihood(prediction: Prediction, readings, meter, scales=(1.0,)) -> np.ndarray:

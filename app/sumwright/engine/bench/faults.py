@@ -18,12 +18,13 @@ from typing import NamedTuple
 import numpy as np
 
 from ..stage import OUTPUT, REFERENCE, cell_name
-from .board import MINUS, PLUS, Bench, Boards
+from .board import EITHER, MINUS, PLUS, Bench, Boards
 
 HEALTHY = "none"
 HEALTHY_ODDS = 0.85  # share of boards with nothing wrong; the faults share the rest
 DECADE_SHARE = 0.3  # of wrong values: how many are the right figures in a wrong decade
 OPEN = np.inf
+FIRM = 20.0  # ohm: a source with less in series feels the ohm of a bridge
 BALANCED = 1e-6  # an op amp whose offset and bias current happen to cancel
 
 Edit = Callable[[Boards, int, float], None]
@@ -130,6 +131,8 @@ def _tipping(bench, cell, edit, share=1.0):
 
 
 def _leg_shorted(bench):
+    """A bridge has a fraction of an ohm, which matters only where nothing else is in the way."""
+    bridge = Values(((0.02, 5.0, 1.0),), told=False)
     for source, legs in _by_source(bench):
         legs = [i for i in legs if bench.legs[i].resistance > 0]
         ways = []
@@ -137,6 +140,8 @@ def _leg_shorted(bench):
             edit, leg = _set("leg_ohm", (i,), 0.0), bench.legs[i]
             share = 1 / len(legs)
             ways += _tipping(bench, leg.cell, edit, share) if leg.node == MINUS else [Way(edit, share)]
+            if _series(bench, i) < FIRM:
+                ways.append(Way(_set("leg_ohm", (i,)), share, bridge))
         if ways:
             yield Place(source, tuple(ways), _first(bench, legs))
 
@@ -246,10 +251,10 @@ def _plus_ground_missing(bench):
 
 
 def _inputs_swapped(bench):
-    """Positive feedback: the output latches at a rail, whichever it met first."""
+    """Positive feedback: the output latches at a rail, whichever it met first, or now this one and now that."""
     for k, part in _cells(bench):
         flip = _set("swapped", (k,), True)
-        yield Place(part, tuple(Way(_both(flip, _set("latch", (), came)), 1 / 3) for came in (-1.0, 0.0, 1.0)))
+        yield Place(part, tuple(Way(_both(flip, _set("latch", (), came))) for came in (-1.0, 0.0, 1.0, EITHER)))
 
 
 def _op_amp_dead(bench):

@@ -24,7 +24,7 @@ METER_SCALES = (1.0, 3.0, 10.0)
 STATED_ODDS = (0.95, 0.04, 0.01)  # that the meter is this much worse than stated
 GUESSED_ODDS = (0.70, 0.20, 0.10)  # where nobody stated it
 COARSE_STEP = 0.4  # in ln(ohm)
-CLOSER = 4  # rounds of closing in
+CLOSER = 5  # rounds of closing in
 NEW_POINTS = 8
 PEAKS = 3  # places of a grid closed in on
 PEAK_DEPTH = 300.0  # in ln, how far the others may lie below the first
@@ -253,14 +253,21 @@ class Diagnosis:
                 # two steps: next to the gap of the allowed values one step ends too soon
                 between.append((i, grid[max(at - 2, 0)], grid[min(at + 2, last)]))
         for _ in range(CLOSER):
-            fresh, where = [], []
+            fresh, where, kept = [], [], []
             for i, low, high in between:
                 c, w, values = open_ways[i]
-                points = np.exp(np.linspace(np.log(low), np.log(high), NEW_POINTS + 2)[1:-1])
+                steps = (np.arange(NEW_POINTS) + 0.5) / NEW_POINTS
+                points = np.exp(np.log(low) + np.log(high / low) * steps)
                 points = points[_inside(values, points)]
-                fresh += [Trial(c, w, v) for v in points]
-                where += [i] * len(points)
-            logs = self._likelihoods(fresh)
+                if len(points) >= 2:
+                    kept.append((i, low, high, len(points)))
+                    fresh += [Trial(c, w, v) for v in points]
+                    where += [i] * len(points)
+            if not fresh:
+                break
+            lengths = np.array([count for *_, count in kept])
+            # blurred over its step again: a narrow peak between two points outweighs a broad, low one beside it
+            logs, soft = self._likelihoods(fresh, lengths)
             where = np.array(where)
             values_now = np.array([t.value for t in fresh])
             for i in range(len(grids)):
@@ -269,11 +276,14 @@ class Diagnosis:
                 table = np.concatenate([tables[i], logs[mine]])
                 order = np.unique(grid, return_index=True)[1]
                 grids[i], tables[i] = grid[order], table[order]
-            for k, (i, low, high) in enumerate(between):
-                inside = np.flatnonzero((grids[i] >= low * (1 - 1e-12)) & (grids[i] <= high * (1 + 1e-12)))
-                best = int(inside[np.argmax(tables[i][inside])])
-                last = len(grids[i]) - 1
-                between[k] = (i, max(grids[i][max(best - 1, 0)], low), min(grids[i][min(best + 1, last)], high))
+            between = []
+            for (i, low, high, count), end in zip(kept, np.cumsum(lengths), strict=True):
+                at = int(np.argmax(soft[end - count : end]))
+                best = values_now[end - count + at]
+                # at an end of its window the best may lie beyond: the next one is moved, not only narrowed
+                wide = 1.0 if 0 < at < count - 1 else 2.5
+                reach = (high / low) ** (wide / NEW_POINTS)
+                between.append((i, max(best / reach, grids[i][0]), min(best * reach, grids[i][-1])))
         return grids, tables
 
     def _sum_up(self):
