@@ -107,6 +107,8 @@ class Person:
             HTTPRequest(f"ws://{place}/app/ws", headers={"Origin": f"http://{place}"}, request_timeout=120),
             subprotocols=["bokeh", token], max_message_size=50_000_000,
         )  # fmt: skip
+        # As browsers do: else each message waits 40 ms for a delayed acknowledgement.
+        self.socket.protocol.set_nodelay(True)
         await self._message()  # ACK
         await self._send("PULL-DOC-REQ", "{}")
         while True:
