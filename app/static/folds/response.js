@@ -162,7 +162,7 @@ export function mount(node, sheet) {
     const q = s.scope
     if (s.problem || !q) setText(told, s.problem)
     else {
-      const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'too many changes to follow (it oscillates, or is driven too hard); record cut short'].filter(Boolean).join(', ')
+      const busy = [q.slewing > 0 ? `slews ${percent(q.slewing, 0)} of the time` : '', q.clipping > 0 ? `at a limit ${percent(q.clipping, 0)}` : '', q.complete ? '' : 'record cut short: too many changes to follow'].filter(Boolean).join(', ')
       const grey = s.held !== null ? ', held grey' : ''
       setText(caption, s.kind === 'step' ? `of ${q.size > 0 ? '+' : ''}${engineering(q.size, 'V')} on ${q.signal}; V, ${q.unit}; ideal dotted${grey}` : `V, ${q.unit}; ideal dotted${grey}`)
       const time = (band, t) => t === null ? `${band} not in this record` : `${band} in ${engineering(t, 's')}`

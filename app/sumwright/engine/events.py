@@ -21,6 +21,7 @@ from . import clipping, nodes
 from .statespace import CURRENT, LINEAR, SLEW, SWING, SWING_IDLE, kept_of, state_space
 
 MOST_EVENTS = 1500
+MOST_UNSTABLE = 400  # events of a stage that oscillates: what is shown is no longer the signal
 _GROWN_MOST = 500.0  # nepers: beyond it a number overflows
 _BUSY = 12  # segments: a record with fewer is not worth looking for its period
 _FROM_STATIC = {
@@ -279,6 +280,8 @@ class Course:
         mark, last = math.inf, None  # when the state is compared next, and what it was a period before
         alone = not self.sines and all(p.slopes[-1] == 0 for p in self.sources)
         cycle, due = None, 2 * _BUSY
+        unstable = self.mode((LINEAR,) * self.cells).lam.real.max(initial=-1.0) > 0
+        most_events = MOST_UNSTABLE if unstable else MOST_EVENTS
         for j in range(len(starts)):
             t, stop = edges[j], edges[j + 1]
             while t < stop:
@@ -300,7 +303,7 @@ class Course:
                 x, v1, v2 = seg.state(end - t)
                 if left:
                     events += 1
-                    if events > MOST_EVENTS:
+                    if events > most_events:
                         return out, at_sample, slewing, clipping, events, False
                     key, x, v1 = self._change(m, key, seg, end - t, x, v1, v2)
                 t = end
