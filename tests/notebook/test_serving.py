@@ -163,7 +163,7 @@ def test_a_spoilt_store_is_told_by_readiness_and_to_the_person_and_left_alone(ch
     page = open_sheet(context, server.url)
     act(page, do="value", signal="north", value=5.0)
     saved(page, "unsaved")
-    assert "notebook.db" in page.locator("#note").inner_text()
+    page.wait_for_function("() => document.querySelector('#note').innerText.includes('notebook.db')")
     (tmp_path / "d" / "notebook.db").unlink()  # the keeper puts it aside: a new one is made, and what waits is saved
     saved(page)
     context.close()
