@@ -138,7 +138,8 @@ function move(name, way) {
   sheet.act({do: 'order', names: order})
 }
 
-const keyOf = r => r.reference ? `reference ${r.cell}` : r.name
+// of another style it is another row
+const keyOf = r => r.reference ? `reference ${r.cell}` : r.style ? `${r.name} ${r.style}` : r.name
 
 export function update(state) {
   const shown = state.signals
@@ -249,15 +250,15 @@ const plainWeight = w => {
 function drawMini(shown) {
   if (!size(mini).width) return
   const signals = shown.rows.filter(r => !r.reference)
-  keyed(mini, signals.map(r => r.name), name => {
-    const r = signals.find(x => x.name === name), s = style(r.style)
+  keyed(mini, signals.map(keyOf), key => {
+    const r = signals.find(x => keyOf(x) === key), {name} = r, s = style(r.style)
     const value = el('span', {class: 'n'})
     const slide = slider(name, moved => setText(value, `${volts(moved)}${THIN}V`))
     const node = el('label', {style: `--c:${s.colour}`}, el('span', {class: 'top'}, el('b', {}, swatch(s), el('span', {text: name})), value), slide.input)
     return {node, slide, value}
   }, minis)
   for (const r of signals) {
-    const item = minis.get(r.name)
+    const item = minis.get(keyOf(r))
     item.slide.show(r)
     if (pulled !== r.name) setText(item.value, `${volts(r.value)}${THIN}V`)
   }

@@ -110,6 +110,13 @@ def test_what_is_saved_is_what_is_on_the_sheet(bench):
     assert saved["name"] == "grain-hopper-four-corners.json"
 
 
+def test_two_signals_of_one_sheet_never_share_a_look(bench):
+    for text in ("out = 0.5 a + 0.25 b", "out = 0.5 c", "out = 0.5 a + 0.25 c + 0.1 b"):
+        do(bench, "draw_sum", text=text)
+        looks = [bench.style(name) for name in bench.signal_names]
+        assert sorted(looks) == list(range(len(looks)))
+
+
 def test_a_file_without_cells_is_drawn_and_says_so(bench):
     document = json.loads(write_design(bench.design))
     del document["cells"]

@@ -175,11 +175,12 @@ export function mount(node, sheet) {
     const hit = q => q.at !== null && !q.out
     const rank = q => q.name === shown.on ? 0 : hit(q) ? 1 : 2
     let order = [...shown.clips]
-    const wide = q => 26 + (q.name.length + (words(q) ? words(q).length + 1 : 0)) * 7.4 * k + GAP
+    const wide = q => 26 + (q.name.length + (words(q) ? words(q).length + 1 : 0)) * 7 * k + GAP
     const room = R - L - end(shown).length * 7 * k
-    if (order.reduce((sum, q) => sum + wide(q), 0) > room) order.sort((one, two) => rank(one) - rank(two))
-    let used = 0
-    const fits = order.filter(q => (used += wide(q)) <= room - 90 * k || used <= room && q === order[order.length - 1])
+    const full = order.reduce((sum, q) => sum + wide(q), 0) > room
+    if (full) order.sort((one, two) => rank(one) - rank(two))
+    let used = full ? 90 * k : 0
+    const fits = order.filter(q => (used += wide(q)) <= room)
     const more = order.length - fits.length
     while (items.length < fits.length) {
       const mark = svg('svg', {width: 24, height: 14, 'aria-hidden': 'true'}, svg('path'), svg('path'))
@@ -201,8 +202,9 @@ export function mount(node, sheet) {
     key.style.transform = `translate(${Math.round(L)}px,${Math.round(top)}px)`
     key.style.width = `${Math.round(R - L)}px`
   }
-  const words = q => q.out ? 'cable out' : q.at === null ? (latest?.clipped === 'no' ? '' : 'clipped all through') : `clips ${q.side}${q.cell !== null ? ` in cell ${q.cell + 1}` : ''} at ${fixed(q.at, 2)}${THIN}V`
-  const end = shown => shown.clipped === 'no' && shown.clips.every(q => q.at === null) && !shown.clips.every(q => q.out) ? 'none clips within its range' : ''
+  const words = q => q.out ? 'cable out' : q.at === null ? (latest?.clipped === 'no' || through(latest) ? '' : 'clipped all through') : `clips ${q.side}${q.cell !== null ? ` in cell ${q.cell + 1}` : ''} at ${fixed(q.at, 2)}${THIN}V`
+  const through = shown => shown.clipped !== 'no' && shown.clips.every(q => q.out || q.at === null)
+  const end = shown => through(shown) ? `clipped ${shown.clipped} wherever any one of them goes` : shown.clipped === 'no' && shown.clips.every(q => q.at === null) && !shown.clips.every(q => q.out) ? 'none clips within its range' : ''
 
   // what no label may lie on: ruled lines, the beams themselves, labels that stand already
   function placer(lines, k) {

@@ -129,7 +129,13 @@ class Workbench(param.Parameterized):
 
     def put(self, design: Design) -> None:
         """Another whole design on the sheet (a file, a new sum), as one undo step."""
-        self._put(edits.realised(design), unplugged=(), chosen="")
+        design = edits.realised(design)
+        before, self._styles = self._styles, {}  # names of other sheets hold no colours here
+        try:
+            self._put(design, unplugged=(), chosen="")
+        except SumwrightError:
+            self._styles = before
+            raise
 
     def arrange(self, change: Callable[[Design], Design], arrangement: str) -> None:
         """`change` the design to cells of `arrangement`, and remember that it was chosen."""
