@@ -154,6 +154,8 @@ def test_advice_names_parts_and_all_resistors_can_be_changed_in_one_step():
     fold.handle({"do": "tolerance", "tolerance": 0.0001})
     assert bench.design.resistor.tolerance == 0.0001
     assert bench.undo() and bench.design.resistor.tolerance == design.resistor.tolerance
+    bench.put(replace(design, target=replace(design.target, accuracy=None)))
+    assert "Type the accuracy" in fold.show()["more"]["problem"]
 
 
 def test_every_op_amp_is_tried_and_one_is_taken_in_one_step():

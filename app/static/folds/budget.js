@@ -43,11 +43,11 @@ export function mount(node, sheet) {
     const bars = []
     return {node: el('div', {}, t.node, el('p', {}, csv)), update(s) {
       const most = s.terms[0]?.[4] || 1
-      const v = column(s.terms.flatMap(r => [r[2], r[3], r[5]]), 'V', {least: 2, most: 2})
+      const v = column(s.terms.flatMap(r => [r[2], r[3]]), 'V', {least: 2, most: 2})
       t.heads(['term', v.head('limit'), v.head('u'), 'share of variance'])
       t.set(s.terms.map((r, i) => {
         const known = r[1] === 'rounding' || r[1] === 'source resistance' || r[1] === 'finite gain'
-        if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${r[5] > 0 ? '+' : ''}${v.say(r[5])}`]
+        if (known) return [r[0], ['', 'r'], ['', 'r'], `known, ${r[5] > 0 ? '+' : ''}${volts(r[5])}`]
         bars[i] ??= (() => { const bar = el('div', {class: 'bar'}), text = el('span', {class: 'n'}); return {bar, text, node: el('div', {class: 'share'}, bar, text)} })()
         const width = `${(r[4] / most * 58).toFixed(1)}%`
         if (bars[i].bar.style.width !== width) bars[i].bar.style.width = width

@@ -189,6 +189,9 @@ class Budget(Fold):
             "slopes": sensitivities(analysis, self.point),
         }  # fmt: skip
         key = (analysis.design, analysis.unplugged)
+        if accuracy is None:
+            out["problem"] = "Type the accuracy wanted under target, and the least that meets it stands here."
+            return out
         if self._advice[0] != key:
             try:
                 self._advice = (key, {"plan": tighten.tighten(analysis)})
