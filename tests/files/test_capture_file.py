@@ -47,6 +47,29 @@ def test_units_in_the_heading_are_taken_into_account():
     np.testing.assert_allclose(got.channels["north"], np.array(A) * 1e-3)
 
 
+@pytest.mark.parametrize(
+    ("head", "unit", "scale"),
+    [
+        ("t [µs],north,out", "µs", 1e-6), ("t [\u03bcs],north,out", "µs", 1e-6), ("Time (ms),north,out", "ms", 1e-3), ("Time/ms,north,out", "ms", 1e-3),
+        ("time_ms,north,out", "ms", 1e-3), ("time us,north,out", "µs", 1e-6), ("TIME [S],north,out", "s", 1), ("ms,north,out", "ms", 1e-3),
+        ("t (min),north/mV,out", "min", 60), ("t,north,out\nms,V,V", "ms", 1e-3),
+    ],
+)  # fmt: skip
+def test_time_is_taken_in_the_unit_of_its_heading(head, unit, scale):
+    for coding in ("utf-8", "utf-8-sig", *(["latin-1"] if "\u03bc" not in head else [])):
+        got = read_capture(f"{head}\n{ROWS}".encode(coding))
+        assert (got.time_unit, got.time_stated) == (unit, True)
+        np.testing.assert_allclose(got.time, np.array(TIME) * scale)
+        assert list(got.channels) == ["north", "out"]
+        np.testing.assert_allclose(got.channels["north"], np.array(A) * (1e-3 if "mV" in head else 1))
+    assert not read_capture(b"time,north,out\n" + ROWS.encode()).time_stated
+
+
+def test_time_in_a_unit_that_is_none_is_refused():
+    with pytest.raises(InvalidReadings, match=r"line 1: time is in .parsec.; it must be in s, ms"):
+        read_capture(b"time (parsec),north,out\n" + ROWS.encode())
+
+
 def test_times_printed_too_coarsely_are_spread_evenly():
     rows = "".join(f"{k // 4 / 1000:.3f},{k}\n" for k in range(40))
     got = read_capture(rows.encode())

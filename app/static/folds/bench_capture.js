@@ -52,7 +52,7 @@ export function mountCapture(sheet, send) {
       const c = s.capture, about = c.about
       if (c.problem) setText(said, c.problem)
       else if (c.busy) setText(said, c.fit || !about ? 'reading…' : 'fitting…')
-      else if (about) setText(said, `${about.rows.toLocaleString('en').replaceAll(',', THIN)} rows, one every ${engineering(about.interval, 's')}, ${engineering(about.span, 's')} in all`)
+      else if (about) setText(said, `${about.rows.toLocaleString('en').replaceAll(',', THIN)} rows, one every ${engineering(about.interval, 's')}, ${engineering(about.span, 's')} in all; ${about.time}`)
       said.classList.toggle('err', !!c.problem)
       const key = about ? JSON.stringify([about.channels, s.names]) : ''
       if (mapping.dataset.of !== key) {

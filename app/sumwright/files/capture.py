@@ -27,12 +27,18 @@ MOST_COLUMNS = 33
 HEAD = 256 * 1024
 BLOCK = 8 * 1024 * 1024
 RUN = 4  # lines of numbers in a row that make the body
-_TIME = re.compile(r"\b(time|zeit|temps|t|x|second|seconds|s|sec)\b", re.IGNORECASE)
-_SCALE = {
-    "s": 1.0, "sec": 1.0, "second": 1.0, "seconds": 1.0, "ms": 1e-3, "us": 1e-6, "µs": 1e-6, "μs": 1e-6, "ns": 1e-9,
-    "v": 1.0, "volt": 1.0, "volts": 1.0, "mv": 1e-3, "uv": 1e-6, "µv": 1e-6, "μv": 1e-6, "kv": 1e3, "": 1.0,
+_TIMES = {
+    "s": 1.0, "sec": 1.0, "second": 1.0, "seconds": 1.0, "ms": 1e-3, "msec": 1e-3, "millisecond": 1e-3, "milliseconds": 1e-3,
+    "us": 1e-6, "µs": 1e-6, "μs": 1e-6, "usec": 1e-6, "microsecond": 1e-6, "microseconds": 1e-6, "ns": 1e-9, "nsec": 1e-9,
+    "min": 60.0, "minutes": 60.0, "h": 3600.0, "hours": 3600.0,
 }  # fmt: skip
+_VOLTS = {"v": 1.0, "volt": 1.0, "volts": 1.0, "mv": 1e-3, "uv": 1e-6, "µv": 1e-6, "μv": 1e-6, "kv": 1e3}
+_SCALE = {**_TIMES, **_VOLTS, "": 1.0}
 _UNIT = re.compile(r"(.*?)\s*[\[(]\s*([^\])]*)\s*[\])]\s*")
+_SLASHED = re.compile(r"(.*\S)\s*/\s*(\S+)")
+_TRAILING = re.compile(r"(.*\S)[\s_,]+(\S+)")  # a time column alone: "time ms"
+# what a person reads: of the ways to write a unit, one
+_WRITTEN = {1.0: "s", 1e-3: "ms", 1e-6: "µs", 1e-9: "ns", 60.0: "min", 3600.0: "h"}
 
 
 class Capture(NamedTuple):
@@ -42,6 +48,8 @@ class Capture(NamedTuple):
     channels: dict[str, np.ndarray]
     preamble: tuple[str, ...]
     first_line: int  # of the numbers
+    time_unit: str = "s"  # in which the file gives it
+    time_stated: bool = False  # whether its heading says so; else seconds are taken
 
     @property
     def interval(self) -> float:
@@ -60,6 +68,7 @@ class _Shape(NamedTuple):
     names: tuple[str, ...]
     scales: tuple[float, ...]
     preamble: tuple[str, ...]
+    time_stated: bool
 
 
 def read_capture(source: os.PathLike | str | bytes, name: str = "") -> Capture:
@@ -123,7 +132,8 @@ def _read(stream: BinaryIO, name: str, path: Path | None = None) -> Capture:
     if (step == 0).any():
         time = _spread_equal(time)
     channels = {n: c * k for n, c, k in zip(shape.names[1:], table[1:], shape.scales[1:], strict=True)}
-    return Capture(time, channels, shape.preamble, shape.line)
+    unit = _WRITTEN[shape.scales[0]]
+    return Capture(time, channels, shape.preamble, shape.line, unit, shape.time_stated)
 
 
 def _spread_equal(time):
@@ -136,7 +146,8 @@ def _spread_equal(time):
 
 
 def _shape(head: bytes, name: str) -> _Shape:
-    text = head.decode("utf-8-sig", errors="replace") if head[:3] == b"\xef\xbb\xbf" else head.decode("latin-1")
+    coding = _coding(head)
+    text = head.decode(coding, errors="replace")
     lines = text.split("\n")
     if len(head) == HEAD:
         lines = lines[:-1]
@@ -145,7 +156,7 @@ def _shape(head: bytes, name: str) -> _Shape:
             found = _first_run(lines, separator, comma)
             if found is not None:
                 at, columns = found
-                return _described(lines, at, columns, separator, comma, head, name)
+                return _described(lines, at, columns, separator, comma, coding, name)
     if broken := _broken_off(lines):
         at, what = broken
         raise InvalidReadings(
@@ -205,7 +216,7 @@ def _numbers(line, separator, comma):
     return len(cells)
 
 
-def _described(lines, at, columns, separator, comma, head, name):
+def _described(lines, at, columns, separator, comma, coding, name):
     if columns > MOST_COLUMNS:
         raise InvalidReadings(f"{name}, line {at + 1} has {columns} columns; at most {MOST_COLUMNS} are read.")
     heads = []
@@ -219,14 +230,24 @@ def _described(lines, at, columns, separator, comma, head, name):
     if heads:
         names = list(heads[0])
         if len(heads) == 2:
-            if all(_bare(c) in _SCALE for c in heads[1]):
+            if _bare(heads[1][0]) in _TIMES and all(_bare(c) in _SCALE for c in heads[1]):
                 units = [_bare(c) for c in heads[1]]
             else:
                 names = list(heads[1])
     for k, text in enumerate(names):
-        inside = _UNIT.fullmatch(text)
-        if inside and inside[2].strip().casefold() in _SCALE:
-            names[k], units[k] = inside[1].strip(), inside[2].strip().casefold()
+        known = _TIMES if k == 0 else _VOLTS
+        for way in (_UNIT, _SLASHED, *([_TRAILING] if k == 0 else [])):
+            inside = way.fullmatch(text)
+            if inside and inside[2].strip().casefold() in known and not units[k]:
+                names[k], units[k] = inside[1].strip(), inside[2].strip().casefold()
+        if k == 0 and not units[0]:
+            other = _UNIT.fullmatch(text)
+            if text.casefold() in _TIMES:  # headed by its unit alone
+                units[0] = text.casefold()
+            elif other and other[2].strip():
+                raise InvalidReadings(
+                    f"{name}, line {at}: time is in {shown(other[2].strip(), 20)}; it must be in s, ms, µs, ns, min or h."
+                )
     plain, used = [], set()
     for k, text in enumerate(names):
         word = " ".join("".join(c for c in text if c.isprintable()).split())[:60] or (
@@ -236,13 +257,22 @@ def _described(lines, at, columns, separator, comma, head, name):
             word += " '"
         used.add(word)
         plain.append(word)
-    start = len("\n".join(lines[:at]).encode("latin-1" if head[:3] != b"\xef\xbb\xbf" else "utf-8")) + (1 if at else 0)
-    if head[:3] == b"\xef\xbb\xbf":
-        start += 3
+    start = len("\n".join(lines[:at]).encode(coding)) + (1 if at else 0)
     return _Shape(
         start, at + 1, separator, comma, columns, tuple(plain), tuple(_SCALE.get(u, 1.0) for u in units),
-        tuple(x.strip()[:200] for x in lines[:at] if x.strip())[:40],
+        tuple(x.strip()[:200] for x in lines[:at] if x.strip())[:40], bool(units[0]),
     )  # fmt: skip
+
+
+def _coding(head: bytes) -> str:
+    """UTF-8, with or without its mark, where all lines of the head are; else Latin-1, which takes any byte."""
+    if head.startswith(b"\xef\xbb\xbf"):
+        return "utf-8-sig"
+    try:
+        head[: head.rfind(b"\n") + 1 or None].decode("utf-8")
+        return "utf-8"
+    except UnicodeDecodeError:
+        return "latin-1"
 
 
 def _bare(cell):

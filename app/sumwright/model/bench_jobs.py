@@ -40,6 +40,7 @@ def look(path: str, signals: tuple[str, ...], name: str = ""):
     yield None
     return {
         "channels": list(c.channels), "rows": len(c.time), "interval": c.interval, "span": float(c.time[-1] - c.time[0]),
+        "time": f"time read in {c.time_unit}" if c.time_stated else "time taken as seconds: its heading names no unit",
         "map": guess(tuple(c.channels), signals),
     }  # fmt: skip
 
