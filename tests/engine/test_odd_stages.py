@@ -7,6 +7,7 @@ import pytest
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.arrangement import exact_cells
 from sumwright.engine.boards import monte_carlo
+from sumwright.engine.noise import noise, spectrum
 from sumwright.engine.response import at_signal_frequencies, source_gains
 from sumwright.engine.stage import (
     Ambient,
@@ -21,6 +22,7 @@ from sumwright.engine.stage import (
     Target,
     replace,
 )  # fmt: skip
+from sumwright.engine.statespace import poles
 from sumwright.engine.tighten import after_trim
 from sumwright.engine.trace import trace
 from sumwright.engine.waves import Wave
@@ -98,3 +100,18 @@ def test_an_output_without_resistance_has_no_pole_of_its_own(arrangement):
     for k, s in enumerate(b.ac.signals):
         half = abs(source_gains(b.net, [s.bandwidth_3db])[k, 0]) / abs(s.dc_gain)
         assert half == pytest.approx(0.5**0.5, rel=1e-9)
+
+
+@pytest.mark.parametrize("share", [0.5, 0.8, 0.98, 1.1])
+def test_the_skirt_of_a_resonance_is_in_the_noise_where_the_band_ends_beside_it(share):
+    """Against the same density summed up on a grid fine enough for any of it."""
+    net = Analysis(stage(load=Load(1e4, 3e-9))).net
+    ring = max(poles(net), key=lambda p: p.imag / max(-p.real, 1.0))
+    top = share * abs(ring) / (2 * np.pi)
+    assert -ring.real < 0.15 * abs(ring)
+    x, weight = np.polynomial.legendre.leggauss(20)
+    edges = np.linspace(np.log(10.0), np.log(top), 201)
+    half, middle = np.diff(edges) / 2, (edges[1:] + edges[:-1]) / 2
+    f = np.exp(middle[:, None] + half[:, None] * x)
+    power = (spectrum(net.design, f.ravel()).total ** 2) @ (half[:, None] * weight * f).ravel()
+    assert noise(net.design, band=(10.0, top)).rms == pytest.approx(np.sqrt(power), rel=2e-5)

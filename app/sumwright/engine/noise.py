@@ -223,6 +223,10 @@ def _quadrature(low, high, corners):
     return f.ravel(), (half * _WEIGHTS * f).ravel()
 
 
+# In widths of a resonance: panels grow with their distance from it, also where only its skirt is in the band.
+_AROUND = (-60.0, -22.0, -8.0, -2.5, -0.8, 0.0, 0.8, 2.5, 8.0, 22.0, 60.0)
+
+
 def _corners(net):
     """Where the response turns sharply [Hz]: around each resonant closed-loop pole."""
     out = []
@@ -231,5 +235,5 @@ def _corners(net):
         damping = max(abs(p.real) / size, 1e-4) if size else 1.0
         if p.imag > 0 and damping < 0.8:
             spread = min(damping, 0.4)
-            out += [size / (2 * math.pi) * math.exp(x * spread) for x in (-8.0, -2.5, -0.8, 0.0, 0.8, 2.5, 8.0)]
+            out += [size / (2 * math.pi) * math.exp(x * spread) for x in _AROUND if abs(x * spread) < 2.0]
     return out
