@@ -155,3 +155,34 @@ def test_what_the_sheet_cannot_have_held_changes_nothing(held):
     with pytest.raises((InvalidReadings, InvalidQuantity)):
         run.take_up(held)
     assert run.document() == before
+
+
+def test_limits_of_a_persons_own_are_kept_with_the_readings_and_follow_what_is_wanted():
+    run = BenchRun(DESIGN)
+    run.state("north", "±2 %")
+    run.state("tare", "-0.19..-0.17")
+    run.state("offset", "+/- 5m")
+    low, high = run.stated_limits()["north"]
+    assert (low, high) == pytest.approx((0.14 * 0.98, 0.14 * 1.02))
+    assert run.stated_limits()["offset"] == pytest.approx((0.495, 0.505))
+    for text in ("0.2", "2..1", "±0", "±two", "..", "1..2..3"):
+        with pytest.raises((InvalidQuantity, InvalidReadings), match="limits of north"):
+            run.state("north", text)
+    with pytest.raises(InvalidReadings, match="nobody"):
+        run.state("nobody", "1..2")
+    again = BenchRun(DESIGN)
+    again.take_up(json.loads(json.dumps(run.document())))
+    assert again.stated_limits() == run.stated_limits()
+    again.state("north", " ")
+    assert set(again.stated_limits()) == {"tare", "offset"}
+    again.follow(replace(DESIGN, signals=tuple(replace(s, name=s.name.replace("tare", "lid")) for s in DESIGN.signals), cells=tuple(replace(c, minus=tuple(replace(x, source="lid") for x in c.minus)) for c in DESIGN.cells)))  # fmt: skip
+    assert set(again.stated_limits()) == {"offset"}
+
+
+def test_repeats_of_a_setting_in_a_file_count_by_their_mean():
+    run = BenchRun(DESIGN)
+    text = "north,output,uncertainty\n3,1.0,0.001\n1,0.6,0.001\n3,1.1,0.001\n3,1.3,0.002\n"
+    assert run.take(parse_readings(text, DESIGN)) == 2
+    read = run.readings()
+    assert sorted(read.output) == pytest.approx([0.6, (1.0 + 1.1 + 1.3 / 4) / 2.25])
+    assert min(read.uncertainty) == pytest.approx(0.001 / 1.5)

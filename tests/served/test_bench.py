@@ -47,6 +47,22 @@ def test_readings_typed_with_enter_find_the_wrong_leg(fresh):
     row = page.locator(".bench .fits tr", has_text="east")
     assert "out" in row.inner_text()
     assert page.locator(".bench tr.now td").first.inner_text() == str(OUTPUT[-1] + 2)
+    # a person's own limits, beside the weight they are of; where the page is narrow too
+    page.set_viewport_size({"width": 1024, "height": 768})
+    limits = row.locator("input")
+    limits.click()
+    page.keyboard.type("±40 %")
+    page.keyboard.press("Enter")
+    settled(page)
+    assert row.locator("td").last.inner_text() == "in"
+    assert page.evaluate(
+        "document.querySelector('.bench .fits table').getBoundingClientRect().right <= document.querySelector('.bench .suspects').getBoundingClientRect().left"
+    )
+    limits.fill("wide")
+    limits.press("Enter")
+    settled(page)
+    assert "LOW..HIGH" in page.inner_text("#note")
+    assert limits.input_value() == "wide"
 
 
 def test_a_column_pasted_fills_downward(fresh):

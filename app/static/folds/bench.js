@@ -172,10 +172,10 @@ export function mount(node, sheet) {
 
   // ---------------------------------------------------------------- what follows
 
-  const fits = table([{text: ''}, {text: 'fitted', class: 'r'}, {text: `±2u`, class: 'r'}, {text: 'allowed'}, {text: ''}], 'Fitted weights')
-  const fitNote = el('p', {class: 'fit-note'}), marks = []
-  const suspects = table([{text: 'odds', class: 'r'}, {text: 'suspect'}, {text: 'about', class: 'r'}], 'Suspects')
-  const told = el('p', {class: 'note'}), apart = el('p', {class: 'note'}), next = el('p', {class: 'note'}), notes = el('div', {})
+  const fits = table([{text: ''}, {text: 'fitted', class: 'r'}, {text: `±2u`, class: 'r'}, {text: 'allowed'}, {text: 'limits'}, {text: ''}], 'Fitted weights')
+  const fitNote = el('p', {class: 'fit-note'}), marks = [], limits = []
+  const suspects = table([{text: 'probability', class: 'r'}, {text: 'suspect'}, {text: 'about', class: 'r'}], 'Suspects')
+  const odd = el('p', {class: 'note bad', hidden: true}), told = el('p', {class: 'note'}), apart = el('p', {class: 'note'}), next = el('p', {class: 'note'}), notes = el('div', {})
   const weighing = el('span', {class: 'soft', role: 'status'})
   const take = act('Take it up', () => { wanted = 'large'; send({do: 'next'}) })
   const home = el('details', {hidden: true}, el('summary', {text: 'Bring it home'}))
@@ -185,17 +185,27 @@ export function mount(node, sheet) {
     el('span', {class: 'soft', text: 'resistor values as the readings have them, onto the sheet; one undo step'})))
   node.append(el('div', {class: 'two'},
     el('div', {}, el('h3', {text: 'Weights the board has'}), el('div', {class: 'fits'}, fits.node), fitNote, home),
-    el('div', {}, el('h3', {}, 'Suspects, likeliest first ', weighing), el('div', {class: 'suspects'}, suspects.node), told, apart, next, notes)))
+    el('div', {}, el('h3', {}, 'Suspects, likeliest first ', weighing), odd, el('div', {class: 'suspects'}, suspects.node), told, apart, next, notes)))
   const capture = mountCapture(sheet, send)
   node.append(capture.node)
+
+  // A person's own limits of a weight; empty, it shows what the parts allow.
+  function limitOf(i) {
+    limits[i] ??= new Blank(sheet, {field: `bench limits ${i}`, label: '', send: text => ({do: 'fold', fold: 'bench', message: {do: 'limit', name: shown.fit[i].name, text}})})
+    return limits[i]
+  }
 
   function fillFit(s) {
     fits.set(s.fit.map((w, i) => {
       marks[i] ??= position(); marks[i].set(w)
-      const offset = i === s.fit.length - 1, d = 4
-      const more = w.word === 'undecided' && w.more ? `undecided; ${w.more} more would tell` : w.known ? w.word : s.taken ? 'not determined' : ''
+      const offset = i === s.fit.length - 1, d = 4, limit = limitOf(i)
+      limit.set(w.stated)
+      setAttr(limit.node, 'placeholder', `${fixed(w.low, d)}..${fixed(w.high, d)}`)
+      setAttr(limit.node, 'aria-label', `Limits of ${w.name}; empty: what the parts allow`)
+      setAttr(limit.node, 'title', 'Your own limits, as 0.24..0.26 or ±2 %; empty: what the parts allow')
+      const more = w.word === 'undecided' && w.more ? `undecided, ${w.more} more tell` : w.known ? w.word : s.taken ? 'not determined' : ''
       return [[w.name, ''], [w.value === null ? '–' : offset ? `${fixed(w.value, d)}${THIN}V` : signed(w.value, d), 'r'], [w.wide === null ? '' : fixed(w.wide, d), 'r soft'],
-        [marks[i].node, ''], [more, w.word === 'out' ? 'bad' : '']]
+        [marks[i].node, ''], [limit.node, 'limits'], [more, w.word === 'out' ? 'bad' : '']]
     }))
     const out = s.left_out.length ? ` Reading ${s.left_out.slice(0, 6).map(x => x.line).join(', ')} ${s.left_out.length > 1 ? 'are' : 'is'} near clipping and kept out.` : s.taken ? ' No reading was near clipping.' : ''
     const c = s.chi
@@ -226,6 +236,7 @@ export function mount(node, sheet) {
       ...(rest > .004 ? [[[fixed(rest, 2), 'r'], ['anything else', 'who soft'], ['', '']]] : [])])
     list.forEach((x, i) => { setClass(suspects.body.rows[i], 'lead', i === 0); setClass(suspects.body.rows[i], 'joined', x.group === list[i + 1]?.group) })
     const first = list[0]
+    odd.hidden = !t.odd; setText(odd, t.odd)
     setText(told, first ? first.explain : '')
     setText(apart, t.tell && s.taken ? `These readings cannot part the first ${list.filter(x => x.group === 1).length + t.more}. ${t.tell}` : '')
     const live = Object.entries(t.next).map(([n, v]) => `${n} ${volts(v)}`).join(', ')
@@ -258,7 +269,8 @@ export function mount(node, sheet) {
     grid.style.setProperty('--grid', `${height}px`)
     fillGrid(s); fillFit(s); fillSuspects(s)
     meter.set(s.meter)
-    setText(kept, s.kept)
+    const many = s.waiting > 1
+    setText(kept, s.waiting ? `${s.waiting} ${many ? 'readings belong' : 'reading belongs'} to steps that this stage does not have; ${many ? 'they are' : 'it is'} kept.` : s.kept)
     keep.hidden = !s.log; keep.disabled = !s.taken; clear.disabled = !s.taken; back.hidden = !s.gone
     capture.update(s)
     if (wanted === 'large') { wanted = null; large.node.focus(); large.node.select() }

@@ -26,12 +26,22 @@ def told(report) -> dict[str, Any]:
     first = [s for s in report.suspects if s.group == 1]
     mend = cure(report.diagnosis)
     return {
+        "odd": _odd(report),
         "cure": None if mend is None else mend._asdict(),
         "suspects": [s._asdict() for s in report.suspects[:LISTED]],
         "more": max(0, len(first) - LISTED),
         "tell": next((s.tell for s in first if s.tell), "") if len(first) > 1 else "",
         "next": report.next_reading.volts, "bits": report.next_reading.bits, "notes": list(report.notes),
     }  # fmt: skip
+
+
+def _odd(report) -> str:
+    """Said where not even the likeliest suspect may well give these readings; empty where it may."""
+    d = report.diagnosis
+    lead = int(d.order[0])
+    if not len(d.readings) or d.fits()[lead]:
+        return ""
+    return "No single fault explains these readings: one of them may be wrong, or two things are. What comes nearest:"
 
 
 def look(path: str, signals: tuple[str, ...], name: str = ""):

@@ -6,6 +6,7 @@ design changes, a reading finds its step again or stands as a step of its own.
 
 from __future__ import annotations
 
+import contextlib
 import csv
 import io
 import math
@@ -16,10 +17,10 @@ import numpy as np
 
 from sumwright.engine.bench.board import Bench
 from sumwright.engine.bench.plan import Step, plan
-from sumwright.engine.bench.readings import Meter, Readings, parse_meter
+from sumwright.engine.bench.readings import Meter, Readings, parse_limits, parse_meter
 from sumwright.engine.stage import Design
 from sumwright.engine.stage import replace as with_fields
-from sumwright.errors import InvalidReadings
+from sumwright.errors import InvalidQuantity, InvalidReadings, shown
 from sumwright.files.readings import number, parse_readings
 from sumwright.quantity import parse_quantity
 
@@ -70,6 +71,7 @@ class BenchRun:
     def __init__(self, design: Design, meter: Meter | None = None):
         self.meter = meter or Meter()
         self.taken: dict[tuple, Taken] = {}
+        self.limits: dict[str, str] = {}  # of weights and the offset, as a person stated them
         self.asked: dict[tuple, Taken] = {}  # settings a person took up beyond the plan, not read yet
         self._for: Design | None = None
         self.follow(design)
@@ -88,6 +90,36 @@ class BenchRun:
         """Another meter: the limits move with it."""
         self.meter = meter
         self.steps = plan(self.design, meter)
+
+    def state(self, name: str, text: str) -> None:
+        """State the limits of a weight, or of `offset`; an empty text goes back to what the parts allow.
+
+        Raises
+        ------
+        InvalidQuantity, InvalidReadings
+            If the text states none, or the stage has no such weight.
+        """
+        wanted = self._wanted()
+        if name not in wanted:
+            raise InvalidReadings(f"The stage has no weight of {shown(name)}.")
+        if text.strip():
+            parse_limits(text, wanted[name], name)
+            self.limits[name] = text.strip()
+        else:
+            self.limits.pop(name, None)
+
+    def stated_limits(self) -> dict[str, tuple[float, float]]:
+        """Low and high of each weight that has limits of its own; a share is one of what is wanted now."""
+        wanted, stated = self._wanted(), {}
+        for name, text in self.limits.items():
+            if name in wanted:
+                with contextlib.suppress(InvalidQuantity):  # a share of a wanted 0 says nothing
+                    stated[name] = parse_limits(text, wanted[name], name)
+        return stated
+
+    def _wanted(self) -> dict[str, float]:
+        target = self.design.target
+        return {s.name: s.weight for s in self.design.signals} | {"offset": target.offset if target else 0.0}
 
     def rows(self) -> list[Row]:
         """Steps in their order, then readings and settings that no step asks for."""
@@ -184,7 +216,8 @@ class BenchRun:
         return len(fresh)
 
     def take(self, readings: Readings) -> int:
-        """Every reading of a file; how many."""
+        """Every reading of a file; how many. Of several at one setting the mean is taken, its uncertainty that of a mean."""
+        readings = _averaged(readings)
         self._room(readings.count)
         for i in range(readings.count):
             apply = tuple(zip(readings.names, map(float, readings.volts[i]), strict=True))
@@ -232,7 +265,7 @@ class BenchRun:
         """All of it as plain data, to be kept with the sheet."""
         return {
             "meter": self.meter.text, "taken": [_plain(t) for t in self.taken.values()],
-            "asked": [_plain(t) for t in self.asked.values()],
+            "asked": [_plain(t) for t in self.asked.values()], **({"limits": dict(self.limits)} if self.limits else {}),
         }  # fmt: skip
 
     def take_up(self, document: dict[str, Any]) -> None:
@@ -250,7 +283,15 @@ class BenchRun:
             if not isinstance(held, list) or len(held) > MOST_READINGS:
                 raise InvalidReadings(f"The readings kept hold no list of at most {MOST_READINGS} under {side!r}.")
             sides.append({t.key: t for t in map(_taken, held)})
+        limits = document.get("limits", {})
+        if not isinstance(limits, dict) or not all(
+            isinstance(x, str) and len(x) <= 80 for pair in limits.items() for x in pair
+        ):
+            raise InvalidReadings("The limits kept with the readings are not understood.")
+        for name, text in limits.items():
+            parse_limits(text, 1.0, name)
         self.taken, self.asked = sides
+        self.limits = dict(limits)
         if meter != self.meter:
             self.restate(meter)
 
@@ -261,6 +302,20 @@ class BenchRun:
             if t.uncertainty is not None:
                 self.taken[key] = replace(t, text=f"{t.value:.6g}")
         return count
+
+
+def _averaged(readings: Readings) -> Readings:
+    """One row a setting; repeats averaged, by their uncertainty where it is stated."""
+    keys, back = np.unique(readings.volts, axis=0, return_inverse=True)
+    if len(keys) == readings.count:
+        return readings
+    back = back.reshape(-1)
+    order = np.argsort([int(np.flatnonzero(back == k)[0]) for k in range(len(keys))])  # as the file has them
+    weight = np.ones(readings.count) if readings.uncertainty is None else readings.uncertainty**-2.0
+    total = np.bincount(back, weight)
+    mean = np.bincount(back, weight * readings.output) / total
+    u = None if readings.uncertainty is None else total[order] ** -0.5
+    return Readings(readings.names, keys[order], mean[order], u, tuple(range(1, len(keys) + 1)), readings.unnamed)
 
 
 def as_text(document: dict[str, Any]) -> tuple[str, str]:

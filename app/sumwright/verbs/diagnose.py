@@ -8,10 +8,10 @@ from pathlib import Path
 from typing import Any
 
 from sumwright.engine.bench.diagnose import Report, diagnose
-from sumwright.engine.bench.readings import parse_meter
+from sumwright.engine.bench.readings import parse_limits, parse_meter
 from sumwright.errors import SumwrightError, shown
 from sumwright.files.readings import read_readings
-from sumwright.quantity import format_fixed, format_resistor, parse_quantity
+from sumwright.quantity import format_fixed, format_resistor
 from sumwright.verbs.common import add_design, add_json, load_design, plain, print_json, table
 
 
@@ -27,7 +27,8 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     )  # fmt: skip
     parser.add_argument(
         "--limit", metavar="NAME=LOW..HIGH", action="append", default=[],
-        help="judge this weight (or offset) against these limits instead of what the parts allow; once a signal",
+        help="judge this weight (or offset) against these limits, or ±2 %% of what is wanted, instead of what the parts allow; "
+        "once a signal",
     )  # fmt: skip
     add_json(parser)
 
@@ -48,15 +49,12 @@ def run(args: argparse.Namespace) -> int:
 
 def _limit(text, design):
     name, equals, span = text.rpartition("=")
-    low, dots, high = span.partition("..")
-    if not (equals and dots):
-        raise SumwrightError(f"--limit is {shown(text)}; write NAME=LOW..HIGH, as north=0.24..0.26.")
-    if name not in (*design.signal_names, "offset"):
+    if not equals:
+        raise SumwrightError(f"--limit is {shown(text)}; write NAME=LOW..HIGH, as north=0.24..0.26, or NAME=±2 %.")
+    wanted = {s.name: s.weight for s in design.signals} | {"offset": design.target.offset}
+    if name not in wanted:
         raise SumwrightError(f"--limit names {shown(name)}; it must be a signal of the design, or offset.")
-    ends = parse_quantity(low, "", f"--limit {name}"), parse_quantity(high, "", f"--limit {name}")
-    if ends[0] >= ends[1]:
-        raise SumwrightError(f"--limit {name} runs from {ends[0]:g} to {ends[1]:g}; the first must be the lower.")
-    return name, ends
+    return name, parse_limits(span, wanted[name], name)
 
 
 def to_json(report: Report) -> dict[str, Any]:
@@ -122,7 +120,7 @@ def _tables(design, report: Report) -> str:
         (f"{s.probability:.3f}", s.fault, s.part, _about(s), str(s.group))
         for s in report.suspects
     ]  # fmt: skip
-    text.append(table(("odds", "suspect", "", "about", "group"), listed, text_columns=3))
+    text.append(table(("probability", "suspect", "", "about", "group"), listed, text_columns=3))
     first = [s for s in report.suspects if s.group == 1]
     text += [plain(s.explain) for s in first[:3]]
     if len(first) > 1:

@@ -69,7 +69,7 @@ class Bench(Fold):
             fit["home"] = []
         return {
             "names": design.signal_names, "styles": [self.workbench.style(n) for n in design.signal_names],
-            "rows": [_row(r) for r in rows], "now": self._now, "taken": taken, "meter": self._run.meter.text, **fit,
+            "rows": [_row(r) for r in rows], "now": self._now, "taken": taken, "waiting": len(self._run.taken) - taken, "meter": self._run.meter.text, **fit,
             "told": self._told, "busy": self.context.jobs.running("bench"), "kept": self._kept, "gone": bool(self.workbench.cleared),
             "log": self.context.extras.get("sitting") is not None, "capture": self.capture.show(),
         }  # fmt: skip
@@ -78,13 +78,14 @@ class Bench(Fold):
         """Weights with their bands and verdicts, and what would bring home those that are out."""
         design = self._run.design
         readings = self._run.readings()
-        report = diagnose_fit(design, readings, self._run.bench)
+        report = diagnose_fit(design, readings, self._run.bench, self._run.stated_limits())
         rows, home = [], []
         for name, value, u, band, verdict, known in report["rows"]:
             rows.append(
                 {
                     "name": name, "value": _leaf(value), "wide": _leaf(2 * u), "nominal": band.nominal, "low": verdict.low,
                     "high": verdict.high, "word": verdict.word if readings.count else "", "more": verdict.more, "known": bool(known),
+                    "stated": self._run.limits.get(name, ""),
                 }
             )  # fmt: skip
             if verdict.word == "out" and known and len(home) < 6:
@@ -164,12 +165,20 @@ class Bench(Fold):
 
     def _file(self, message):
         text = fields.text(message, "text", MOST_BYTES)
-        count = self._run.take(parse_readings(text, self._run.design, "The readings file"))
+        readings = parse_readings(text, self._run.design, "The readings file")
+        count = self._run.take(readings)
         self._changed()
-        self.context.say(f"{count} readings opened.")
+        repeats = readings.count - count
+        mean = f" {repeats} repeat a setting; the mean counts." if repeats else ""
+        self.context.say(f"{readings.count} readings opened.{mean}")
 
     def _meter(self, message):
         self._run.restate(parse_meter(fields.text(message, "text", 120)))
+        self._changed()
+
+    def _limit(self, message):
+        names = (*self._run.design.signal_names, "offset")
+        self._run.state(fields.one_of(message, "name", names), fields.text(message, "text", 60))
         self._changed()
 
     def _next(self, message):
@@ -261,13 +270,15 @@ class Bench(Fold):
 
 
 _ACTS = {
-    "reading": Bench._reading, "go": Bench._go, "paste": Bench._paste, "file": Bench._file, "meter": Bench._meter,
+    "reading": Bench._reading, "go": Bench._go, "paste": Bench._paste, "file": Bench._file, "meter": Bench._meter, "limit": Bench._limit,
     "next": Bench._next, "clear": Bench._clear, "bring back": Bench._bring_back, "csv": Bench._csv, "as built": Bench._as_built,
     "keep": Bench._keep, "capture": lambda self, message: self.capture.handle(message),
 }  # fmt: skip
 
 
-def diagnose_fit(design, readings, bench: BoardBench) -> dict[str, Any]:
+def diagnose_fit(
+    design, readings, bench: BoardBench, limits: dict[str, tuple[float, float]] | None = None
+) -> dict[str, Any]:
     """The linear part of a diagnosis alone, fast enough for every keystroke."""
     import numpy as np
 
@@ -279,7 +290,14 @@ def diagnose_fit(design, readings, bench: BoardBench) -> dict[str, Any]:
     fit = least_squares(matrix, readings.output[keep], readings.uncertainty[keep])
     bands = weight_bands(design, bench)
     rows = [
-        (name, value, u, band, verdict(value, u, band.low, band.high, readings=max(1, len(keep))), known)
+        (
+            name,
+            value,
+            u,
+            band,
+            verdict(value, u, *(limits or {}).get(name, (band.low, band.high)), readings=max(1, len(keep))),
+            known,
+        )
         for name, value, u, band, known in zip(
             (*bench.names, "offset"), fit.value, fit.standard_uncertainty, bands, fit.determined, strict=True
         )

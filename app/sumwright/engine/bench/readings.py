@@ -111,6 +111,32 @@ def parse_meter(text: str) -> Meter:
     return Meter(share, constant, " ".join(text.split()))
 
 
+def parse_limits(text: str, wanted: float, name: str) -> tuple[float, float]:
+    """Limits of a weight (or of the offset [V]) as a person states them: `0.24..0.26`, `±0.01` or `±2 %` of what is wanted.
+
+    Raises
+    ------
+    InvalidQuantity
+        If the text is neither, or its limits are the wrong way round.
+    """
+    where = f"The limits of {name}"
+    stripped = text.strip().replace("+/-", "±").replace("+-", "±")
+    if stripped.startswith("±"):
+        share = stripped.endswith(("%", "ppm"))
+        half = parse_quantity(stripped[1:].strip(), "", where) * (abs(wanted) if share else 1.0)
+        ends = (wanted - half, wanted + half)
+        if half <= 0:
+            raise InvalidQuantity(f"{where} are {shown(text)}, which leaves no room; write more than ±0.")
+        return ends
+    low, dots, high = stripped.replace("…", "..").partition("..")
+    if not dots:
+        raise InvalidQuantity(f"{where} are {shown(text)}; write LOW..HIGH, as 0.24..0.26, or ±0.01, or ±2 %.")
+    ends = parse_quantity(low, "", where), parse_quantity(high, "", where)
+    if ends[0] >= ends[1]:
+        raise InvalidQuantity(f"{where} run from {ends[0]:g} to {ends[1]:g}; the first must be the lower.")
+    return ends
+
+
 def _positive(text: str, unit: str, whole: str) -> float:
     number = parse_quantity(text, unit)
     if number < 0:
