@@ -14,7 +14,7 @@ const OUTLINE = {
   up: 'M7 1.5l6 10.5h-12z', down: 'M7 12.5l6 -10.5h-12z', cross: 'M7 1v12M1 7h12',
 }
 const MERITS = {
-  'least weight error': 'best', 'fewest different values': 'fewest values', 'least noise': 'quietest', 'lightest load on the sources': 'lightest load',
+  'least weight error': 'best', 'fewest different values': 'few values', 'least noise': 'quietest', 'lightest load on the sources': 'lightest load',
   'lifted for the single supply': 'one supply',
 }
 const AXIS_WORDS = {parts: 'parts', noise: 'noise', band: 'bandwidth'}
