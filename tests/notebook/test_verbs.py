@@ -10,6 +10,7 @@ import threading
 import zipfile
 
 import pytest
+from sumwright.files.examples import NAMES, example_text
 from sumwright.notebook.people import People
 from sumwright.notebook.store import Store
 
@@ -77,7 +78,19 @@ def test_a_notebook_goes_out_and_comes_in_by_the_command_line(sumwright, tmp_pat
     store = Store(tmp_path / "data" / "notebook.db")
     key = store.new_notebook("Vat", "Ines", {"x": 1}).id
     store.append(key, "note", {"text": "kept"}, "Ines")
+    store.append(key, "decision", {"text": "Take 0.1 % parts."}, "Ines")
+    store.append(key, "correction", {"text": "0.05 % parts.", "of": 2}, "Kim")
     assert sumwright("notebook", "export", key, "-o", str(tmp_path / "n.zip"))[0] == 0
+    (tmp_path / "d.json").write_text(example_text(NAMES[0]), encoding="utf-8")
+    for named in (key, str(tmp_path / "n.zip")):  # a report lists what was decided, and what corrected it
+        words = (str(tmp_path / "d.json"), "--draws", "0", "-o", str(tmp_path / "r.html"))
+        assert sumwright("report", *words, "--notebook", named) == (0, "", "")
+        said = (tmp_path / "r.html").read_text(encoding="utf-8")
+        assert "Take 0.1 % parts." in said and "Kim, entry 3, corrects entry 2" in said and "kept" not in said
+    assert (
+        sumwright("report", *words, "--notebook", "a" * 16)[2]
+        == f"sumwright: There is no notebook '{'a' * 16}' in this store.\n"
+    )
     status, out, _ = sumwright("notebook", "import", str(tmp_path / "n.zip"))
     assert status == 0 and "Vat (copy)" in out
     listed = json.loads(sumwright("notebook", "list", "--json")[1])

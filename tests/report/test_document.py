@@ -145,6 +145,14 @@ def test_decisions_are_listed_when_given():
     assert "<h2>Decisions</h2>" not in report(example())
 
 
+def test_a_comparator_makes_a_report_whose_figures_stay_readable():
+    design = example()
+    text = report(replace(design, cells=tuple(replace(c, feedback=None) for c in design.cells)))
+    read = Reader(text)
+    assert re.search(r"\d\skV", text), "its linear extremes are no volts with three decimals"
+    assert all(len(re.sub(r"\D", "", cell)) <= 9 for row in read.rows["t-weights"] for cell in row[1:])
+
+
 def test_both_symbol_standards():
     assert "IEEE 315" in report(example(), symbols="ieee", draws=0)
     assert "IEC 60617" in report(example(), draws=0)

@@ -24,6 +24,7 @@ def many():
         Signal(f"load cell under corner {i}", 0.06 if i % 3 else -0.05, -10.0, 10.0, 1.0, 350.0, 10.0)
         for i in range(16)
     )
+    signals = (dataclasses.replace(signals[0], name="W" * 64), *signals[1:])  # no word of it ends
     d = dataclasses.replace(d, signals=signals, cells=())
     return dataclasses.replace(d, cells=exact_cells(d, "two-stage"))
 

@@ -119,7 +119,7 @@ def _op_amps(design: Design, marks) -> list[BillLine]:
     notes = []
     if spare:
         notes.append(f"{spare} amplifier{'s' if spare > 1 else ''} unused: wire as a follower within the inputs' range")
-    notes.append("0.1 uF ceramic at each supply pin (common practice)")
+    notes.append("0.1 µF ceramic at each supply pin (common practice)")
     rating = f"{per} in a package" if per > 1 else ""
     return [
         BillLine(

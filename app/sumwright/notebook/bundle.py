@@ -46,6 +46,11 @@ class Restored:
     what: str
 
 
+def is_id(text: str) -> bool:
+    """Whether a text is what a notebook's id looks like."""
+    return _ID.fullmatch(text) is not None
+
+
 def export_notebook(store: Store, key: str) -> bytes:
     """The notebook of that id as a zip."""
     notebook, sheets, entries = store.whole(key)

@@ -156,6 +156,22 @@ def flaws(origin: str, entries: Iterable[Entry]) -> list[Flaw]:
     return found
 
 
+def decisions_of(entries: Iterable[Entry]) -> list[tuple[str, str, str, str]]:
+    """Decisions and what corrected them, in order, as a report lists them: time, author, text, which entry."""
+    listed: set[int] = set()
+    found = []
+    for entry in entries:
+        if entry.kind == "decision":
+            which = f"entry {entry.number}"
+        elif entry.kind == "correction" and entry.body["of"] in listed:
+            which = f"entry {entry.number}, corrects entry {entry.body['of']}"
+        else:
+            continue
+        listed.add(entry.number)
+        found.append((f"{entry.at[:16].replace('T', ' ')} UTC", entry.author, entry.body["text"], which))
+    return found
+
+
 def words_of(kind: str, author: str, body: dict[str, Any]) -> str:
     """What a search looks through: text, title, people, signals and parts, folded for comparison without case."""
     design = body.get("design") or {}

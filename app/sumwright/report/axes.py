@@ -10,7 +10,7 @@ import numpy as np
 from sumwright.quantity import format_fixed, format_quantity
 from sumwright.tokens import Hand
 
-from .drawing import HAIR, INK, LINE, SOFT, Drawing, text_width
+from .drawing import HAIR, INK, LINE, SOFT, Drawing, shortened, text_width
 
 _STEPS = (1.0, 2.0, 2.5, 5.0, 10.0)
 
@@ -53,8 +53,8 @@ class Scale:
 
 
 def rounded_out(low: float, high: float, most: int = 6) -> tuple[float, float]:
-    """Ends at round values that hold `low` to `high`."""
-    if high <= low:
+    """Ends at round values that hold `low` to `high`; what differs by a computer's rounding alone is one value."""
+    if high - low <= 1e-9 * max(abs(low), abs(high)):
         high = low + (abs(low) or 1.0)
     s = Scale(low, high, 0, 1)
     ticks = s.ticks(most)
@@ -185,6 +185,7 @@ def legend(d: Drawing, x: float, y: float, entries: Sequence[tuple[str, Hand]], 
     """A row (or rows) of swatches with names; returns the height used."""
     at_x, at_y = x, y
     for name, hand in entries:
+        name = shortened(name, width - 60)
         wide = 30 + text_width(name) + 22
         if at_x > x and at_x + wide > x + width:
             at_x, at_y = x, at_y + 19

@@ -16,7 +16,7 @@ from sumwright.quantity import THIN, format_fixed, format_percent, format_quanti
 from sumwright.tokens import REFERENCE_HAND, hand
 
 from .axes import Plot, Scale, decimals_of, legend, prefix_of, rounded_out
-from .drawing import HAIR, INK, LINE, PAPER, RAISED, RED, SOFT, Drawing, text_width
+from .drawing import HAIR, INK, LINE, PAPER, RAISED, RED, SOFT, Drawing, shortened, text_width
 
 WIDTH = 680.0  # px; the text width of an A4 page
 
@@ -51,9 +51,12 @@ def ruler(analysis: Analysis, width: float = WIDTH, height: float = 330.0) -> Dr
     c0 = b1 + 30
     if target.low is not None and target.high is not None:
         d.rect(left, y(target.high), right - left, y(target.low) - y(target.high), fill=RAISED)
-    for v in y.ticks():
+    ticks = y.ticks()
+    large = max(abs(low), abs(high)) >= 1e4  # a comparator's linear extremes: no room for their figures
+    for v in ticks:
         d.line(left, y(v), right, y(v), stroke=HAIR, width=1)
-        d.text(left - 8, y(v) + 5, format_fixed(v, "", decimals_of(y.ticks())), anchor="end", fill=SOFT)
+        word = format_quantity(v, "", 3, trim=True) if large else format_fixed(v, "", decimals_of(ticks))
+        d.text(left - 8, y(v) + 5, word, anchor="end", fill=SOFT)
     _levels(d, design, analysis, y, left, right, width)
     d.text(left, 14, "Contributions", serif=True, size=15)
     d.text(b0, 14, "Output against each signal", serif=True, size=15)
@@ -212,10 +215,10 @@ def shares(analysis: Analysis, point: str = "present", width: float = WIDTH, mos
     room = width - label - figures - 12
     for i, (name, u, s) in enumerate(rows):
         base = i * 21 + 15
-        d.text(label - 10, base, name, anchor="end")
+        d.text(label - 10, base, shortened(name, label - 12), anchor="end")
         d.rect(label, base - 11, max(1.0, room * s), 12, fill=INK if i < len(shown) else LINE)
         d.text(width - 58, base, format_quantity(u, "V"), anchor="end")
-        d.text(width, base, format_percent(s), anchor="end", fill=SOFT)
+        d.text(width, base, format_percent(s) if s >= 1e-4 else f"< 0.01{THIN}%", anchor="end", fill=SOFT)
     if not rows:
         d.text(0, 16, "No term has an uncertainty.", fill=SOFT)
     d.line(label, 2, label, d.height - 4, stroke=LINE, width=1)
@@ -238,23 +241,26 @@ def histogram(errors, accuracy: float | None, interval, width: float = WIDTH, he
         + (f"; allowed ±{format_fixed(accuracy / factor, unit)}." if accuracy is not None else ".")
     )
     d = Drawing(width, height, alt)
-    x, y = Scale(low, high, 50, width - 34), Scale(0, float(counts.max()) or 1.0, height - 44, 34)
+    x, y = Scale(low, high, 50, width - 34), Scale(0, float(counts.max()) or 1.0, height - 44, 48)
     if accuracy is not None:
         a = accuracy / factor
         d.rect(x(-a), y.end, x(a) - x(-a), y.start - y.end, fill=RAISED)
         for v in (-a, a):
             d.line(x(v), y.end, x(v), y.start, width=1.2)
-        d.text(x(a) - 6, y.end + 13, "allowed", anchor="end", fill=SOFT)
+        narrow = x(a) - x(-a) < text_width("allowed") + 12
+        d.text(x(a) + (6 if narrow else -6), y.end + 13, "allowed", anchor="start" if narrow else "end", fill=SOFT)
     for n, p, q in zip(counts, edges[:-1], edges[1:], strict=True):
         if n:
             middle = (p + q) / 2
             out = accuracy is not None and abs(middle) > accuracy / factor
             d.rect(x(p) + 0.5, y(n), max(1.0, x(q) - x(p) - 1), y(0) - y(n), fill=RED if out else LINE)
-    Plot(d, x, y).grid(x_label=f"error, {unit}", y_label="boards")
-    base = y.end - 10
+    Plot(d, x, y).grid(x_label=f"error, {unit}")
+    d.text(x.start, 14, "boards", fill=SOFT)
+    base = y.end - 12
     p, q = x(interval[0] / factor), x(interval[1] / factor)
     d.path(f"M{p:.2f} {base - 4:.2f}v8M{p:.2f} {base:.2f}H{q:.2f}m0 -4v8", width=3)
-    d.text(q + 8, base + 5, "95 %", size=13)
+    beside = q + 8 + text_width("95 %", 13) < width
+    d.text(q + 8 if beside else p - 8, base + 5, f"95{THIN}%", anchor="start" if beside else "end", size=13)
     return d
 
 
@@ -381,7 +387,7 @@ def noise_density(analysis: Analysis, width: float = WIDTH, height: float = 250.
         at = max(y(max(value, y.low)) + 5, floor_y + 17)
         floor_y = at
         d.line(x.end + 2, y(max(value, y.low)), x.end + 10, at - 5, stroke=LINE, width=1)
-        d.text(x.end + 14, at, name, bold=bold, size=13)
+        d.text(x.end + 14, at, shortened(name, width - x.end - 16, 13, bold), bold=bold, size=13)
     return d
 
 
@@ -420,7 +426,8 @@ def sine_answer(analysis: Analysis, record, ideal, name: str, width: float = WID
 
 def _record(d, t, lines, width, height, more):
     values = [float(x) for v, *_ in lines for x in (v.min(), v.max())] + list(more)
-    pad = 0.06 * (max(values) - min(values) or 1.0)
+    span = max(values) - min(values)
+    pad = 0.06 * span if span > 1e-9 * max(map(abs, values)) else 1.0  # an output that stays: a volt on either side
     low, high = rounded_out(min(values) - pad, max(values) + pad)
     factor, prefix = prefix_of(t)
     plot = Plot(d, Scale(0, float(t[-1]) / factor, 56, width - 34), Scale(low, high, height - 44, 28))

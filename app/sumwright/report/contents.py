@@ -124,7 +124,7 @@ def parts(analysis: Analysis) -> Table:
             rows.append((name, where, None, d.cells[k].feedback_capacitance, None, None))
     columns = (
         Column("part"), Column("place"), Column("resistance", "", "resistor"), Column("capacitance", "F", "figures", 3),
-        Column("dissipates at most", "W", "scaled"), Column("may", "W", "scaled"),
+        Column("dissipates at most", "W", "scaled", 4), Column("may", "W", "scaled"),
     )  # fmt: skip
     if not any(names.capacitors):
         rows = [(*r[:3], *r[4:]) for r in rows]
@@ -251,7 +251,7 @@ def nodes(analysis: Analysis) -> Table:
     )
     columns = (
         Column("cell"), Column("− input", "V", "fixed", 4), Column("+ input", "V", "fixed", 4), Column("output", "V", "fixed", 4),
-        Column("output current", "A", "scaled"), Column("feedback current", "A", "scaled"), Column("clips"),
+        Column("output current", "A", "scaled", 4), Column("feedback current", "A", "scaled", 4), Column("clips"),
     )  # fmt: skip
     return Table("nodes", "Nodes at the present values", columns, rows)
 
@@ -270,7 +270,7 @@ def branches(analysis: Analysis) -> Table:
             part.kind, "source to node"
         )
         rows.append((names[i] or "wire", part.name, current, way))
-    columns = (Column("part"), Column("place"), Column("current", "A", "scaled"), Column("counted from"))
+    columns = (Column("part"), Column("place"), Column("current", "A", "scaled", 4), Column("counted from"))
     return Table("branches", "Currents at the present values", columns, tuple(rows))
 
 
@@ -296,7 +296,7 @@ def error_summary(analysis: Analysis, drawn: dict[str, Any] | None = None) -> Ta
     first = next(iter(drawn.values())) if drawn else None
     note = "Relative to the ideal output, at the present values and at the highest and lowest corner."
     if first is not None:
-        note += f" Drawn: {first.draws:,} boards, seed {first.seed}.".replace(",", THIN)
+        note += f" Drawn: {first.draws:,} boards, seed\u00a0{first.seed}.".replace(",", THIN)
     return Table("errors", "Error of the output", tuple(columns), tuple(rows), note)
 
 
@@ -362,7 +362,7 @@ def noise_terms(analysis: Analysis) -> Table:
     rows = [(t.name, t.density_1khz, t.rms, t.rms**2 / total if total else None) for t in order if t.rms > 0]
     rows.append(("all together", n.density_1khz, n.rms, 1.0 if total else None))
     columns = (
-        Column("term"), Column("at 1 kHz", "V/√Hz", "scaled"), Column("RMS over the band", "V", "scaled"), Column("share", "", "percent", 1),
+        Column("term"), Column("at 1 kHz", "V/√Hz", "scaled", 4), Column("RMS over the band", "V", "scaled", 4), Column("share", "", "percent", 1),
     )  # fmt: skip
     note = f"Band {format_quantity(n.band[0], 'Hz', 3, trim=True)} to {format_quantity(n.band[1], 'Hz', 3, trim=True)}, at the output, at the nominal ambient."
     return Table("noise", "Noise by term", columns, tuple(rows), note)

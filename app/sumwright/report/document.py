@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import getpass
 import hashlib
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -56,7 +57,7 @@ ASSUMPTIONS = (
     "Every limit without a stated distribution is rectangular: standard uncertainty = limit/√3 (JCGM 101:2008, 6.4.2). Terms are independent; every resistor and every op amp is drawn by itself.",
     "Headroom counts every combination of the signals' ends, rails at their least favourable tolerance, and dropout as a straight line in the output current.",
     "The op amp's gain is A(s) = A0 / ((1 + s·A0/(2π·GBW))·(1 + s/(2π·f2))); the slew rate bounds its first stage. Phase margin is 180° + arg T at the first |T| = 1, the loop cut at the op amp's own source.",
-    "Noise: e²(f) = e²·(1 + fc/f) for the op amp's voltage and each input's current, uncorrelated; 4kTR for every resistor and source resistance (Nyquist 1928), k = 1.380649e-23 J/K.",
+    "Noise: e²(f) = e²·(1 + fc/f) for the op amp's voltage and each input's current, uncorrelated; 4kTR for every resistor and source resistance (Nyquist 1928), k = 1.380649·10⁻²³ J/K.",
     "Resistors take their rating up to 70 °C and nothing at 155 °C, in a straight line between. The junction is the ambient plus thermal resistance times dissipation.",
     "Not in the model: layout but for the stated capacitance at the inverting node, leakage across the board, dielectric absorption, self-heating of resistors, the op amp's change with supply or temperature other than drift, radio-frequency rectification, and common-mode errors of the sources' own grounds.",
     "The op amp's figures are those the design states, as listed below: compare them with the data sheet of the part that is bought. Resistor tolerance, temperature coefficient and power are those stated for the series.",
@@ -65,11 +66,12 @@ ASSUMPTIONS = (
 
 @dataclass(frozen=True)
 class Decision:
-    """One decision of the log: when (ISO 8601), by whom, what."""
+    """One decision of the log: when, by whom, what, and which entry it is or corrects."""
 
     at: str
     author: str
     text: str
+    entry: str = ""
 
 
 @dataclass(frozen=True)
@@ -168,11 +170,19 @@ def _environment() -> jinja2.Environment:
     )  # fmt: skip
 
 
+_LONG = re.compile(r"\S{25,}")
+_PIECE = 12  # characters of a long word that stay together
+
+
 def _together(value: Any) -> Any:
-    """A number stays on the line of its unit: the space between them does not break."""
-    if isinstance(value, str) and not isinstance(value, Markup):
-        return value.replace(THIN, "\u00a0")
-    return value
+    """A number stays on the line of its unit, and a word too long for a column may break."""
+    if not isinstance(value, str) or isinstance(value, Markup):
+        return value
+    text = value.replace(THIN, "\u00a0")
+    if not _LONG.search(text):
+        return text
+    words = _LONG.sub(lambda m: "\0".join(m[0][i : i + _PIECE] for i in range(0, len(m[0]), _PIECE)), text)
+    return Markup("<wbr>").join(words.split("\0"))
 
 
 def _plain_css(text: str) -> Markup:
@@ -215,7 +225,7 @@ def _verdict(analysis: Analysis) -> dict[str, str]:
 
 def _roughly(size: float, unit: str) -> str:
     """The headline's number: volts with two decimals, degrees whole, the rest in two figures."""
-    if unit == "V" and size >= 0.0995:
+    if unit == "V" and 0.0995 <= size < 1e3:
         return format_fixed(size, "V", 2)
     if unit in ("°", "°C", "K"):
         return format_fixed(size, "", 0) + (unit if unit == "°" else f"{THIN}{unit}")

@@ -29,6 +29,17 @@ def text_width(text: str, size: float = SIZE, bold: bool = False) -> float:
     return sum(_NARROW.get(c, 0.66 if c.isupper() else 0.57) for c in text) * size * (1.05 if bold else 1.0)
 
 
+def shortened(text: str, room: float, size: float = SIZE, bold: bool = False) -> str:
+    """A text that fits into `room` [px], its middle left out if need be: names that belong together differ at their ends."""
+    if text_width(text, size, bold) <= room:
+        return text
+    keep = len(text) - 1
+    while keep > 4 and text_width(text[:keep] + "…", size, bold) > room:
+        keep -= 1
+    tail = keep // 2
+    return f"{text[: keep - tail].rstrip()}…{text[-tail:].lstrip()}"
+
+
 def number(value: float) -> str:
     """A coordinate with two decimals at most."""
     if not math.isfinite(value):

@@ -19,12 +19,12 @@ from sumwright.engine.stage import REFERENCE, Cell, Design, cell_name
 from sumwright.quantity import THIN, format_fixed, format_quantity, format_resistor
 from sumwright.tokens import REFERENCE_HAND, Hand, hand
 
-from .drawing import INK, PAPER, RED, SOFT, Drawing, number, text_width
+from .drawing import INK, PAPER, RED, SOFT, Drawing, number, shortened, text_width
 
 SYMBOLS = {"iec": "IEC 60617", "ieee": "IEEE 315"}
 ROW = 40.0
 _WIDEST = 1100.0  # px; wider than this, cells go below each other
-_NAME_MOST = 24  # characters of a source's name
+_NAME_ROOM = 200.0  # px for a source's name
 _RES, _BUS, _AMP, _WIDE, _OUT = 46.0, 150.0, 72.0, 74.0, 26.0  # along a leg: resistor, bus; op amp, its width, output
 
 
@@ -445,8 +445,7 @@ class _Sheet:
 
 
 def _short(name: str) -> str:
-    """A long name with its middle left out, since names that belong together differ at their end."""
-    return name if len(name) <= _NAME_MOST else f"{name[: _NAME_MOST - 9].rstrip()}…{name[-8:].lstrip()}"
+    return shortened(name, _NAME_ROOM, bold=True)
 
 
 __all__ = ["SYMBOLS", "schematic"]

@@ -100,7 +100,8 @@ class Table:
     def _writer(self, j: int):
         c = self.columns[j]
         if c.form == "fixed":
-            return lambda v: format_fixed(v, "", c.decimals, sign=c.sign)
+            places = fixed_decimals(self._numbers(j), c.decimals)
+            return lambda v: format_fixed(v, "", places, sign=c.sign)
         if c.form == "scaled":
             factor = prefix_of(self._numbers(j))[0]
             places = scaled_decimals(self._numbers(j), factor, c.decimals)
@@ -110,7 +111,8 @@ class Table:
         if c.form == "resistor":
             return lambda v: "" if v is None else format_resistor(v)
         if c.form == "percent":
-            return lambda v: format_fixed(None if v is None else v * 100, "", c.decimals, sign=c.sign)
+            places = fixed_decimals([v * 100 for v in self._numbers(j)], c.decimals)
+            return lambda v: format_fixed(None if v is None else v * 100, "", places, sign=c.sign)
         if c.form == "measured":
             return lambda v: measure(v.value, v.unit, c.sign)
         return lambda v: "" if v is None else str(v)
@@ -124,6 +126,12 @@ def scaled_decimals(numbers: Sequence[float], factor: float, figures: int) -> in
     return max(0, figures - 1 - math.floor(math.log10(most) + 1e-9))
 
 
+def fixed_decimals(numbers: Sequence[float], wanted: int) -> int:
+    """Decimals of a column, fewer where the largest of `numbers` would take more than eight figures."""
+    most = max((abs(v) for v in numbers), default=0.0)
+    return wanted if most < 1e3 else max(0, min(wanted, 7 - math.floor(math.log10(most))))
+
+
 def measure(value: float | None, unit: str, sign: bool = False) -> str:
     """A number with its own unit, as the margins have it."""
     if value is None:
@@ -132,7 +140,7 @@ def measure(value: float | None, unit: str, sign: bool = False) -> str:
         return format_percent(value / 100, 3, sign=sign)
     if unit in ("°", "°C", "K"):
         return format_fixed(value, "", 1, sign=sign) + (unit if unit == "°" else f"{THIN}{unit}")
-    if unit == "V" and abs(value) >= 0.02:
+    if unit == "V" and 0.02 <= abs(value) < 1e4:
         return format_fixed(value, "V", 3, sign=sign)
     return format_quantity(value, unit, 3, sign=sign)
 
@@ -191,6 +199,7 @@ __all__ = [
     "Measured",
     "Table",
     "csv_text",
+    "fixed_decimals",
     "markdown",
     "measure",
     "plain_markdown",

@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from sumwright.engine.stage import Design
-from sumwright.errors import InvalidDesign, InvalidQuantity, shown
+from sumwright.errors import InvalidDesign, InvalidQuantity, SumwrightError, shown
 from sumwright.files.design import read_design
 
 
@@ -60,6 +60,20 @@ def whole(text: str, name: str, least: int, most: int) -> int:
     if number is None or not least <= number <= most:
         raise InvalidQuantity(f"{name} is {shown(text)}; it must be a whole number from {least} to {most}.")
     return number
+
+
+def read_whole(name: str, most: int) -> bytes:
+    """A file's bytes; SumwrightError if it cannot be read or has more than `most`."""
+    try:
+        with Path(name).open("rb") as held:
+            data = held.read(most + 1)
+    except (OSError, ValueError) as error:
+        raise SumwrightError(
+            f"{shown(name, 120)} cannot be read: {getattr(error, 'strerror', None) or error}."
+        ) from None
+    if len(data) > most:
+        raise SumwrightError(f"{shown(name, 120)} is larger than {most} bytes, the most that is read.")
+    return data
 
 
 def print_json(document: Any) -> None:

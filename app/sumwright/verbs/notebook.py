@@ -5,13 +5,13 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
-from sumwright.errors import SumwrightError, shown
+from sumwright.errors import SumwrightError
 from sumwright.files.text import write_whole
 from sumwright.notebook import bundle
 from sumwright.notebook.people import local_person
 from sumwright.notebook.settings import read_settings
 from sumwright.notebook.store import Store
-from sumwright.verbs.common import print_json, table
+from sumwright.verbs.common import print_json, read_whole, table
 
 ACTS = ("list", "verify", "export", "import", "archive", "unarchive", "backup", "restore")
 
@@ -72,7 +72,7 @@ def _export(store: Store, args: argparse.Namespace) -> int:
 
 
 def _import(store: Store, args: argparse.Namespace) -> int:
-    came = bundle.import_notebook(store, _read(_wanted(args, "a notebook file"), bundle.FILE_MOST))
+    came = bundle.import_notebook(store, read_whole(_wanted(args, "a notebook file"), bundle.FILE_MOST))
     print(f"{came.id}  {came.title}")
     return 0
 
@@ -88,7 +88,7 @@ def _backup(store: Store, args: argparse.Namespace) -> int:
 
 
 def _restore(store: Store, args: argparse.Namespace) -> int:
-    done = bundle.restore(store, _read(_wanted(args, "a backup file"), 2**34))
+    done = bundle.restore(store, read_whole(_wanted(args, "a backup file"), 2**34))
     if args.json:
         print_json([{"id": r.id, "title": r.title, "what": r.what} for r in done])
     else:
@@ -100,19 +100,6 @@ def _wanted(args: argparse.Namespace, what: str) -> str:
     if not args.what:
         raise SumwrightError(f"sumwright notebook {args.act} wants {what}.")
     return args.what
-
-
-def _read(name: str, most: int) -> bytes:
-    try:
-        with Path(name).open("rb") as held:
-            data = held.read(most + 1)
-    except (OSError, ValueError) as error:
-        raise SumwrightError(
-            f"{shown(name, 120)} cannot be read: {getattr(error, 'strerror', None) or error}."
-        ) from None
-    if len(data) > most:
-        raise SumwrightError(f"{shown(name, 120)} is larger than {most} bytes, the most that is read.")
-    return data
 
 
 _ACTS = {

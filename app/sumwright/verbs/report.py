@@ -13,10 +13,10 @@ from sumwright.engine.stage import Design
 from sumwright.errors import SumwrightError
 from sumwright.files.text import write_whole
 from sumwright.report.bench_papers import bring_up_sheet, calibration_record, readings_rows
-from sumwright.report.document import DRAWS, design_report
+from sumwright.report.document import DRAWS, Decision, design_report
 from sumwright.report.export import bundle
 from sumwright.report.schematic import SYMBOLS
-from sumwright.verbs.common import add_design, load_design, whole
+from sumwright.verbs.common import add_design, load_design, read_whole, whole
 
 KINDS = ("design", "bring-up", "calibration")
 MOST_DRAWS = 10_000_000
@@ -42,6 +42,11 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         "--symbols", choices=sorted(SYMBOLS), default="iec", help="resistor symbols: IEC 60617 or IEEE 315 (iec)"
     )
     parser.add_argument("--author", metavar="NAME", help="who made it (the name you are signed in with)")
+    parser.add_argument(
+        "--notebook",
+        metavar="NOTEBOOK",
+        help="list the decisions of this notebook's log: its id in the store, or a file that it was exported to",
+    )
     parser.add_argument("--draws", metavar="N", help=f"boards drawn at random for the histogram, 0 for none ({DRAWS})")
     parser.add_argument("--seed", metavar="S", help="where the draws start; the same seed draws the same boards (0)")
     parser.add_argument(
@@ -59,6 +64,10 @@ def run(args: argparse.Namespace) -> int:
         raise SumwrightError(
             "A calibration record is made from readings: give both --kind calibration and --readings FILE.csv."
         )
+    if args.kind != "design" and args.notebook is not None:
+        raise SumwrightError(
+            "--notebook goes with the design report, which lists decisions; leave out --kind, or --notebook."
+        )
     if args.kind != "design" and args.bundle is not None:
         raise SumwrightError("--bundle goes with the design report; leave out --kind, or --bundle.")
     design = load_design(args.design)
@@ -70,13 +79,33 @@ def run(args: argparse.Namespace) -> int:
         text = _calibration(design, args, head)
     else:
         analysis = Analysis(design)
-        how = {"symbols": args.symbols, "draws": draws, "seed": seed, **head}
+        decisions = [] if args.notebook is None else _decisions(args.notebook)
+        how = {"symbols": args.symbols, "draws": draws, "seed": seed, "decisions": decisions, **head}
         text = design_report(analysis, **how)
         files = None if args.bundle is None else bundle(analysis, **how)
     write_whole(args.output, text)
     if files is not None:
         write_whole(args.bundle, files)
     return 0
+
+
+def _decisions(named: str) -> list[Decision]:
+    """The decisions in the log of a notebook in the store, or in a notebook file."""
+    from sumwright.notebook import bundle as file
+    from sumwright.notebook.entries import decisions_of
+    from sumwright.notebook.settings import read_settings
+    from sumwright.notebook.store import Store
+
+    if not file.is_id(named):
+        _, _, entries = file.unpack(read_whole(named, file.FILE_MOST))
+    else:
+        store = Store(read_settings().store_url)
+        try:
+            store.notebook(named)
+            entries = store.entries(named)
+        finally:
+            store.close()
+    return [Decision(*d) for d in decisions_of(entries)]
 
 
 def _bring_up(design: Design, args: argparse.Namespace, head: dict[str, Any]) -> str:

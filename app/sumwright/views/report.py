@@ -16,6 +16,7 @@ from sumwright.engine.analysis import Analysis
 from sumwright.engine.stage import Design
 from sumwright.errors import InvalidQuantity, SumwrightError
 from sumwright.model.bench_run import BenchRun
+from sumwright.notebook.entries import decisions_of
 from sumwright.report.document import DRAWS, Decision
 from sumwright.report.schematic import SYMBOLS
 
@@ -127,11 +128,10 @@ class Report(Fold):
         order["author"] = sitting.desk.person.name or None
         key, desk = sitting.key, sitting.desk
 
-        def read() -> list[tuple[str, str, str]]:
-            found = desk.entries(key, kind="decision") if key else []
-            return [(e.at.replace("T", " ")[:16] + " UTC", e.author, e.body["text"]) for e in found]
+        def read() -> list[tuple[str, str, str, str]]:
+            return decisions_of(desk.entries(key)) if key else []
 
-        def begin(decisions: list[tuple[str, str, str]]) -> None:
+        def begin(decisions: list[tuple[str, str, str, str]]) -> None:
             self._start(token, {**order, "decisions": decisions})
 
         sitting.aside(read, begin, lambda sentence: self._failed(token, sentence))
