@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 import os
 import subprocess
@@ -10,28 +11,39 @@ import threading
 import zipfile
 
 import pytest
+from sumwright.command import main
 from sumwright.files.examples import NAMES, example_text
 from sumwright.notebook.people import People
 from sumwright.notebook.store import Store
 
 
 @pytest.fixture
-def sumwright(tmp_path):
-    """Runs the command with a data folder of its own: (status, stdout, stderr)."""
+def sumwright(tmp_path, monkeypatch, capsys):
+    """Runs the command with a data folder of its own: (status, stdout, stderr).
+
+    Here, since a process costs a second; `serve`, which sets up its process, and a backup beside writers in one of their own.
+    """
+    for name in [n for n in os.environ if n.startswith(("SUMWRIGHT_", "PANEL_"))]:
+        monkeypatch.delenv(name)
+    monkeypatch.setenv("SUMWRIGHT_DATA", str(tmp_path / "data"))
 
     def run(*words, typed="", **settings):
-        environment = {k: v for k, v in os.environ.items() if not k.startswith(("SUMWRIGHT_", "PANEL_"))}
-        environment |= {"SUMWRIGHT_DATA": str(tmp_path / "data")} | {
-            f"SUMWRIGHT_{k.upper()}": v for k, v in settings.items()
-        }
-        done = subprocess.run(
-            [sys.executable, "-m", "sumwright.command", *words],
-            env=environment,
-            input=typed,
-            capture_output=True,
-            text=True,
-        )
-        return done.returncode, done.stdout, done.stderr
+        own = {f"SUMWRIGHT_{k.upper()}": v for k, v in settings.items()}
+        if "serve" in words or "backup" in words:
+            done = subprocess.run(
+                [sys.executable, "-m", "sumwright.command", *words],
+                env={**os.environ, **own},
+                input=typed,
+                capture_output=True,
+                text=True,
+            )
+            return done.returncode, done.stdout, done.stderr
+        with monkeypatch.context() as here:
+            for name, value in own.items():
+                here.setenv(name, value)
+            here.setattr(sys, "stdin", io.StringIO(typed))
+            status = main(list(words))
+        return status, *capsys.readouterr()
 
     return run
 
