@@ -28,7 +28,8 @@ export function layout({width, row, head, foot, type, cells, rows}) {
     L.cells.push({bus, xm, tri, tip, out, half: (many ? 36 : 42) * k})
     x = out + 54 * q
   }
-  L.inner = many ? Math.max(width, L.cells[L.cells.length - 1].out + 80 * q) : width
+  // a window too narrow for it scrolls the drawing
+  L.inner = Math.max(width, L.cells[L.cells.length - 1].out + 80 * q)
 
   // heights
   for (let c = cells.length - 1; c >= 0; c--) {
@@ -67,8 +68,8 @@ export function layout({width, row, head, foot, type, cells, rows}) {
   const load = cell => cell === last ? 60 * k : 0
   const hangs = cell => cell.plusGround === 'down' ? row / 2 + 56 * k : cell.plusGround === 'tied' && !cell.plus.length ? row / 2 + 26 * k : 0
   const low = cell => cell.mid + Math.max(cell.half, load(cell), hangs(cell)) + 4
-  L.free = {bottom: L.bottom - 6, places: [{left: L.cells[0].bus + 16 * k, top: Math.max(...L.cells.map(low))}]}
+  L.free = {bottom: L.bottom - 6, places: L.inner <= width ? [{left: L.cells[0].bus + 16 * k, top: Math.max(...L.cells.map(low))}] : []}
   if (many && L.inner <= width) L.free.places.push({left: last.bus + 10 * k, top: low(last)})
-  if (!many) L.free.places.push({left: last.tri + 4 * k, top: last.mid + load(last) + 4})
+  if (!many && L.inner <= width) L.free.places.push({left: last.tri + 4 * k, top: last.mid + load(last) + 4})
   return L
 }

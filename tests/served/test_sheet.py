@@ -542,13 +542,15 @@ def test_a_session_that_ended_is_said_at_once_and_the_page_opens_itself_anew(fre
     assert "opened itself anew" in fresh.locator("#note").text_content()
 
 
-@pytest.mark.parametrize(("width", "height"), [(1024, 768), (1920, 1080)])
+@pytest.mark.parametrize(("width", "height"), [(1024, 768), (1600, 900), (1920, 1080)])
 def test_it_fits_beside_a_scope_and_uses_a_large_screen(server, browser, width, height):
     page = browser.new_page(viewport={"width": width, "height": height})
     page.goto(f"{server[1]}/app")
     settled(page)
     assert page.evaluate("document.documentElement.scrollWidth") <= width
     assert page.evaluate("document.querySelector('.curves').getBoundingClientRect().bottom") <= height
+    assert page.locator(".plate.flat").count() == 0
+    assert page.evaluate(OVERLAPS) == []
     page.close()
 
 
