@@ -233,16 +233,17 @@ export function mount(node, sheet) {
     const list = s.taken ? t.suspects.filter((x, i) => i < 1 || x.probability >= .005).slice(0, 6) : t.suspects.slice(0, 1)
     const rest = 1 - list.reduce((sum, x) => sum + x.probability, 0)
     suspects.set([...list.map(x => [[fixed(x.probability, 2), 'r'], [x.fault === 'none' ? 'nothing wrong' : [x.part, x.fault].filter(Boolean).join(', '), 'who'], [x.estimate === null ? '' : x.unit === 'V' ? `${fixed(x.estimate)}${THIN}V` : resistor(x.estimate), 'r']]),
-      ...(rest > .004 ? [[[fixed(rest, 2), 'r'], ['anything else', 'who soft'], ['', '']]] : [])])
+      ...(rest >= .005 ? [[[fixed(rest, 2), 'r'], ['anything else', 'who soft'], ['', '']]] : [])])
     list.forEach((x, i) => { setClass(suspects.body.rows[i], 'lead', i === 0); setClass(suspects.body.rows[i], 'joined', x.group === list[i + 1]?.group) })
     const first = list[0]
     odd.hidden = !t.odd; setText(odd, t.odd)
     setText(told, first ? first.explain : '')
-    setText(apart, t.tell && s.taken ? `These readings cannot part the first ${list.filter(x => x.group === 1).length + t.more}. ${t.tell}` : '')
+    const sound = first?.fault === 'none' && first.probability >= .9
+    setText(apart, t.tell && s.taken && !sound ? `These readings cannot part the first ${list.filter(x => x.group === 1).length + t.more}. ${t.tell}` : '')
     const live = Object.entries(t.next).map(([n, v]) => `${n} ${volts(v)}`).join(', ')
-    const spent = s.taken && t.bits < .01
+    const spent = s.taken && t.bits < .01, parted = t.tell && !sound
     next.replaceChildren(el('b', {text: 'Next reading. '}), spent
-      ? t.tell ? 'No reading of the output tells more; the measurement above does.' : 'Nothing more to tell.'
+      ? parted ? 'No reading of the output tells more; the measurement above does.' : 'Nothing more to tell.'
       : `${live}${THIN}V, worth ${fixed(t.bits, 2)} bit. `, spent ? '' : take)
     notes.replaceChildren(...t.notes.map(text => el('p', {class: 'fit-note', text})))
   }

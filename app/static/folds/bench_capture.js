@@ -40,7 +40,7 @@ export function mountCapture(sheet, send) {
   const lay = el('button', {class: 'act', text: 'Lay it over the prediction', onclick: () => send({do: 'capture', step: 'fit', map: Object.fromEntries(mapped.map(([c, s]) => [c, s.value]))})})
   const fits = table([{text: ''}, {text: 'from the record', class: 'r'}, {text: 'u', class: 'r'}, {text: 'by the drawing', class: 'r'}], 'Weights from the record')
   const facts = el('p', {class: 'note'}), findings = el('div', {class: 'note'})
-  const place = el('div', {class: 'capture-figure'}), shownFit = el('div', {hidden: true}, el('p', {class: 'soft', text: 'Measured in grey, the drawing’s prediction dashed, the fit drawn through; V against time.'}), place, el('div', {class: 'two'}, fits.node, el('div', {}, facts, findings)))
+  const place = el('div', {class: 'capture-figure'}), shownFit = el('div', {hidden: true}, el('p', {class: 'soft', text: 'Measured in grey, the drawing’s prediction dashed, the fit drawn through; V against time. Signals that no channel is mapped to are taken where the sheet has them.'}), place, el('div', {class: 'two'}, fits.node, el('div', {}, facts, findings)))
   const node = el('details', {}, el('summary', {text: 'Capture'}),
     el('div', {class: 'line'}, el('button', {class: 'act', text: 'Open a scope’s or logger’s record (CSV)', onclick: () => file.click()}), file, said), mapping, shownFit)
   node.addEventListener('toggle', () => sheet.redraw?.())
@@ -64,7 +64,8 @@ export function mountCapture(sheet, send) {
       shownFit.hidden = !c.fit
       if (!c.fit) return
       const r = c.fit, names = [...r.names, 'offset']
-      fits.set(names.map((n, i) => [[n, ''], [r.value[i] === null ? '–' : signed(r.value[i], 5), 'r'], [r.u[i] === null ? '' : fixed(r.u[i], 5), 'r soft'], [signed(r.predicted[i], 5), 'r']]))
+      const places = u => u > 0 ? Math.max(4, Math.min(8, 1 - Math.floor(Math.log10(u)))) : 5 // two figures of the uncertainty
+      fits.set(names.map((n, i) => [[n, ''], [r.value[i] === null ? '–' : signed(r.value[i], places(r.u[i])), 'r'], [r.u[i] === null ? '' : fixed(r.u[i], places(r.u[i])), 'r soft'], [signed(r.predicted[i], 5), 'r']]))
       setText(facts, `Delay ${engineering(r.delay, 's')}; bandwidth ${r.bandwidth === null ? 'beyond what the sampling shows' : engineering(r.bandwidth, 'Hz')}; ${engineering(r.noise, 'V')} RMS left over; ${fixed(100 * r.used, 1)}${THIN}% of the samples in the fit.`)
       findings.replaceChildren(...(r.findings.length ? r.findings : ['No clipping, slewing, ringing or mains pick-up stands clear of the noise.']).map(text => el('p', {text})))
       if (!node.open) return

@@ -5,6 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from sumwright.engine.bench.capture import fit_capture
 from sumwright.engine.bench.diagnose import diagnose
 from sumwright.engine.bench.home import cure
@@ -48,11 +50,17 @@ def look(path: str, signals: tuple[str, ...], name: str = ""):
     """A job: read a record and say what is in it."""
     c = read_capture(Path(path), name)
     yield None
+    np.save(columns_file(path), np.stack([c.time, *c.channels.values()]))  # so that a fit need not read the text again
     return {
         "channels": list(c.channels), "rows": len(c.time), "interval": c.interval, "span": float(c.time[-1] - c.time[0]),
         "time": f"time read in {c.time_unit}" if c.time_stated else "time taken as seconds: its heading names no unit",
         "map": guess(tuple(c.channels), signals),
     }  # fmt: skip
+
+
+def columns_file(path: str) -> str:
+    """Where the columns of a record are put beside it, once it is read."""
+    return f"{path}.npy"
 
 
 def guess(channels: tuple[str, ...], signals: tuple[str, ...]) -> dict[str, str]:
@@ -66,10 +74,10 @@ def guess(channels: tuple[str, ...], signals: tuple[str, ...]) -> dict[str, str]
     return found
 
 
-def fit_record(path: str, design, mapping: dict[str, str], name: str = ""):
-    """A job: fit a record whose channels are mapped."""
-    c = read_capture(Path(path), name)
+def fit_record(path: str, design, mapping: dict[str, str]):
+    """A job: fit a record that was looked at; `mapping` says of every channel, in their order, what it is."""
+    columns = np.load(columns_file(path), mmap_mode="r")
     yield None
-    output = next(channel for channel, what in mapping.items() if what == OUTPUT)
-    signals = {what: c.channels[channel] for channel, what in mapping.items() if what and what != OUTPUT}
-    return fit_capture(design, c.time, c.channels[output], signals)
+    found = {what: np.array(columns[k]) for k, what in enumerate(mapping.values(), start=1) if what}
+    output = found.pop(OUTPUT)
+    return fit_capture(design, np.array(columns[0]), output, found)

@@ -6,6 +6,7 @@ import asyncio
 import base64
 import binascii
 import tempfile
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -13,7 +14,7 @@ from bokeh.models import ColumnDataSource, Range1d
 
 from sumwright import fields
 from sumwright.errors import InvalidReadings
-from sumwright.model.bench_jobs import OUTPUT, fit_record, look
+from sumwright.model.bench_jobs import OUTPUT, columns_file, fit_record, look
 
 from .figures import move, paint, put, ruled_figure
 
@@ -125,9 +126,8 @@ class CapturePart:
         if len(mapping) < 2:
             raise InvalidReadings("Map at least one channel to a signal.")
         self._about = {**self._about, "map": {c: mapping.get(c, "") for c in self._about["channels"]}}
-        self._job(
-            fit_record, self._file.name, self._fold.workbench.analysis.design, mapping, self._name, done=self._fitted
-        )
+        design = self._fold.workbench.analysis.design
+        self._job(fit_record, self._file.name, design, self._about["map"], done=self._fitted)
 
     def _fitted(self, result):
         self._fit, self._problem, self._fresh = result, "", True
@@ -170,6 +170,7 @@ class CapturePart:
     def _forget(self):
         self._fold.context.jobs.stop("capture")
         if self._file is not None:
+            Path(columns_file(self._file.name)).unlink(missing_ok=True)
             self._file.close()
         self._file, self._size, self._about, self._fit, self._problem = None, 0, None, None, ""
 
