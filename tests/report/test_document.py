@@ -153,6 +153,12 @@ def test_a_comparator_makes_a_report_whose_figures_stay_readable():
     assert all(len(re.sub(r"\D", "", cell)) <= 9 for row in read.rows["t-weights"] for cell in row[1:])
 
 
+def test_signals_without_a_range_make_a_report_without_a_step():
+    design = example()
+    still = replace(design, signals=tuple(replace(s, low=s.value, high=s.value) for s in design.signals))
+    assert "Step of" not in report(still) and "Step of" in report(design)
+
+
 def test_both_symbol_standards():
     assert "IEEE 315" in report(example(), symbols="ieee", draws=0)
     assert "IEC 60617" in report(example(), draws=0)

@@ -282,8 +282,11 @@ def _full_power(analysis: Analysis) -> str:
     )
 
 
-def _step(analysis: Analysis, name: str) -> tuple[Markup, str]:
+def _step(analysis: Analysis, name: str) -> tuple[Markup | None, str]:
+    """The signal stepped over its whole range; nothing where no signal has one."""
     s = analysis.design.signal(name)
+    if s.high <= s.low:
+        return None, ""
     result = step(analysis, name, s.high - s.low, start=s.low)
     settled = "; ".join(
         f"within {format_percent(b)} after {format_quantity(t, 's')}" for b, t in result.settled.items()
