@@ -64,6 +64,8 @@ def test_engineering_notation_is_read():
         (f"{HEADER}\n{line(gain_bandwidth='fast')}\n", "line 2.*gain_bandwidth.*fast"),
         (f"{HEADER}\n{line(gain_bandwidth='-1M')}\n", "line 2.*gain_bandwidth"),
         (f"{HEADER}\n{line()}\n{line()}\n", "line 3.*already"),
+        (f"{HEADER}\r{line()}\r{line()}\r", "line 3.*already"),  # the line ends of old spreadsheets
+        (f"{HEADER}\n{'x' * 200_000},1\n", "cannot be read as CSV"),
     ],
 )
 def test_a_bad_list_is_refused_by_line_and_column(text, says):

@@ -30,10 +30,13 @@ def read_op_amps(text: str) -> tuple[Entry, ...]:
     InvalidDesign
         Naming the line and the column of the first thing wrong.
     """
-    text = text.lstrip("\ufeff")
+    text = text.lstrip("\ufeff").replace("\r\n", "\n").replace("\r", "\n")
     first = next((line for line in text.splitlines() if line.strip()), "")
     mark = next((m for m in (";", "\t") if m in first), ",")  # as spreadsheets of other countries save it
-    rows = list(csv.reader(io.StringIO(text), skipinitialspace=True, delimiter=mark))
+    try:
+        rows = list(csv.reader(io.StringIO(text), skipinitialspace=True, delimiter=mark))
+    except csv.Error as error:
+        raise InvalidDesign(f"the list of op amps cannot be read as CSV: {error}.", "") from None
     numbered = [(i + 1, r) for i, r in enumerate(rows) if any(f.strip() for f in r)]
     if not numbered:
         raise InvalidDesign("the list of op amps is empty; its first line must name the columns.", "header")
