@@ -24,13 +24,14 @@ from sumwright.model.edits import FOLLOW
 from sumwright.model.history import Snapshot as Step
 from sumwright.model.workbench import SYMBOLS, Workbench
 from sumwright.notebook.autosave import Autosave, Mark, Snapshot
+from sumwright.notebook.bundle import unpack
 from sumwright.notebook.compare import key_results
 from sumwright.notebook.desk import SET_ASIDE, Desk
 from sumwright.notebook.settings import settings
 from sumwright.notebook.shelf import the_store
 from sumwright.notebook.sign_in import who_for
-from sumwright.notebook.store import Sheet
-from sumwright.notebook.text import InvalidNotebookFile, InvalidText, canonical, clean_line, read_json
+from sumwright.notebook.store import Notebook, Sheet
+from sumwright.notebook.text import InvalidNotebookFile, InvalidText, canonical, clean_line, other_format, read_json
 
 log = logging.getLogger("sumwright.sitting")
 
@@ -39,7 +40,10 @@ STEPS_MOST = 100  # undo steps kept through a reload
 _WATCHED = ("design", "unplugged", "follow", "chosen", "symbols", "readings")
 _ID = re.compile(r"[a-z2-7]{16}")
 
+SETTLE = 1.0  # s that opening a sheet waits for what another page of this process has yet to save of it
+
 _beside = ThreadPoolExecutor(4, thread_name_prefix="notebook")
+_open: weakref.WeakSet[Sitting] = weakref.WeakSet()
 
 
 class Sitting:
@@ -71,6 +75,7 @@ class Sitting:
             try:
                 if not _ID.fullmatch(notebook):
                     raise InvalidNotebookFile(f"The link names the notebook {notebook[:40]!r}, which is none.")
+                settle(notebook, sheet)
                 found = desk.sheet(notebook, sheet)
                 self.workbench = self._workbench(found)
                 self.archived = desk.notebook(notebook).archived_at is not None
@@ -93,6 +98,7 @@ class Sitting:
         self._page = weakref.ref(page)
         self.workbench.param.watch(self._changed, list(_WATCHED))
         self._begin_saving(self._revision, self._saved_at)
+        _open.add(self)
         page.extras["place"] = self.place
         if self.key:
             self._tell(Mark("saved", self._saved_at))
@@ -303,6 +309,12 @@ class Sitting:
             if others:
                 self.desk.append(theirs.notebook, "note", {"text": f"{title}\n{others}"}, sheet=theirs.number)
 
+    def import_notebook(self, data: bytes) -> Notebook:
+        """Take in a notebook file whose sheets this version can open, or nothing of it."""
+        for sheet in unpack(data)[1]:
+            read_state(sheet.state)
+        return self.desk.import_notebook(data)
+
     # ------------------------------------------------------------ contents
 
     def frozen(self, title: str) -> dict[str, Any]:
@@ -330,6 +342,15 @@ class Sitting:
         )
         bench.history.past[:], bench.history.future[:] = past, future
         return bench
+
+
+def settle(notebook: str, number: int) -> None:
+    """Have saved what other pages of this process still hold of a sheet: a page that is loaded anew finds its last move."""
+    for other in list(_open):
+        saving = other.autosave
+        if (other.key, other.number) == (notebook, number) and saving is not None and saving.mark.kind == "saving":
+            saving.now()
+            saving.wait(SETTLE)
 
 
 def begin(user: str | None, arguments: Mapping[str, list[bytes]]) -> Sitting:
@@ -377,9 +398,7 @@ def read_state(state: dict[str, Any]) -> tuple[Step, str]:
         If it is not one, with the design's own sentence where the design is at fault.
     """
     if state.get("format") != STATE_FORMAT:
-        raise InvalidNotebookFile(
-            f"The format of the stored sheet is {str(state.get('format'))[:40]!r}; it must be {STATE_FORMAT!r}."
-        )
+        raise other_format("The stored sheet", state.get("format"), STATE_FORMAT)
     symbols = state.get("symbols", SYMBOLS[0])
     if symbols not in SYMBOLS:
         raise InvalidNotebookFile(

@@ -323,7 +323,7 @@ def test_a_store_that_cannot_be_written_is_told_and_saved_when_it_can(chromium, 
     act(page, do="value", signal="north", value=9.0)
     saved(page, "unsaved", timeout=30)
     assert page.locator("#saved").inner_text().startswith("not saved since")
-    assert "notebook.db" in page.locator("#note").inner_text()
+    page.wait_for_function("() => document.querySelector('#note').innerText.includes('notebook.db')")
     act(page, do="value", signal="north", value=9.5)  # the sheet itself goes on
     assert value_of(page, "north") == 9.5
     blocker.execute("ROLLBACK")

@@ -16,8 +16,9 @@ from sumwright.model import demo, edits
 from sumwright.model.history import Snapshot as Step
 from sumwright.notebook.desk import Desk
 from sumwright.notebook.people import Person
+from sumwright.notebook.text import other_format
 from sumwright.page import Page
-from sumwright.sitting import STEPS_MOST, Sitting, read_history, read_state, state_of, step_document
+from sumwright.sitting import STATE_FORMAT, STEPS_MOST, Sitting, read_history, read_state, state_of, step_document
 
 
 @pytest.fixture
@@ -52,6 +53,9 @@ def test_the_state_comes_back_with_its_history(desk):
     assert again.workbench.symbols == "IEEE 315"
     assert again.workbench.history.past == sitting.workbench.history.past
     assert again.workbench.history.future == sitting.workbench.history.future
+    sitting.workbench.edit(edits.with_value, "north", 4.0)  # and loaded anew at once, before its turn to be saved
+    assert not sitting.autosave.clean
+    assert Sitting(desk, sitting.key, 1).workbench.design == sitting.workbench.design
     page.close()
 
 
@@ -195,6 +199,22 @@ def test_any_value_anywhere_in_a_stored_sheet_is_taken_or_refused(data):
         assert str(error)
     else:
         assert design_document(step.design)["signals"] and symbols
+
+
+def test_a_file_of_a_newer_version_is_refused_whole_and_says_so(sqlite_store, desk):
+    sitting = Sitting(desk)
+    good = state_of(sitting.workbench)
+    for key in (desk.new_notebook("N", good | {"format": "sumwright-sheet/2"}).id, desk.new_notebook("N", good).id):
+        data = desk.export(key)
+        count = len(sqlite_store.notebooks())
+        if sqlite_store.sheet(key, 1).state["format"] == STATE_FORMAT:
+            assert sitting.import_notebook(data).title == "N (copy)"
+            continue
+        with pytest.raises(SumwrightError, match=r"made by a newer version of Sumwright: .* Bring this one up to date"):
+            sitting.import_notebook(data)
+        assert len(sqlite_store.notebooks()) == count
+    assert "must be" in str(other_format("The file", "other/2", "sumwright-notebook/1"))
+    assert "newer" in str(other_format("The file", "sumwright-notebook/2", "sumwright-notebook/1"))
 
 
 @settings(max_examples=100, deadline=None)

@@ -19,7 +19,7 @@ from typing import Any
 
 from .entries import KINDS, Entry, checked_body, flaws, utc_now
 from .store import HISTORY_MOST, STATE_MOST, Notebook, Sheet, Store
-from .text import InvalidNotebookFile, InvalidText, canonical, clean_line, csv_cell, read_json, sha256
+from .text import InvalidNotebookFile, InvalidText, canonical, clean_line, csv_cell, other_format, read_json, sha256
 
 FORMAT = "sumwright-notebook/1"
 BACKUP_FORMAT = "sumwright-backup/1"
@@ -234,9 +234,7 @@ def _unzip(
         raise InvalidNotebookFile("The zip holds no manifest.json; it is not one of Sumwright's.")
     manifest = _object("manifest.json", read_json("manifest.json", files.pop("manifest.json")))
     if manifest.get("format") != form:
-        raise InvalidNotebookFile(
-            f"The format in manifest.json is {str(manifest.get('format'))[:60]!r}; it must be {form!r}."
-        )
+        raise other_format("The file", manifest.get("format"), form)
     sums = _object("manifest.json, files", manifest.get("files"))
     for name in sorted(sums.keys() ^ files.keys()):
         raise InvalidNotebookFile(f"{name[:80]!r} stands in only one of the zip and its manifest.")

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import re
 import unicodedata
 from typing import Any
 
@@ -68,6 +69,18 @@ def _clean(what: str, text: object, *, most: int, allowed: str) -> str:
                 f"{what} holds U+{ord(character):04X} at place {place}, which reorders the text around it; take it out."
             )
     return unicodedata.normalize("NFC", text)
+
+
+def other_format(what: str, held: object, known: str) -> InvalidNotebookFile:
+    """The refusal of a format that is not `known`; a later one of the same kind is told apart."""
+    if isinstance(held, str) and re.fullmatch(rf"{re.escape(known.split('/')[0])}/[0-9]{{1,6}}", held):
+        return InvalidNotebookFile(
+            f"{what} was made by a newer version of Sumwright: its format is {held!r} and this version reads {known!r}. "
+            "Bring this one up to date to open it."
+        )
+    return InvalidNotebookFile(
+        f"The format of {what[0].lower()}{what[1:]} is {str(held)[:60]!r}; it must be {known!r}."
+    )
 
 
 def canonical(value: Any) -> str:

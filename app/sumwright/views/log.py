@@ -296,6 +296,8 @@ class Log(Fold):
 
         def done(_: None) -> dict[str, Any]:
             self._books = None
+            if key == self._sitting.key:  # this page's own notebook: it says at once that nothing is kept, or is again
+                self._sitting.archived = not back
             return {"archived": not back}
 
         self._do(message, lambda: desk.archive(key, back=back), done)
@@ -339,8 +341,8 @@ class Log(Fold):
 
     def _import(self, message: dict) -> dict[str, Any] | None:
         """One part of a notebook file; with the last one it is read whole and put in, or refused whole."""
-        desk = self._sitting.desk
-        desk.require("import")
+        sitting = self._sitting
+        sitting.desk.require("import")
         k, parts = fields.whole(message, "part", 0, 10**3), fields.whole(message, "parts", 1, 10**3)
         if k == 0:
             self._coming = []
@@ -360,7 +362,9 @@ class Log(Fold):
             return {"next": k + 1}
         whole, self._coming = b"".join(self._coming), []
         self._do(
-            message, lambda: desk.import_notebook(whole), lambda n: {"go": {"notebook": n.id, "sheet": n.sheets[0][0]}}
+            message,
+            lambda: sitting.import_notebook(whole),
+            lambda n: {"go": {"notebook": n.id, "sheet": n.sheets[0][0]}},
         )
         return None
 
