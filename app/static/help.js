@@ -64,9 +64,29 @@ const FIGURES = {
   stray: ['Capacitance of the board at each inverting node', 'F', '2 pF to 5 pF for a tidy board (common practice)'],
 }
 const STARTS = {
-  value: ['Where the signal is just now; a reference’s voltage', 'V', 'your hand, or the slider’s'],
+  value: ['Where the signal is just now', 'V', 'your hand, or the slider’s'],
   weight: ['What the output shall change by per volt of the signal', 'V/V', 'what is asked; below it, what the resistors make'],
-  part: ['A fitted part: type 4k7, 4.7k, 100n (IEC 60062)', 'Ω, or F for a capacitor', 'Choices finds preferred values (IEC 60063)'],
+  part: ['A fitted resistor: type 4k7, 4.7k or 0R47 (IEC 60062)', 'Ω', 'what is fitted; Choices finds preferred values (IEC 60063)'],
+  name: ['What the signal is called', 'words', 'the job'],
+}
+const CAPACITOR = ['Capacitor across the feedback: type 22p or 4p7; empty for none', 'F', 'what is fitted; the margin Phase margin says how much it wants']
+const REFERENCE = {
+  value: ['Voltage of the reference that makes the offset', 'V', 'its data sheet'],
+  weight: ['Offset: where the output shall be with every signal at 0 V', 'V', 'what is asked; below it, what the resistors make'],
+}
+// what is no blank, by its name
+const CONTROLS = {
+  'Arrangement': 'Where the legs go: which op amps, which inputs. Taking another one realises the same weights anew.',
+  'Take an op amp from the list': 'Every figure of it at once; each can still be typed over.',
+  'Add a signal': 'One strip more, with a leg; its weight and range can be typed.',
+  'Reorder': 'Move signals up and down among the rows of their input, or remove them.',
+  'Dark': 'Dark paper, for a dark lab', 'Light': 'Light paper',
+  'IEC 60617': 'Resistors as rectangles', 'IEEE 315': 'Resistors as zigzags',
+  'Title of the sheet': 'What the sheet is called, in the notebook and on reports',
+  'op amp, every figure': 'Take another op amp, or type its figures',
+  'resistors, series and limits': 'Series, tolerance, temperature coefficient, rating, least and most value',
+  'target window, accuracy, noise and bandwidth': 'What is asked of the output: window, accuracy, noise, bandwidth',
+  'rails, ambient and what is asked of the output': 'Tolerance of the rails, ambient, reference, load, board',
 }
 const MARGINS = {
   'Swing to': 'Room between the output and its limit at the extreme corner, rails at their least favourable tolerance',
@@ -87,14 +107,16 @@ const MARGINS = {
 export function helpFor(field) {
   const words = field.replace(/^(drawer|plate) /, '')
   const [group, ...rest] = words.split(' ')
-  const found = (group === 'op_amp' && OP_AMP[rest.join(' ')]) || FIGURES[words] || STARTS[group]
+  const found = (group === 'part' && words.endsWith('/cf') && CAPACITOR) || (rest[0] === 'reference' && rest.length === 2 && REFERENCE[group]) || (group === 'op_amp' && OP_AMP[rest.join(' ')]) || FIGURES[words] || STARTS[group]
   return found ? `${found[0]}. In ${found[1]}. From ${found[2]}.`.replace('..', '.') : ''
 }
 
 function help(e) {
-  const node = e.target.closest?.('input.blank, button.chk')
+  const node = e.target.closest?.('input.blank, input[type=range], button, select.blank, input#title')
   if (!node || node.title) return
-  const words = node.blank ? helpFor(node.blank.field)
+  const words = node.blank && node.id !== 'title' ? helpFor(node.blank.field)
+    : node.type === 'range' ? 'Where the signal is just now. In V. From your hand: arrows move it by 1/500 of its range, with Shift ten times that, Home and End to its ends.'
+    : !node.matches('.chk') ? CONTROLS[node.getAttribute('aria-label') ?? node.textContent] ?? ''
     : Object.entries(MARGINS).find(([start]) => node.querySelector('.t')?.textContent.startsWith(start))?.[1] ?? ''
   if (words) node.title = words
 }

@@ -171,7 +171,7 @@ function drawRow(item, r, shown, row, reach, W, plugWidth) {
   const beyond = !r.reference && (r.value < r.low || r.value > r.high)
   setClass(node, 'beyond', beyond)
   if (item.past) setText(item.past, beyond ? `past ${brief(r.low)} to ${brief(r.high)}${THIN}V` : '')
-  setAttr(item.value.node, 'title', beyond ? `past its range, ${fixed(r.low)} to ${fixed(r.high)} V: the corners and margins do not cover it` : helpFor('value'))
+  setAttr(item.value.node, 'title', beyond ? `past its range, ${fixed(r.low)} to ${fixed(r.high)}${THIN}V: the corners and margins do not cover it` : helpFor(item.value.field))
   setText(item.title.lastChild, r.rs ? `${engineering(r.rs, 'Ω').replace(/\.0+(?=\u202f)/, '')}` : '')
   item.want.set(r.reference ? `${signed(shown.offset)}${THIN}V` : weightText(r))
   setText(item.made, r.out ? 'cable out' : r.reference ? `${volts(r.share, signed)}${THIN}V` : weight(r.made))
