@@ -41,7 +41,7 @@ def leaves(document):
     st.integers(0, 10**9), figures, st.sampled_from([None, 1.0, 2e3, 1e6]), st.booleans(), st.booleans(),
     st.sampled_from([Supply(15.0, -15.0, 0.05), Supply(5.0, 0.0, 0.1), Supply(-1.0, -12.0)]),
 )  # fmt: skip
-@settings(max_examples=300)
+@settings(max_examples=150)
 def test_any_readable_design_has_results(seed, changes, load, still, open_loop, supply):
     design = random_chain(np.random.default_rng(seed), load=load)
     design = replace(
