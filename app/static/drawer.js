@@ -158,20 +158,27 @@ const MAKERS = {
         }
         setText(title, '')
         fillAll(blanks)(state)
-        cableOut(out, state.cable_out?.name === name ? state.cable_out : null)
+        cableOut(out, state.cable_out?.name === name ? state.cable_out : null, state.signals.rows.filter(r => r.weight), row(state)?.out)
       },
     }
   },
 }
 
 // what happens to the others when this cable is pulled, and when its source dies
-function cableOut(node, found) {
-  const key = JSON.stringify(found)
+function cableOut(node, found, rows, isOut) {
+  const key = JSON.stringify([found, isOut])
   if (node.dataset.key === key) return
   node.dataset.key = key
   if (!found) { node.replaceChildren(); return }
   const line = ([name, ...values], write) => el('tr', {}, el('th', {scope: 'row', text: name}),
     ...values.map((v, i) => el('td', {class: `r${i && Math.abs(v - values[0]) > 1e-4 * Math.max(1e-9, Math.abs(values[0])) ? ' moved' : ''}`, text: write(v)})))
+  if (isOut) { // nothing to foresee: what is wanted beside what is left of it
+    const wanted = new Map(rows.map(r => [r.name, r.weight]))
+    node.replaceChildren(el('h3', {text: 'this cable is out'}), el('table', {},
+      el('thead', {}, el('tr', {}, el('th'), el('th', {class: 'r', text: 'wanted'}), el('th', {class: 'r', text: 'now'}))),
+      el('tbody', {}, ...found.weights.map(([name, now]) => line([name, wanted.get(name) ?? 0, now], v => signed(v, 4))))))
+    return
+  }
   node.replaceChildren(el('h3', {text: 'if this cable goes'}), el('table', {},
     el('thead', {}, el('tr', {}, el('th'), el('th', {class: 'r', text: 'now'}), el('th', {class: 'r', text: 'pulled out'}), el('th', {class: 'r', text: 'source dead, 0\u202fV'}))),
     el('tbody', {}, ...found.weights.map(w => line(w, v => signed(v, 4))), line(['offset, V', ...found.offset], v => signed(v)), line(['noise gain', ...found.noise_gain], v => fixed(v)))))
