@@ -149,3 +149,13 @@ def test_what_cannot_be_fitted_is_refused():
         fit_capture(PLAIN, t[:8], t[:8], {"north": t[:8]})
     with pytest.raises(InvalidReadings, match="Nothing moves"):
         fit_capture(PLAIN, t, np.ones(100), {"north": np.ones(100)})
+
+
+def test_waves_too_dense_to_draw_fill_their_height():
+    """Some 19 samples a drawn point and a wave in every 15 samples: one sample of each would beat, least and greatest do not."""
+    t = times(28_500)
+    north = 4 * np.sin(2 * np.pi * 66.7e3 * t)
+    got = fit_capture(PLAIN, t, noisy(WEIGHTS[0] * north), {"north": north})
+    for drawn in (got.predicted, got.fitted):
+        assert drawn[::2].min() > 3.5
+        assert drawn[1::2].max() < -3.5

@@ -384,6 +384,11 @@ def _for_drawing(t, y, predicted, model):
     count = len(t) // step
     cut = count * step
     shape = (count, step)
-    low, high = y[:cut].reshape(shape).min(axis=1), y[:cut].reshape(shape).max(axis=1)
-    middle = slice(step // 2, cut, step)
-    return t[middle], np.column_stack([low, high]), predicted[middle], model[middle]
+    y, predicted, model = (c[:cut].reshape(shape) for c in (y, predicted, model))
+    band = np.column_stack([y.min(axis=1), y.max(axis=1)])
+    return t[step // 2 : cut : step], band, _outline(predicted), _outline(model)
+
+
+def _outline(parts):
+    """One point a stretch, greatest and least by turns, so that a line through waves too dense to draw fills their height."""
+    return np.where(np.arange(len(parts)) % 2, parts.min(axis=1), parts.max(axis=1))
