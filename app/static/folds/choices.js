@@ -74,12 +74,12 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- the table
   function makeRow(key) {
     const mark = svg('svg', {width: 14, height: 14, 'aria-hidden': 'true'}, svg('path', {stroke: 'var(--ink)', 'stroke-width': 1.5}))
-    const name = el('span'), merit = el('span', {class: 'soft merit'}), bad = el('span', {class: 'bad'})
+    const name = el('span'), pair = el('span', {class: 'vh'}), merit = el('span', {class: 'soft merit'}), bad = el('span', {class: 'bad'})
     const cells = Array.from({length: 8}, (_, i) => el('td', {class: i < 7 ? 'r' : null}))
     const item = {}
-    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', id: key})}, name, bad, merit)
+    const pick = el('button', {class: 'pick', onclick: () => say({do: 'pick', id: key})}, name, pair, bad, merit)
     item.node = el('tr', {onclick: e => { if (!e.target.closest('button')) pick.click() }, ondblclick: () => say({do: 'take', id: key})}, el('td', {}, mark), el('td', {class: 'who'}, pick), ...cells)
-    return Object.assign(item, {mark, name, merit, bad, cells, pick})
+    return Object.assign(item, {mark, name, pair, merit, bad, cells, pick})
   }
 
   let scale = {}
@@ -87,7 +87,8 @@ export function mount(node, sheet) {
     const outline = item.mark.firstChild
     setAttr(outline, 'd', OUTLINE[SHAPES[row.arrangement] ?? 'cross'])
     setAttr(outline, 'fill', row.paired ? 'var(--paper)' : 'var(--ink)')
-    setText(item.name, (row.arrangement === 'own' ? 'your own' : row.arrangement) + (row.paired ? ', paired' : ''))
+    setText(item.name, row.arrangement === 'own' ? 'your own' : row.arrangement)
+    setText(item.pair, row.paired ? ', paired' : '')
     setText(item.merit, word ?? (row.same ? ' on the sheet' : row.merits.length ? ' ' + (MERITS[row.merits[0]] ?? row.merits[0]) : ''))
     setAttr(item.merit, 'title', row.merits.join(', ') || null)
     setText(item.bad, row.short.length ? ` ${row.short.length} short` : '')
@@ -107,7 +108,7 @@ export function mount(node, sheet) {
     const store = keyed(body, keys, key => key === 'now' ? present : makeRow(key))
     const every = [...(shown.now ? [shown.now] : []), ...shown.rows]
     scale = {
-      error: column(every.map(r => r.error * 100), '%', {low: 3, most: 4}), offset: column(every.map(r => r.offset === null ? null : r.offset * 100), '%', {plus: true, most: 4}),
+      error: column(every.map(r => r.error * 100), '%', {low: 3, most: 4}), offset: column(every.map(r => r.offset === null ? null : r.offset * 100), '%', {plus: true, most: 3}),
       noise: column(every.map(r => r.noise), 'V/√Hz', {most: 1}), sees: column(every.map(r => r.sees), 'Ω', {most: 1}),
     }
     setText(head.children[7], scale.noise.head('noise')); setText(head.children[8], scale.sees.head('sources see'))
@@ -142,7 +143,7 @@ export function mount(node, sheet) {
     setAttr(prog, 'aria-valuenow', Math.round((shown.share ?? 0) * 100))
     again.hidden = busy || !(shown.stopped || shown.problem)
     setText(where, busy ? (shown.looking ? `searching ${shown.looking}, ${Math.round(shown.share * 100)}${THIN}%` : 'searching') : shown.stopped ? 'stopped; what was found so far stands' : '')
-    setText(proof, [...shown.proof.map(p => p.proved ? `${p.arrangement}: proved, no set errs less than ${percent(p.bound)}.` : `${p.arrangement}: cut short; none can err less than ${percent(p.bound)}.`), ...shown.notes].join(' '))
+    setText(proof, [...shown.proof.map(p => p.proved ? `${p.arrangement}: proved, no set errs less than ${percent(p.bound)}.` : `${p.arrangement}: cut short; none can err less than ${percent(p.bound)}.`), ...shown.notes, shown.rows.some(r => r.paired) ? 'Open marks: two resistors stand for one somewhere.' : ''].join(' ').trim())
     drawTable(shown)
     segments(tabs, shown.panes, shown.pane, PANE_WORDS, name => say({do: 'pane', pane: name}))
     for (const [name, p] of Object.entries(panes)) p.node.hidden = name !== shown.pane

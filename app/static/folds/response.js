@@ -123,7 +123,7 @@ export function mount(node, sheet) {
     const row = name => {
       if (rows.has(name)) return rows.get(name)
       const select = el('select', {class: 'blank kind', 'aria-label': `wave of ${name}`, onchange: () => say({do: 'wave', name, figure: 'kind', kind: select.value})},
-        ['dc', 'sine', 'square', 'triangle', 'ramp', 'csv'].map(k => el('option', {value: k, text: k === 'dc' ? 'as it stands' : k, hidden: k === 'csv'})))
+        ['dc', 'sine', 'square', 'triangle', 'ramp', 'csv'].map(k => el('option', {value: k, text: k === 'dc' ? 'as is' : k, hidden: k === 'csv'})))
         const figure = f => blank(`${f} of ${name}`, text => say({do: 'wave', name, figure: f, text}), 'wave')
       const file = el('input', {type: 'file', class: 'file', accept: '.csv,text/csv', 'aria-label': `CSV for ${name}`, onchange: async () => { if (file.files[0]) say({do: 'wave file', name, text: await file.files[0].text()}); file.value = '' }})
       const made = {select, offset: figure('offset'), amplitude: figure('amplitude'), frequency: figure('frequency'), file: el('label', {class: 'act'}, 'CSV', file)}
