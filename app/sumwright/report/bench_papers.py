@@ -114,7 +114,7 @@ def calibration_record(
     weights = Table(
         "fitted",
         "Fitted weights",
-        _COLUMNS,
+        _columns([r[5] for r in rows]),
         tuple(rows),
         marked=frozenset(i for i, r in enumerate(rows) if r[-1] == "out"),
     )
@@ -157,10 +157,14 @@ def _row(name, wanted, found, limit, verdict) -> tuple[Any, ...]:
     )
 
 
-_COLUMNS = (
-    Column("signal"), Column("wanted", "", "fixed", 4, True), Column("parts allow, from", "", "fixed", 5, True), Column("to", "", "fixed", 5, True),
-    Column("measured", "", "fixed", 5, True), Column("u", "", "figures", 2), Column("verdict"),
-)  # fmt: skip
+def _columns(uncertainties: Sequence[float | None]) -> tuple[Column, ...]:
+    """Columns of the fitted weights; what was measured is written down to the second figure of its uncertainty."""
+    least = min((u for u in uncertainties if u and math.isfinite(u)), default=1e-4)
+    places = max(5, min(8, 1 - math.floor(math.log10(least))))
+    return (
+        Column("signal"), Column("wanted", "", "fixed", 4, True), Column("parts allow, from", "", "fixed", 5, True), Column("to", "", "fixed", 5, True),
+        Column("measured", "", "fixed", places, True), Column("u", "", "figures", 2), Column("verdict"),
+    )  # fmt: skip
 
 
 def _statement(readings, meter: str) -> str:
@@ -183,8 +187,10 @@ def _statement(readings, meter: str) -> str:
 
 def _fit_note(fit) -> str:
     chi, dof, p = fit.get("chi_squared"), fit.get("degrees_of_freedom"), fit.get("p_value")
-    if chi is None or not dof:
+    if not dof:
         return "As many readings as unknowns: the fit cannot be tested."
+    if chi is None:
+        return f"Least squares with {dof} degrees of freedom; the readings' own scatter stands for their uncertainty, so it cannot test the fit."
     said = f"Least squares: χ² = {chi:.3g} with {dof} degrees of freedom"
     return said + (f", p = {p:.2g}." if p is not None else ".")
 
@@ -192,7 +198,7 @@ def _fit_note(fit) -> str:
 def _about(suspect) -> str:
     """The estimate in its unit: ohm, but volts of a reference."""
     value = suspect["estimate"]
-    return format_fixed(value, "V") if suspect.get("unit") == "V" else format_resistor(value)
+    return format_fixed(value, "V") if suspect.get("unit") == "V" else format_resistor(value, 3)
 
 
 def _suspects(suspects) -> Table | None:

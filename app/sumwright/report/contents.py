@@ -296,7 +296,8 @@ def error_summary(analysis: Analysis, drawn: dict[str, Any] | None = None) -> Ta
     first = next(iter(drawn.values())) if drawn else None
     note = "Relative to the ideal output, at the present values and at the highest and lowest corner."
     if first is not None:
-        note += f" Drawn: {first.draws:,} boards, seed\u00a0{first.seed}.".replace(",", THIN)
+        drawn_boards = f"{first.draws:,}".replace(",", THIN)
+        note += f" Drawn: {drawn_boards} boards, seed\u00a0{first.seed}."
     return Table("errors", "Error of the output", tuple(columns), tuple(rows), note)
 
 

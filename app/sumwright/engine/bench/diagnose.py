@@ -11,6 +11,7 @@ from sumwright.engine.nodes import Network, nominal_limits
 from sumwright.engine.operating_point import influence
 from sumwright.engine.stage import Design
 from sumwright.errors import InvalidDesign
+from sumwright.quantity import format_quantity
 
 from .board import Bench
 from .explain import describe
@@ -239,7 +240,7 @@ def _notes(readings, fit, names, left_out, diagnosis):
             notes.append("No uncertainty is stated and there are too few readings to estimate it; state the meter.")
         else:
             notes.append(
-                f"No uncertainty is stated; the scatter of the fit, {fit.scatter:.3g} V, stands for it, with "
+                f"No uncertainty is stated; the scatter of the fit, {format_quantity(fit.scatter, 'V')}, stands for it, with "
                 f"t = {fit.coverage_factor:.3g} for {fit.degrees_of_freedom} degrees of freedom."
             )
     if fit.p_value is not None and fit.p_value < 0.01:
