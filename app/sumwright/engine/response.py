@@ -22,7 +22,7 @@ import numpy as np
 from . import nodes
 from .budget import network_of
 from .stage import Design
-from .statespace import StateSpace, Transfer, is_exact, linear_modes, linear_space, poles
+from .statespace import StateSpace, Transfer, each_modes, is_exact, linear_modes, linear_space, poles
 
 _PER_DECADE = 20
 _HALF_POWER = 1.0 / math.sqrt(2.0)
@@ -79,12 +79,17 @@ def loop_gains(net: nodes.Network, frequencies) -> np.ndarray:
     return np.array(rows)
 
 
-def _cut(ss: StateSpace, k: int):
-    """The chain with cell k's first op amp state made an input: what reaches its pins, plus minus minus."""
-    v = ss.first[k]
-    keep = np.arange(len(ss.a)) != v
-    row = ss.c[ss.plus[k]] - ss.c[ss.minus[k]]
-    return Transfer(ss.a[np.ix_(keep, keep)], ss.a[keep, v][:, None], row[None, keep], row[v].reshape(1, 1))
+def _cuts(ss: StateSpace):
+    """The chain with each cell's first op amp state made an input: what reaches its pins, plus minus minus."""
+    rows = ss.c[ss.plus] - ss.c[ss.minus]
+    every = np.arange(len(ss.a))
+    kept = [every[every != v] for v in ss.first]
+    inner = np.array([ss.a[np.ix_(keep, keep)] for keep in kept])
+    modes = each_modes(inner) if inner.shape[1] else [None] * len(inner)
+    return [
+        Transfer(a, ss.a[keep, v][:, None], row[None, keep], row[v].reshape(1, 1), m)
+        for a, keep, v, row, m in zip(inner, kept, ss.first, rows, modes, strict=True)
+    ]
 
 
 def _by_modes(net):
@@ -92,7 +97,7 @@ def _by_modes(net):
     amp, ss = net.design.op_amp, linear_space(net)
     last, n = ss.output[-1:], net.signal_count
     through = Transfer(ss.a, ss.b[:, : n + 1], ss.c[last], ss.d[last, : n + 1], linear_modes(net))
-    cuts = [_cut(ss, k) for k in range(net.cell_count)]
+    cuts = _cuts(ss)
     w1 = 2 * math.pi * amp.gain_bandwidth / amp.open_loop_gain
 
     def first_stage(x):

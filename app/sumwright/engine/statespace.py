@@ -237,14 +237,24 @@ class Modes(NamedTuple):
 
 
 def modes_of(a) -> Modes:
+    return each_modes(a[None])[0]
+
+
+def each_modes(a) -> list[Modes]:
+    """`Modes` of each of some matrices (count, n, n), worked out together."""
     values, vectors = np.linalg.eig(a)
     with np.errstate(all="ignore"):
         try:
             inverse = np.linalg.inv(vectors)
-        except np.linalg.LinAlgError:
-            return Modes(values, vectors, None)
-    sound = np.linalg.norm(vectors) * np.linalg.norm(inverse) < 1e6
-    return Modes(values, vectors, inverse if sound else None)
+        except np.linalg.LinAlgError:  # one of them has no full set
+            if len(a) > 1:
+                return [each_modes(one[None])[0] for one in a]
+            return [Modes(values[0], vectors[0], None)]
+        sound = np.linalg.norm(vectors, axis=(1, 2)) * np.linalg.norm(inverse, axis=(1, 2)) < 1e6
+    return [
+        Modes(value, vector, inv if good else None)
+        for value, vector, inv, good in zip(values, vectors, inverse, sound, strict=True)
+    ]
 
 
 def linear_modes(net: Network) -> Modes:
