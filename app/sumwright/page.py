@@ -133,7 +133,7 @@ class Page:
             "invented": demo.is_demo(bench.design),
             "theme": bench.theme,
             "undo": bench.can_undo,
-            "redo": bool(bench.history.future),
+            "redo": bench.can_redo,
             "saved": self.saved,
             "place": self.extras.get("place", {}),
             "problem": unbroken(bench.problem),

@@ -8,7 +8,9 @@ from sumwright.engine.bench.readings import parse_meter
 from sumwright.engine.stage import replace
 from sumwright.errors import InvalidQuantity, InvalidReadings
 from sumwright.files.readings import parse_readings
+from sumwright.model import edits
 from sumwright.model.bench_run import MOST_READINGS, BenchRun
+from sumwright.model.workbench import Workbench
 from support.bench_stages import stage
 
 DESIGN = stage()
@@ -121,6 +123,26 @@ def test_cleared_readings_can_be_brought_back():
     assert run.readings().count == 0
     run.taken = gone
     assert run.readings().count == 1
+
+
+def test_readings_and_design_are_taken_back_in_the_order_in_which_they_changed():
+    bench = Workbench(DESIGN)
+    one, two, three = ({"taken": [k]} for k in range(3))
+    bench.read(one)
+    bench.edit(edits.with_value, "north", 1.5)
+    bench.read(two)
+    bench.clear_readings({})
+    bench.read(three)
+    seen = []
+    while bench.undo():
+        seen.append((bench.readings.get("taken", []), bench.design.signal("north").value))
+    value = DESIGN.signal("north").value
+    assert seen == [([], 1.5), ([1], 1.5), ([0], 1.5), ([0], value), ([], value)]
+    again = []
+    while bench.redo():
+        again.append((bench.readings.get("taken", []), bench.design.signal("north").value))
+    assert again == [([0], value), ([0], 1.5), ([1], 1.5), ([2], 1.5)]
+    assert not bench.can_redo
 
 
 def test_what_the_sheet_holds_comes_back_as_it_was():

@@ -19,6 +19,7 @@ from sumwright.engine.arrangement import arrangement_of
 from sumwright.engine.stage import Ambient, Design, Load, OpAmp, Reference, ResistorKind, Supply, Target
 from sumwright.errors import InvalidDesign, SumwrightError
 from sumwright.model import edits
+from sumwright.model.bench_history import ReadingSteps
 from sumwright.model.history import History, Snapshot
 
 SYMBOLS = ("IEC 60617", "IEEE 315")
@@ -63,7 +64,9 @@ class Workbench(param.Parameterized):
     def __init__(self, design: Design, **params: Any):
         self.history = History()
         self._cleared: tuple[Snapshot, dict[str, Any]] | None = None  # readings taken away, and what the sheet was then
+        self._steps = ReadingSteps()
         self._first = False  # whether those come before what was read since
+        self._before = 0  # steps of the readings at that time
         self._styles: dict[str, int] = {}
         design = edits.realised(design)
         choices = {name: getattr(design, name) for name in _DESIGN_FIELDS}
@@ -151,14 +154,19 @@ class Workbench(param.Parameterized):
         rest = tuple(n for n in self.unplugged if n != name)
         self._put(self.design, unplugged=(*rest, name) if out else rest)
 
+    def read(self, readings: dict[str, Any]) -> None:
+        """Other readings, as one undo step."""
+        self._steps.record(self.snapshot, self.readings)
+        self.readings = readings
+
     def clear_readings(self, left: dict[str, Any]) -> None:
         """Take the bench's readings away, leaving `left`; the next undo gives them back."""
-        self._cleared, self._first = (self.snapshot, self.readings), False
+        self._cleared, self._first, self._before = (self.snapshot, self.readings), False, len(self._steps.past)
         self.readings = left
 
     def lay_aside(self, readings: dict[str, Any]) -> None:
         """Readings that another person's version replaced: the next undo brings them back, before theirs where both read a step."""
-        self._cleared, self._first = (self.snapshot, readings), True
+        self._cleared, self._first, self._before = (self.snapshot, readings), True, len(self._steps.past)
 
     @property
     def cleared(self) -> dict[str, Any]:
@@ -177,17 +185,31 @@ class Workbench(param.Parameterized):
     @property
     def can_undo(self) -> bool:
         """Whether there is a step to take back."""
-        return bool(self.history.past) or self._cleared is not None
+        return bool(self.history.past or self._steps.past) or self._cleared is not None
+
+    @property
+    def can_redo(self) -> bool:
+        """Whether there is a step to put on again."""
+        return bool(self.history.future or self._steps.future)
 
     def undo(self) -> bool:
         """Take the last step back; False if there is none."""
-        if self._cleared and (self._cleared[0] == self.snapshot or not self.history.past):
+        alone = not self.history.past
+        if self._cleared and len(self._steps.past) <= self._before and (alone or self._cleared[0] == self.snapshot):
             self.bring_back_readings()
+            return True
+        readings = self._steps.undo(self.snapshot, self.readings, alone=alone)
+        if readings is not None:
+            self.readings = readings
             return True
         return self._restore(self.history.undo(self.snapshot))
 
     def redo(self) -> bool:
         """Put the step last taken back on again; False if there is none."""
+        readings = self._steps.redo(self.snapshot, self.readings, alone=not self.history.future)
+        if readings is not None:
+            self.readings = readings
+            return True
         return self._restore(self.history.redo(self.snapshot))
 
     def replace_quietly(self, snapshot: Snapshot) -> None:
@@ -211,6 +233,7 @@ class Workbench(param.Parameterized):
         check_size(design)
         self._try(after)
         self.history.record(before, hand)
+        self._steps.future = []
 
     def _try(self, after: Snapshot) -> None:
         """Show `after`, or refuse it and keep what was if it cannot be analysed."""

@@ -134,7 +134,8 @@ class Bench(Fold):
         """The readings are others: the sheet holds them, so they are saved with it."""
         self._serial += 1
         self.context.extras["readings"] = self._run.readings()
-        self._on_sheet = self.workbench.readings = self._run.document()
+        self._on_sheet = self._run.document()
+        self.workbench.read(self._on_sheet)
 
     def _follow_sheet(self) -> None:
         """Take up what the sheet holds, when that is not what is here: it was opened again, or somebody else changed it."""
