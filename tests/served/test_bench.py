@@ -97,6 +97,15 @@ def test_a_reading_that_is_none_stays_as_typed_and_is_marked(fresh):
     page.keyboard.press("Escape")
     settled(page)
     assert cell.input_value() == ""
+    # what is typed over is one undo away, and back again
+    for text in ("0.91", "0.52"):
+        cell.fill(text)
+        cell.press("Enter")
+        settled(page)
+    for button, text in (("Undo", "0.91"), ("Undo", ""), ("Redo", "0.91"), ("Redo", "0.52")):
+        page.get_by_role("button", name=button, exact=True).click()
+        settled(page)
+        assert cell.input_value() == text
 
 
 def test_a_phone_shows_step_reading_fit_and_suspects_without_the_grid(fresh):
