@@ -215,7 +215,10 @@ class Sitting:
         page.say_saved(state=state, at=mark.at, by=by, why=mark.why, again=mark.again)
         if mark.kind == "unsaved" and mark.why != self._told:
             page.say(f"{mark.why} What is on the sheet is kept here and tried again.", bad=True)
-        self._told = mark.why if mark.kind == "unsaved" else ""
+        if mark.kind == "saved" and self._told:
+            page.say("The notebook can be written again; everything on the sheet is saved.")
+        if mark.kind != "saving":
+            self._told = mark.why if mark.kind == "unsaved" else ""
         if mark.kind in ("elsewhere", "saved"):
             page.later(self._fold_news)
 

@@ -328,6 +328,7 @@ def test_a_store_that_cannot_be_written_is_told_and_saved_when_it_can(chromium, 
     assert value_of(page, "north") == 9.5
     blocker.execute("ROLLBACK")
     saved(page, timeout=30)
+    page.wait_for_function("() => document.querySelector('#note').innerText.includes('can be written again')")
     page.reload()
     page.wait_for_function("() => window.sumwrightWire")
     assert value_of(page, "north") == 9.5

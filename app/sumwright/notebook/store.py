@@ -8,7 +8,9 @@ comes out as one `StoreError` with a sentence fit to show.
 from __future__ import annotations
 
 import json
+import math
 import secrets
+import shutil
 import sqlite3
 import zlib
 from collections.abc import Iterator
@@ -33,6 +35,7 @@ from .text import InvalidText, canonical, clean_line
 
 STATE_MOST = 4_000_000  # bytes of a sheet's state
 HISTORY_MOST = 16_000_000  # bytes of its undo history before compression
+ROOM_LEAST = 1_000_000  # bytes free on the disk under which a refusal says that it is full
 WAIT = 5.0  # s that a writer waits for another before it gives up
 
 
@@ -385,7 +388,17 @@ class Store:
             yield
         except (SQLAlchemyError, sqlite3.Error, json.JSONDecodeError, zlib.error) as error:
             cause = " ".join(str(getattr(error, "orig", None) or error).split())[:200]
+            if self._engine.dialect.name == "sqlite" and _room(self.place) < ROOM_LEAST:
+                cause += "; the disk it is on is full, make room there"
             raise StoreError(f"The notebook store {self.place} cannot be {doing}: {cause}.") from error
+
+
+def _room(place: str) -> float:
+    """Bytes free where a file is; infinite where nobody can say."""
+    try:
+        return shutil.disk_usage(Path(place).parent).free
+    except OSError:
+        return math.inf
 
 
 def new_id() -> str:
