@@ -13,7 +13,7 @@ import numpy as np
 from sumwright.engine.analysis import Analysis
 from sumwright.engine.stage import REFERENCE
 from sumwright.quantity import THIN, format_fixed, format_percent, format_quantity
-from sumwright.tokens import REFERENCE_HAND, hand
+from sumwright.rows import hands_of
 
 from .axes import Plot, Scale, decimals_of, legend, prefix_of, rounded_out
 from .drawing import HAIR, INK, LINE, PAPER, RAISED, RED, SOFT, Drawing, shortened, text_width
@@ -23,7 +23,7 @@ WIDTH = 680.0  # px; the text width of an A4 page
 
 def hands(analysis: Analysis):
     """The hand of each signal by name, and of the reference."""
-    return {s.name: hand(i) for i, s in enumerate(analysis.design.signals)} | {REFERENCE: REFERENCE_HAND}
+    return hands_of(analysis.design)
 
 
 def ruler(analysis: Analysis, width: float = WIDTH, height: float = 330.0) -> Drawing:

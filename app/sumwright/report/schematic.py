@@ -17,7 +17,7 @@ from sumwright.engine.nodes import Network
 from sumwright.engine.operating_point import CellPoint, OperatingPoint
 from sumwright.engine.stage import REFERENCE, Cell, Design, cell_name
 from sumwright.quantity import THIN, format_fixed, format_quantity, format_resistor
-from sumwright.tokens import REFERENCE_HAND, Hand, hand
+from sumwright.rows import hands_of
 
 from .drawing import INK, PAPER, RED, SOFT, Drawing, number, shortened, text_width
 
@@ -115,8 +115,7 @@ class _Sheet:
         self.design, self.point, self.symbols, self.unplugged = design, point, symbols, unplugged
         self.net = Network(design)
         self.names: Designators = designators(design, self.net)
-        self.hands: dict[str, Hand] = {s.name: hand(i) for i, s in enumerate(design.signals)}
-        self.hands[REFERENCE] = REFERENCE_HAND
+        self.hands = hands_of(design)
 
     # ------------------------------------------------------------ what stands where
 

@@ -7,8 +7,7 @@ from typing import Any
 
 from sumwright.engine.stage import REFERENCE, Signal
 from sumwright.quantity import format_exact
-
-from .rows import rows
+from sumwright.rows import rows
 
 
 def show(bench: Any) -> dict[str, Any]:

@@ -8,8 +8,7 @@ from typing import Any, NamedTuple
 from sumwright.engine.arrangement import able, arrangement_of
 from sumwright.engine.stage import ARRANGEMENTS, Cell
 from sumwright.quantity import format_exact, format_resistor
-
-from .rows import rows
+from sumwright.rows import rows
 
 
 def show(bench: Any) -> dict[str, Any]:

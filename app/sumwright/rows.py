@@ -10,7 +10,8 @@ from __future__ import annotations
 from functools import lru_cache
 from typing import NamedTuple
 
-from sumwright.engine.stage import REFERENCE, Cell
+from sumwright.engine.stage import REFERENCE, Cell, Design
+from sumwright.tokens import REFERENCE_HAND, Hand, hand
 
 
 class Row(NamedTuple):
@@ -31,3 +32,11 @@ def rows(cells: tuple[Cell, ...], names: tuple[str, ...]) -> tuple[Row, ...]:
             legs = [leg.source for leg in getattr(cells[c], node) if leg.source in places]
             found += [Row(source, c, node) for source in sorted(legs, key=places.__getitem__)]
     return tuple(found)
+
+
+def hands_of(design: Design) -> dict[str, Hand]:
+    """The hand of each signal by name, and of the reference: those a sheet gives, row by row, when it opens the design."""
+    names = design.signal_names
+    drawn = [row.source for row in rows(design.cells, names) if row.source != REFERENCE]
+    order = dict.fromkeys((*drawn, *names))  # a signal without a leg comes last
+    return {name: hand(i) for i, name in enumerate(order)} | {REFERENCE: REFERENCE_HAND}
