@@ -108,8 +108,8 @@ export function mount(node, sheet) {
     if (!c) return
     setText(headA, names(c.a)); setText(headB, names(c.b))
     const line = r => el('tr', {}, el('td', {text: r[0]}), el('td', {class: 'r', text: r[1]}), el('td', {class: 'r'}, el('b', {text: r[2]})))
-    const rest = (n, what) => el('tr', {}, el('td', {class: 'soft', colspan: 3, text: n ? `${n} ${what} the same` : `no ${what} the same`}))
-    table.replaceChildren(...c.values.map(line), rest(c.same[0], 'values'), ...c.results.map(line), ...(c.a === 'theirs' ? [] : [rest(c.same[1], 'results')]))
+    const rest = (n, what) => el('tr', {}, el('td', {class: 'soft', colspan: 3, text: `${n || 'no'} ${what} the same`}))
+    table.replaceChildren(...c.values.map(line), rest(c.same[0], 'values'), ...c.results.map(line), ...(c.a === 'theirs' ? [] : [rest(c.same[1], 'results to four figures')]))
   }
 
   // ---------------------------------------------------------------- conflict

@@ -8,6 +8,8 @@ from __future__ import annotations
 
 import base64
 import binascii
+import math
+import re
 import secrets
 from collections.abc import Callable
 from typing import Any
@@ -20,7 +22,7 @@ from sumwright.notebook.compare import Change, Comparison, compare
 from sumwright.notebook.entries import Entry
 from sumwright.notebook.markdown import note_html
 from sumwright.notebook.text import NOTE_MOST, TITLE_MOST, InvalidText
-from sumwright.quantity import format_quantity
+from sumwright.quantity import format_fixed, format_quantity
 
 from .fold import Context, Fold
 from .held import hold_design
@@ -29,6 +31,9 @@ PAGE = 100  # entries shown at first, and with each "more"
 BOOKS = 60  # notebooks in the list
 HITS = 40  # entries found in all notebooks
 PART = 1_500_000  # bytes of a file in one message
+_UNSCALED = ("%", "°", "°C", "V/V")  # units that are not written with a prefix
+_ERROR = re.compile("error (present|highest|lowest), (expanded 95|worst case)")
+_AT = {"present": "at the present values", "highest": "at the highest corner", "lowest": "at the lowest corner"}
 SHEET = "sheet"  # what stands for the sheet at work where two designs are compared
 
 
@@ -195,9 +200,11 @@ class Log(Fold):
         self._compared_now(["theirs", "mine"], compare(theirs, mine))
 
     def _compared_now(self, sides: list[Any], found: Comparison) -> None:
+        results = [c for c in found.results if _moved(c)]
+        same = found.same_results + len(found.results) - len(results)
         self._compared = {
             "a": sides[0], "b": sides[1], "values": [_row(c) for c in found.values],
-            "results": [_row(c) for c in found.results], "same": [found.same_values, found.same_results],
+            "results": [_row(c) for c in results], "same": [found.same_values, same],
         }  # fmt: skip
 
     def _resolve(self, message: dict) -> None:
@@ -418,13 +425,23 @@ def _frozen(entry: Entry) -> dict[str, Any]:
     return entry.body
 
 
+def _moved(change: Change) -> bool:
+    """A result that differs where a person looks, in its first four figures."""
+    return _text(change.before, change.unit, 4) != _text(change.after, change.unit, 4)
+
+
 def _row(change: Change) -> list[str]:
     """A line of the comparison, with as many figures as it takes to see the difference."""
     for digits in (4, 6, 9):
         sides = [_text(side, change.unit, digits) for side in (change.before, change.after)]
         if sides[0] != sides[1]:
             break
-    return [change.what, *sides]
+    return [_spoken(change.what), *sides]
+
+
+def _spoken(what: str) -> str:
+    """A result by the words the sheet has for it; frozen designs keep the names they were frozen with."""
+    return _ERROR.sub(lambda m: f"error {_AT[m[1]]}, {'95 %' if m[2] == 'expanded 95' else m[2]}", what)
 
 
 def _text(value: Any, unit: str, digits: int) -> str:
@@ -432,4 +449,7 @@ def _text(value: Any, unit: str, digits: int) -> str:
         return "none"
     if isinstance(value, bool | str):
         return str(value)
+    if unit in _UNSCALED and math.isfinite(value) and (value == 0 or 1e-4 <= abs(value) < 1e4):
+        lead = math.floor(math.log10(abs(value))) if value else 0
+        return format_fixed(value, "" if unit == "V/V" else unit, max(0, digits - 1 - lead))
     return format_quantity(value, unit, digits, trim=True)
