@@ -4,7 +4,11 @@ import re
 from pathlib import Path
 
 import pytest
+from sumwright.files.examples import NAMES, example
+from sumwright.model.workbench import Workbench
+from sumwright.rows import hands_of
 from sumwright.tokens import MARKERS, hand, tokens, tokens_css
+from sumwright.views import signals
 from sumwright.views.palette import COLOURS, colour, dash, marker
 
 ROOT = Path(__file__).parents[2]
@@ -64,3 +68,11 @@ def test_drawings_bokeh_and_browser_give_a_signal_the_same_hand():
 
 def test_sixteen_signals_all_look_different():
     assert len({hand(i) for i in range(16)}) == 16
+
+
+def test_a_document_gives_a_signal_the_hand_that_the_sheet_gives_it():
+    for name in NAMES:
+        bench = Workbench(example(name))
+        shown = [row for row in signals.show(bench)["rows"] if not row.get("reference")]
+        hands = hands_of(bench.design)
+        assert shown and all(hands[row["name"]] == hand(row["style"]) for row in shown), name
