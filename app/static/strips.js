@@ -96,7 +96,7 @@ function makeRow(key, r) {
     send: text => r.reference ? {do: 'figure', group: 'reference', figure: 'voltage', text} : {do: 'signal', signal: name, figure: 'value', text},
   })
   const want = new Blank(sheet, {
-    field: `weight ${key}`, label: r.reference ? 'wanted offset, volts' : `${name}, wanted weight`, cls: 'want', unit: r.reference ? 'V' : '',
+    field: `weight ${key}`, label: r.reference ? 'wanted offset, volts' : `${name}, wanted weight`, cls: 'want', // an offset is shown with its unit
     send: text => r.reference ? {do: 'offset', text} : {do: 'weight', signal: name, text},
   })
   const made = el('span', {class: 'made'})

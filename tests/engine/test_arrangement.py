@@ -171,7 +171,7 @@ def test_source_resistance_is_part_of_the_leg():
 
 
 def test_too_much_source_resistance_names_the_signal_and_what_to_raise():
-    with pytest.raises(CannotRealise, match=r"'s1'.*Raise the feedback resistor \(10000 ohm\) above 40000 ohm"):
+    with pytest.raises(CannotRealise, match=r"'s1'.*Raise the feedback resistor, 10\skΩ, above 40\skΩ"):
         exact_cells(stage([-1, -2], sources=[0, 20e3]), "inverting", feedback=10e3)
 
 

@@ -101,8 +101,10 @@ def test_an_offset_without_a_reference_gets_one():
 
 
 def test_rails_the_wrong_way_round_are_refused_with_both_values():
-    with pytest.raises(InvalidQuantity, match=r"-7\.5 V.*-8 V"):
+    with pytest.raises(InvalidQuantity, match=r"−7\.5 V.*−8 V"):
         edits.with_figure(demo.design(), "supply", "high", -8.0)
+    with pytest.raises(InvalidQuantity, match="load resistance must be more than 0; it is −10k"):
+        edits.with_figure(demo.design(), "load", "resistance", -1e4)
 
 
 def test_a_new_sum_starts_from_a_better_set_than_the_nearest_values():

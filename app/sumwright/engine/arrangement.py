@@ -204,8 +204,8 @@ def _leg(design: Design, w: Wanted, feedback: float) -> float:
     if resistance <= 0:
         whose = "the reference" if w.source == REFERENCE else f"'{w.source}'"
         raise CannotRealise(
-            f"The leg of {whose} would be {resistance:g} ohm: its source resistance of {w.source_resistance:g} ohm is already too much "
-            f"for a weight of {w.weight:g}. Raise the feedback resistor ({feedback:g} ohm) above {abs(w.weight) * w.source_resistance:g} ohm, "
+            f"The leg of {whose} would be {ohms(resistance)}: its source resistance of {ohms(w.source_resistance)} is already too much "
+            f"for a weight of {w.weight:g}. Raise the feedback resistor, {ohms(feedback)}, above {ohms(abs(w.weight) * w.source_resistance)}, "
             f"or buffer the source.",
             able(design),
         )

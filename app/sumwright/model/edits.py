@@ -23,6 +23,7 @@ from sumwright.engine.realise.choices import MOST_VALUES, weight_errors
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import REFERENCE, Cell, Design, Leg, Reference, Signal, cell_name
 from sumwright.errors import CannotRealise, InvalidDesign, InvalidQuantity
+from sumwright.quantity import format_quantity
 
 FOLLOW = ("nearest", "exact", "kept")
 SIGNALS_MOST = 64  # as many as a design file holds
@@ -170,7 +171,7 @@ def with_resistance(design: Design, key: str, ohm: float) -> Design:
     if place is None:
         raise InvalidDesign(f"There is no resistor “{key}” on this sheet.", key)
     if not (math.isfinite(ohm) and ohm > 0):
-        raise InvalidQuantity(f"A resistor is more than 0 Ω; it is {ohm:g}.")
+        raise InvalidQuantity(f"A resistor must be more than 0 Ω; it is {format_quantity(ohm, 'Ω', 4, trim=True)}.")
     c, field, j = place
     cell = design.cells[c]
     if j >= 0:
@@ -465,15 +466,20 @@ def with_figure(design: Design, group: str, figure: str, value: Any) -> Design:
     known = {f.name for f in fields(part)}
     if figure not in known:
         raise InvalidDesign(f"{group} has no figure “{figure}”.", f"{group}.{figure}")
-    words = figure.replace("_", " ")
+    words = ("load " if group == "load" else "") + figure.replace("_", " ")
     if isinstance(value, float):
+        said = format_quantity(value, "", 4, trim=True)
         if figure in ABOVE_ZERO and value <= 0:
-            raise InvalidQuantity(f"{words} must be more than 0; it is {value:g}.")
+            raise InvalidQuantity(f"{words} must be more than 0; it is {said}.")
         if figure not in ABOVE_ZERO | ANY_SIGN and value < 0:
-            raise InvalidQuantity(f"{words} must be 0 or more; it is {value:g}.")
+            raise InvalidQuantity(f"{words} must be 0 or more; it is {said}.")
     new = replace(part, **{figure: value})
     _check_order(group, new)
     return replace(design, **{group: new})
+
+
+def _true_minus(value: float) -> str:
+    return f"{value:g}".replace("-", "\u2212", 1) if value < 0 else f"{value:g}"
 
 
 def _check_order(group: str, part: Any) -> None:
@@ -489,4 +495,6 @@ def _check_order(group: str, part: Any) -> None:
     low, high, what_low, what_high, unit = pairs[group]
     a, b = getattr(part, low), getattr(part, high)
     if a is not None and b is not None and (a > b or (a == b and group in ("supply", "target"))):
-        raise InvalidQuantity(f"{what_low}, {a:g} {unit}, must be below {what_high}, {b:g} {unit}.")
+        raise InvalidQuantity(
+            f"{what_low}, {_true_minus(a)} {unit}, must be below {what_high}, {_true_minus(b)} {unit}."
+        )

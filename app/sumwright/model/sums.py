@@ -89,7 +89,7 @@ def _apart(lines: list[str]) -> tuple[list[str], dict[str, Any]]:
         values = [in_span(*_SPAN_OF[word], parse_quantity(n, "V", word), "V") for n in numbers]
         if word == "accuracy":
             if values[0] <= 0:
-                raise InvalidDesign(f"accuracy is more than 0 V; it is {numbers[0]}.", "sum")
+                raise InvalidDesign(f"accuracy must be more than 0 V; it is {numbers[0]}.", "sum")
             asked[word] = values[0]
         elif word == "window":
             if values[0] >= values[1]:
