@@ -5,6 +5,7 @@ import json
 import math
 import os
 import stat
+from concurrent.futures import ThreadPoolExecutor
 from functools import reduce
 
 import pytest
@@ -513,6 +514,17 @@ def test_writing_keeps_permissions_and_links(tmp_path):
     write_design(example("tide-gauge"), link)
     assert link.is_symlink() and read_design(path) == example("tide-gauge")
     assert stat.S_IMODE(path.stat().st_mode) == 0o640
+
+
+@pytest.mark.skipif(not hasattr(os, "mkfifo"), reason="no pipes with names here")
+def test_what_is_no_file_is_written_to_and_not_replaced(tmp_path):
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    with ThreadPoolExecutor(1) as pool:
+        read = pool.submit(pipe.read_bytes)
+        write_design(example("tide-gauge"), pipe)
+        assert read_design(read.result(timeout=20)) == example("tide-gauge")
+    assert pipe.is_fifo() and list(tmp_path.iterdir()) == [pipe]
 
 
 def test_writing_where_nothing_can_be_written_says_so(tmp_path):

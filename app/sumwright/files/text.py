@@ -51,7 +51,7 @@ def write_whole(path: str | os.PathLike, text: str | bytes) -> None:
     """Replace a file in one step: readers see the old file or the new one, a crash loses neither.
 
     The text goes to a temporary file beside it, is flushed to the disk, and takes
-    the name. An existing file keeps its permissions.
+    the name. An existing file keeps its permissions. What is no file (a device, a pipe) is written to.
 
     Raises
     ------
@@ -62,6 +62,13 @@ def write_whole(path: str | os.PathLike, text: str | bytes) -> None:
     data = text.encode("utf-8") if isinstance(text, str) else text
     temporary = None
     try:
+        # A device or a pipe (/dev/stdout, /dev/null) is written to; replacing it would destroy it.
+        if target.exists() and not target.is_file() and not target.is_dir():
+            with target.open("wb", buffering=0) as stream:
+                rest = memoryview(data)
+                while rest:
+                    rest = rest[stream.write(rest) :]
+            return
         # A link keeps pointing where it did: its target is replaced, not the link.
         target = target.resolve()
         handle, temporary = tempfile.mkstemp(dir=target.parent, prefix=f".{target.name[:40]}.", suffix=".part")
