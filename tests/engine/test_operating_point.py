@@ -11,8 +11,8 @@ from sumwright.engine.curves import transfer_curves
 from sumwright.engine.headroom import headroom
 from sumwright.engine.nodes import Network, solve
 from sumwright.engine.operating_point import operating_point
-from sumwright.engine.stage import Leg, replace
-from support.stages import one_cell, random_chain
+from sumwright.engine.stage import Cell, Leg, Signal, replace
+from support.stages import one_cell, op_amp, random_chain
 
 SEEDS = range(25)
 
@@ -61,6 +61,21 @@ def test_headroom_equals_every_corner_tried(seed):
         at = int(sol.output[k].argmax())
         assert cell.limit_high == pytest.approx(15 * 0.95 - 1.5 - 20 * max(sol.current[k][at], 0))
         assert cell.margin_high == pytest.approx(cell.limit_high - cell.highest)
+
+
+def test_a_signal_that_only_loads_an_earlier_output_takes_its_room():
+    # without output resistance "b" moves cell 1 not at all, but the current it draws from there costs dropout
+    one = Cell(minus=(Leg("a", 1e4),), plus_ground=0.0, feedback=1e4)
+    two = Cell(minus=(Leg("cell 1", 1e3),), plus=(Leg("b", 1e3),), plus_ground=1e3, feedback=1e3)
+    a, b = (Signal(name, 1.0, -5.0, 5.0, 0.0, 0.0, 10.0) for name in "ab")
+    design = replace(
+        one_cell({"a": 0.0}), signals=(a, b), cells=(one, two),
+        op_amp=op_amp(output_resistance=0.0, dropout_resistance=100.0, input_resistance=1e15),
+    )  # fmt: skip
+    first = headroom(design).cells[0]
+    # pins of cell 2 follow b/2: cell 1 at +5 V sources most into b = -5 V, at -5 V sinks most with b = +5 V
+    assert first.current_high == pytest.approx(5 / 1e4 + 7.5 / 1e3, rel=1e-4)
+    assert first.current_low == pytest.approx(-(5 / 1e4 + 7.5 / 1e3), rel=1e-4)
 
 
 @pytest.mark.parametrize("seed", SEEDS)

@@ -147,7 +147,7 @@ def dense_solution(design, values, s=0.0, error=None, into_minus=None, into_plus
                 matrix[p, up] = -1
                 matrix[up, p] += y_in + y_cm
                 matrix[up, m] -= y_in
-                right[up] -= (y_in + y_cm) * e
+                right[up] += -(y_in + y_cm) * e + (into_plus[k] if into_plus is not None else 0)
         y_f = (1 / cell.feedback if cell.feedback else 0) + s * cell.feedback_capacitance
         for a, b in ((m, o), (o, m)):
             matrix[a, a] += y_f

@@ -98,10 +98,13 @@ def headroom(design: Design, *, unplugged=(), net: Network | None = None, linear
     cells = []
     for k in range(net.cell_count):
         w, base = linear.output[k, :n], linear.output[k, n] * reference
-        up = np.where(w >= 0, net.highs, net.lows)
-        down = np.where(w >= 0, net.lows, net.highs)
-        highest, lowest = base + w @ up, base + w @ down
         w_i, base_i = linear.current[k, :n], linear.current[k, n] * reference
+        # A signal of a later cell that leaves this output where it is may still draw current from it:
+        # of the corners that are equally far, the one whose current leaves least room.
+        rising = (w > 0) | ((w == 0) & (w_i >= 0))
+        up = np.where(rising, net.highs, net.lows)
+        down = np.where(rising, net.lows, net.highs)
+        highest, lowest = base + w @ up, base + w @ down
         i_up, i_down = base_i + w_i @ up, base_i + w_i @ down
         limit_high = rail_high - amp.dropout_high - amp.dropout_resistance * max(i_up, 0.0)
         limit_low = rail_low + amp.dropout_low + amp.dropout_resistance * max(-i_down, 0.0)

@@ -396,6 +396,8 @@ def solve(
                 pin = col(y_in + y_cm) * p - col(y_in) * m
                 parts = [q + pin[..., columns + i] for i, q in enumerate(parts)]
                 const[j] = const[j] + pin[..., :columns] + (col(y_in + y_cm) * e if e is not None else 0.0)
+                if into_plus is not None:  # the pin's node is that output
+                    const[j] = const[j] - np.asarray(into_plus)[..., k, :]
             for i in range(k):
                 draw[j][i] = draw[j][i] + parts[i] + ((pull_m + pull_p) if i == j else 0.0)
 
@@ -422,6 +424,8 @@ def solve(
             if c.tied == n_src + k:
                 pin = plus[q] if error is None else plus[q] + np.asarray(error)[..., q, :]
                 i_out = i_out + col(y_in + y_cm) * pin - col(y_in) * minus[q]
+                if into_plus is not None:
+                    i_out = i_out - np.asarray(into_plus)[..., q, :]
         if into_output is not None:
             i_out = i_out - np.asarray(into_output)[..., k, :]
         currents.append(i_out)
