@@ -27,6 +27,7 @@ class Cluster:
         self._bin = bin_folder
         self.folder = Path(tempfile.mkdtemp(prefix="pg-", dir="/tmp" if Path("/tmp").is_dir() else None))
         self._as: dict[str, object] = {}
+        self._reused: str | None = None
         if os.geteuid() == 0:
             owner = pwd.getpwnam("postgres")
             os.chown(self.folder, owner.pw_uid, owner.pw_gid)
@@ -46,7 +47,7 @@ class Cluster:
         assert done.returncode == 0, f"{program} failed: {done.stderr}"
 
     def start(self) -> None:
-        options = f"-c listen_addresses='' -c unix_socket_directories='{self.folder}' -c fsync=off"
+        options = f"-c listen_addresses='' -c unix_socket_directories='{self.folder}' -c fsync=off -c max_wal_size=64MB -c min_wal_size=32MB"
         log = str(self.folder / "log")
         self._run("pg_ctl", "start", "--wait", "--pgdata", self._data, "--log", log, "--options", options)
 
@@ -61,6 +62,19 @@ class Cluster:
         with psycopg.connect(self.url(), autocommit=True) as connection:
             connection.execute(f"CREATE DATABASE {name}")
         return self.url(name)
+
+    def empty_database(self) -> str:
+        """One database for test after test, emptied: a new one is three hundred files, which the disk feels."""
+        if self._reused is None:
+            self._reused = self.new_database()
+        with psycopg.connect(self._reused, autocommit=True) as connection:
+            connection.execute(
+                "SELECT pg_terminate_backend(pid) FROM pg_stat_activity "
+                "WHERE datname = current_database() AND pid <> pg_backend_pid()"
+            )
+            connection.execute("DROP SCHEMA public CASCADE")
+            connection.execute("CREATE SCHEMA public")
+        return self._reused
 
 
 def _programs() -> Path:
@@ -88,7 +102,7 @@ def url(request, tmp_path):
     """The address of a store that does not exist yet."""
     if request.param == "sqlite":
         return f"sqlite:///{tmp_path / 'data' / 'notebook.db'}"
-    return request.getfixturevalue("cluster").new_database()
+    return request.getfixturevalue("cluster").empty_database()
 
 
 @pytest.fixture
