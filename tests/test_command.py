@@ -246,6 +246,19 @@ def test_a_full_disk_is_one_line(design):
     assert done.stderr.splitlines() == ["sumwright: No space left on device."]
 
 
+@pytest.mark.parametrize(
+    "words, status, error",
+    [
+        ("analyse '{}' >&-", 2, ["sumwright: Standard output is closed."]), ("report '{}' -o '{}.html' >&-", 0, []),
+        ("analyse nowhere.json 2>&-", 2, []),
+    ],
+)  # fmt: skip
+def test_streams_that_were_closed_before_it_began(design, words, status, error):
+    command = f'"{sys.executable}" -m sumwright.command {words.format(design, design)}'
+    done = subprocess.run(["bash", "-c", command], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stdout, done.stderr.splitlines()) == (status, "", error)
+
+
 def test_a_terminal_without_unicode_gets_question_marks_not_a_crash(design):
     done = run("analyse", design, env={**os.environ, "PYTHONIOENCODING": "ascii", "PYTHONUTF8": "0"})
     assert (done.returncode, done.stderr) == (0, "")

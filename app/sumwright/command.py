@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import errno
 import importlib
+import io
 import os
 import sys
 from typing import NamedTuple, NoReturn
@@ -42,6 +44,13 @@ VERBS = (
 )
 
 
+class _Closed(io.TextIOBase):
+    """Stands for a standard output that was closed before the command began."""
+
+    def write(self, text: str) -> int:
+        raise OSError(errno.EBADF, "Standard output is closed")
+
+
 class _Parser(argparse.ArgumentParser):
     """Refuses in one line."""
 
@@ -67,6 +76,8 @@ def parser() -> argparse.ArgumentParser:
 def main(argv: list[str] | None = None) -> int:
     """Run the command; what it returns is the exit status."""
     words = sys.argv[1:] if argv is None else argv
+    if sys.stdout is None:
+        sys.stdout = _Closed()
     # Tables carry true minus and ohm signs; a terminal that cannot show one gets a question mark, not a crash.
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
@@ -105,7 +116,8 @@ def _refuse(sentence: str) -> int:
     line = " ".join(sentence.split())
     # stderr itself may be closed; the exit status still tells.
     with contextlib.suppress(OSError, ValueError):
-        print(f"sumwright: {line}", file=sys.stderr, flush=True)
+        if sys.stderr is not None:  # print would take standard output instead
+            print(f"sumwright: {line}", file=sys.stderr, flush=True)
     return 2
 
 
