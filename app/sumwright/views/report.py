@@ -109,12 +109,15 @@ class Report(Fold):
             which = fields.one_of(message, "which", [key for key, _ in (TABLES if kind == "table" else PICTURES)])
         draws = fields.whole(message, "draws", 0, DRAWS_MOST)
         readings = self._readings if kind == "record" else None
+        unfit = ""
         if kind == "record" and (readings is None or readings.count == 0):
-            raise InvalidQuantity("There are no readings yet: take some under Bench, then make the record.")
-        if readings is not None and readings.names != self.workbench.analysis.design.signal_names:
-            raise InvalidQuantity(
-                "The signals are not those of the readings any more; take the readings of this stage under Bench."
-            )
+            unfit = "There are no readings yet: take some under Bench, then make the record."
+        elif readings is not None and readings.names != self.workbench.analysis.design.signal_names:
+            unfit = "The signals are not those of the readings any more; take the readings of this stage under Bench."
+        if unfit:  # said as of any file that could not be made, so that the browser closes the tab it opened for it
+            self._making, self._ready = token, None
+            self._failed(token, unfit)
+            return
         order = {
             "kind": kind, "which": which, "draws": draws, "symbols": _SYMBOLS[self.workbench.symbols], "theme": self.workbench.theme,
             "made": datetime.now(UTC).isoformat(), "author": None, "decisions": [], "readings": readings,
