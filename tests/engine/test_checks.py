@@ -12,7 +12,7 @@ from sumwright.engine.checks import MODULES, Check, headline
 from sumwright.engine.realise.preferred import values_within
 from sumwright.engine.stage import Leg, Load, Reference, Signal, Supply, Target, replace
 from sumwright.files.examples import NAMES, example
-from sumwright.quantity import THIN, parse_quantity
+from sumwright.quantity import THIN, format_quantity, parse_quantity
 from support.stages import op_amp
 
 DEMO = example()
@@ -517,6 +517,12 @@ def test_the_rating_named_stands_the_heat():
     assert c.status == "short" and c.limit == pytest.approx(0.125 * 55 / 85)
     watt = amount(c.advice, r"A ([0-9]+(?:\.[0-9]+)?) W part", "W")
     assert check(replace(hot, resistor=replace(hot.resistor, power=watt)), "resistor_heat").status != "short"
+
+
+def test_the_junction_says_what_heats_it():
+    gate = example("lock-gate-switches")  # two op amps in one package
+    watts = sum(a.dissipation_most for a in Analysis(gate).power.op_amps)
+    assert f"{format_quantity(watts, 'W')} in the package" in check(gate, "junction").why
 
 
 def test_the_package_named_keeps_the_junction():

@@ -19,15 +19,16 @@ def checks(analysis) -> tuple[Check, ...]:
         why = f"Thermal resistance of the package is not given; the op amp takes {watts} at worst."
         return (unknown(KEY, TITLE, "°C", why, "Type the thermal resistance under op amp to know."),)
     at = format_fixed(hot.junction, "°C", 1)
-    if amp.junction_most is None:
-        why = f"The junction reaches {at} with {watts}; its highest temperature is not given."
-        return (unknown(KEY, TITLE, "°C", why, "Type the highest junction temperature under op amp.", hot.junction),)
     ambient = design.ambient.high
+    package = format_quantity((hot.junction - ambient) / amp.thermal_resistance, "W")
+    if amp.junction_most is None:
+        why = f"The junction reaches {at} with {package} in the package; its highest temperature is not given."
+        return (unknown(KEY, TITLE, "°C", why, "Type the highest junction temperature under op amp.", hot.junction),)
     return (
         judged(
             KEY, TITLE, "°C", hot.junction, amp.junction_most, amp.junction_most - hot.junction,
             max(amp.junction_most - ambient, 0.0) or abs(amp.junction_most),
-            f"The junction reaches {at} with {watts} at {ambient:g} °C; its limit is {amp.junction_most:g} °C.",
+            f"The junction reaches {at} with {package} in the package at {ambient:g} °C; its limit is {amp.junction_most:g} °C.",
             lambda goal: _cure(design, hot, goal),
         ),
     )  # fmt: skip
