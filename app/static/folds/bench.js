@@ -10,7 +10,6 @@ import {saveText, table} from './figures.js'
 export const styles = true
 
 const shownIn = (x, unit, decimals = 3) => unit === 'V' ? `${fixed(x, decimals)}${THIN}V` : engineering(x, unit, 4)
-const bare = (x, unit) => unit === 'V' ? fixed(x) : engineering(x, unit, 4)
 const volts = x => { const text = fixed(x, 3); return text.includes('.') ? text.replace(/\.?0+$/, '') : text }
 const resistor = x => x === null ? '' : engineering(x, '', 3).replace(THIN, '').replace(/(\.\d*?)0+(?=\D|$)/, '$1').replace(/\.(?=\D|$)/, '') + (x < 1e3 ? 'R' : '')
 
@@ -116,6 +115,7 @@ export function mount(node, sheet) {
       head.replaceChildren(...heads.map((h, k) => {
         const signal = k > 0 && k <= s.names.length
         const th = el('th', {scope: 'col', class: signal ? 'r src' : k > s.names.length && k < heads.length - 2 ? 'r' : ''})
+        if (signal) setAttr(th, 'title', `V to put on ${h}`)
         if (signal) th.append(swatch(style(s.styles[k - 1])), ' ', el('span', {text: h})); else th.textContent = h || ''
         if (!h) th.append(el('span', {class: 'vh', text: k ? 'verdict' : 'number'}))
         return th
@@ -138,8 +138,8 @@ export function mount(node, sheet) {
       else setText(c[1], row.title)
       setAttr(l.row, 'title', isOutput ? row.title : `${row.title}: ${row.probe}`)
       const n = c.length
-      setText(c[n - 5], bare(row.expect, row.unit) + (row.unit === 'V' ? '' : ''))
-      setText(c[n - 4], '±' + (row.unit === 'V' ? fixed((row.high - row.low) / 2) : engineering((row.high - row.low) / 2, row.unit, 2)))
+      setText(c[n - 5], shownIn(row.expect, row.unit))
+      setText(c[n - 4], '±' + (row.unit === 'V' ? shownIn((row.high - row.low) / 2, 'V') : engineering((row.high - row.low) / 2, row.unit, 2)))
       l.blank.set(row.text); l.bar.set(row)
       setText(c[n - 1], row.word); setClass(c[n - 1], 'bad', row.word === 'out')
       setClass(l.row, 'now', i === s.now); setClass(l.row, 'todo', row.value === null)
@@ -209,6 +209,7 @@ export function mount(node, sheet) {
     }))
     const out = s.left_out.length ? ` Reading ${s.left_out.slice(0, 6).map(x => x.line).join(', ')} ${s.left_out.length > 1 ? 'are' : 'is'} near clipping and kept out.` : s.taken ? ' No reading was near clipping.' : ''
     const c = s.chi
+    setAttr(fitNote, 'title', c.value === null || !s.taken || !c.freedom ? null : 'χ²: the squares of what each reading is off the fitted weights, in its own uncertainty, added up. p: how often sound readings would be off by as much or more')
     setText(fitNote, c.value === null || !s.taken ? (s.taken ? out.trim() : 'No readings of the output yet.')
       : c.freedom === 0 ? `As many readings as unknowns; one more tests the fit.${out}`
         : `χ² = ${fixed(c.value, 1)} on ${c.freedom} ${c.freedom === 1 ? 'degree' : 'degrees'} of freedom, p = ${c.p < .001 ? 'under 0.001' : fixed(c.p, c.p < .1 ? 3 : 2)}.${out}`)
@@ -245,6 +246,7 @@ export function mount(node, sheet) {
     next.replaceChildren(el('b', {text: 'Next reading. '}), spent
       ? parted ? 'No reading of the output tells more; the measurement above does.' : 'Nothing more to tell.'
       : `${live}${THIN}V, worth ${fixed(t.bits, 2)} bit. `, spent ? '' : take)
+    setAttr(next, 'title', spent ? null : 'What the reading is likely to tell: 1 bit halves the suspects that are left')
     notes.replaceChildren(...t.notes.map(text => el('p', {class: 'fit-note', text})))
   }
 
@@ -257,7 +259,7 @@ export function mount(node, sheet) {
     setText(ask, row.title)
     const live = row.apply ? s.names.map((n, k) => [n, row.apply[k]]).filter(([, v]) => v) : []
     setText(setup, live.length ? `${row.setup}: ${live.map(([n, v]) => `${n} ${volts(v)}${THIN}V`).join(', ')}` : row.setup)
-    expect.replaceChildren('probe ', el('b', {text: row.probe}), ', expect ', el('b', {text: shownIn(row.expect, row.unit)}), `, from ${bare(row.low, row.unit)} to ${bare(row.high, row.unit)}`)
+    expect.replaceChildren('probe ', el('b', {text: row.probe}), ', expect ', el('b', {text: shownIn(row.expect, row.unit)}), `, from ${shownIn(row.low, row.unit)} to ${shownIn(row.high, row.unit)}`)
     setText(unit, row.unit)
     setAttr(large.node, 'aria-label', `Reading, ${row.title}, in ${row.unit}`)
     if (large.node.dataset.row !== String(s.now)) { large.node.dataset.row = String(s.now); large.restore() }
