@@ -121,6 +121,13 @@ def test_note_decision_freeze_compare_correct_search_verify(context, server):
     told = page.locator(".compared").inner_text()
     assert re.search(r"north, value\s+5\sV\s+4\sV", told.replace("\u202f", " "))
     assert "output" in told
+    for width in (1024, 390, 1280):  # the comparison stays in its column, its fields on the page
+        page.set_viewport_size({"width": width, "height": 800})
+        assert page.evaluate(
+            """() => [...document.querySelectorAll('.compared, .log-fold .blank.wide')].filter(e => e.offsetParent)
+              .every(e => e.getBoundingClientRect().right <= e.closest('.log-fold > div').getBoundingClientRect().right + 1)"""
+        ), width
+        assert page.get_by_label("Search the log").is_visible()
     page.get_by_role("button", name="Put frozen A on the sheet").click()
     page.wait_for_function("() => window.sumwright.state.signals.rows.find(r => r.name === 'north').value === 5")
     act(page, do="undo")

@@ -400,6 +400,7 @@ def test_what_a_reader_can_and_cannot_do_over_the_websocket(chromium, lab):
     page.evaluate("() => { location.hash = 'log' }")
     page.wait_for_selector("#entry-1")
     assert not page.get_by_role("button", name="Write it").is_visible()
+    assert not page.get_by_role("button", name="Correct entry 1").is_visible()
     for tried in READERS_TRIES:
         message = json.dumps({"seq": 900, "acts": [tried]}).replace("KEY", key)
         answer = page.evaluate(

@@ -73,7 +73,7 @@ export function mount(node, sheet) {
           el('button', {class: 'act', text: 'Put on the sheet', 'aria-label': `Put frozen ${e.letter} on the sheet`, onclick: () => ask('use', {number: e.number}, done => done.used && sheet.note(`Frozen ${e.letter} is on the sheet; Undo takes it back.`))}),
         ] : []),
         ...(e.table ? [el('button', {class: 'act', text: 'CSV', 'aria-label': `Table of entry ${e.number} as a file`, onclick: () => ask('table', {number: e.number}, done => fetchParts(done.file))})] : []),
-        el('button', {class: 'act', text: 'Correct', 'aria-label': `Correct entry ${e.number}`, onclick: () => { correcting = e.number; sayKind(); text.focus() }}),
+        el('button', {class: 'act correct', text: 'Correct', 'aria-label': `Correct entry ${e.number}`, onclick: () => { correcting = e.number; sayKind(); text.focus() }}),
         el('button', {class: 'act', text: 'Link', 'aria-label': `Copy a link to entry ${e.number}`, onclick: () => copied(link(shown.place, 'log', e.number))}))
     }}
   }
@@ -231,9 +231,10 @@ export function mount(node, sheet) {
       conflict.hidden = !now.conflict
       if (now.conflict) setText(clash, `${now.conflict.by} saved this sheet at ${clock(now.conflict.at)} while you were changing it. Nothing is overwritten until you choose.`)
       writing.hidden = !may.write || now.archived
+      setClass(list, 'closed', writing.hidden) // nothing can be corrected either
       for (const key of ['book', 'sheet', 'rename', 'import']) acts[key].hidden = !may[{book: 'new', sheet: 'new'}[key] ?? key]
       for (const key of ['sheet', 'rename', 'export', 'verify']) acts[key].disabled = !now.place?.notebook
-      setText(heading, now.title ? `Notebook: ${now.title}` : 'Not in a notebook yet')
+      setText(heading, now.title ? `Notebook: ${now.title}${now.archived ? ' (archived: nothing more is written in it)' : ''}` : 'Not in a notebook yet')
       sheets.replaceChildren(...((now.sheets ?? []).length > 1 ? now.sheets.map(([n, t]) => el('a', {class: 'act', href: address(now.place.notebook, n), text: t, 'aria-current': n === now.place.sheet ? 'page' : null})) : []))
       const entries = now.entries ?? []
       const rows = keyed(list, entries.map(e => e.number), entry)
