@@ -114,9 +114,9 @@ def near_clipping(design: Design, readings: Readings, bench: Bench) -> list[Left
         low = worst[1] + amp.dropout_low + amp.dropout_resistance * max(-y * pull, 0.0)
         line = readings.lines[i] if readings.lines else i + 1
         if y >= high - 2 * u[i]:
-            out.append(LeftOut(i, line, float(y), f"within the clipping limit of {high:.3g} V"))
+            out.append(LeftOut(i, line, float(y), f"within the clipping limit of {format_quantity(high, 'V')}"))
         elif y <= low + 2 * u[i]:
-            out.append(LeftOut(i, line, float(y), f"within the clipping limit of {low:.3g} V"))
+            out.append(LeftOut(i, line, float(y), f"within the clipping limit of {format_quantity(low, 'V')}"))
         else:
             inner = lead[:-1] @ np.append(volts, net.values[-1])
             for k, v in enumerate(inner):
