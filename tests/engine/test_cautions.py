@@ -80,3 +80,11 @@ def test_a_drop_that_the_clipped_output_cannot_reach_is_no_hot_part():
 def test_a_large_voltage_is_written_out():
     text = next(c.text for c in cautions(Analysis(stage(high=1050.0, leg=1e6))) if c.key == "voltage")
     assert "reaches 1050 V" in text
+
+
+def test_a_plus_input_left_without_a_path_is_said():
+    d = one_cell({"a": 2.0}, plus={"a": 1e4}, minus_ground=1e4, feedback=1e4)
+    assert "floating" not in keys(d)
+    assert "floating" in {c.key for c in cautions(Analysis(d, ("a",))) if c.present}
+    held = dataclasses.replace(d, cells=(dataclasses.replace(d.cells[0], plus_ground=1e6),))
+    assert "floating" not in {c.key for c in cautions(Analysis(held, ("a",))) if c.present}

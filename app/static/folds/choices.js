@@ -48,7 +48,7 @@ export function mount(node, sheet) {
   // ---------------------------------------------------------------- right: the table and the panes
   const heads = ['(mark)', 'arrangement', 'weight,\u00a0%', 'offset,\u00a0%', 'R', 'op amps', 'noise gain', 'noise', 'sources see', 'Rf']
   const head = el('tr', {}, ...heads.map((t, i) => heading(t, i > 1 && i < 9 ? 'r' : null)))
-  setAttr(head.children[2], 'title', 'worst weight error'); setAttr(head.children[3], 'title', 'error of the offset')
+  setAttr(head.children[2], 'title', 'worst weight error'); setAttr(head.children[3], 'title', 'error of the offset'); setAttr(head.children[4], 'title', 'resistors')
   const body = el('tbody')
   const table = el('div', {class: 'rows', tabindex: '-1'}, el('table', {}, el('thead', {}, head), body))
   const empty = el('p', {class: 'note'})

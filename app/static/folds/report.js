@@ -24,7 +24,8 @@ export function mount(node, sheet) {
   const picture = el('select', {class: 'blank', 'aria-label': 'Picture'})
   const look = el('figure', {class: 'look'})
 
-  const button = (text, label, run) => el('button', {class: 'act', text, 'aria-label': label, onclick: run})
+  const HOW = {Open: 'in a tab of its own', Keep: 'as a file', Copy: 'to the clipboard'}
+  const button = (text, label, run) => el('button', {class: 'act', text, 'aria-label': label, title: HOW[text] ?? 'as a file', onclick: run})
   node.append(
     el('div', {},
       el('h3', {text: 'Documents'}),

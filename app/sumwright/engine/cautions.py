@@ -20,7 +20,7 @@ import numpy as np
 from .clipping import solve_clipped
 from .heat import FULL_POWER_TO, NO_POWER_AT, resistor_rating
 from .nodes import Network, nominal_limits
-from .stage import replace
+from .stage import cell_name, replace
 
 DC_LIMIT = 60.0  # V
 AC_LIMIT = 30.0  # V RMS
@@ -32,7 +32,7 @@ MOST_CLIPPED = 8  # signals: up to so many, every corner is solved with the outp
 class Caution(NamedTuple):
     """One caution; `present` is True where this design gives the reason, False where it holds of any."""
 
-    key: str  # voltage, burn, unpowered, short, rails, use
+    key: str  # voltage, burn, floating, unpowered, short, rails, use
     title: str
     text: str
     present: bool
@@ -49,7 +49,13 @@ def cautions(analysis) -> tuple[Caution, ...]:
     -------
     tuple of Caution
     """
-    found = [*_voltage(analysis.design), *_heat(analysis), *_unpowered(analysis.design), _short(analysis)]
+    found = [
+        *_voltage(analysis.design),
+        *_heat(analysis),
+        *_floating(analysis),
+        *_unpowered(analysis.design),
+        _short(analysis),
+    ]
     found += [
         Caution(
             "rails", "Rails",
@@ -84,6 +90,25 @@ def _voltage(design) -> list[Caution]:
             "voltage", "Hazardous voltage",
             f"{'; '.join(over)}: past 60 V DC or 30 V AC RMS, the usual limits of extra-low voltage. Guard live parts and "
             "discharge capacitors before touching; the local code decides, and the work belongs to licensed practice.",
+            True,
+        )
+    ]  # fmt: skip
+
+
+def _floating(analysis) -> list[Caution]:
+    """A + input whose every leg is open: the bias current has no path, which no resistor in the model shows."""
+    bare = [
+        cell_name(k)
+        for k, cell in enumerate(analysis.design.cells)
+        if cell.plus and cell.plus_ground is None and all(leg.source in analysis.unplugged for leg in cell.plus)
+    ]
+    if not bare:
+        return []
+    return [
+        Caution(
+            "floating", "Input without a path",
+            f"With what is unplugged, nothing holds the + input of {' and '.join(bare)}: its bias current takes the output to a rail, "
+            "whatever the figures say. A resistor from that node to ground holds it.",
             True,
         )
     ]  # fmt: skip
