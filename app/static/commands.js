@@ -46,6 +46,7 @@ export function heard(reply) {
     setTimeout(() => URL.revokeObjectURL(url), 10000)
   }
   if (reply.opened !== undefined) {
+    if (!reply.note) sheet.note(null) // what was said of a file before
     if (sheet.state.open === 'new') location.hash = 'curves'
   }
   if (reply.note && (reply.download || reply.opened !== undefined)) sheet.note(reply.note)

@@ -113,7 +113,7 @@ def _sum(text: str) -> Sum:
     if not equals:
         right = left
     elif "=" in right:
-        raise InvalidDesign("A sum has one “=”.", "sum")
+        raise InvalidDesign("A sum has one “=”; in a list write a name and its weight on each line, without “=”.", "sum")
     right = " ".join(right.split())
     signals: list[Signal] = []
     offset, at = 0.0, 0
