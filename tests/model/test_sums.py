@@ -56,6 +56,11 @@ def test_a_list_of_weights_with_ranges_a_heading_and_an_offset():
     assert wanted.offset == pytest.approx(0.1)
 
 
+def test_a_list_may_have_the_weight_first_as_a_sum_has():
+    found = read_sum("0.5 left\n− 0.25 right\n0.1 * third one")
+    assert [(s.name, s.weight) for s in found.signals] == [("left", 0.5), ("right", -0.25), ("third one", 0.1)]
+
+
 def test_a_column_of_bare_weights_gets_names():
     assert terms("0.5\n0.25\n-0.1")[0] == {"signal 1": 0.5, "signal 2": 0.25, "signal 3": -0.1}
 

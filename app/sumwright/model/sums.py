@@ -41,6 +41,7 @@ _TERM = re.compile(
 _ASKED = re.compile(r"(window|accuracy|rails)\b[\s:=,;]*(.*)", re.IGNORECASE)
 _VOLT = re.compile(r"[munµ]?V")
 _SPAN_OF = {"window": ("target", "low"), "accuracy": ("target", "accuracy"), "rails": ("supply", "high")}
+_WEIGHT_FIRST = re.compile(r"([+-]?)\s*(\.?\d\S*)\s*[ *×]\s*(\D.*)")  # a line of a list written as a term is
 _SAME = str.maketrans({"\u2212": "-", "\u2013": "-", "\u2009": " ", "\u00a0": " ", "\u202f": " "})
 
 
@@ -113,7 +114,9 @@ def _sum(text: str) -> Sum:
     if not equals:
         right = left
     elif "=" in right:
-        raise InvalidDesign("A sum has one “=”; in a list write a name and its weight on each line, without “=”.", "sum")
+        raise InvalidDesign(
+            "A sum has one “=”; in a list write a name and its weight on each line, without “=”.", "sum"
+        )
     right = " ".join(right.split())
     signals: list[Signal] = []
     offset, at = 0.0, 0
@@ -144,12 +147,22 @@ def _number(text: str | None) -> float:
     return float(top) / below
 
 
+def _is_number(text: str) -> bool:
+    try:
+        parse_quantity(text)
+    except InvalidQuantity:
+        return False
+    return True
+
+
 def _list(lines: list[str]) -> Sum:
     signals: list[Signal] = []
     offset = 0.0
     for k, line in enumerate(lines, 1):
         cells = [c.strip().strip('"“”') for c in re.split(r"[,;\t]", line)]
-        if len(cells) == 1:
+        if len(cells) == 1 and (first := _WEIGHT_FIRST.fullmatch(line)) and not _is_number(line):
+            cells = [first[3], first[1] + first[2]]
+        elif len(cells) == 1:
             cells = re.split(r"\s+(?=[+-]?[\d.])", line, maxsplit=1)
         cells = [c for c in cells if c]
         if len(cells) == 1:
