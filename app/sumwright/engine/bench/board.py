@@ -72,7 +72,7 @@ class Boards:
     reference_volts: np.ndarray  # (B,)
     rail_high: np.ndarray  # (B,) V
     rail_low: np.ndarray  # (B,) V
-    rail_spread: np.ndarray  # (B, 2) V beyond the ordinary one: high, low
+    rail_spread: np.ndarray  # (B, 2) V beyond the ordinary one: high, low; below zero: instead of it
     load_ohm: np.ndarray  # (B,) inf = none
 
     @property
@@ -320,7 +320,9 @@ class Bench:
         for side, (volts, dropout) in enumerate(
             ((boards.rail_high, amp.dropout_high), (boards.rail_low, -amp.dropout_low))
         ):
-            u = np.sqrt((rail * volts) ** 2 + (DROPOUT_SPREAD * dropout) ** 2 + boards.rail_spread[:, side] ** 2)
+            more = boards.rail_spread[:, side]
+            u = np.sqrt((rail * volts) ** 2 + (DROPOUT_SPREAD * dropout) ** 2 + more**2)
+            u = np.where(more < 0, -more, u)
             reach.append(((volts - dropout)[:, None] + u[:, None] * self.d_reach[None, :p, side])[..., None])
         top, bottom = reach
         most = (amp.output_current * (1.0 + self.d_current[:p]))[None, :, None]
@@ -364,8 +366,9 @@ class Bench:
         mean = mean + mid
         floor = FLOOR_VOLTS**2 + (FLOOR_SHARE * np.abs(mean)) ** 2
         own = own + floor + (p_high + p_low) * LIMIT_FLOOR**2
-        # so does an amplifier that died at a rail: it follows that rail
-        own = own + np.where(np.abs(np.nan_to_num(boards.stuck[:, -1:])) > 0, LIMIT_FLOOR**2, 0.0)
+        # so does an output that is dead but not firmly at zero
+        loose = (np.nan_to_num(np.abs(boards.stuck[:, -1:])) > 0) | (boards.stuck_spread[:, -1:] >= 0.1)
+        own = own + np.where(loose, LIMIT_FLOOR**2, 0.0)
         columns = step * p_in[:, None, :]
         columns += (highs[:, 1:] - highs[:, :1]) * p_high[:, None, :]
         columns += (lows[:, 1:] - lows[:, :1]) * p_low[:, None, :]

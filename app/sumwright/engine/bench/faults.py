@@ -307,7 +307,9 @@ def _rail_missing(bench):
         if not volts:
             continue
         gone = _set(field, (), 0.0)
-        ways = [Way(gone, 0.5), Way(_both(_set(field, (), dropout), _set("rail_spread", (at,), 0.4)), 0.5)]
+        ways = [Way(gone, 0.4)]
+        for spread, share in ((-0.01, 0.2), (0.4, 0.4)):
+            ways.append(Way(_both(_set(field, (), dropout), _set("rail_spread", (at,), spread)), share))
         if not other:
             every = slice(None)
             for spread, share in ((0.001, 0.3), (max(abs(dropout), 0.05), 0.2), (0.4, 0.1)):

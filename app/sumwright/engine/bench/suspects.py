@@ -318,7 +318,7 @@ class Diagnosis:
         """(cases,) group numbers, 1 for the group of the likeliest suspect.
 
         A suspect joins the one before it when the readings favour neither by ten to
-        one, or when both at their best may well give these very readings: they may
+        one, or neither is ten times as probable as the other, or when both at their best may well give these very readings: they may
         then still differ in probability, by the odds of their kinds and by how freely
         they predict, but nothing that was read contradicts either.
         """
@@ -331,6 +331,8 @@ class Diagnosis:
                 continue
             number += 1
             together = np.abs(self.log_evidence - self.log_evidence[lead]) < TELLS_APART
+            # nor where the readings speak for one and the odds of its kind for the other
+            together |= np.abs(self.log_posterior - self.log_posterior[lead]) < TELLS_APART
             if fits[lead]:
                 alike = fits.copy()
                 # a board just outside its tolerance always resembles a healthy one: "none"
