@@ -39,6 +39,7 @@ FOLDS = ("curves", "choices", "budget", "response", "bench", "log", "report")
 ACTS_MOST = 64  # in one message
 FILE_NAME_MOST = 80  # characters of a file's name in a sentence
 LOOK_AROUND = 4000  # ms between looks at what others did to the sheet
+LOOK_AFTER_OPENING = 1200  # ms to the first of them
 _TEMPLATE = Path(__file__).parent / "views" / "sheet.html"
 
 
@@ -299,6 +300,8 @@ class Page:
             pn.state.on_session_destroyed(lambda context: self.close())
             if self.sitting is not None:
                 self._doc.add_periodic_callback(self.sitting.look_around, LOOK_AROUND)
+                # a page loaded anew right after a move may be ahead of another process that has yet to save it
+                self._doc.add_timeout_callback(self.sitting.look_around, LOOK_AFTER_OPENING)
         # all roots at once: each by itself would have the whole document's models gathered anew
         with self._doc.models.freeze() if self._doc is not None else nullcontext():
             return page.servable(title=f"{self.workbench.title} · Sumwright")

@@ -256,7 +256,14 @@ class Sitting:
             return
         autosave.follow(theirs.revision, theirs.saved_at)
         page.refresh_sheet()
-        page.say(f"{theirs.saved_by} changed this sheet; it is shown as they left it. Undo gives back what you had.")
+        if theirs.saved_by == self.desk.person.name:
+            page.say(
+                "You changed this sheet on another page; it is shown as you left it there. Undo gives back what was here."
+            )
+        else:
+            page.say(
+                f"{theirs.saved_by} changed this sheet; it is shown as they left it. Undo gives back what you had."
+            )
 
     def show(self, theirs: Sheet) -> bool:
         """Put a stored sheet on the workbench; what was there is one undo step back."""
