@@ -206,6 +206,19 @@ def test_bad_input_exits_2_with_one_line_and_writes_nothing(design_file, tmp_pat
     assert [p.name for p in tmp_path.iterdir() if p.name.startswith(".")] == []
 
 
+@pytest.mark.parametrize("outputs", [("design",), ("link",), ("new", "new"), ("new", "no/such.zip")])
+def test_no_output_replaces_what_is_read_or_is_half_of_what_was_asked(design_file, tmp_path, capsys, outputs):
+    before = design_file.read_bytes()
+    link = tmp_path / "link"
+    link.symlink_to(design_file)
+    places = [str({"design": design_file, "link": link}.get(o, tmp_path / o)) for o in outputs]
+    words = ["-o", places[0], *(("--bundle", places[1]) if len(places) > 1 else ())]
+    assert main(["report", str(design_file), *words, "--draws", "0"]) == 2
+    err = capsys.readouterr().err
+    assert err.count("\n") == 1 and ("name another file" in err or "cannot be written" in err)
+    assert design_file.read_bytes() == before and link.is_symlink() and not (tmp_path / "new").exists()
+
+
 def test_a_folder_that_is_not_there_is_named(design_file, tmp_path, capsys):
     assert main(["report", str(design_file), "-o", str(tmp_path / "no" / "x.html"), "--draws", "0"]) == 2
     assert "cannot be written" in capsys.readouterr().err

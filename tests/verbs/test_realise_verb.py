@@ -2,6 +2,7 @@
 
 import csv
 import json
+from pathlib import Path
 
 import pytest
 from sumwright.command import main
@@ -132,3 +133,5 @@ def test_the_bill_of_the_best_choice(design, capsys, tmp_path):
     assert sum(int(r["count"]) for r in rows if r["part"] == "resistor") == best["resistor_count"]
     status, out, err = run(capsys, path, "--bill", str(tmp_path / "no" / "such" / "place.csv"))
     assert (status, out) == (2, "") and "cannot be written" in err
+    status, out, err = run(capsys, path, "--bill", path)
+    assert (status, out) == (2, "") and "is read by this command" in err and read_design(Path(path))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import errno
 import os
 import tempfile
 from pathlib import Path
@@ -86,12 +87,36 @@ def write_whole(path: str | os.PathLike, text: str | bytes) -> None:
             finally:
                 os.close(folder)
     except (OSError, ValueError, RuntimeError) as problem:
-        why = (problem.strerror if isinstance(problem, OSError) else None) or "not a usable file name"
-        raise SumwrightError(f"{shown(os.fspath(path), 120)} cannot be written: {why}.") from None
+        raise _cannot_be_written(path, problem) from None
     finally:
         if temporary is not None:
             with contextlib.suppress(OSError):
                 Path(temporary).unlink()
+
+
+def check_writable(path: str | os.PathLike) -> None:
+    """Refuse now what `write_whole` would refuse for its place, before other files are written or time is spent.
+
+    Raises
+    ------
+    SumwrightError
+        If the folder is not there or takes no file, or the name is a folder's.
+    """
+    target = Path(path)
+    try:
+        if target.is_dir():
+            raise IsADirectoryError(errno.EISDIR, os.strerror(errno.EISDIR))
+        if target.exists() and not target.is_file():
+            return
+        with tempfile.TemporaryFile(dir=target.resolve().parent):
+            pass
+    except (OSError, ValueError, RuntimeError) as problem:
+        raise _cannot_be_written(path, problem) from None
+
+
+def _cannot_be_written(path, problem: Exception) -> SumwrightError:
+    why = (problem.strerror if isinstance(problem, OSError) else None) or "not a usable file name"
+    return SumwrightError(f"{shown(os.fspath(path), 120)} cannot be written: {why}.")
 
 
 def _umask() -> int:

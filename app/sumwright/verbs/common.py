@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import json
+import os
 import unicodedata
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -12,6 +13,7 @@ from typing import Any
 from sumwright.engine.stage import Design
 from sumwright.errors import InvalidDesign, InvalidQuantity, SumwrightError, shown
 from sumwright.files.design import read_design
+from sumwright.files.text import check_writable
 
 
 def add_design(parser: argparse.ArgumentParser) -> None:
@@ -43,6 +45,24 @@ def load_design(path: Path, *, realised: bool = True) -> Design:
             f"{shown(str(path), 120)} has no cells: it is not realised yet; run sumwright realise on it first.", "cells"
         )
     return design
+
+
+def check_outputs(outputs: Iterable[Path | None], inputs: Iterable[Path | str | None]) -> None:
+    """Refuse, before anything is written, an output that cannot be or that would replace an input or another output.
+
+    Raises
+    ------
+    SumwrightError
+    """
+    taken = {os.path.realpath(name): "is read by this command" for name in inputs if name is not None}
+    for path in outputs:
+        if path is None:
+            continue
+        check_writable(path)
+        place = os.path.realpath(path)
+        if place in taken:
+            raise SumwrightError(f"{shown(str(path), 120)} {taken[place]}; name another file to write.")
+        taken[place] = "is written by this command already"
 
 
 def whole(text: str, name: str, least: int, most: int) -> int:

@@ -15,7 +15,7 @@ from sumwright.files.design import design_document
 from sumwright.files.drawer import read_drawer
 from sumwright.files.text import write_whole
 from sumwright.quantity import format_fixed, format_percent, format_quantity, format_resistor, parse_quantity
-from sumwright.verbs.common import add_design, add_json, load_design, plain, print_json, table
+from sumwright.verbs.common import add_design, add_json, check_outputs, load_design, plain, print_json, table
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
@@ -54,6 +54,7 @@ def run(args: argparse.Namespace) -> int:
     if args.buy_for is not None and args.stock is None:
         raise SumwrightError("--buy-for is given without --stock; it says what the drawer lacks.")
     design = load_design(args.design, realised=False)
+    check_outputs((args.bill,), (args.design, args.stock))
     drawer = None if args.stock is None else read_drawer(args.stock)
     goal = None if args.buy_for is None else parse_quantity(args.buy_for, "", "--buy-for")
     if goal is not None and not 0 < goal < 1:

@@ -16,7 +16,7 @@ from sumwright.report.bench_papers import bring_up_sheet, calibration_record, re
 from sumwright.report.document import DRAWS, Decision, design_report
 from sumwright.report.export import bundle
 from sumwright.report.schematic import SYMBOLS
-from sumwright.verbs.common import add_design, load_design, read_whole, whole
+from sumwright.verbs.common import add_design, check_outputs, load_design, read_whole, whole
 
 KINDS = ("design", "bring-up", "calibration")
 MOST_DRAWS = 10_000_000
@@ -71,6 +71,7 @@ def run(args: argparse.Namespace) -> int:
     if args.kind != "design" and args.bundle is not None:
         raise SumwrightError("--bundle goes with the design report; leave out --kind, or --bundle.")
     design = load_design(args.design)
+    check_outputs((args.output, args.bundle), (args.design, args.readings, args.notebook))
     head: dict[str, Any] = {"author": args.author, "now": datetime.now(UTC)}
     files = None
     if args.kind == "bring-up":
