@@ -103,7 +103,7 @@ def test_an_offset_without_a_reference_gets_one():
 def test_rails_the_wrong_way_round_are_refused_with_both_values():
     with pytest.raises(InvalidQuantity, match=r"−7\.5 V.*−8 V"):
         edits.with_figure(demo.design(), "supply", "high", -8.0)
-    with pytest.raises(InvalidQuantity, match="load resistance must be more than 0; it is −10k"):
+    with pytest.raises(InvalidQuantity, match="Load resistance must be more than 0; it is −10k"):
         edits.with_figure(demo.design(), "load", "resistance", -1e4)
 
 

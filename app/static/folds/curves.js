@@ -241,7 +241,10 @@ export function mount(node, sheet) {
       const bad = {high: beam.high > beam.limit_high, low: beam.low < beam.limit_low}
       const top = bad.high ? clamp(Math.max(beam.limit_high, beam.low)) : clamp(beam.high), base = bad.low ? clamp(Math.min(beam.limit_low, beam.high)) : clamp(beam.low)
       p.path(`M${x} ${base}V${top}`, {class: 'beam'})
-      for (const [end, wrong] of [[beam.high, bad.high], [beam.low, bad.low]]) p.path(`M${x - 7} ${clamp(end)}h14`, {class: wrong ? 'beam wrong' : 'beam'})
+      for (const [end, wrong] of [[beam.high, bad.high], [beam.low, bad.low]]) {
+        const y = clamp(end), past = Math.sign(y - Y(end)) // beyond the scale it has no end here: an arrow, as the bars have
+        p.path(past ? `M${x - 6} ${y + past * 8}L${x} ${y + past}L${x + 6} ${y + past * 8}` : `M${x - 7} ${y}h14`, {class: wrong ? 'beam wrong' : 'beam'})
+      }
       if (bad.high) p.path(`M${x} ${top}V${clamp(beam.high)}`, {class: 'past'})
       if (bad.low) p.path(`M${x} ${base}V${clamp(beam.low)}`, {class: 'past'})
       for (const limit of [beam.limit_high, beam.limit_low]) if (Y(limit) >= 0 && Y(limit) <= y1 + 4) p.path(`M${x - 18} ${Y(limit)}h36`, {class: 'limit'})

@@ -467,6 +467,7 @@ def with_figure(design: Design, group: str, figure: str, value: Any) -> Design:
     if figure not in known:
         raise InvalidDesign(f"{group} has no figure “{figure}”.", f"{group}.{figure}")
     words = ("load " if group == "load" else "") + figure.replace("_", " ")
+    words = words[0].upper() + words[1:]
     if isinstance(value, float):
         said = format_quantity(value, "", 4, trim=True)
         if figure in ABOVE_ZERO and value <= 0:
@@ -484,11 +485,11 @@ def _true_minus(value: float) -> str:
 
 def _check_order(group: str, part: Any) -> None:
     pairs = {
-        "supply": ("low", "high", "the − rail", "the + rail", "V"),
-        "ambient": ("low", "high", "the lowest ambient", "the highest ambient", "°C"),
-        "resistor": ("least", "most", "the least resistance", "the most resistance", "Ω"),
-        "target": ("low", "high", "the window's bottom", "the window's top", "V"),
-        "op_amp": ("supply_least", "supply_most", "the least supply", "the most supply", "V"),
+        "supply": ("low", "high", "The − rail", "the + rail", "V"),
+        "ambient": ("low", "high", "The lowest ambient", "the highest ambient", "°C"),
+        "resistor": ("least", "most", "The least resistance", "the most resistance", "Ω"),
+        "target": ("low", "high", "The window's bottom", "the window's top", "V"),
+        "op_amp": ("supply_least", "supply_most", "The least supply", "the most supply", "V"),
     }
     if group not in pairs:
         return
