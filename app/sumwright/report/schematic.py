@@ -23,7 +23,7 @@ from .drawing import INK, PAPER, RED, SOFT, Drawing, number, shortened, text_wid
 
 SYMBOLS = {"iec": "IEC 60617", "ieee": "IEEE 315"}
 ROW = 40.0
-_WIDEST = 1100.0  # px; wider than this, cells go below each other
+_WIDEST = 760.0  # px; wider than this would be too small to read on paper, so cells go below each other
 _NAME_ROOM = 200.0  # px for a source's name
 _RES, _BUS, _AMP, _WIDE, _OUT = 46.0, 150.0, 72.0, 74.0, 26.0  # along a leg: resistor, bus; op amp, its width, output
 
