@@ -22,6 +22,7 @@ from sumwright.model import demo
 from sumwright.model.bench_run import as_text
 from sumwright.model.edits import FOLLOW
 from sumwright.model.history import Snapshot as Step
+from sumwright.model.sums import UNTITLED
 from sumwright.model.workbench import SYMBOLS, Workbench
 from sumwright.notebook.autosave import Autosave, Mark, Snapshot
 from sumwright.notebook.bundle import unpack
@@ -67,6 +68,7 @@ class Sitting:
         self._quiet = False
         self.archived = False
         self._told = ""
+        self._untitled = False  # the notebook was begun here, with a sheet that had no title yet
         self._making = threading.Lock()
         self._spelled: dict[int, tuple[Step, str]] = {}
         self._stored_steps: tuple[int, ...] | None = None
@@ -161,7 +163,23 @@ class Sitting:
         with self._making:
             if not self.key:
                 return 1, self._make(snapshot)
-        return self.desk.save(self.key, self.number, snapshot, max(revision, 1))
+        saved = self.desk.save(self.key, self.number, snapshot, max(revision, 1))
+        self._give_title()
+        return saved
+
+    def _give_title(self) -> None:
+        """A notebook begun before its sheet had a title takes the first one it gets."""
+        title = self.workbench.title
+        if not self._untitled or title == UNTITLED:
+            return
+        self._untitled = False
+        try:
+            if self.desk.notebook(self.key).title == UNTITLED:  # nobody has renamed it meanwhile
+                self.desk.rename(self.key, clean_line("The title", title))
+        except SumwrightError:  # the sheet is saved, and that is what counts
+            return
+        if (page := self._page()) is not None:
+            page.later(self._fold_news)
 
     def begin_notebook(self) -> None:
         """Make the notebook that the sheet as it stands goes into, if there is none yet; in a thread."""
@@ -176,6 +194,7 @@ class Sitting:
             title = "Untitled sheet"
         made = self.desk.new_notebook(title, snapshot.state, snapshot.history)
         self.key, self.number = made.id, 1
+        self._untitled = title == UNTITLED
         if snapshot.history is None:
             self._stored_steps = None  # it has yet to go there
         if (page := self._page()) is not None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import gc
 import json
 import threading
@@ -14,6 +15,7 @@ from sumwright.errors import SumwrightError
 from sumwright.files.design import design_document
 from sumwright.model import demo, edits
 from sumwright.model.history import Snapshot as Step
+from sumwright.model.sums import UNTITLED
 from sumwright.notebook.desk import Desk
 from sumwright.notebook.people import Person
 from sumwright.notebook.text import other_format
@@ -91,6 +93,17 @@ def test_a_title_that_no_notebook_may_have_does_not_keep_the_sheet_from_being_sa
     sitting.workbench.title = "a\u202eb"
     assert sitting.autosave.wait(10)
     assert desk.notebook(sitting.key).title == "Untitled sheet"
+    page.close()
+
+
+def test_a_notebook_begun_without_a_title_takes_the_first_one_its_sheet_gets(desk):
+    sitting = Sitting(desk)
+    page = page_of(sitting)
+    sitting.workbench.put(dataclasses.replace(sitting.workbench.design, title=UNTITLED))
+    assert sitting.autosave.wait(10) and desk.notebook(sitting.key).title == UNTITLED
+    for title in ("Mill race", "Mill race, two gates"):
+        sitting.workbench.edit(lambda design, text: dataclasses.replace(design, title=text), title)
+        assert sitting.autosave.wait(10) and desk.notebook(sitting.key).title == "Mill race"
     page.close()
 
 

@@ -29,6 +29,7 @@ from sumwright.model.typed import in_span
 from sumwright.quantity import parse_quantity
 
 TEXT_MOST = 10_000
+UNTITLED = "Untitled sum"  # until the person says otherwise
 USUAL_RANGE = (0.0, 10.0)  # V, until the person says otherwise
 USUAL_RAILS = (12.0, -12.0)  # V
 _TERM = re.compile(
@@ -207,7 +208,7 @@ def _made(signals: list[Signal], offset: float) -> Sum:
     return Sum(tuple(signals), in_span("target", "offset", offset, "V"))
 
 
-def new_design(wanted: Sum, op_amp: OpAmp, title: str = "Untitled sum") -> Design:
+def new_design(wanted: Sum, op_amp: OpAmp, title: str = UNTITLED) -> Design:
     """A design for that sum in usual surroundings, where it says nothing else: 12 V rails, 10 kΩ load, E96 1 % resistors, 10 to 40 °C."""
     return Design(
         title=title,
