@@ -15,7 +15,7 @@ from sumwright.engine.analysis import Analysis
 from sumwright.engine.bench.fit import headline
 from sumwright.engine.cautions import cautions
 from sumwright.engine.stage import Design
-from sumwright.quantity import format_fixed, format_quantity, format_resistor
+from sumwright.quantity import THIN, format_fixed, format_quantity, format_resistor
 
 from .axes import Scale
 from .document import about, equation, render
@@ -71,7 +71,7 @@ def _applied(volts: Mapping[str, float] | str | None) -> str:
     live = {k: v for k, v in (volts or {}).items() if v}
     if live:
         return ", ".join(f"{k} {format_fixed(v, 'V')}" for k, v in live.items())
-    return "every signal at 0 V" if volts else "–"
+    return f"every signal at 0{THIN}V" if volts else "–"
 
 
 def calibration_record(
