@@ -54,7 +54,7 @@ def test_every_step_has_its_limits_and_two_blanks():
 
 
 def test_a_step_of_nothing_says_so():
-    assert "every signal at 0\u202fV" in bring_up_sheet(Analysis(example()), [step(apply={"ridge": 0.0})], now=NOON)
+    assert "every signal at 0\u00a0V" in bring_up_sheet(Analysis(example()), [step(apply={"ridge": 0.0})], now=NOON)
 
 
 def test_the_record_gives_weights_uncertainty_verdicts_and_statement():
