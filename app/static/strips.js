@@ -260,6 +260,7 @@ function drawMini(shown) {
   for (const r of signals) {
     const item = minis.get(keyOf(r))
     item.slide.show(r)
-    if (pulled !== r.name) setText(item.value, `${volts(r.value)}${THIN}V`)
+    setClass(item.node, 'out', r.out)
+    if (r.out || pulled !== r.name) setText(item.value, r.out ? 'cable out' : `${volts(r.value)}${THIN}V`)
   }
 }
