@@ -83,7 +83,8 @@ def taken(page, fold: str, theme: str) -> bytes:
         settled(page)
         page.evaluate(UNTIMED)
         now = page.screenshot(animations="disabled")
-        if now == last:
+        # What is worked out beside the page may begin only after the first wait.
+        if now == last and page.evaluate(IDLE):
             return now
         last = now
     raise AssertionError(f"The fold {fold} never came to rest.")

@@ -61,7 +61,7 @@ def test_readings_typed_with_enter_find_the_wrong_leg(fresh):
     limits.fill("wide")
     limits.press("Enter")
     settled(page)
-    assert "LOW..HIGH" in page.inner_text("#note")
+    assert "write 0.24 to 0.26" in page.inner_text("#note").replace("\u202f", " ")
     assert limits.input_value() == "wide"
 
 

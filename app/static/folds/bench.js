@@ -200,9 +200,9 @@ export function mount(node, sheet) {
       marks[i] ??= position(); marks[i].set(w)
       const offset = i === s.fit.length - 1, d = 4, limit = limitOf(i)
       limit.set(w.stated)
-      setAttr(limit.node, 'placeholder', `${fixed(w.low, d)}..${fixed(w.high, d)}`)
+      setAttr(limit.node, 'placeholder', `${fixed(w.low, d)} to ${fixed(w.high, d)}`)
       setAttr(limit.node, 'aria-label', `Limits of ${w.name}; empty: what the parts allow`)
-      setAttr(limit.node, 'title', 'Your own limits, as 0.24..0.26 or ±2 %; empty: what the parts allow')
+      setAttr(limit.node, 'title', 'Your own limits, as 0.24 to 0.26 or ±2 %; empty: what the parts allow')
       const more = w.word === 'undecided' && w.more ? `undecided, ${w.more} more tell` : w.known ? w.word : s.taken ? 'not determined' : ''
       return [[w.name, ''], [w.value === null ? '–' : offset ? `${fixed(w.value, d)}${THIN}V` : signed(w.value, d), 'r'], [w.wide === null ? '' : fixed(w.wide, d), 'r soft'],
         [marks[i].node, ''], [limit.node, 'limits'], [more, w.word === 'out' ? 'bad' : '']]

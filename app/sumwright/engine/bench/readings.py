@@ -112,7 +112,7 @@ def parse_meter(text: str) -> Meter:
 
 
 def parse_limits(text: str, wanted: float, name: str) -> tuple[float, float]:
-    """Limits of a weight (or of the offset [V]) as a person states them: `0.24..0.26`, `±0.01` or `±2 %` of what is wanted.
+    """Limits of a weight (or of the offset [V]) as a person states them: `0.24 to 0.26` or `0.24..0.26`, `±0.01` or `±2 %` of what is wanted.
 
     Raises
     ------
@@ -128,9 +128,9 @@ def parse_limits(text: str, wanted: float, name: str) -> tuple[float, float]:
         if half <= 0:
             raise InvalidQuantity(f"{where} are {shown(text)}, which leaves no room; write more than ±0.")
         return ends
-    low, dots, high = stripped.replace("…", "..").partition("..")
+    low, dots, high = re.sub(r"…|\s+to\s+", "..", stripped).partition("..")
     if not dots:
-        raise InvalidQuantity(f"{where} are {shown(text)}; write LOW..HIGH, as 0.24..0.26, or ±0.01, or ±2 %.")
+        raise InvalidQuantity(f"{where} are {shown(text)}; write 0.24 to 0.26, or ±0.01, or ±2 %.")
     ends = parse_quantity(low, "", where), parse_quantity(high, "", where)
     if ends[0] >= ends[1]:
         raise InvalidQuantity(f"{where} run from {ends[0]:g} to {ends[1]:g}; the first must be the lower.")
