@@ -14,7 +14,9 @@ ROOT = Path(__file__).parent.parent
 
 def test_the_wheel_serves_the_sheet_without_a_checkout(tmp_path):
     source = tmp_path / "source"  # a copy: building leaves files beside the sources
-    shutil.copytree(ROOT / "app", source / "app", symlinks=True, ignore=shutil.ignore_patterns("__pycache__", "*.egg-info"))
+    shutil.copytree(
+        ROOT / "app", source / "app", symlinks=True, ignore=shutil.ignore_patterns("__pycache__", "*.egg-info")
+    )
     for name in ("pyproject.toml", "README.md"):
         shutil.copy(ROOT / name, source)
     build = [sys.executable, "-m", "pip", "wheel", "-q", "--no-deps", "--no-build-isolation", "-w", tmp_path, source]
