@@ -268,7 +268,7 @@ export function mount(node, sheet) {
     setText(result_, result(row)); setClass(result_, 'bad', row.word === 'out')
     caution.hidden = !row.caution; setText(caution, row.caution ? `Caution. ${row.caution}` : '')
     setText(miss, row.word === 'out' ? row.miss : row.why)
-    const height = Math.max(150, Math.min(s.rows.length * 29 + 32, innerHeight - (innerHeight < 900 ? 530 : 430))) // on a low screen the suspects come first
+    const height = Math.max(150, Math.min(s.rows.length * 29 + 32, innerHeight - (innerHeight < 900 ? 555 : 430))) // on a low screen the suspects come first
     grid.style.setProperty('--grid', `${height}px`)
     fillGrid(s); fillFit(s); fillSuspects(s)
     meter.set(s.meter)
