@@ -280,12 +280,15 @@ def test_kill_the_server_in_the_middle_of_a_drag_and_lose_at_most_a_second(chrom
 
 
 def test_a_server_that_is_told_to_stop_saves_what_waits(chromium, tmp_path):
-    server = Server(tmp_path / "stopped", plain=True)
+    server = Server(tmp_path / "stopped", processes=2)
     context = chromium.new_context()
     page = begin(context, server, 5.0)
     key = re.search("notebook=([a-z2-7]{16})", page.url)[1]
     act(page, do="value", signal="north", value=9.25)
-    server.stop()
+    server.process.terminate()  # the parent alone: it tells its processes and waits for them
+    assert server.process.wait(20) == 0
+    with pytest.raises(OSError):
+        server.get("/health")
     state = Store(server.data / "notebook.db").sheet(key, 1).state
     assert next(s["value"] for s in state["design"]["signals"] if s["name"] == "north") == 9.25
     context.close()

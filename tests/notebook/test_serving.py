@@ -346,7 +346,7 @@ def test_two_processes_share_a_postgresql_store_and_follow_each_other(chromium, 
         other.wait_for_function(
             "() => window.sumwright.state.signals.rows.find(r => r.name === 'north').value === 2.75", timeout=20000
         )
-        assert "changed this sheet" in other.locator("#note").inner_text()
+        other.wait_for_function("() => document.querySelector('#note').innerText.includes('changed this sheet')")
         assert other.complaints == []
     assert server.get("/ready")[0] == 200
     assert not (tmp_path / "notebook.db").exists()

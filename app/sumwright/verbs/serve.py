@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
 import importlib.util
+import os
+import signal
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -105,11 +108,40 @@ def serve(ours: Settings, *, show: bool = False) -> int:
         words += ["--show"]
     for origin in ours.ensure_reachable_by():
         words += ["--allow-websocket-origin", origin]
+    if ours.processes > 1:
+        _pass_on_the_end()
     try:
         command.invoke(parser.parse_args(words))
     except ValueError as error:  # Panel's own word on its PANEL_* settings
         raise SumwrightError(str(error)) from None
     return 0
+
+
+def _pass_on_the_end() -> None:
+    """Have SIGTERM reach the server's processes when their parent alone is told to stop, and the parent wait for them.
+
+    Tornado's parent only waits for its children; were it to die of the signal, they would go on serving, or be cut off
+    with a sheet not yet saved where the parent is a container's first process.
+    """
+    children: list[int] = []
+    parent, plain_fork = os.getpid(), os.fork
+
+    def fork() -> int:
+        child = plain_fork()
+        if child:
+            children.append(child)
+        return child
+
+    def pass_on(number: int, _frame: Any) -> None:
+        if os.getpid() != parent or not children:  # nothing is served yet
+            signal.signal(number, signal.SIG_DFL)
+            os.kill(os.getpid(), number)
+        for child in children:
+            with contextlib.suppress(ProcessLookupError):
+                os.kill(child, number)
+
+    os.fork = fork
+    signal.signal(signal.SIGTERM, pass_on)
 
 
 def _refuse_unset_oauth(ours: Settings, config: Any) -> None:
