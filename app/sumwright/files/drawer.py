@@ -16,13 +16,8 @@ from sumwright.files.text import decode, read_text
 from sumwright.quantity import parse_quantity, parse_resistor_code
 
 COLUMNS = ("value", "tolerance", "count", "note")
-ALSO = {
-    "resistance": "value",
-    "ohm": "value",
-    "ohms": "value",
-    "quantity": "count",
-    "qty": "count",
-}  # as people head them
+# Other headings people give those columns.
+ALSO = {"resistance": "value", "ohm": "value", "ohms": "value", "quantity": "count", "qty": "count"}
 MOST_BYTES = 32 * 1024 * 1024
 MOST_LINES = 1_000_000
 MOST_COUNT = 10**9
